@@ -1,0 +1,72 @@
+"""Errors that a user can act on: each says where, what, and the cure."""
+
+from __future__ import annotations
+
+from collections.abc import Sequence
+
+__all__ = ["InputError", "InputErrors", "MufitterError"]
+
+
+class MufitterError(Exception):
+    """Base of every error that mufitter raises on purpose."""
+
+    exit_code = 3
+
+
+class InputError(MufitterError):
+    """Something the user gave is wrong.
+
+    Parameters
+    ----------
+    problem : str
+        What is wrong, in one sentence, with the value that was expected.
+    file : path-like, optional
+        The file it stands in.
+    row : int, optional
+        Line number in that file (1 is the first line), or 1-based matrix row.
+    column : str or int, optional
+        Column name (tables) or dotted key (configs).
+    value : object, optional
+        The offending value, as it was read.
+    cure : str, optional
+        What the user can do about it.
+    """
+
+    exit_code = 2
+
+    def __init__(self, problem: str, *, file=None, row=None, column=None, value=None, cure=None):
+        self.problem, self.file, self.row = problem, file, row
+        self.column, self.value, self.cure = column, value, cure
+        super().__init__(str(self))
+
+    def __reduce__(self):
+        # Keyword-only arguments do not survive the default pickling of exceptions,
+        # and these errors cross process borders.
+        where = {k: getattr(self, k) for k in ("file", "row", "column", "value", "cure")}
+        return _rebuild, (type(self), self.problem, where)
+
+    def __str__(self) -> str:
+        place = [str(self.file)] if self.file is not None else []
+        place += [f"row {self.row}"] if self.row is not None else []
+        place += [f"column {self.column}"] if self.column is not None else []
+        text = f"{', '.join(place)}: {self.problem}" if place else self.problem
+        if self.value is not None:
+            text += f" (found {self.value!r})"
+        if self.cure is not None:
+            text += f". {self.cure}"
+        return text
+
+
+def _rebuild(kind, problem, where):
+    return kind(problem, **where)
+
+
+class InputErrors(InputError):
+    """Several input errors found in one pass; ``errors`` holds them in order."""
+
+    def __init__(self, errors: Sequence[InputError]):
+        self.errors = tuple(errors)
+        super().__init__("\n".join(str(e) for e in self.errors))
+
+    def __reduce__(self):
+        return type(self), (self.errors,)

@@ -1,0 +1,79 @@
+"""Every parameter, declared once: name, symbol, unit, default prior, meaning."""
+
+from __future__ import annotations
+
+from dataclasses import dataclass, replace
+
+__all__ = ["PARAMETERS", "Parameter"]
+
+
+@dataclass(frozen=True)
+class Parameter:
+    """One parameter, sampled, marginalised or derived.
+
+    Parameters
+    ----------
+    name : str
+        The key used in configs, tables and files.
+    latex : str
+        The symbol in LaTeX, without dollar signs.
+    plain : str
+        The symbol in plain Unicode, for the terminal.
+    unit : str
+        Unit in plain text, empty where there is none.
+    meaning : str
+        One line for people.
+    default_prior : dict or None
+        As a config would write it, e.g. ``{"uniform": [0, 1]}``; None for what is only derived.
+    latex_unit : str
+        The unit in LaTeX, without dollar signs.
+    """
+
+    name: str
+    latex: str
+    plain: str
+    unit: str
+    meaning: str
+    default_prior: dict | None = None
+    latex_unit: str = ""
+
+    def with_prior(self, **prior) -> Parameter:
+        """Return the same parameter with another default prior."""
+        return replace(self, default_prior=prior)
+
+
+_KMSMPC = r"\mathrm{km\,s^{-1}\,Mpc^{-1}}"
+
+_DECLARED = (
+    Parameter("omega_m", r"\Omega_m", "Ωm", "", "matter density today over the critical density", {"uniform": [0, 1]}),
+    Parameter(
+        "omega_lambda", r"\Omega_\Lambda", "ΩΛ", "", "cosmological-constant density today over the critical density", {"uniform": [-0.5, 2]}
+    ),
+    Parameter("omega_de", r"\Omega_\mathrm{DE}", "Ω_DE", "", "dark-energy density today over the critical density", {"uniform": [0, 2]}),
+    Parameter("omega_k", r"\Omega_k", "Ωk", "", "curvature term today, 1 minus the sum of all densities"),
+    Parameter("w", "w", "w", "", "dark-energy equation of state, constant in time", {"uniform": [-3, 0]}),
+    Parameter("w0", "w_0", "w0", "", "dark-energy equation of state today, w(a) = w0 + wa (1 - a)", {"uniform": [-3, 1]}),
+    Parameter("wa", "w_a", "wa", "", "change of the dark-energy equation of state, w(a) = w0 + wa (1 - a)", {"uniform": [-20, 10]}),
+    Parameter("H0", "H_0", "H0", "km/s/Mpc", "expansion rate today", {"uniform": [40, 100]}, _KMSMPC),
+    Parameter(
+        "absolute_magnitude", "M", "M", "mag", "absolute magnitude of a standardised supernova", {"flat": []}, r"\mathrm{mag}"
+    ),
+    Parameter(
+        "intrinsic_scatter", r"\sigma_\mathrm{int}", "σ_int", "mag", "scatter left after standardisation", {"uniform": [0, 0.5]},
+        r"\mathrm{mag}",
+    ),
+    Parameter(
+        "covariance_scale", "s", "s", "", "factor on all errors: the covariance is multiplied by its square", {"log_uniform": [0.5, 2]}
+    ),
+    Parameter("q0", "q_0", "q0", "", "deceleration parameter today", {"uniform": [-3, 2]}),
+    Parameter("j0", "j_0", "j0", "", "jerk parameter today", {"uniform": [-10, 20]}),
+    Parameter("age_gyr", "t_0", "t0", "Gyr", "age of the universe", None, r"\mathrm{Gyr}"),
+    Parameter("z_acceleration", r"z_\mathrm{acc}", "z_acc", "", "redshift at which the expansion began to accelerate"),
+    Parameter("z_equality", r"z_\mathrm{eq}", "z_eq", "", "redshift at which matter and dark energy were equally dense"),
+    Parameter("lambda_si", r"\Lambda", "Λ", "m⁻²", "cosmological constant", None, r"\mathrm{m^{-2}}"),
+    Parameter(
+        "vacuum_energy_density", r"\rho_\Lambda c^2", "ρΛc²", "J/m³", "energy density of the vacuum", None, r"\mathrm{J\,m^{-3}}"
+    ),
+)
+
+PARAMETERS: dict[str, Parameter] = {p.name: p for p in _DECLARED}

@@ -55,11 +55,14 @@ _DECLARED = (
     Parameter("w0", "w_0", "w0", "", "dark-energy equation of state today, w(a) = w0 + wa (1 - a)", {"uniform": [-3, 1]}),
     Parameter("wa", "w_a", "wa", "", "change of the dark-energy equation of state, w(a) = w0 + wa (1 - a)", {"uniform": [-20, 10]}),
     Parameter("H0", "H_0", "H0", "km/s/Mpc", "expansion rate today", {"uniform": [40, 100]}, _KMSMPC),
+    Parameter("absolute_magnitude", "M", "M", "mag", "absolute magnitude of a standardised supernova", {"flat": []}, r"\mathrm{mag}"),
     Parameter(
-        "absolute_magnitude", "M", "M", "mag", "absolute magnitude of a standardised supernova", {"flat": []}, r"\mathrm{mag}"
-    ),
-    Parameter(
-        "intrinsic_scatter", r"\sigma_\mathrm{int}", "σ_int", "mag", "scatter left after standardisation", {"uniform": [0, 0.5]},
+        "intrinsic_scatter",
+        r"\sigma_\mathrm{int}",
+        "σ_int",
+        "mag",
+        "scatter left after standardisation",
+        {"uniform": [0, 0.5]},
         r"\mathrm{mag}",
     ),
     Parameter(
@@ -71,9 +74,7 @@ _DECLARED = (
     Parameter("z_acceleration", r"z_\mathrm{acc}", "z_acc", "", "redshift at which the expansion began to accelerate"),
     Parameter("z_equality", r"z_\mathrm{eq}", "z_eq", "", "redshift at which matter and dark energy were equally dense"),
     Parameter("lambda_si", r"\Lambda", "Λ", "m⁻²", "cosmological constant", None, r"\mathrm{m^{-2}}"),
-    Parameter(
-        "vacuum_energy_density", r"\rho_\Lambda c^2", "ρΛc²", "J/m³", "energy density of the vacuum", None, r"\mathrm{J\,m^{-3}}"
-    ),
+    Parameter("vacuum_energy_density", r"\rho_\Lambda c^2", "ρΛc²", "J/m³", "energy density of the vacuum", None, r"\mathrm{J\,m^{-3}}"),
 )
 
 PARAMETERS: dict[str, Parameter] = {p.name: p for p in _DECLARED}

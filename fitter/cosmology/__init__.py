@@ -1,1 +1,26 @@
-"""cosmology"""
+"""Families of models behind one small interface, and the distances they give."""
+
+from fitter.cosmology.base import FluidModel, Model, radiation_density
+from fitter.cosmology.lcdm import CurvedLCDM, FlatLCDM
+from fitter.cosmology.w0wa import CurvedW0WA, FlatW0WA
+from fitter.cosmology.wcdm import CurvedWCDM, FlatWCDM
+from fitter.errors import InputError
+
+__all__ = ["MODELS", "FluidModel", "Model", "get_model", "radiation_density"]
+
+MODELS: dict[str, type[Model]] = {m.name: m for m in (FlatLCDM, CurvedLCDM, FlatWCDM, CurvedWCDM, FlatW0WA, CurvedW0WA)}
+
+
+def get_model(name: str) -> Model:
+    """Return the model of that name.
+
+    Raises
+    ------
+    InputError
+        If there is none; the message lists those there are.
+    """
+    try:
+        return MODELS[name]()
+    except (KeyError, TypeError):
+        known = ", ".join(MODELS)
+        raise InputError("there is no such model", column="model", value=name, cure=f"Choose one of {known}.") from None

@@ -1,0 +1,30 @@
+"""Matter and a cosmological constant."""
+
+import numpy as np
+
+from fitter.cosmology.base import FluidModel
+from fitter.parameters import PARAMETERS
+
+__all__ = ["CurvedLCDM", "FlatLCDM"]
+
+
+class FlatLCDM(FluidModel):
+    """Flat space, cosmological constant: theta = (Ω_m,)."""
+
+    name = "flat_lcdm"
+    parameters = (PARAMETERS["omega_m"],)
+    curved = False
+
+    def dark_energy_growth(self, z, theta):
+        return 1.0
+
+    def equation_of_state(self, z, theta):
+        return np.full((len(theta), np.size(z)), -1.0)
+
+
+class CurvedLCDM(FlatLCDM):
+    """Curved space, cosmological constant: theta = (Ω_m, Ω_Λ)."""
+
+    name = "curved_lcdm"
+    parameters = (PARAMETERS["omega_m"].with_prior(uniform=[0, 1.5]), PARAMETERS["omega_lambda"])
+    curved = True

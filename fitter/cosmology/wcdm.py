@@ -1,0 +1,30 @@
+"""Matter and dark energy with a constant equation of state."""
+
+import numpy as np
+
+from fitter.cosmology.base import FluidModel
+from fitter.parameters import PARAMETERS
+
+__all__ = ["CurvedWCDM", "FlatWCDM"]
+
+
+class FlatWCDM(FluidModel):
+    """Flat space, constant w: theta = (Ω_m, w). X = (1+z)^{3(1+w)}."""
+
+    name = "flat_wcdm"
+    parameters = (PARAMETERS["omega_m"], PARAMETERS["w"])
+    curved = False
+
+    def dark_energy_growth(self, z, theta):
+        return np.exp(3.0 * (1.0 + theta[:, -1:]) * np.log1p(z))
+
+    def equation_of_state(self, z, theta):
+        return np.broadcast_to(theta[:, -1:], (len(theta), np.size(z)))
+
+
+class CurvedWCDM(FlatWCDM):
+    """Curved space, constant w: theta = (Ω_m, Ω_DE, w)."""
+
+    name = "curved_wcdm"
+    parameters = (PARAMETERS["omega_m"].with_prior(uniform=[0, 1.5]), PARAMETERS["omega_de"], PARAMETERS["w"])
+    curved = True

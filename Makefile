@@ -1,0 +1,42 @@
+# Two commands for a machine with Python 3.11 or newer, make and git: `make demo` and `make test`.
+PYTHON ?= python3
+VENV := .venv
+BIN := $(VENV)/bin
+DEMO_RUN := runs/curved_lcdm
+
+.PHONY: demo test lint bench soak clean
+
+demo: $(VENV)/.installed
+	$(BIN)/mufitter fit configs/curved_lcdm.yaml --replace
+	@echo "Corner plot: $(DEMO_RUN)/figures/corner.pdf and corner.png"
+
+test: $(VENV)/.installed-test lint
+	$(BIN)/python -m pytest
+
+lint: $(VENV)/.installed-test
+	$(BIN)/ruff check .
+	$(BIN)/ruff format --check .
+
+# Ratios of times measured in one run; run them on a quiet machine.
+bench: $(VENV)/.installed-test
+	$(BIN)/python tests/benchmarks/bench.py
+
+# Random configs, tables and matrices by the thousand, for hours; `make test` runs the short version.
+soak: $(VENV)/.installed-test
+	$(BIN)/python -m pytest --hypothesis-profile=soak tests
+
+clean:
+	rm -rf build dist .pytest_cache .ruff_cache .hypothesis .benchmarks *.egg-info
+	find fitter tests -name __pycache__ -type d -prune -exec rm -rf {} +
+
+$(BIN)/python:
+	$(PYTHON) -c 'import sys; sys.exit("mufitter needs Python 3.11 or newer, found " + sys.version.split()[0] + "; try make PYTHON=python3.12") if sys.version_info < (3, 11) else 0'
+	$(PYTHON) -m venv $(VENV)
+
+$(VENV)/.installed: pyproject.toml | $(BIN)/python
+	$(BIN)/python -m pip install --quiet --editable .
+	@touch $@
+
+$(VENV)/.installed-test: pyproject.toml | $(BIN)/python
+	$(BIN)/python -m pip install --quiet --editable '.[test]'
+	@touch $@ $(VENV)/.installed

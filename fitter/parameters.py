@@ -4,7 +4,7 @@ from __future__ import annotations
 
 from dataclasses import dataclass, replace
 
-__all__ = ["PARAMETERS", "Parameter"]
+__all__ = ["PARAMETERS", "ZERO_POINT", "Parameter", "parameter"]
 
 
 @dataclass(frozen=True)
@@ -78,3 +78,20 @@ _DECLARED = (
 )
 
 PARAMETERS: dict[str, Parameter] = {p.name: p for p in _DECLARED}
+
+ZERO_POINT = "zero_point:"
+
+
+def parameter(name: str) -> Parameter:
+    """The declaration of a parameter; zero points are made for each group by name.
+
+    Raises
+    ------
+    KeyError
+        If the name is not declared.
+    """
+    if name.startswith(ZERO_POINT):
+        group = name.removeprefix(ZERO_POINT)
+        latex = r"\Delta_{{\mathrm{{{}}}}}".format(group.replace("_", r"\_"))
+        return Parameter(name, latex, f"Δ({group})", "mag", f"zero-point shift of {group}", None, r"\mathrm{mag}")
+    return PARAMETERS[name]

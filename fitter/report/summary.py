@@ -1,0 +1,234 @@
+"""What a fit says, as one dict: the contents of summary.json, and the same as Markdown and CSV."""
+
+from __future__ import annotations
+
+import csv
+import io
+import json
+from dataclasses import dataclass, field
+
+import numpy as np
+
+from fitter.report.facts import edge_density, json_safe, parameter
+from fitter.report.information import information_criteria, noise_scale
+
+__all__ = ["SCHEMA", "Extras", "summarise", "summary_csv", "summary_json", "summary_markdown"]
+
+SCHEMA = "mufitter summary 1"
+
+_QUANTILES = {"low95": 0.025, "low68": 0.1587, "median": 0.5, "high68": 0.8413, "high95": 0.975}
+_LIMIT_DENSITY = 0.6  # of the peak, at a prior's edge: the peak is within about 1σ of it
+
+
+@dataclass(frozen=True)
+class Extras:
+    """What a summary may hold beside the fit itself.
+
+    Parameters
+    ----------
+    title : str
+    radiation : bool
+        Whether radiation was part of the model.
+    cross_check : object, optional
+        Mapping or dataclass with method, max_cdf_difference, tolerance, agrees.
+    evidence : object, optional
+        Mapping or dataclass with log_evidence and log_evidence_error.
+    excluded_fraction : float, optional
+        Share of the prior outside the models that can be (no big bang inside the data and the like).
+    more : dict
+        Further top-level keys, written as they are.
+    """
+
+    title: str = ""
+    radiation: bool = False
+    cross_check: object | None = None
+    evidence: object | None = None
+    excluded_fraction: float | None = None
+    more: dict = field(default_factory=dict)
+
+
+def summarise(log_posterior, posterior, optimum, extras: Extras | None = None) -> dict:
+    """Summarise a fit.
+
+    Parameters
+    ----------
+    log_posterior : LogPosterior
+    posterior : Posterior
+    optimum : Optimum
+    extras : Extras, optional
+
+    Returns
+    -------
+    dict
+        JSON-safe, with the keys schema, title, model, radiation, sample, parameters, best_fit, information,
+        sampling, cross_check, warnings.
+    """
+    from fitter.report.warnings import practitioner_warnings
+
+    extras = extras or Extras()
+    best = best_values(log_posterior, posterior, optimum)
+    evidence = json_safe(extras.evidence) if extras.evidence is not None else {}
+    summary = {
+        "schema": SCHEMA,
+        "title": extras.title,
+        "model": log_posterior.model.name,
+        "radiation": bool(extras.radiation),
+        "sample": _sample_facts(log_posterior.sample),
+        "parameters": {name: _parameter_facts(log_posterior, posterior, name, best.get(name)) for name in posterior.kinds},
+        "best_fit": _best_fit(log_posterior, optimum, best),
+        "information": information_criteria(log_posterior, posterior, optimum, evidence),
+        "sampling": dict(posterior.sampling),
+        "cross_check": extras.cross_check,
+        "excluded_fraction": extras.excluded_fraction,
+        "fixed": dict(log_posterior.fixed),
+        "priors": {name: prior.describe() for name, prior in zip(log_posterior.names, log_posterior.priors, strict=True)},
+        **extras.more,
+    }
+    summary = json_safe(summary)
+    summary["warnings"] = practitioner_warnings(summary, log_posterior)
+    return summary
+
+
+def best_values(log_posterior, posterior, optimum) -> dict[str, float]:
+    """Values of every parameter at the best fit: sampled, marginalised, derived."""
+    theta = np.atleast_2d(np.asarray(optimum.theta, dtype=float))
+    values = dict(zip(log_posterior.names, theta[0].tolist(), strict=True))
+    for more in (log_posterior.best_marginalised(theta), log_posterior.derived(theta)):
+        values.update({name: float(np.ravel(v)[0]) for name, v in more.items()})
+    values.update(optimum.values)
+    return {name: values[name] for name in posterior.kinds if name in values}
+
+
+def _sample_facts(sample) -> dict:
+    in_flow = sample.redshift[~np.asarray(sample.is_calibrator)]
+    redshift = in_flow if in_flow.size else sample.redshift
+    return {
+        "n": sample.n,
+        "n_calibrators": sample.n_calibrators,
+        "redshift_min": float(redshift.min()),
+        "redshift_max": float(redshift.max()),
+        "sha256": sample.sha256,
+        "distance_scale": sample.distance_scale,
+        "data_kind": sample.data_kind,
+        "removed": dict(sample.removed),
+    }
+
+
+def _best_fit(log_posterior, optimum, best: dict) -> dict:
+    dof = int(log_posterior.n_data) - int(log_posterior.n_parameters)
+    return {
+        "chi2": float(optimum.chi2),
+        "dof": dof,
+        "p_value": chi2_p_value(float(optimum.chi2), dof),
+        "log_posterior": float(optimum.log_posterior),
+        "values": best,
+        "covariance_scale": noise_scale(log_posterior, optimum.values),
+    }
+
+
+def chi2_p_value(chi2: float, dof: int) -> float | None:
+    """Probability of a larger χ² by chance; None without degrees of freedom."""
+    if dof <= 0:
+        return None
+    from scipy.stats import chi2 as chi2_distribution
+
+    return float(chi2_distribution.sf(chi2, dof))
+
+
+def _parameter_facts(log_posterior, posterior, name: str, best: float | None) -> dict:
+    """Moments, quantiles and Monte Carlo accuracy of one parameter.
+
+    Draws where a derived parameter does not exist (a universe that never accelerates has no such redshift) are
+    left out of the moments and counted in ``undefined_fraction``.
+    """
+    draws = np.asarray(posterior.draws(name), dtype=float)
+    defined = np.isfinite(draws)
+    everywhere = bool(defined.all())
+    facts = {"kind": posterior.kinds[name], **_moments(draws.ravel() if everywhere else draws[defined]), "best": best}
+    facts.update(_accuracy(draws, defined, facts["sd"]))
+    if not everywhere:
+        facts["undefined_fraction"] = float(1.0 - defined.mean())
+    facts["unit"] = parameter(name).unit
+    if name in log_posterior.names:
+        facts.update(_edge_facts(draws.ravel(), log_posterior.priors[log_posterior.names.index(name)], facts))
+    return facts
+
+
+def _moments(values: np.ndarray) -> dict:
+    if values.size == 0:
+        return dict.fromkeys(["mean", "sd", *_QUANTILES])
+    mean = float(values.mean())
+    sd = float(values.std(ddof=1)) if values.size > 1 else 0.0
+    quantiles = np.quantile(values, list(_QUANTILES.values()))
+    named = dict(zip(_QUANTILES, quantiles.tolist(), strict=True))
+    order = ("median", "low68", "high68", "low95", "high95")
+    return {"mean": mean, "sd": sd, **{key: named[key] for key in order}}
+
+
+def _accuracy(draws: np.ndarray, defined: np.ndarray, sd: float | None) -> dict:
+    """Effective sample size, R̂ and the Monte Carlo error of the mean.
+
+    R̂ and the bulk ESS use ranks only, so undefined draws stand beyond every defined one: that the chains
+    agree on how often the parameter exists is part of convergence.
+    """
+    from fitter.inference.diagnostics import ess_bulk, split_rhat
+
+    share = float(defined.mean())
+    if share == 0 or not sd:
+        return {"ess": None, "rhat": None, "mcse": None}
+    if share < 1:
+        beyond = np.max(draws[defined]) + abs(sd)
+        draws = np.where(defined, draws, beyond)
+    ess = float(ess_bulk(draws)) * share
+    return {"ess": ess, "rhat": float(split_rhat(draws)), "mcse": sd / float(np.sqrt(ess)) if ess > 0 else None}
+
+
+def _edge_facts(draws: np.ndarray, prior, facts: dict) -> dict:
+    """Density at the prior's edges, and a one-sided 95 % limit where the peak stands against one."""
+    at_low, at_high = edge_density(draws, prior.low, prior.high)
+    more = {"density_at_prior_edge": [at_low, at_high]}
+    if max(at_low, at_high) > _LIMIT_DENSITY and min(at_low, at_high) <= _LIMIT_DENSITY:
+        side, level = ("upper", 0.95) if at_low > at_high else ("lower", 0.05)
+        more["limit"] = {"side": side, "level": 0.95, "value": float(np.quantile(draws, level))}
+    return more
+
+
+def summary_json(summary: dict) -> str:
+    """Return the summary as JSON text; refuses NaN."""
+    return json.dumps(summary, indent=2, ensure_ascii=False, allow_nan=False) + "\n"
+
+
+_COLUMNS = ("mean", "sd", "median", "low68", "high68", "low95", "high95", "best", "ess", "rhat", "mcse")
+
+
+def summary_csv(summary: dict) -> str:
+    """Return the summary as CSV: one row a parameter, then one row for each other number.
+
+    Full precision throughout; the ``value`` column holds what is not a parameter.
+    """
+    out = io.StringIO()
+    writer = csv.writer(out, lineterminator="\n")
+    writer.writerow(["name", "kind", "unit", "value", *_COLUMNS])
+    for name, facts in summary["parameters"].items():
+        writer.writerow([name, facts["kind"], facts.get("unit", ""), "", *(_cell(facts.get(c)) for c in _COLUMNS)])
+    for section in ("sample", "best_fit", "information", "sampling", "cross_check"):
+        for key, value in (summary.get(section) or {}).items():
+            if isinstance(value, int | float | str | bool):
+                writer.writerow([key, section, "", _cell(value), *[""] * len(_COLUMNS)])
+    return out.getvalue()
+
+
+def _cell(value) -> str:
+    return "" if value is None else repr(value) if isinstance(value, float) else str(value)
+
+
+def summary_markdown(summary: dict) -> str:
+    """Return the summary as a Markdown page."""
+    from fitter.report.tables import parameter_table
+    from fitter.report.terminal import facts_lines
+
+    lines = [f"# {summary['title'] or summary['model']}", "", parameter_table(summary, "markdown"), ""]
+    lines += [f"- {line}" for line in facts_lines(summary)]
+    if summary["warnings"]:
+        lines += ["", "## Warnings", "", *(f"- {text}" for text in summary["warnings"])]
+    return "\n".join(lines) + "\n"

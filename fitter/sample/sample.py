@@ -1,0 +1,226 @@
+"""The sample: what was observed, immutable."""
+
+from __future__ import annotations
+
+import hashlib
+from collections.abc import Iterable
+from dataclasses import dataclass, field, replace
+from functools import cached_property
+
+import numpy as np
+
+from fitter.errors import InputError, InputErrors
+from fitter.sample.noise import Noise, read_only
+from fitter.sample.uncertainty.term import Term, combine, unique_labels
+
+__all__ = ["DATA_KINDS", "DISTANCE_SCALES", "Sample"]
+
+DATA_KINDS = ("distance_modulus", "magnitude")
+DISTANCE_SCALES = ("relative", "absolute", "calibrated")
+
+
+@dataclass(frozen=True, eq=False)
+class Sample:
+    """N supernovae with their redshifts, distances and the covariance of these.
+
+    Made by `from_config` or `from_arrays`; every array is read-only.
+
+    Parameters
+    ----------
+    redshift : (N,) array
+        In the cosmological frame.
+    redshift_helio : (N,) array
+        Heliocentric; equal to ``redshift`` where none was given.
+    data : (N,) array
+        Distance modulus or magnitude, mag.
+    data_kind : str
+        ``"distance_modulus"`` or ``"magnitude"``.
+    calibrator_modulus : (N,) array
+        Distance modulus of the host known from elsewhere, mag; NaN where the row is no calibrator.
+    group, name : (N,) arrays of str, or None
+        Survey and supernova.
+    distance_scale : str
+        ``"relative"``, ``"absolute"`` or ``"calibrated"``.
+    terms : tuple of Term
+        The fixed uncertainty terms, each under its label.
+    noise : Noise
+        Their sum.
+    intrinsic_prior, covariance_scale_prior : dict, float or None
+        As in the config: free parameters (or a held factor on all errors) of the likelihood.
+    removed : dict
+        How many rows each cut removed, in order.
+    row : (N,) array of int
+        Line number in the table (1 … N for arrays).
+    sources : dict
+        Input path → SHA-256.
+    warnings : tuple of str
+        What a practitioner would ask about.
+    """
+
+    redshift: np.ndarray
+    redshift_helio: np.ndarray
+    data: np.ndarray
+    data_kind: str
+    calibrator_modulus: np.ndarray
+    group: np.ndarray | None
+    name: np.ndarray | None
+    distance_scale: str
+    terms: tuple[Term, ...]
+    noise: Noise
+    intrinsic_prior: dict | None = None
+    covariance_scale_prior: dict | float | None = None
+    removed: dict[str, int] = field(default_factory=dict)
+    row: np.ndarray | None = None
+    sources: dict[str, str] = field(default_factory=dict)
+    warnings: tuple[str, ...] = ()
+
+    def __post_init__(self):
+        for key in ("redshift", "redshift_helio", "data", "calibrator_modulus"):
+            object.__setattr__(self, key, read_only(getattr(self, key)))
+        for key in ("group", "name"):
+            if getattr(self, key) is not None:
+                object.__setattr__(self, key, read_only(getattr(self, key), None))
+        row = np.arange(1, self.n + 1) if self.row is None else self.row
+        object.__setattr__(self, "row", read_only(row, int))
+
+    @property
+    def n(self) -> int:
+        """Number of rows, calibrators included."""
+        return len(self.redshift)
+
+    @cached_property
+    def is_calibrator(self):
+        """(N,) bool."""
+        return read_only(np.isfinite(self.calibrator_modulus), bool)
+
+    @property
+    def n_calibrators(self) -> int:
+        """Number of rows whose host has a known modulus."""
+        return int(self.is_calibrator.sum())
+
+    @property
+    def labels(self) -> tuple[str, ...]:
+        """Labels of the fixed uncertainty terms."""
+        return tuple(term.label for term in self.terms)
+
+    @cached_property
+    def sha256(self) -> str:
+        """SHA-256 of what is fitted: redshifts, data, calibrators and covariance, as little-endian float64."""
+        digest = hashlib.sha256(f"{self.data_kind} {self.distance_scale} {self.n}".encode())
+        noise = self.noise
+        parts = (self.redshift, self.redshift_helio, self.data, self.calibrator_modulus)
+        for values in (*parts, noise.variance, noise.dense, noise.precision, noise.modes):
+            digest.update(b"|")
+            if values is not None:
+                digest.update(memoryview(values.astype("<f8", copy=False)).cast("B") if values.size else b"")
+        return digest.hexdigest()
+
+    @classmethod
+    def from_config(cls, settings, folder) -> Sample:
+        """Read a sample.
+
+        Parameters
+        ----------
+        settings : SampleSettings
+            The ``sample:`` section of a config.
+        folder : path-like
+            Paths in the settings are relative to it.
+
+        Raises
+        ------
+        InputError, InputErrors
+            Everything that is wrong with the input, found in one pass.
+        """
+        from fitter.sample.assembly import assemble
+
+        return assemble(settings, folder)
+
+    @classmethod
+    def from_arrays(
+        cls,
+        z,
+        mu,
+        *,
+        covariance=None,
+        precision=None,
+        sigma=None,
+        modes=None,
+        z_helio=None,
+        data_kind="distance_modulus",
+        calibrator_modulus=None,
+        group=None,
+        name=None,
+        distance_scale="relative",
+        intrinsic=None,
+        covariance_scale=None,
+    ) -> Sample:
+        """Make a sample of arrays.
+
+        Parameters
+        ----------
+        z, mu : (N,) arrays
+            Cosmological redshift; distance modulus, or magnitude where ``data_kind`` says so (mag).
+        covariance, precision : (N, N) array, optional
+            Covariance (mag²) or its inverse; the latter stands alone.
+        sigma : (N,) array or float, optional
+            Uncorrelated errors, mag; added to the covariance.
+        modes : (N, k) array, optional
+            One-sigma shifts of k systematics, mag.
+        z_helio, calibrator_modulus, group, name : (N,) arrays, optional
+            As in `Sample`.
+        intrinsic : float or dict, optional
+            Intrinsic scatter, mag, or a prior such as ``{"uniform": [0, 0.5]}``.
+        covariance_scale : float or dict, optional
+            Factor on all errors, or its prior.
+
+        Raises
+        ------
+        InputError, InputErrors
+            Everything that is wrong with the arrays.
+        """
+        from fitter.sample.assembly import assemble_arrays
+
+        given = {k: v for k, v in locals().items() if k not in ("cls", "assemble_arrays")}
+        return assemble_arrays(**given)
+
+    def without(self, labels: str | Iterable[str]) -> Sample:
+        """Return the sample with some uncertainty terms switched off.
+
+        Raises
+        ------
+        InputError
+            A label is unknown, or no term would be left.
+        """
+        labels = [labels] if isinstance(labels, str) else list(labels)
+        unknown = [label for label in labels if label not in self.labels]
+        if unknown:
+            raise InputErrors(
+                [
+                    InputError("no uncertainty term has this label", value=u, cure=f"The labels are: {', '.join(self.labels)}")
+                    for u in unknown
+                ]
+            )
+        kept = tuple(term for term in self.terms if term.label not in labels)
+        return replace(self, terms=kept, noise=combine(kept))
+
+    def select(self, mask) -> Sample:
+        """Return some of the rows (boolean mask or indices, in the order given); the rest is marginalised.
+
+        Raises
+        ------
+        InputError
+            No row is left.
+        """
+        index = np.arange(self.n)[mask]
+        if not len(index):
+            raise InputError("the selection leaves no supernova", cure="Widen it")
+        terms = tuple(term.select(index) for term in self.terms)
+        rows = {k: getattr(self, k)[index] for k in ("redshift", "redshift_helio", "data", "calibrator_modulus", "row")}
+        rows |= {k: getattr(self, k)[index] for k in ("group", "name") if getattr(self, k) is not None}
+        return replace(self, **rows, terms=terms, noise=combine(terms))
+
+
+def make_sample(columns: dict, terms, **rest) -> Sample:
+    """Put checked columns and terms together."""
+    terms = unique_labels(terms)
+    return Sample(**columns, terms=terms, noise=combine(terms), **rest)

@@ -12,11 +12,14 @@ from fitter.likelihood.compression import Compressed, compress
 from fitter.likelihood.design import FINEST_ORDER, Design
 from fitter.likelihood.direct import Direct
 
-__all__ = ["ORDERS", "TAIL_TOLERANCE", "Kernel"]
+__all__ = ["CHI2_TOLERANCE", "ORDERS", "TAIL_TOLERANCE", "Kernel"]
 
 ORDERS = (32, 64, 128, FINEST_ORDER)
-# The tail tracks the interpolation error of f within a factor of about 3–8: this keeps it under 1e-8 mag.
+# The tail of f tracks its interpolation error within a factor of about 3–8; this keeps that under 1e-8 mag …
 TAIL_TOLERANCE = 1e-9
+# … and this keeps the error of χ², however far from the data the model is; a tail of 1e-13 is rounding.
+CHI2_TOLERANCE = 1e-7
+_ROUNDING = 1e-13
 
 
 @dataclass(frozen=True)
@@ -28,6 +31,7 @@ class _Level:
     r: np.ndarray  # (m q, K+1+s)
     y: np.ndarray  # (m q,)
     rho2: np.ndarray  # (m,)
+    norm: float  # of R at the first node in the scatter, where it is largest
     nodes: tuple[Compressed, ...]
 
     @classmethod
@@ -38,9 +42,9 @@ class _Level:
         else:
             embed = grid.interpolation(design.grid.u)
             nodes = tuple(c.project(embed) for c in finest)
-            reference = design.reference[:: FINEST_ORDER // order]  # the nodes are nested
+            reference = design.reference[:: FINEST_ORDER // order]  # the orders divide the finest: nodes are nested
         r, y = np.vstack([c.r for c in nodes]), np.concatenate([c.y for c in nodes])
-        return cls(grid, reference, r, y, np.array([c.rho2 for c in nodes]), nodes)
+        return cls(grid, reference, r, y, np.array([c.rho2 for c in nodes]), float(np.linalg.norm(nodes[0].r)), nodes)
 
     def point(self, f, offset, linear):
         """x of the compressed least squares, (W, K+1+s)."""
@@ -53,7 +57,12 @@ class _Level:
         residual = x @ self.r.T
         residual -= self.y
         residual *= residual
-        return residual.reshape(len(x), len(self.rho2), -1).sum(axis=2) + self.rho2
+        m = len(self.rho2)
+        return residual.reshape(len(x), m, len(self.y) // m).sum(axis=2) + self.rho2
+
+    def converged(self, chi2, tail):
+        """Whether the interpolation error is below tolerance: |Δχ²| ≤ 2 √χ² ‖R‖ |Δf|, (W,) bool."""
+        return tail <= np.maximum(CHI2_TOLERANCE / (2 * self.norm * np.sqrt(np.maximum(chi2, 1.0))), _ROUNDING)
 
 
 class Kernel:
@@ -99,11 +108,12 @@ class Kernel:
         todo = np.arange(len(theta))
         for level in self.levels:
             f, tail, inside = log_distance(self.model, theta[todo], level.grid, omega_r[todo])
-            good = inside & (tail <= TAIL_TOLERANCE)
-            rows = todo[good]
-            table = level.chi2(level.point(f[good], offset[rows], linear[rows]))
+            usable = inside & (tail <= TAIL_TOLERANCE)
+            rows = todo[usable]
+            table = level.chi2(level.point(f[usable], offset[rows], linear[rows]))
             chi2[rows] = table[:, 0] if weights is None else (table * weights[rows]).sum(axis=1)
-            todo = todo[inside & ~good]
+            usable[usable] = level.converged(chi2[rows], tail[usable])
+            todo = todo[inside & ~usable]
             if not len(todo):
                 break
             self.counts["refined"] += len(todo) if level is self.levels[0] else 0

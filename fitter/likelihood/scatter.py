@@ -65,7 +65,10 @@ def _diagonal_basis(design):
         return noise.variance, None
     from scipy.linalg import eigh
 
-    variance, vectors = eigh(noise.covariance_without_modes(), overwrite_a=True)
+    noise = noise.inverted()
+    fixed = np.array(noise.dense)
+    fixed[np.diag_indices(noise.n)] += noise.variance
+    variance, vectors = eigh(fixed, overwrite_a=True)
     return variance, vectors.T @ design.block()
 
 

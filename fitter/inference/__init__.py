@@ -1,1 +1,1 @@
-"""inference"""
+"""From a log-posterior to draws: optimum, sampling, diagnostics, intervals, quadrature, evidence."""

@@ -1,0 +1,81 @@
+"""A move for curved, cut and two-peaked posteriors: propose from a mixture fitted to half of the ensemble."""
+
+from __future__ import annotations
+
+import numpy as np
+from emcee.moves import DEMove, RedBlueMove, StretchMove
+from emcee.state import State
+
+from fitter.inference.mixture import fit_mixture
+
+__all__ = ["MixtureMove", "ensemble_moves"]
+
+
+class MixtureMove(RedBlueMove):
+    """Independent proposals from a Student-t mixture fitted to the complementary half of the ensemble.
+
+    Half of the walkers are frozen, a mixture q is fitted to them, and every walker x of the other half is
+    offered an independent draw x' of q. It is accepted with probability min(1, p(x') q(x) / (p(x) q(x'))): as q does not
+    depend on the half that moves, this leaves p invariant for any q that is positive wherever p is. Then the halves
+    change places.
+
+    Parameters
+    ----------
+    components : int, optional
+        Components of the mixture; by default chosen from the number of points in the half and the dimension.
+    iterations : int
+        EM steps of each fit.
+    inflate : float
+        Factor on the fitted scale matrices.
+
+    Notes
+    -----
+    The move has no state of its own: a chain can be continued from positions and the random state alone.
+    """
+
+    nu = 5.0
+
+    def __init__(self, components: int | None = None, iterations: int = 3, inflate: float = 1.0):
+        super().__init__(nsplits=2, randomize_split=True)
+        self.components, self.iterations, self.inflate = components, iterations, inflate
+
+    def get_proposal(self, sample, complement, random):
+        """Return proposals, (M, d), for the walkers `sample`, (M, d), and ln[q(old) / q(new)], (M,)."""
+        points = np.concatenate(complement, axis=0)
+        k = self.components or _components(*points.shape)
+        mixture = fit_mixture(points, k, nu=self.nu, iterations=self.iterations, inflate=self.inflate)
+        proposal = mixture.draw(random, len(sample))
+        density = mixture.log_density(np.concatenate([sample, proposal]))
+        return proposal, density[: len(sample)] - density[len(sample) :]
+
+    def propose(self, model, state):
+        """Update both halves in turn; as the parent's, but the acceptance is decided for all walkers at once."""
+        half = np.arange(len(state.coords)) % self.nsplits
+        model.random.shuffle(half)
+        accepted = np.zeros(len(half), dtype=bool)
+        for split in range(self.nsplits):
+            moving = half == split
+            proposal, factors = self.get_proposal(state.coords[moving], [state.coords[~moving]], model.random)
+            log_prob, blobs = model.compute_log_prob_fn(proposal)
+            change = factors + log_prob - state.log_prob[moving]
+            accepted[moving] = change > np.log(model.random.uniform(size=len(change)))
+            state = self.update(state, State(proposal, log_prob=log_prob, blobs=blobs), accepted, moving)
+        return state, accepted
+
+
+def _components(points: int, ndim: int) -> int:
+    """As many components as leave each enough points to fit a covariance, at most four."""
+    return int(np.clip(points // (6 * (ndim + 1)), 1, 4))
+
+
+def ensemble_moves(name: str):
+    """Return the moves of one step, in the form that emcee's sampler takes.
+
+    Parameters
+    ----------
+    name : {"mixture", "stretch"}
+        ``mixture`` keeps a small share of differential-evolution moves, which reach where the mixture is a bad fit.
+    """
+    if name == "stretch":
+        return [(StretchMove(), 1.0)]
+    return [(MixtureMove(), 0.9), (DEMove(), 0.1)]

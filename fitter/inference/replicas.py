@@ -1,0 +1,277 @@
+"""Independent ensembles, in processes or one after the other, with the same result to the last bit."""
+
+from __future__ import annotations
+
+import multiprocessing as mp
+import os
+import signal
+import sys
+import threading
+import time
+from concurrent.futures import FIRST_COMPLETED, ProcessPoolExecutor, wait
+from dataclasses import dataclass, field
+
+import numpy as np
+
+from fitter.inference.checkpoint import Checkpoint, Chunk, add_counts
+
+__all__ = ["Replica", "Replicas", "available_cores"]
+
+# Longest time a replica works before its chain is handed back (and stored), in seconds.
+_CHUNK_SECONDS = 2.0
+_LOOK_SECONDS = 0.2
+
+
+def available_cores() -> int:
+    """Number of cores that this process may use."""
+    if hasattr(os, "sched_getaffinity"):
+        return len(os.sched_getaffinity(0))
+    return os.cpu_count() or 1
+
+
+@dataclass
+class Replica:
+    """One ensemble: where it is, and the chunks of chain behind it."""
+
+    positions: np.ndarray
+    log_prob: np.ndarray
+    random_state: tuple
+    chunks: list[Chunk] = field(default_factory=list)
+    unwritten: list[Chunk] = field(default_factory=list)
+    written_at: float = 0.0
+
+    @property
+    def steps(self) -> int:
+        """Steps done."""
+        return self.chunks[-1].stop if self.chunks else 0
+
+    def append(self, chunk: Chunk) -> None:
+        """Go to the end of `chunk`."""
+        self.chunks.append(chunk)
+        self.positions, self.log_prob = chunk.chain[-1], chunk.log_posterior[-1]
+        self.random_state = chunk.random_state
+
+
+@dataclass(frozen=True)
+class _Task:
+    """What a worker needs to advance one replica."""
+
+    replica: int
+    positions: np.ndarray
+    log_prob: np.ndarray
+    random_state: tuple
+    start: int
+    steps: int
+    move: str
+
+
+class Replicas:
+    """Advance R replicas together.
+
+    Parameters
+    ----------
+    log_posterior : LogPosterior
+    replicas : list of Replica
+        At their starting points.
+    move : str
+        As in the settings.
+    processes : int
+        1 works in this process.
+    checkpoint : Checkpoint or None
+
+    Notes
+    -----
+    Use as a context manager: processes end with it. While it is open an interrupt (Ctrl-C) lets every
+    replica finish its step and sets `interrupted`; a second one acts at once.
+    """
+
+    def __init__(self, log_posterior, replicas: list[Replica], move: str, processes: int, checkpoint: Checkpoint | None):
+        self.log_posterior, self.replicas, self.move, self.checkpoint = log_posterior, replicas, move, checkpoint
+        self.processes = min(processes, len(replicas))
+        self.interrupted = False
+        self._pool = None
+        self._restore = None
+        now = time.monotonic()
+        for i, replica in enumerate(replicas):
+            replica.written_at = now
+            for chunk in checkpoint.read(i) if checkpoint else []:
+                replica.append(chunk)
+
+    def __enter__(self):
+        context = _context()
+        self._board = _Board(context, len(self.replicas))
+        if self.processes > 1:
+            self._pool = ProcessPoolExecutor(
+                self.processes, mp_context=context, initializer=_start_worker, initargs=(self.log_posterior, self._board, os.getpid())
+            )
+        if threading.current_thread() is threading.main_thread():
+            self._restore = signal.signal(signal.SIGINT, self._on_interrupt)
+        return self
+
+    def __exit__(self, kind, *_):
+        self._board.stop.value = 1
+        if self._pool is not None:
+            self._pool.shutdown(wait=True, cancel_futures=True)
+        if self._restore is not None:
+            signal.signal(signal.SIGINT, self._restore)
+
+    def _on_interrupt(self, *_):
+        self.interrupted = True
+        self._board.stop.value = 1
+        signal.signal(signal.SIGINT, self._restore)
+
+    @property
+    def steps(self) -> int:
+        """Steps that all replicas have done."""
+        return min(r.steps for r in self.replicas)
+
+    def advance(self, target: int, look=None) -> None:
+        """Bring every replica to at least `target` steps, or as far as an interrupt lets it.
+
+        Parameters
+        ----------
+        target : int
+        look : callable, optional
+            Called a few times a second with the steps done by the slowest replica.
+        """
+        for i, replica in enumerate(self.replicas):
+            self._board.steps[i] = replica.steps
+        try:
+            if self._pool is None:
+                self._advance_here(target, look)
+            else:
+                self._advance_in_pool(target, look)
+        except KeyboardInterrupt:
+            # Only where no handler could be set, e.g. outside the main thread.
+            self.interrupted = True
+        if self.interrupted:
+            self._flush(everything=True)
+
+    def _advance_here(self, target, look):
+        for i, replica in enumerate(self.replicas):
+            while replica.steps < target and not self.interrupted:
+                chunk = _advance(self.log_posterior, self._task(i, target), self._board)
+                self._take(i, chunk)
+                if look is not None:
+                    look(self.steps)
+
+    def _advance_in_pool(self, target, look):
+        running = {self._submit(i, target): i for i, r in enumerate(self.replicas) if r.steps < target}
+        while running:
+            done, _ = wait(running, timeout=_LOOK_SECONDS, return_when=FIRST_COMPLETED)
+            for future in done:
+                i = running.pop(future)
+                self._take(i, future.result())
+                if self.replicas[i].steps < target and not self.interrupted:
+                    running[self._submit(i, target)] = i
+            if look is not None:
+                look(min(self._board.steps))
+
+    def _task(self, i, target):
+        r = self.replicas[i]
+        return _Task(i, r.positions, r.log_prob, r.random_state, r.steps, target - r.steps, self.move)
+
+    def _submit(self, i, target):
+        return self._pool.submit(_advance_in_worker, self._task(i, target))
+
+    def _take(self, i, chunk):
+        if len(chunk.chain) == 0:
+            return
+        self.replicas[i].append(chunk)
+        self.replicas[i].unwritten.append(chunk)
+        self._flush()
+
+    def _flush(self, everything=False):
+        if self.checkpoint is None:
+            return
+        now = time.monotonic()
+        for i, replica in enumerate(self.replicas):
+            if replica.unwritten and (everything or now - replica.written_at >= _CHUNK_SECONDS):
+                self.checkpoint.write(i, replica.unwritten)
+                replica.unwritten = []
+                replica.written_at = now
+
+    def chain(self, steps: int):
+        """Return the first `steps` steps of all replicas: positions (R, S, W, n) and ln densities (R, S, W)."""
+        chain = [np.concatenate([c.chain for c in r.chunks])[:steps] for r in self.replicas]
+        values = [np.concatenate([c.log_posterior for c in r.chunks])[:steps] for r in self.replicas]
+        return np.stack(chain), np.stack(values)
+
+    @property
+    def accepted(self) -> float:
+        """Share of proposals accepted."""
+        tried = sum(c.log_posterior.size for r in self.replicas for c in r.chunks)
+        return sum(c.accepted for r in self.replicas for c in r.chunks) / max(tried, 1)
+
+    @property
+    def counts(self) -> dict[str, int]:
+        """What the likelihood counted, all replicas together."""
+        return add_counts(c.counts for r in self.replicas for c in r.chunks)
+
+
+class _Board:
+    """A few numbers that workers and parent share: a flag that asks to stop, and each replica's steps."""
+
+    def __init__(self, context, n):
+        self.stop = context.Value("b", 0, lock=False)
+        self.steps = context.Array("q", n, lock=False)
+
+
+def _context():
+    """Fork where it is safe: the likelihood is then shared without a copy."""
+    return mp.get_context("fork" if sys.platform.startswith("linux") else "spawn")
+
+
+_worker: dict = {}
+
+
+def _start_worker(log_posterior, board, parent):
+    """Once per process: keep the likelihood, one BLAS thread, leave Ctrl-C to the parent, and end with it."""
+    from threadpoolctl import threadpool_limits
+
+    signal.signal(signal.SIGINT, signal.SIG_IGN)
+    _worker.update(log_posterior=log_posterior, board=board, limit=threadpool_limits(1))
+    threading.Thread(target=_end_with, args=(parent,), daemon=True).start()
+
+
+def _end_with(parent):
+    """A killed parent cannot tell its workers; they would wait for work for ever."""
+    while os.getppid() == parent:
+        time.sleep(0.5)
+    os._exit(1)
+
+
+def _advance_in_worker(task):
+    return _advance(_worker["log_posterior"], task, _worker["board"])
+
+
+def _advance(log_posterior, task, board) -> Chunk:
+    """Run one replica until its steps are done, its time is over, or a stop is asked for."""
+    from emcee import EnsembleSampler
+    from emcee.state import State
+    from threadpoolctl import threadpool_limits
+
+    from fitter.inference.moves import ensemble_moves
+
+    before = dict(log_posterior.counts)
+    sampler = EnsembleSampler(*task.positions.shape, log_posterior, vectorize=True, moves=ensemble_moves(task.move))
+    # emcee wraps the function to print a traceback of its own at every exception.
+    sampler.log_prob_fn = log_posterior
+    state = State(task.positions, log_prob=task.log_prob, random_state=task.random_state, copy=True)
+    end = time.monotonic() + _CHUNK_SECONDS
+    with threadpool_limits(1):
+        for state in sampler.sample(state, iterations=task.steps, skip_initial_state_check=True):
+            done = sampler.backend.iteration
+            board.steps[task.replica] = task.start + done
+            if board.stop.value or time.monotonic() > end:
+                break
+    done = sampler.backend.iteration
+    counts = {k: v - before.get(k, 0) for k, v in log_posterior.counts.items()}
+    return Chunk(
+        start=task.start,
+        chain=sampler.backend.chain[:done].copy(),
+        log_posterior=sampler.backend.log_prob[:done].copy(),
+        accepted=int(sampler.backend.accepted.sum()),
+        random_state=state.random_state,
+        counts=counts,
+    )

@@ -1,0 +1,181 @@
+"""Sample a posterior until it is known well enough."""
+
+from __future__ import annotations
+
+import time
+from math import isfinite, nan
+
+import numpy as np
+
+from fitter.inference.checkpoint import Checkpoint
+from fitter.inference.convergence import FIRST_STEPS, Status, assess, next_length
+from fitter.inference.posterior import Posterior
+from fitter.inference.progress import ProgressReport
+from fitter.inference.replicas import Replica, Replicas, available_cores
+from fitter.inference.seeds import child_seed, random_state
+from fitter.inference.settings import SamplingSettings
+from fitter.inference.start import starting_walkers
+
+__all__ = ["sample_posterior"]
+
+# Rows for which derived parameters are computed at once.
+_BLOCK = 16384
+
+
+def sample_posterior(
+    log_posterior,
+    settings: SamplingSettings,
+    optimum,
+    *,
+    seed: np.random.SeedSequence,
+    folder=None,
+    progress=None,
+    resume: bool = False,
+    fingerprint: str = "",
+    processes: int | None = None,
+) -> Posterior:
+    """Draw from the posterior with R independent ensembles.
+
+    Runs in rounds, each followed by a look at the whole chain, until for every sampled parameter R-hat < 1.01, the chain is longer
+    than 50 autocorrelation times and bulk and tail ESS reach the target; or until ``settings.max_steps``.
+
+    Parameters
+    ----------
+    log_posterior : LogPosterior
+    settings : SamplingSettings
+    optimum : Optimum
+    seed : SeedSequence
+        Everything random comes from it; the result does not depend on the number of processes, nor on where a run was
+        interrupted and resumed.
+    folder : Path or None
+        The run folder, for checkpoints; None keeps none.
+    progress : callable or None
+        Gets a `ProgressReport` a few times a second.
+    resume : bool
+        Continue the checkpoint in `folder`, if there is one.
+    fingerprint : str
+        Identifies config and data; a checkpoint with another one is refused.
+    processes : int, optional
+        By default one for each core, at most one for each replica.
+
+    Returns
+    -------
+    Posterior
+
+    Raises
+    ------
+    InputError
+        If there is nothing to sample, no starting point, a checkpoint of another run, or no room on the disk.
+    """
+    from threadpoolctl import threadpool_limits
+
+    began = time.monotonic()
+    settings.check_dimension(len(log_posterior.names))
+    checkpoint = None if folder is None else Checkpoint(folder, _about(log_posterior, settings, seed, fingerprint), resume=resume)
+    with threadpool_limits(1):
+        replicas = [_begin(log_posterior, settings, optimum, child_seed(seed, 0, i)) for i in range(settings.replicas)]
+        with Replicas(log_posterior, replicas, settings.move, processes or available_cores(), checkpoint) as ensembles:
+            status = _run(ensembles, log_posterior.names, settings, progress)
+        chain, values = ensembles.chain(status.steps)
+        chain, values = chain[:, status.burn_in :], values[:, status.burn_in :]
+        extra = _extra(log_posterior, chain, child_seed(seed, 1))
+    facts = _facts(ensembles, status, settings, time.monotonic() - began)
+    kinds = {n: "sampled" for n in log_posterior.names} | {n: "marginalised" for n in log_posterior.marginalised}
+    kinds |= {n: kinds.get(n, "derived") for n in extra}
+    return Posterior(tuple(log_posterior.names), chain, values, extra, kinds, facts)
+
+
+def _about(log_posterior, settings, seed, fingerprint):
+    """What must agree for a chain to be continued; its length may change."""
+    return {
+        "fingerprint": fingerprint,
+        "parameters": list(log_posterior.names),
+        "replicas": settings.replicas,
+        "walkers": settings.walkers,
+        "move": settings.move,
+        "seed": [repr(seed.entropy), list(seed.spawn_key)],
+    }
+
+
+def _begin(log_posterior, settings, optimum, seed):
+    positions, values = starting_walkers(log_posterior, optimum, settings.walkers, child_seed(seed, 0))
+    return Replica(positions, values, random_state(child_seed(seed, 1)))
+
+
+def _run(ensembles: Replicas, names, settings, progress) -> Status:
+    """Rounds until converged, at the limit, or interrupted."""
+    target, status = min(FIRST_STEPS, settings.max_steps), None
+    while True:
+        ensembles.advance(target, _reporter(progress, ensembles.steps, target, status))
+        reached = min(target, ensembles.steps)
+        chain, _ = ensembles.chain(reached)
+        status = assess(chain, names, settings.target_ess)
+        if ensembles.interrupted or status.converged or reached >= settings.max_steps:
+            return status
+        target = next_length(status, settings.target_ess, settings.max_steps)
+
+
+def _reporter(progress, first, aim, status):
+    if progress is None:
+        return None
+    began = time.monotonic()
+    tau, ess, rhat = (nan, nan, nan) if status is None else (max(status.tau.values()), status.ess, max(status.rhat.values()))
+
+    def look(steps):
+        rate = (steps - first) / max(time.monotonic() - began, 1e-9)
+        left = (aim - steps) / rate if rate > 0 else nan
+        progress(ProgressReport(min(steps, aim), aim, tau, ess, rhat, max(left, 0.0) if isfinite(left) else nan))
+
+    return look
+
+
+def _extra(log_posterior, chain, seed):
+    """Marginalised parameters, drawn, and derived ones, computed, for every position; in blocks to bound the memory."""
+    rows = chain.reshape(-1, chain.shape[-1])
+    extra: dict[str, np.ndarray] = {}
+    for k, start in enumerate(range(0, len(rows), _BLOCK)):
+        block = rows[start : start + _BLOCK]
+        columns = dict(log_posterior.draw_marginalised(block, np.random.default_rng(child_seed(seed, k))))
+        columns |= log_posterior.derived(block)
+        for name, column in columns.items():
+            extra.setdefault(name, np.empty(len(rows)))[start : start + _BLOCK] = column
+    return {name: column.reshape(chain.shape[:-1]) for name, column in extra.items()}
+
+
+def _facts(ensembles, status, settings, seconds):
+    """The ``sampling`` part of the summary."""
+    reason, advice = _verdict(ensembles, status, settings)
+    return {
+        "replicas": settings.replicas,
+        "walkers": settings.walkers,
+        "move": settings.move,
+        "steps": status.steps,
+        "burn_in": status.burn_in,
+        "autocorrelation": status.tau,
+        "rhat": status.rhat,
+        "ess_bulk": status.bulk,
+        "ess_tail": status.tail,
+        "acceptance": ensembles.accepted,
+        "converged": reason == "converged",
+        "reason": reason,
+        "advice": advice,
+        "lacking": list(status.lacking),
+        "target_ess": settings.target_ess,
+        "max_steps": settings.max_steps,
+        "seed": settings.seed,
+        "seconds": seconds,
+        "processes": ensembles.processes,
+        "evaluations": int(status.steps * settings.walkers * settings.replicas),
+        "counts": ensembles.counts,
+    }
+
+
+def _verdict(ensembles, status, settings):
+    if ensembles.interrupted:
+        return "interrupted", "Continue with --resume."
+    if status.converged:
+        return "converged", ""
+    advice = "Raise sampling.max_steps and continue with --resume."
+    if max(status.rhat.values()) > 1.1:
+        advice += " The replicas disagree widely: the posterior may have separate peaks; look at them one at a time by narrower priors."
+    return "max_steps", advice

@@ -260,7 +260,7 @@ def _advance(log_posterior, task, board) -> Chunk:
     state = State(task.positions, log_prob=task.log_prob, random_state=task.random_state, copy=True)
     end = time.monotonic() + _CHUNK_SECONDS
     with threadpool_limits(1):
-        for state in sampler.sample(state, iterations=task.steps, skip_initial_state_check=True):
+        for _ in sampler.sample(state, iterations=task.steps, skip_initial_state_check=True):
             done = sampler.backend.iteration
             board.steps[task.replica] = task.start + done
             if board.stop.value or time.monotonic() > end:
@@ -272,6 +272,6 @@ def _advance(log_posterior, task, board) -> Chunk:
         chain=sampler.backend.chain[:done].copy(),
         log_posterior=sampler.backend.log_prob[:done].copy(),
         accepted=int(sampler.backend.accepted.sum()),
-        random_state=state.random_state,
+        random_state=sampler.random_state,
         counts=counts,
     )

@@ -127,6 +127,13 @@ class RunFolder:
             problem = f"the run folder also holds what mufitter did not write: {names}"
             raise InputError(problem, file=self.target, cure=f"Move that away first. {cure}")
 
+    @property
+    def earlier(self) -> Path | None:
+        """The folder of the run that a resumed fit would continue, or None."""
+        if self._is_unfinished():
+            return self.path
+        return self.target if is_run_folder(self.target) else None
+
     def open(self, *, resume: bool = False) -> None:
         """Create the unfinished folder, or take up one that is there, and lock it against a second process.
 
@@ -141,12 +148,19 @@ class RunFolder:
             self.check_target(resume=resume)
             self._refuse_unfinished(resume)
             if resume and not self.path.exists() and is_run_folder(self.target):
-                shutil.copytree(self.target, self.path, ignore=shutil.ignore_patterns("figures", "summary.*", "chain.h5"))
+                self._copy_target()
             self.path.mkdir(exist_ok=True)
             self._take_lock()
             if not resume:
                 self._clear()
             write_atomic(self.path / MARKER, json.dumps({"format": FOLDER_FORMAT}))
+
+    def _copy_target(self) -> None:
+        copy = self.target.with_name(f".{self.target.name}.copied-by-mufitter")
+        shutil.rmtree(copy, ignore_errors=True)
+        shutil.copytree(self.target, copy, ignore=shutil.ignore_patterns("figures", "tables", "summary.*", "chain.h5", "report.html"))
+        write_atomic(copy / MARKER, json.dumps({"format": FOLDER_FORMAT}))
+        os.rename(copy, self.path)
 
     def finish(self) -> Path:
         """Move the folder to its place and return that; an earlier run is removed afterwards."""

@@ -1,0 +1,438 @@
+"""Fits from Python: what the command line does, as functions and objects."""
+
+from __future__ import annotations
+
+import logging
+from collections.abc import Mapping
+from contextlib import AbstractContextManager
+from dataclasses import dataclass, field, replace
+from types import SimpleNamespace
+from functools import cached_property
+from pathlib import Path
+from typing import TYPE_CHECKING, Any, Literal
+
+import numpy as np
+
+from fitter.config.load import config_from_mapping, load_config, raise_all, validate
+from fitter.config.parameters import FLAT
+from fitter.config.settings import Config
+from fitter.config.write import as_run, config_hash, config_text, differences, input_problems
+from fitter.config.yaml_file import read_yaml
+from fitter.errors import InputError, InputErrors
+from fitter.inference.seeds import child_seed
+from fitter.report.run_folder import Run, RunFolder, read_run, write_atomic, writing
+from fitter.sample.sample import Sample
+
+if TYPE_CHECKING:
+    import pandas as pd
+    from matplotlib.figure import Figure
+
+    from fitter.inference.optimum import Optimum
+    from fitter.inference.posterior import Posterior
+    from fitter.likelihood.posterior import LogPosterior
+
+__all__ = ["Check", "Fit", "check", "fit", "load_config", "read_run"]
+
+_log = logging.getLogger("fitter")
+# Children of the seed; a number is never given a second meaning.
+_OPTIMUM, _SAMPLING, _PRIOR = 1, 2, 3
+
+
+@dataclass(frozen=True)
+class Fit:
+    """A finished fit.
+
+    Parameters
+    ----------
+    config : Config
+        The settings.
+    sample : Sample
+        What was observed.
+    log_posterior : LogPosterior
+        The function that was sampled.
+    optimum : Optimum
+        Where the posterior density is highest.
+    chains : Posterior
+        The draws, by replica, step and walker.
+    run_folder : Path or None
+        Where the results were written.
+    """
+
+    config: Config
+    sample: Sample
+    log_posterior: LogPosterior
+    optimum: Optimum
+    chains: Posterior
+    run_folder: Path | None = None
+    _summary: dict[str, Any] = field(default_factory=dict, repr=False)
+
+    def summary(self) -> dict[str, Any]:
+        """Return the contents of summary.json."""
+        return self._summary
+
+    @property
+    def converged(self) -> bool:
+        """Whether every convergence check was passed."""
+        return bool(self._summary["sampling"]["converged"])
+
+    @property
+    def warnings(self) -> list[str]:
+        """What a practitioner would warn of."""
+        return list(self._summary["warnings"])
+
+    @property
+    def best_fit(self) -> dict[str, float]:
+        """Value of every parameter where the posterior density is highest."""
+        return dict(self._summary["best_fit"]["values"])
+
+    @cached_property
+    def posterior(self) -> pd.DataFrame:
+        """The draws as a table: one column a parameter, then log_posterior, replica, step and walker."""
+        import pandas as pd
+
+        columns = {name: self.chains.draws(name).ravel() for name in self.chains.kinds}
+        indices = np.indices(self.chains.log_posterior.shape).reshape(3, -1)
+        columns["log_posterior"] = self.chains.log_posterior.ravel()
+        return pd.DataFrame(columns | dict(zip(("replica", "step", "walker"), indices, strict=True)))
+
+    def corner(self) -> Figure:
+        """Return the corner plot of the sampled and main derived parameters."""
+        return _figures(self)["corner"]()
+
+    def hubble_diagram(self) -> Figure:
+        """Return the Hubble diagram with the residuals from the best fit."""
+        return _figures(self)["hubble"]()
+
+    def __str__(self) -> str:
+        from fitter.report.terminal import terminal_summary
+
+        return terminal_summary(self._summary)
+
+    def _repr_html_(self) -> str:
+        import html
+
+        return f"<pre>{html.escape(str(self))}</pre>"
+
+
+def fit(
+    config: Config | Mapping[str, Any] | str | Path | None = None,
+    *,
+    run_folder: str | Path | Literal[False] | None = None,
+    replace: bool = False,
+    resume: bool = False,
+    progress: bool = False,
+    **settings: Any,
+) -> Fit:
+    """Fit a model to a sample.
+
+    Parameters
+    ----------
+    config : Config, mapping or path, optional
+        The settings, or the config file that holds them.
+    run_folder : path-like or False, optional
+        Where the results go; by default what the config says, and nothing is written if it says nothing or for False.
+    replace : bool
+        Whether an earlier run there may be replaced.
+    resume : bool
+        Continue an unfinished run of the same settings and data.
+    progress : bool
+        Show a progress bar on stderr.
+    **settings
+        Sections of a config (title, sample, model, parameters, sampling, …); they override those of ``config``.
+        ``sample`` may be a `Sample`.
+
+    Returns
+    -------
+    Fit
+
+    Raises
+    ------
+    InputError, InputErrors
+        Anything wrong with settings, data or run folder, before anything is written.
+
+    Examples
+    --------
+    >>> from fitter import Sample, fit
+    >>> sample = Sample.from_arrays(z, mu, covariance=covariance)            # doctest: +SKIP
+    >>> result = fit(sample=sample, model="flat_lcdm")                       # doctest: +SKIP
+    >>> result.posterior["omega_m"].mean()                                   # doctest: +SKIP
+    """
+    chosen, sample = _settings(config, settings)
+    target = chosen.run_folder if run_folder is None else run_folder
+    if not target:
+        return _Job.prepare(chosen, sample, None, progress).run()
+    folder = RunFolder(Path(target).expanduser(), replace=replace)
+    folder.check_target(resume=resume)
+    job = _Job.prepare(chosen.model_copy(update={"run_folder": str(target)}), sample, folder, progress)
+    if resume and folder.earlier is not None:
+        job.require_same_run(folder.earlier)
+        if folder.earlier == folder.target and (finished := job.finished_run()) is not None:
+            return finished
+    folder.open(resume=resume)
+    try:
+        return job.run(resume=resume)
+    finally:
+        folder.leave()
+
+
+def _settings(config, settings: dict[str, Any]) -> tuple[Config, Sample | None]:
+    """Bring a path, mapping, Config and keywords to one Config, and the Sample if it was given as an object."""
+    if isinstance(config, str | Path):
+        config = load_config(config)
+    data = settings.get("sample")
+    sample = data if isinstance(data, Sample) else None
+    settings = {k: v for k, v in settings.items() if sample is None or k != "sample"}
+    if isinstance(config, Config):
+        if sample is None and not settings:
+            return config, None
+        given, folder = {**config.document.data, **settings}, config.folder
+    else:
+        given, folder = {**(config or {}), **settings}, Path.cwd()
+    if sample is not None:
+        given.pop("sample", None)
+    return config_from_mapping(given, folder=folder, sample=sample), sample
+
+
+@dataclass
+class _Job:
+    """One fit on its way from settings to results."""
+
+    config: Config
+    sample: Sample
+    log_posterior: LogPosterior
+    folder: RunFolder | None
+    progress: bool
+
+    @classmethod
+    def prepare(cls, config: Config, sample: Sample | None, folder: RunFolder | None, progress: bool) -> _Job:
+        """Read the data and build the likelihood; nothing is written."""
+        if sample is None:
+            sample = Sample.from_config(config.sample, config.folder)
+            raise_all(input_problems(config, sample))
+        log_posterior = _likelihood(config, sample)
+        config.sampling.check_dimension(len(log_posterior.names))
+        return cls(config, sample, log_posterior, folder, progress)
+
+    @cached_property
+    def settings(self) -> dict[str, Any]:
+        """The settings as run."""
+        return as_run(self.config, self.sample, self.folder.target if self.folder is not None else Path.cwd())
+
+    def require_same_run(self, earlier: Path) -> None:
+        """Refuse to continue a run of other settings or data, naming what differs."""
+        file = earlier / "config.yaml"
+        if not file.exists():
+            return
+        different = differences(read_yaml(file).data, self.settings)
+        if different:
+            said = "; ".join(different[:6]) + ("; …" if len(different) > 6 else "")
+            cure = "Restore these settings to continue it, or start again with --replace"
+            raise InputError(f"the earlier run is of other settings or data: {said}", file=earlier, cure=cure)
+
+    def finished_run(self) -> Fit | None:
+        """Return the run that is already in its place and converged, or None if it can be continued."""
+        run = read_run(self.folder.target)
+        sampling = run.summary["sampling"]
+        if not sampling["converged"]:
+            return None
+        if self.config.sampling.target_ess > sampling.get("target_ess", np.inf):
+            problem = f"the run there has ended with a target_ess of {sampling['target_ess']}, it cannot be continued"
+            raise InputError(problem, file=self.folder.target, cure="Make a longer one with --replace")
+        return Fit(self.config, self.sample, self.log_posterior, self._optimum(), run.posterior, self.folder.target, run.summary)
+
+    def run(self, *, resume: bool = False) -> Fit:
+        """Find the optimum, sample, summarise, draw and write."""
+        if self.folder is None:
+            return self._compute(None, resume=False)
+        with writing(self.folder.path), _RunLog(self.folder.path / "run.log"):
+            self._write_config()
+            result = self._compute(self.folder.path, resume=resume)
+            self._write_results(result)
+        return replace(result, run_folder=self.folder.finish())
+
+    def _seed(self, purpose: int) -> np.random.SeedSequence:
+        return child_seed(np.random.SeedSequence(self.config.sampling.seed), purpose)
+
+    def _optimum(self) -> Optimum:
+        from fitter.inference.optimum import find_optimum
+
+        return find_optimum(self.log_posterior, self._seed(_OPTIMUM))
+
+    def _compute(self, folder: Path | None, *, resume: bool) -> Fit:
+        from fitter.inference.progress import progress_bar
+        from fitter.inference.sampling import sample_posterior
+
+        _log.info("%s, model %s, sampled: %s", self.sample_line(), self.config.model, ", ".join(self.log_posterior.names))
+        for text in self.sample.warnings:
+            _log.warning(text)
+        optimum = self._optimum()
+        _log.info("optimum: chi2 %.4f at %s", optimum.chi2, optimum.values)
+        fingerprint = config_hash(self.settings)
+        with progress_bar(quiet=not self.progress) as bar:
+            chains = sample_posterior(
+                self.log_posterior, self.config.sampling, optimum, seed=self._seed(_SAMPLING),
+                folder=folder, progress=bar, resume=resume, fingerprint=fingerprint,
+            )  # fmt: skip
+        _log.info("sampled: %s", {k: v for k, v in chains.sampling.items() if k in ("steps", "burn_in", "converged", "reason", "seconds")})
+        return self._summarised(optimum, chains)
+
+    def _summarised(self, optimum: Optimum, chains: Posterior) -> Fit:
+        from fitter.report.provenance import provenance
+        from fitter.report.summary import Extras, summarise
+
+        more = {"provenance": provenance(self.config.sampling.seed, config_hash(self.settings), self.sample.sources)}
+        extras = Extras(
+            title=self.config.title,
+            radiation=self.config.radiation,
+            excluded_fraction=self.log_posterior.prior_excluded_fraction(np.random.default_rng(self._seed(_PRIOR))),
+            more=more,
+        )
+        summary = summarise(self.log_posterior, chains, optimum, extras)
+        return Fit(self.config, self.sample, self.log_posterior, optimum, chains, None, summary)
+
+    def sample_line(self) -> str:
+        """Return one line on the data."""
+        calibrators = f" ({self.sample.n_calibrators} calibrators)" if self.sample.n_calibrators else ""
+        return f"{self.sample.n} supernovae{calibrators}, SHA-256 {self.sample.sha256}"
+
+    def _write_config(self) -> None:
+        from fitter import __version__
+
+        header = [
+            f"As run by mufitter {__version__}, every default written out. Repeat it with",
+            "  mufitter fit config.yaml --run-folder NEW",
+        ]
+        if self.config.sample is None:
+            header.append(f"The data came as arrays from Python (SHA-256 {self.sample.sha256}): this file alone cannot repeat the fit.")
+        write_atomic(self.folder.path / "config.yaml", config_text(self.settings, header))
+
+    def _write_results(self, result: Fit) -> None:
+        from fitter.inference.checkpoint import remove_checkpoint
+        from fitter.report.chain_file import write_chain
+        from fitter.report.summary import summary_csv, summary_json, summary_markdown
+
+        path, summary = self.folder.path, result.summary()
+        write_chain(path / "chain.h5", result.chains, {"config_sha256": config_hash(self.settings)})
+        if result.converged:
+            remove_checkpoint(path)
+        for name, text in (("summary.md", summary_markdown(summary)), ("summary.csv", summary_csv(summary))):
+            write_atomic(path / name, text)
+        _draw(result, path / "figures")
+        # Last: a folder with this file is complete.
+        write_atomic(path / "summary.json", summary_json(summary))
+        for text in result.warnings:
+            _log.warning(text)
+
+
+def _likelihood(config: Config, sample: Sample) -> LogPosterior:
+    from fitter.likelihood.posterior import LogPosterior
+
+    given = {k: v for k, v in config.complete_parameters(sample).items() if v != FLAT}
+    return LogPosterior.build(sample, config.model, given, radiation=config.radiation)
+
+
+def _figures(result: Fit) -> dict:
+    """Return the functions that draw a fit's figures, by name."""
+    return {}
+
+
+def _draw(result: Fit, folder: Path) -> None:
+    """Draw every figure as PDF and PNG."""
+
+
+class _RunLog(AbstractContextManager):
+    """Writes the log of a run to a file, the traceback too if it fails."""
+
+    def __init__(self, path: Path):
+        self.path = path
+
+    def __enter__(self) -> _RunLog:
+        self._handler = logging.FileHandler(self.path, encoding="utf-8")
+        self._handler.setFormatter(logging.Formatter("%(asctime)s %(levelname)s %(message)s"))
+        self._level, self._propagate = _log.level, _log.propagate
+        _log.addHandler(self._handler)
+        _log.setLevel(logging.INFO)
+        # The log belongs to the file; the terminal gets the summary.
+        _log.propagate = False
+        return self
+
+    def __exit__(self, kind, error, traceback) -> None:
+        if error is not None:
+            _log.error("stopped", exc_info=(kind, error, traceback))
+        _log.removeHandler(self._handler)
+        _log.setLevel(self._level)
+        _log.propagate = self._propagate
+        self._handler.close()
+
+
+@dataclass(frozen=True)
+class Check:
+    """What a config would fit, and everything that is wrong with it."""
+
+    problems: tuple[InputError, ...]
+    config: Config | None = None
+    sample: Sample | None = None
+    log_posterior: LogPosterior | None = None
+
+    @property
+    def ok(self) -> bool:
+        """Whether the fit can be made."""
+        return not self.problems
+
+    def __str__(self) -> str:
+        from fitter.report.check_text import check_text
+
+        return check_text(self.config, self.sample, self.log_posterior)
+
+
+def check(path: str | Path) -> Check:
+    """Read everything that a config names and fit nothing.
+
+    Parameters
+    ----------
+    path : path-like
+        The config file.
+
+    Returns
+    -------
+    Check
+        Problems of the config and of the sample's files together.
+    """
+    try:
+        document = read_yaml(path)
+    except InputErrors as error:
+        return Check(error.errors)
+    except InputError as error:
+        return Check((error,))
+    folder = Path(path).parent
+    config, sample_settings, problems = validate(document, folder)
+    sample = None
+    if sample_settings is not None:
+        try:
+            sample = Sample.from_config(sample_settings, folder)
+        except InputError as error:
+            problems += getattr(error, "errors", [error])
+    if config is None or sample is None or problems:
+        return Check(tuple(problems), config, sample)
+    return _check_likelihood(config, sample)
+
+
+def _check_likelihood(config: Config, sample: Sample) -> Check:
+    problems = input_problems(config, sample)
+    try:
+        log_posterior = _likelihood(config, sample)
+        config.sampling.check_dimension(len(log_posterior.names))
+    except InputError as error:
+        return Check((*problems, *getattr(error, "errors", [error])), config, sample)
+    return Check(tuple(problems), config, sample, log_posterior)
+
+
+def load_run(path: str | Path) -> tuple[Run, Config]:
+    """Read a run folder together with its config."""
+    run = read_run(path)
+    document = read_yaml(run.config_file)
+    # A fit of arrays has no sample section; what the parameters depend on stands in the summary.
+    arrays = None if "sample" in document.data else SimpleNamespace(**run.summary["sample"])
+    config, _, problems = validate(document, run.folder, arrays)
+    raise_all(problems)
+    return run, config

@@ -1,0 +1,198 @@
+"""The command line: parses, calls, prints. Data go to stdout, messages to stderr."""
+
+from __future__ import annotations
+
+import functools
+import os
+import sys
+from collections.abc import Callable
+from pathlib import Path
+from typing import Annotated, TextIO
+
+import typer
+
+from fitter.errors import InputError, InputErrors, MufitterError
+
+__all__ = ["app", "main"]
+
+NOT_CONVERGED, USER_INPUT, OUR_FAULT, INTERRUPTED = 1, 2, 3, 130
+
+app = typer.Typer(
+    help="What a table of supernova distances says about dark energy, curvature and the expansion rate.",
+    epilog="Exit codes: 0 fine, 1 not converged, 2 something in your input, 3 a fault of mufitter.",
+    no_args_is_help=True,
+    rich_markup_mode=None,
+    pretty_exceptions_enable=False,
+    context_settings={"help_option_names": ["-h", "--help"]},
+)
+
+ConfigFile = Annotated[Path, typer.Argument(metavar="CONFIG", help="The config, a YAML file.", show_default=False)]
+
+
+def main() -> None:
+    """Run the command line; the entry point of `mufitter`."""
+    for stream in (sys.stdout, sys.stderr):
+        # A terminal that cannot show Ω must not end a fit.
+        stream.reconfigure(errors="replace")
+    app(prog_name="mufitter")
+
+
+def _reported(command: Callable) -> Callable:
+    """Turn exceptions into messages on stderr and exit codes."""
+
+    @functools.wraps(command)
+    def wrapped(*arguments, **options):
+        try:
+            command(*arguments, **options)
+        except MufitterError as error:
+            _complain(error)
+            raise typer.Exit(error.exit_code) from None
+        except BrokenPipeError:
+            # The reader of our output has left, as `head` does: nothing is wrong.
+            os.dup2(os.open(os.devnull, os.O_WRONLY), sys.stdout.fileno())
+        except KeyboardInterrupt:
+            _say("mufitter: interrupted")
+            raise typer.Exit(INTERRUPTED) from None
+        except Exception as error:  # noqa: BLE001 - the last resort: a short message on screen, the traceback in a file
+            _blame_ourselves(error)
+            raise typer.Exit(OUR_FAULT) from None
+
+    return wrapped
+
+
+def _say(text: str) -> None:
+    print(text, file=sys.stderr)
+
+
+def _colour(text: str, code: str, stream: TextIO) -> str:
+    plain = os.environ.get("NO_COLOR") or os.environ.get("TERM") == "dumb" or not stream.isatty()
+    return text if plain else f"\x1b[{code}m{text}\x1b[0m"
+
+
+def _complain(error: MufitterError) -> None:
+    mark = _colour("mufitter:", "1;31", sys.stderr)
+    errors = error.errors if isinstance(error, InputErrors) else (error,)
+    if len(errors) > 1:
+        _say(f"{mark} {len(errors)} problems")
+        for one in errors:
+            _say(f"  - {one}")
+    else:
+        _say(f"{mark} {errors[0]}")
+
+
+def _blame_ourselves(error: Exception) -> None:
+    import tempfile
+    import traceback
+
+    from fitter import __version__
+
+    text = "".join(traceback.format_exception(error))
+    said = f"{type(error).__name__}: {error}".splitlines()[0]
+    try:
+        with tempfile.NamedTemporaryFile("w", prefix="mufitter-error-", suffix=".log", delete=False, encoding="utf-8") as file:
+            file.write(f"mufitter {__version__}, {sys.version}, {sys.platform}\n{sys.argv}\n{text}")
+        where = f"The details are in {file.name}; please report them."
+    except OSError:
+        where = "The details could not be saved, there is no room for temporary files."
+    _say(f"{_colour('mufitter:', '1;31', sys.stderr)} a fault of mufitter, not yours: {said[:300]}\n{where}")
+
+
+def _version(wanted: bool) -> None:
+    if wanted:
+        from fitter import __version__
+
+        print(f"mufitter {__version__}")
+        raise typer.Exit
+
+
+@app.callback()
+def _options(
+    version: Annotated[bool, typer.Option("--version", callback=_version, is_eager=True, help="Print the version and stop.")] = False,
+) -> None:
+    pass
+
+
+@app.command("fit")
+@_reported
+def _fit(
+    config: ConfigFile,
+    run_folder: Annotated[
+        Path | None, typer.Option(help="Where the results go.", show_default="what the config says, or runs/NAME")
+    ] = None,
+    replace: Annotated[bool, typer.Option("--replace", help="Replace an earlier run there.")] = False,
+    resume: Annotated[bool, typer.Option("--resume", help="Continue an unfinished run.")] = False,
+    seed: Annotated[int | None, typer.Option(min=0, help="Seed of all randomness, instead of the config's.", show_default=False)] = None,
+    json_: Annotated[bool, typer.Option("--json", help="Print summary.json to stdout instead of the readable summary.")] = False,
+    quiet: Annotated[bool, typer.Option("--quiet", "-q", help="No progress and no summary, only warnings and errors.")] = False,
+) -> None:
+    """Fit a model to a sample: posterior, summary and figures in a run folder."""
+    if replace and resume:
+        raise InputError("--replace starts anew, --resume continues: choose one of them")
+    from fitter.api import fit, load_config
+
+    settings = load_config(config)
+    if seed is not None:
+        settings = settings.changed({"sampling.seed": seed})
+    target = run_folder or settings.default_run_folder()
+    result = fit(settings, run_folder=target, replace=replace, resume=resume, progress=not quiet)
+    _print_result(result, json_, quiet)
+    if not quiet:
+        _say(f"Written to {result.run_folder}")
+    if not result.converged:
+        _say(f"mufitter: not converged. {result.summary()['sampling'].get('advice') or ''}".rstrip())
+        raise typer.Exit(NOT_CONVERGED)
+
+
+def _print_result(result, as_json: bool, quiet: bool) -> None:
+    from fitter.report.summary import summary_json
+    from fitter.report.terminal import terminal_summary
+
+    if as_json:
+        sys.stdout.write(summary_json(result.summary()))
+    elif not quiet:
+        sys.stdout.write(terminal_summary(result.summary(), stream=sys.stdout))
+    if as_json or quiet:
+        for text in result.warnings:
+            _say(f"Warning: {text}")
+    sys.stdout.flush()
+
+
+@app.command("check")
+@_reported
+def _check(config: ConfigFile) -> None:
+    """Read everything, say what will be fitted and all that is wrong; fit nothing."""
+    from fitter.api import check
+
+    found = check(config)
+    text = str(found)
+    if text:
+        print(text, flush=True)
+    if not found.ok:
+        raise InputErrors(found.problems)
+    _say("Nothing is wrong.")
+
+
+@app.command("schema")
+@_reported
+def _schema() -> None:
+    """Print the JSON Schema of the config, for editors."""
+    import json
+
+    from fitter.config.schema import config_schema
+
+    print(json.dumps(config_schema(), indent=2, ensure_ascii=False), flush=True)
+
+
+@app.command("explain")
+@_reported
+def _explain(
+    key: Annotated[str, typer.Argument(metavar="KEY", help="A key of the config, a parameter, a model or a prior.", show_default=False)],
+) -> None:
+    """Say what a key means: unit, default, example."""
+    from fitter.config.schema import explain
+
+    print(explain(key), flush=True)
+
+
+if __name__ == "__main__":
+    main()

@@ -1,0 +1,205 @@
+"""Turns pydantic's validation errors into messages that name the row, the value and the cure."""
+
+from __future__ import annotations
+
+import difflib
+import re
+import types
+import typing
+from collections.abc import Iterable
+
+from pydantic import BaseModel, ValidationError
+
+from fitter.config.yaml_file import Document, Key
+from fitter.errors import InputError
+
+__all__ = ["allowed_keys", "nearest", "problems_of"]
+
+_EXPECTED = {
+    "float": "a number",
+    "int": "a whole number",
+    "bool": "true or false",
+    "string": "text",
+    "list": "a list in square brackets, e.g. [0.01, 2.3]",
+    "tuple": "a list in square brackets, e.g. [0.01, 2.3]",
+    "dict": "a section of `key: value` lines",
+    "model": "a section of `key: value` lines",
+    "dataclass": "a section of `key: value` lines",
+    "none": "nothing",
+    "path": "a path",
+    "finite": "a finite number",
+    "mapping": "a section of `key: value` lines",
+}
+_BOUNDS = {
+    "greater_than": ("a value above", "gt"),
+    "greater_than_equal": ("a value of at least", "ge"),
+    "less_than": ("a value below", "lt"),
+    "less_than_equal": ("a value of at most", "le"),
+    "too_short": ("a length of at least", "min_length"),
+    "too_long": ("a length of at most", "max_length"),
+    "string_too_short": ("a length of at least", "min_length"),
+    "multiple_of": ("a multiple of", "multiple_of"),
+}
+
+
+def nearest(word: str, known: Iterable[str]) -> str | None:
+    """Return the known word that a misspelt one most likely stands for, or None."""
+    known = list(known)
+    lower = {k.lower(): k for k in known}
+    plain = str(word).lower().replace("-", "_").replace(" ", "_")
+    if plain in lower:
+        return lower[plain]
+    close = difflib.get_close_matches(plain, lower, n=1, cutoff=0.6)
+    return lower[close[0]] if close else None
+
+
+def problems_of(error: ValidationError, model: type[BaseModel], document: Document, prefix: tuple[Key, ...] = ()) -> list[InputError]:
+    """Translate a validation error.
+
+    Parameters
+    ----------
+    error : pydantic.ValidationError
+        What the validation of ``model`` found.
+    model : type
+        The model that was validated, for the sets of allowed keys.
+    document : Document
+        The config; gives the rows.
+    prefix : tuple
+        Where in the document the validated part stands.
+
+    Returns
+    -------
+    list of InputError
+        One per problem, in the order of the file.
+    """
+    data = _at(document.data, prefix)
+    found = _one_branch_each([(e, *_place(tuple(e["loc"]), data, e["type"])) for e in error.errors(include_url=False)])
+    grouped: dict[tuple[Key, ...], list] = {}
+    for entry, path, _ in found:
+        grouped.setdefault(path, []).append(entry)
+    problems = [_message(entries, prefix + path, model, document) for path, entries in grouped.items()]
+    return sorted(problems, key=lambda p: p.row or 0)
+
+
+def allowed_keys(model: type[BaseModel], loc: tuple[Key, ...] = ()) -> list[str]:
+    """Return the keys that a section may have; ``loc`` leads to it from ``model``."""
+    models = [model]
+    for step in loc:
+        named = [m for m in models if m.__name__ == step]
+        inside = [c for m in models for f in _fields(m).items() if f[0] == step for c in _models_in(f[1].annotation)]
+        models = named or inside or models
+    return list(dict.fromkeys(key for m in models for key in _fields(m)))
+
+
+def _fields(model: type[BaseModel]) -> dict:
+    return {f.alias or name: f for name, f in model.model_fields.items()}
+
+
+def _models_in(annotation) -> list[type[BaseModel]]:
+    if isinstance(annotation, type) and not isinstance(annotation, types.GenericAlias) and issubclass(annotation, BaseModel):
+        return [annotation]
+    return [m for part in typing.get_args(annotation) for m in _models_in(part)]
+
+
+def _at(data, keys: tuple[Key, ...]):
+    for key in keys:
+        data = data[key]
+    return data
+
+
+def _place(loc: tuple[Key, ...], data, kind: str) -> tuple[tuple[Key, ...], tuple]:
+    """Split pydantic's location into the path in the file and the (path, name) of the union branches."""
+    if not loc:
+        return (), ()
+    head, rest = loc[0], loc[1:]
+    options = []
+    known = (isinstance(data, dict) and head in data) or (isinstance(data, list) and isinstance(head, int) and head < len(data))
+    if known:
+        path, branches = _place(rest, data[head], kind)
+        options.append(((head, *path), tuple(((head, *p), name) for p, name in branches)))
+    if kind == "missing" and not rest:
+        return (head,), ()
+    path, branches = _place(rest, data, kind)
+    options.append((path, (((), head), *branches)))
+    # A branch may be called like a key of the file: the reading that leaves fewest names unexplained is the right one.
+    return min(options, key=lambda option: len(option[1]))
+
+
+def _one_branch_each(found: list) -> list:
+    """Where a value may take several forms, keep the complaints about the form it resembles most."""
+    scores: dict[tuple, dict] = {}
+    for entry, _, branches in found:
+        if branches:
+            place, name = branches[0]
+            weight = {"missing": 10, "extra_forbidden": 10, "model_type": 20, "dict_type": 20}.get(entry["type"], 1)
+            score = scores.setdefault(place, {})
+            score[name] = score.get(name, 0) + weight
+    kept = []
+    for entry, path, branches in found:
+        if branches:
+            place, name = branches[0]
+            if scores[place][name] > min(scores[place].values()):
+                continue
+        kept.append((entry, path, branches))
+    return kept
+
+
+def _message(entries: list[dict], keys: tuple[Key, ...], model: type[BaseModel], document: Document) -> InputError:
+    entry = entries[0]
+    kind, value = entry["type"], entry.get("input")
+    if kind == "extra_forbidden":
+        return _unknown_key(entry, keys, model, document)
+    if kind == "missing":
+        return document.error(f"the key `{keys[-1]}` is missing", keys[:-1], cure=_known(allowed_keys(model, entry["loc"][:-1])))
+    if kind in ("value_error", "assertion_error"):
+        cause = entry.get("ctx", {}).get("error")
+        if isinstance(cause, InputError):
+            return document.error(cause.problem, keys, value=cause.value, cure=cause.cure)
+        return document.error(str(cause), keys, value=None if isinstance(value, dict) else value)
+    if kind in ("literal_error", "enum"):
+        words = re.findall(r"'([^']*)'", entry["ctx"]["expected"])
+        near = nearest(value, words) if isinstance(value, str) else None
+        cure = f"Did you mean `{near}`?" if near else None
+        return document.error(f"expected one of: {', '.join(words)}", keys, value=value, cure=cure)
+    expected = list(dict.fromkeys(_expected(e) for e in entries))
+    return document.error(f"expected {' or '.join(expected)}", keys, value=_brief(value), cure=_cure(kind, value))
+
+
+def _unknown_key(entry: dict, keys: tuple[Key, ...], model: type[BaseModel], document: Document) -> InputError:
+    known = allowed_keys(model, entry["loc"][:-1])
+    key = str(keys[-1])
+    near = nearest(key, known)
+    if ":" in key:
+        cure = "A colon after a key must be followed by a space. "
+    else:
+        cure = f"Did you mean `{near}`? " if near else ""
+    return document.error(f"there is no key `{key}` here", keys, cure=cure + _known(known))
+
+
+def _known(keys: list[str]) -> str | None:
+    return f"Known keys: {', '.join(keys)}" if keys else None
+
+
+def _expected(entry: dict) -> str:
+    kind, context = entry["type"], entry.get("ctx", {})
+    if kind in _BOUNDS:
+        words, key = _BOUNDS[kind]
+        return f"{words} {context[key]}"
+    if kind == "int_from_float":
+        return "a whole number"
+    return _EXPECTED.get(kind.split("_")[0], entry["msg"][:1].lower() + entry["msg"][1:])
+
+
+def _cure(kind: str, value) -> str | None:
+    if not isinstance(value, str):
+        return None
+    if re.fullmatch(r"[-+]?\d+,\d+", value.strip()):
+        return "The decimal mark is a point"
+    if re.fullmatch(r"[-+]?\d+(_\d+)+", value.strip()):
+        return "Write the number without underscores"
+    return None
+
+
+def _brief(value):
+    text = repr(value)
+    return value if len(text) <= 80 else text[:79] + "…"

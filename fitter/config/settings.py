@@ -1,0 +1,122 @@
+"""The settings of a fit, validated."""
+
+from __future__ import annotations
+
+import os
+from collections.abc import Mapping
+from pathlib import Path
+from typing import Annotated, Any
+
+from pydantic import AfterValidator, BaseModel, BeforeValidator, ConfigDict, Field, PrivateAttr, WithJsonSchema
+from pydantic_core import PydanticKnownError
+
+from fitter.config.parameters import complete_parameters
+from fitter.config.yaml_file import Document
+from fitter.cosmology import MODELS
+from fitter.inference.settings import SamplingSettings
+from fitter.parameters import PARAMETERS
+from fitter.sample.settings import SampleSettings
+
+__all__ = ["Config"]
+
+
+def _known_model(name: str) -> str:
+    if name not in MODELS:
+        raise PydanticKnownError("literal_error", {"expected": ", ".join(f"'{m}'" for m in MODELS)})
+    return name
+
+
+def _empty_is_default(value):
+    return {} if value is None else value
+
+
+def _parameters_schema() -> dict:
+    numbers = {"type": "array", "items": {"type": "number"}}
+    priors = {"uniform": 2, "normal": 2, "truncated_normal": 4, "log_uniform": 2}
+    prior = {
+        "type": "object",
+        "properties": {k: {**numbers, "minItems": n, "maxItems": n} for k, n in priors.items()},
+        "additionalProperties": False,
+        "minProperties": 1,
+        "maxProperties": 1,
+    }
+    settable = [p for p in PARAMETERS.values() if p.default_prior]
+    return {
+        "type": "object",
+        "properties": {
+            p.name: {"description": f"{p.meaning}{f' ({p.unit})' if p.unit else ''}", "anyOf": [{"type": "number"}, prior]}
+            for p in settable
+        },
+        "additionalProperties": False,
+    }
+
+
+ModelName = Annotated[str, AfterValidator(_known_model), WithJsonSchema({"type": "string", "enum": list(MODELS)})]
+Parameters = Annotated[dict[str, Any], BeforeValidator(_empty_is_default), WithJsonSchema(_parameters_schema())]
+Sampling = Annotated[SamplingSettings, BeforeValidator(_empty_is_default)]
+
+
+class Config(BaseModel):
+    """Everything a fit is told: what was observed, the model, the priors, how to sample.
+
+    Made by `load_config` from a file or by `config_from_mapping` from Python; both check names and values beyond
+    what the types say (`fitter.config.parameters`). ``sample`` is None only where the data came as arrays.
+    """
+
+    model_config = ConfigDict(extra="forbid", frozen=True)
+
+    title: str = Field("", description="Free text, printed with the results.")
+    sample: SampleSettings | None = Field(None, description="What was observed: the table, its columns, cuts and uncertainties.")
+    model: ModelName = Field(description="The cosmological model.")
+    radiation: bool = Field(False, description="Count photons (2.7255 K) and 3.046 massless neutrinos in the expansion rate.")
+    parameters: Parameters = Field(
+        default_factory=dict, description="For each parameter a prior, or a number to hold it fixed; those left out have their default."
+    )
+    sampling: Sampling = Field(default_factory=SamplingSettings, description="How long and from which seed to sample.")
+    run_folder: str | None = Field(
+        None, description="Where the results go, relative to the working directory; the default is runs/ and the config's name."
+    )
+    inputs: dict[str, str] = Field(
+        default_factory=dict,
+        description="SHA-256 of input files by path, as a run folder records them; a file that has changed since is refused.",
+    )
+
+    _document: Document = PrivateAttr(default_factory=lambda: Document({}))
+    _folder: Path = PrivateAttr(default_factory=Path.cwd)
+
+    @property
+    def path(self) -> Path | None:
+        """The file the settings came from, or None."""
+        return self._document.path
+
+    @property
+    def folder(self) -> Path:
+        """What the paths of inputs are relative to."""
+        return self._folder
+
+    @property
+    def document(self) -> Document:
+        """The settings as given, with the row of each key."""
+        return self._document
+
+    def complete_parameters(self, sample) -> dict[str, dict | float]:
+        """Return every parameter of the fit of a `Sample` with its prior or fixed value."""
+        return complete_parameters(self.parameters, self.model, sample.distance_scale, sample.data_kind)
+
+    def default_run_folder(self) -> Path:
+        """Return the folder for the results, relative to the working directory."""
+        if self.run_folder:
+            return Path(os.path.expanduser(self.run_folder))
+        return Path("runs") / (self.path.stem if self.path is not None else self.model)
+
+    def changed(self, changes: Mapping[str, Any]) -> Config:
+        """Return the same settings with sections, or single keys such as ``sampling.seed``, replaced; validated again."""
+        from fitter.config.load import raise_all, validate
+
+        data = dict(self.document.data)
+        for key, value in changes.items():
+            section, _, name = key.partition(".")
+            data[section] = {**(data.get(section) or {}), name: value} if name else value
+        config, _, problems = validate(Document(data, self.document.lines, self.path), self.folder)
+        raise_all(problems)
+        return config

@@ -1,0 +1,161 @@
+"""Text tables: CSV, tab or whitespace, gzipped or not."""
+
+from __future__ import annotations
+
+import io
+import re
+from collections.abc import Sequence
+from pathlib import Path
+
+import numpy as np
+
+from fitter.errors import InputError
+from fitter.sample.files import open_binary, reading
+from fitter.sample.readers.layout import MISSING, WHITESPACE, Layout, TextOptions, find_layout, is_number, plain_number, split_fields
+from fitter.sample.tables import Columns, Table
+
+__all__ = ["read_text"]
+
+
+def read_text(path: Path, options: TextOptions, *, numbers: Sequence = (), texts: Sequence = (), everything=False, shown: str) -> Table:
+    """Read the columns of a text table that are asked for.
+
+    Parameters
+    ----------
+    path : Path
+    options : TextOptions
+    numbers, texts : sequences of str or int
+        Columns by name or position, wanted as numbers or as words.
+    everything : bool
+        All columns as numbers, in the order of the table.
+    shown : str
+        The path as messages should give it.
+
+    Returns
+    -------
+    Table
+        A column that is missing or holds something else raises only when it is asked for.
+    """
+    layout = find_layout(path, options, [*numbers, *texts], shown)
+    columns = Columns(layout.names, layout.n_columns, shown)
+    as_numbers = list(range(layout.n_columns)) if everything else columns.known(numbers)
+    as_texts = columns.known(texts)
+    with reading(path, shown):
+        return _read(path, layout, columns, sorted(set(as_numbers)), sorted(set(as_texts)), shown, options)
+
+
+def _read(path: Path, layout: Layout, columns: Columns, as_numbers, as_texts, shown: str, options: TextOptions) -> Table:
+    _check_lengths(path, layout, shown, options)
+    needed = sorted({*as_numbers, *as_texts})
+    try:
+        found = _parse(path, layout, options, as_numbers, needed)
+    except ValueError:  # a field is no number, or pandas cannot tell the rows apart
+        found = _split(path, layout, options, needed)
+    floats, problems = {}, {}
+    for position in as_numbers:
+        values = found[position]
+        if values.dtype != np.float64:
+            values, problem = _to_numbers(values, layout.lines, columns.label(position), shown)
+            if problem is not None:
+                problems[position] = problem
+        floats[position] = values
+    words = {p: np.array([w.strip() for w in found[p]], dtype=str) for p in as_texts}
+    return Table(columns, layout.lines, floats, words, problems, layout.note)
+
+
+def _rows(path: Path, layout: Layout, options: TextOptions):
+    """The data rows one by one, without their tag."""
+    skip = np.zeros(len(layout.skip) + len(layout.lines), dtype=bool)
+    skip[layout.skip] = True
+    tag = options.row_tag
+    with io.TextIOWrapper(open_binary(path), encoding=layout.encoding) as text:
+        for skipped, line in zip(skip.tolist(), text, strict=True):
+            if skipped:
+                continue
+            line = line.strip("\r\n") if tag is None else line.strip()[len(tag) :].lstrip(" ")
+            yield line if tag is None or layout.delimiter == WHITESPACE else line.removeprefix(layout.delimiter)
+
+
+def _check_lengths(path: Path, layout: Layout, shown: str, options: TextOptions) -> None:
+    """Refuse rows that are too long, and, where a gap would shift the columns, too short."""
+    n, delimiter = layout.n_columns, layout.delimiter
+    for line, text in zip(layout.lines, _rows(path, layout, options), strict=True):
+        count = len(text.split()) if delimiter == WHITESPACE else text.count(delimiter) + 1
+        if count == n or (count < n and delimiter != WHITESPACE):
+            continue
+        fields = split_fields(text, delimiter)
+        if len(fields) == n or (delimiter != WHITESPACE and not any(fields[n:])):
+            continue  # quoted fields, or spare delimiters at the end
+        raise InputError(
+            f"the row has {len(fields)} columns, the others {n}", file=shown, row=int(line), value=text[:60],
+            cure="Fill the gap or remove what is too much; set `delimiter` if columns are separated otherwise, `comment` if it ends in one",
+        )  # fmt: skip
+
+
+def _parse(path: Path, layout: Layout, options: TextOptions, as_numbers, needed) -> dict[int, np.ndarray]:
+    """Read the columns with pandas, numbers as float64; ValueError where a field is none."""
+    import pandas as pd
+
+    if layout.tagged and layout.delimiter != WHITESPACE:
+        return _split(path, layout, options, needed)
+    shift = int(layout.tagged)  # the tag is a column of its own
+    missing = sorted({form for token in MISSING for form in (token, token.upper(), token.capitalize())} | {"NaN"})
+    with io.TextIOWrapper(open_binary(path), encoding=layout.encoding) as source:
+        frame = pd.read_csv(
+            source,
+            sep=layout.delimiter,
+            header=None,
+            names=list(range(-shift, layout.n_columns)),
+            usecols=needed,
+            dtype={p: (np.float64 if p in as_numbers else object) for p in needed},
+            skiprows=layout.skip,
+            keep_default_na=False,
+            na_values={p: missing for p in as_numbers},
+            skipinitialspace=layout.delimiter != WHITESPACE,
+            float_precision="round_trip",
+            index_col=False,
+            engine="c",
+        )
+    if len(frame) != len(layout.lines):
+        raise ValueError("a quotation mark is not closed")
+    return {p: frame[p].to_numpy() if p in as_numbers else frame[p].fillna("").to_numpy(dtype=object) for p in needed}
+
+
+def _split(path: Path, layout: Layout, options: TextOptions, needed) -> dict[int, np.ndarray]:
+    """Read the columns as words, line by line."""
+    found = {p: [] for p in needed}
+    for text in _rows(path, layout, options):
+        fields = split_fields(text, layout.delimiter)
+        for position, words in found.items():
+            words.append(fields[position] if position < len(fields) else "")
+    return {p: np.array(words, dtype=object) for p, words in found.items()}
+
+
+def _to_numbers(words, lines, label, shown: str):
+    """Convert words to numbers the long way; return them and what is wrong with the first that is none."""
+    import pandas as pd
+
+    plain = [plain_number(str(w)) for w in words]
+    plain = ["nan" if p.lower() in MISSING else p for p in plain]
+    values = pd.to_numeric(pd.Series(plain, dtype=object), errors="coerce").to_numpy(dtype=float)
+    wrong = np.isnan(values) & np.array([p != "nan" for p in plain])
+    if not wrong.any():
+        return values, None
+    row = int(np.argmax(wrong))
+    word = str(words[row]).strip()
+    return values, InputError(
+        f"this is not a number{_count(wrong)}", file=shown, row=int(lines[row]), column=label, value=word, cure=_cure(word)
+    )
+
+
+def _cure(word: str) -> str:
+    if is_number(word, decimal_comma=True):
+        return "Write numbers with a decimal point, not a comma"
+    if re.fullmatch(r"[-+]?\d{1,3}(,\d{3})+(\.\d*)?", word):
+        return "Write numbers without thousands separators"
+    return "Correct it, or leave the field empty and cut the row with `keep:` or `missing: drop`"
+
+
+def _count(wrong) -> str:
+    others = int(wrong.sum()) - 1
+    return f", here and in {others} more row{'s' if others > 1 else ''}" if others else ""

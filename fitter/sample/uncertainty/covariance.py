@@ -1,0 +1,61 @@
+"""A covariance matrix from a file."""
+
+from __future__ import annotations
+
+from pathlib import Path
+from typing import ClassVar
+
+import numpy as np
+from pydantic import Field
+
+from fitter.sample.uncertainty.base import PathText, Rows, TermSettings
+from fitter.sample.uncertainty.term import Term
+
+__all__ = ["Covariance", "MatrixSettings"]
+
+
+class MatrixSettings(TermSettings):
+    """What a covariance and a precision share: an N×N matrix in a file."""
+
+    array: str | None = Field(None, description="Name of the array in an .npz file that holds several.")
+
+    def default_label(self) -> str:
+        path = str(getattr(self, self.kind))
+        return Path(path.removesuffix(".gz")).stem
+
+    def read(self, rows: Rows):
+        """Return the matrix, symmetric, and the row of the file that each of its rows stands in.
+
+        A matrix that already has the size of the cut table is taken as it is.
+        """
+        from fitter.sample.matrices import read_matrix
+        from fitter.sample.tables import sha256_of
+
+        given = getattr(self, self.kind)
+        path = rows.folder / given
+        kept = int(rows.keep.sum())
+        matrix = read_matrix(path, sizes=(rows.n, kept), what=self.kind, array=self.array, table=rows.table, shown=given)
+        rows.sources[given] = sha256_of(path)
+        if len(matrix) == rows.n:
+            return matrix, np.arange(1, rows.n + 1)[rows.keep]
+        rows.notes.append(
+            f"{given} is {kept} × {kept}, the number of rows that the cuts leave of {rows.n} in the table: its rows are taken to follow "
+            "the rows that are kept."
+        )
+        return matrix, np.arange(1, kept + 1)
+
+
+class Covariance(MatrixSettings):
+    """An N×N covariance, mag², in a file."""
+
+    kind: ClassVar[str] = "covariance"
+
+    covariance: PathText = Field(description="File of an N × N covariance, mag².")
+
+    def build(self, rows: Rows) -> Term:
+        from fitter.sample.matrices import compact
+
+        matrix, in_file = self.read(rows)
+        if len(matrix) == rows.n:
+            matrix = compact(matrix, rows.keep)
+        return self.term(rows.noise(dense=matrix, source=self.covariance, rows=in_file))

@@ -1,0 +1,44 @@
+"""Uncorrelated errors from a column of the table."""
+
+from __future__ import annotations
+
+from typing import ClassVar
+
+from pydantic import Field
+
+from fitter.errors import InputError
+from fitter.sample.uncertainty.base import ColumnRef, Rows, TermSettings
+from fitter.sample.uncertainty.term import Term
+
+__all__ = ["Sigma"]
+
+
+class Sigma(TermSettings):
+    """A column of one-sigma errors, mag."""
+
+    kind: ClassVar[str] = "sigma"
+
+    sigma: ColumnRef = Field(description="Column of the one-sigma errors, mag.")
+
+    def columns(self):
+        return {"numbers": [self.sigma]}
+
+    def build(self, rows: Rows) -> Term:
+        sigma = rows.numbers(self.sigma)
+        bad = rows.keep & ~((sigma >= 0) & (sigma < float("inf")))
+        if bad.any():
+            row = int(bad.argmax())
+            raise InputError(
+                f"an error must be a finite number, 0 or more{_others(bad)}",
+                file=rows.table,
+                row=int(rows.lines[row]),
+                column=self.sigma,
+                value=float(sigma[row]),
+                cure="Correct it, or cut the row with `keep:`",
+            )
+        return self.term(rows.noise(sigma**2))
+
+
+def _others(bad) -> str:
+    count = int(bad.sum()) - 1
+    return f", here and in {count} more {'rows' if count > 1 else 'row'}" if count else ""

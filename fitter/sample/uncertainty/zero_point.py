@@ -1,0 +1,59 @@
+"""An offset common to each group of supernovae, e.g. the calibration of a survey."""
+
+from __future__ import annotations
+
+import difflib
+from typing import Annotated, ClassVar
+
+import numpy as np
+from pydantic import BeforeValidator, Field
+
+from fitter.errors import InputError
+from fitter.sample.uncertainty.base import ColumnRef, Positive, Rows, TermSettings
+from fitter.sample.uncertainty.term import Term
+
+__all__ = ["ZeroPoint"]
+
+
+def _words_as_keys(value):
+    # YAML reads a survey that is called 50 as a number.
+    return {str(k): v for k, v in value.items()} if isinstance(value, dict) else value
+
+
+PerGroup = Annotated[dict[str, Positive], BeforeValidator(_words_as_keys), Field(min_length=1)]
+
+
+class ZeroPoint(TermSettings):
+    """One mode per group: 1 for its members, times the one-sigma error of its zero point."""
+
+    kind: ClassVar[str] = "zero_point"
+
+    zero_point: ColumnRef = Field(description="`group`, or the column whose values tell the groups apart.")
+    sigma: Positive | PerGroup = Field(description="One-sigma error of each group's zero point, mag; or {GROUP: error} for some groups.")
+
+    def columns(self):
+        return {"texts": [self.zero_point]}
+
+    def build(self, rows: Rows) -> Term:
+        group = rows.texts(self.zero_point)
+        names = np.unique(group[rows.keep])
+        if isinstance(self.sigma, dict):
+            self._check_groups(np.unique(group), rows)
+            names = [name for name in self.sigma if name in set(names)]
+        kept = group[rows.keep]
+        sigma = self.sigma if isinstance(self.sigma, dict) else dict.fromkeys(names, self.sigma)
+        modes = np.column_stack([(kept == name) * sigma[name] for name in names]) if len(names) else np.empty((len(kept), 0))
+        return self.term(rows.noise(modes=modes, mode_names=tuple(f"zero_point:{name}" for name in names)))
+
+    def _check_groups(self, known, rows: Rows):
+        for name in self.sigma:
+            if name not in known:
+                near = difflib.get_close_matches(name, known.tolist(), n=1)
+                hint = f"Did you mean {near[0]}? " if near else ""
+                raise InputError(
+                    "zero_point names a group that no row has",
+                    file=rows.table,
+                    column=self.zero_point,
+                    value=name,
+                    cure=f"{hint}The groups are: {', '.join(known[:20].tolist())}",
+                )

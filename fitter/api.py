@@ -6,9 +6,9 @@ import logging
 from collections.abc import Mapping
 from contextlib import AbstractContextManager
 from dataclasses import dataclass, field, replace
-from types import SimpleNamespace
 from functools import cached_property
 from pathlib import Path
+from types import SimpleNamespace
 from typing import TYPE_CHECKING, Any, Literal
 
 import numpy as np
@@ -35,7 +35,7 @@ __all__ = ["Check", "Fit", "check", "fit", "load_config", "read_run"]
 
 _log = logging.getLogger("fitter")
 # Children of the seed; a number is never given a second meaning.
-_OPTIMUM, _SAMPLING, _PRIOR = 1, 2, 3
+_OPTIMUM, _SAMPLING = 1, 2
 
 
 @dataclass(frozen=True)
@@ -97,11 +97,15 @@ class Fit:
 
     def corner(self) -> Figure:
         """Return the corner plot of the sampled and main derived parameters."""
-        return _figures(self)["corner"]()
+        from fitter.report.figures.corner import corner_figure
+
+        return corner_figure(self.chains)
 
     def hubble_diagram(self) -> Figure:
         """Return the Hubble diagram with the residuals from the best fit."""
-        return _figures(self)["hubble"]()
+        from fitter.report.figures.hubble import hubble_figure
+
+        return hubble_figure(self.log_posterior, self.optimum, self.chains)
 
     def __str__(self) -> str:
         from fitter.report.terminal import terminal_summary
@@ -281,12 +285,7 @@ class _Job:
         from fitter.report.summary import Extras, summarise
 
         more = {"provenance": provenance(self.config.sampling.seed, config_hash(self.settings), self.sample.sources)}
-        extras = Extras(
-            title=self.config.title,
-            radiation=self.config.radiation,
-            excluded_fraction=self.log_posterior.prior_excluded_fraction(np.random.default_rng(self._seed(_PRIOR))),
-            more=more,
-        )
+        extras = Extras(title=self.config.title, more=more)
         summary = summarise(self.log_posterior, chains, optimum, extras)
         return Fit(self.config, self.sample, self.log_posterior, optimum, chains, None, summary)
 
@@ -331,13 +330,17 @@ def _likelihood(config: Config, sample: Sample) -> LogPosterior:
     return LogPosterior.build(sample, config.model, given, radiation=config.radiation)
 
 
-def _figures(result: Fit) -> dict:
-    """Return the functions that draw a fit's figures, by name."""
-    return {}
-
-
 def _draw(result: Fit, folder: Path) -> None:
-    """Draw every figure as PDF and PNG."""
+    """Draw the figures of a fit, each with its caption beside it."""
+    from fitter.report.figures.corner import corner_caption, main_parameters
+    from fitter.report.figures.hubble import hubble_caption, hubble_data
+    from fitter.report.figures.style import save_figure, styled
+
+    with styled():
+        if main_parameters(result.chains):
+            save_figure(result.corner(), folder / "corner", corner_caption(result.chains))
+        data = hubble_data(result.log_posterior, result.optimum, result.chains)
+        save_figure(result.hubble_diagram(), folder / "hubble_diagram", hubble_caption(data))
 
 
 class _RunLog(AbstractContextManager):

@@ -15,6 +15,7 @@ __all__ = ["FLAT", "complete_parameters", "free_parameters", "parameter_problems
 FLAT = {"flat": []}
 """How a config writes the improper flat prior of the absolute magnitude."""
 
+_DARK_ENERGY = ("omega_lambda", "omega_de", "omega_k")
 _SET_IN_UNCERTAINTY = {"intrinsic_scatter": "intrinsic", "covariance_scale": "covariance_scale"}
 
 
@@ -54,7 +55,8 @@ def parameter_problems(
         if name in known:
             problem = _value_problem(name, value, keys, document)
         else:
-            problem = document.error(*_why_not(name, model, distance_scale, list(known)), value=value)
+            said, cure = _why_not(name, model, distance_scale, list(known))
+            problem = document.error(said, keys, value=value, cure=cure)
         if problem is not None:
             problems.append(problem)
     everything = complete_parameters(given, model, distance_scale, data_kind)
@@ -67,14 +69,8 @@ def parameter_problems(
     return problems
 
 
-def _why_not(name: str, model: str, distance_scale: str, known: list[str]) -> tuple:
-    """Problem, keys, and cure in the order of Document.error's positional arguments."""
-    keys = ("parameters", name)
-    problem, cure = _reason(name, model, distance_scale, known)
-    return f"{problem}. {cure}", keys
-
-
-def _reason(name: str, model: str, distance_scale: str, known: list[str]) -> tuple[str, str]:
+def _why_not(name: str, model: str, distance_scale: str, known: list[str]) -> tuple[str, str]:
+    """Why a name is no parameter of this fit, and what to do."""
     if name == "H0" and distance_scale == "relative":
         return (
             "H0 cannot be had from a relative distance scale: H0 and the absolute magnitude of the supernovae only enter as one offset",
@@ -87,20 +83,29 @@ def _reason(name: str, model: str, distance_scale: str, known: list[str]) -> tup
         )
     if name in _SET_IN_UNCERTAINTY:
         term = _SET_IN_UNCERTAINTY[name]
-        return (f"{name} belongs to the uncertainties", f"Write its prior there: `uncertainty: [{{{term}: {{uniform: [low, high]}}}}]`")
+        return f"{name} belongs to the uncertainties", f"Write its prior there: `uncertainty: [{{{term}: {{uniform: [low, high]}}}}]`"
+    if name in _DARK_ENERGY:
+        return _why_no_density(name, model, known)
     having = [m for m, c in MODELS.items() if any(p.name == name for p in c.parameters)]
-    if name in ("omega_lambda", "omega_de", "omega_k") or (name == "q0" and not having):
-        cure = f"Remove it; it is reported with the others. It is free in {', '.join(having)}" if having else "Remove it; it is reported"
-        if name == "omega_k":
-            cure = "Remove it; set omega_m and the dark-energy density of a curved model"
-        return f"{name} is no free parameter of {model}: it is derived from the others", cure
     if having:
         return f"{model} has no parameter {name}", f"Remove it, or choose a model that has it: {', '.join(having)}"
     if name in PARAMETERS:
-        return f"{name} is derived, it cannot be set", f"Parameters of this fit: {', '.join(known)}"
+        return f"{name} is derived from the others, it cannot be set", f"Remove it. Parameters of this fit: {', '.join(known)}"
     near = nearest(name, known) or nearest(name, PARAMETERS)
     suggestion = f"Did you mean `{near}`? " if near else ""
     return "there is no such parameter", f"{suggestion}Parameters of this fit: {', '.join(known)}"
+
+
+def _why_no_density(name: str, model: str, known: list[str]) -> tuple[str, str]:
+    other = next((n for n in known if n in _DARK_ENERGY), None)
+    if name == "omega_k" or other is None:
+        cure = "Remove it"
+        if name == "omega_k" and other is not None:
+            cure = f"Remove it; omega_m and {other} decide it"
+        elif other is None:
+            cure = f"Remove it, or choose the curved model {model.replace('flat_', 'curved_')}"
+        return f"{name} is derived from the other parameters of {model}, it cannot be set", cure
+    return f"the dark-energy density of {model} is called {other}", f"Write `{other}` instead"
 
 
 def _value_problem(name: str, value, keys: tuple, document: Document) -> InputError | None:

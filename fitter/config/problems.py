@@ -77,8 +77,16 @@ def problems_of(error: ValidationError, model: type[BaseModel], document: Docume
     grouped: dict[tuple[Key, ...], list] = {}
     for entry, path, _ in found:
         grouped.setdefault(path, []).append(entry)
+    for path in [p for p, entries in grouped.items() if entries[0]["type"] == "missing" and _is_misspelt(p, grouped)]:
+        del grouped[path]
     problems = [_message(entries, prefix + path, model, document) for path, entries in grouped.items()]
     return sorted(problems, key=lambda p: p.row or 0)
+
+
+def _is_misspelt(missing: tuple[Key, ...], grouped: dict) -> bool:
+    """Whether an unknown key of the same section stands for the missing one, so that one message is enough."""
+    unknown = [p[-1] for p, entries in grouped.items() if entries[0]["type"] == "extra_forbidden" and p[:-1] == missing[:-1]]
+    return any(nearest(str(key), [str(missing[-1])]) for key in unknown)
 
 
 def allowed_keys(model: type[BaseModel], loc: tuple[Key, ...] = ()) -> list[str]:
@@ -128,20 +136,20 @@ def _place(loc: tuple[Key, ...], data, kind: str) -> tuple[tuple[Key, ...], tupl
 def _one_branch_each(found: list) -> list:
     """Where a value may take several forms, keep the complaints about the form it resembles most."""
     scores: dict[tuple, dict] = {}
-    for entry, _, branches in found:
-        if branches:
-            place, name = branches[0]
-            weight = {"missing": 10, "extra_forbidden": 10, "model_type": 20, "dict_type": 20}.get(entry["type"], 1)
-            score = scores.setdefault(place, {})
-            score[name] = score.get(name, 0) + weight
-    kept = []
     for entry, path, branches in found:
-        if branches:
-            place, name = branches[0]
-            if scores[place][name] > min(scores[place].values()):
-                continue
-        kept.append((entry, path, branches))
-    return kept
+        for place, name in branches:
+            score = scores.setdefault(place, {})
+            score[name] = score.get(name, 0) + _distance(entry["type"], path == place)
+    return [f for f in found if all(scores[place][name] == min(scores[place].values()) for place, name in f[2])]
+
+
+def _distance(kind: str, whole: bool) -> int:
+    """How far a value is from a form: wrong keys say more than wrong values inside, and a value out of bounds says least."""
+    if kind in ("missing", "extra_forbidden"):
+        return 10
+    if whole and kind.endswith(("_type", "_parsing", "_from_float")):
+        return 20 if kind in ("model_type", "dict_type") else 5
+    return 1
 
 
 def _message(entries: list[dict], keys: tuple[Key, ...], model: type[BaseModel], document: Document) -> InputError:
@@ -184,19 +192,19 @@ def _expected(entry: dict) -> str:
     kind, context = entry["type"], entry.get("ctx", {})
     if kind in _BOUNDS:
         words, key = _BOUNDS[kind]
-        return f"{words} {context[key]}"
+        return f"{words} {context[key]:g}"
     if kind == "int_from_float":
         return "a whole number"
     return _EXPECTED.get(kind.split("_")[0], entry["msg"][:1].lower() + entry["msg"][1:])
 
 
 def _cure(kind: str, value) -> str | None:
+    if kind == "string_type" and isinstance(value, int | float):
+        return f'Put it in quotes: "{value}"'
     if not isinstance(value, str):
         return None
     if re.fullmatch(r"[-+]?\d+,\d+", value.strip()):
         return "The decimal mark is a point"
-    if re.fullmatch(r"[-+]?\d+(_\d+)+", value.strip()):
-        return "Write the number without underscores"
     return None
 
 

@@ -83,6 +83,9 @@ def _collect(model: type[BaseModel], prefix: str, found: dict[str, list[FieldInf
         for inner in _models(field.annotation):
             if inner not in seen:
                 _collect(inner, f"{path}.", found, (*seen, inner))
+    if model.model_config.get("extra") == "allow":
+        for inner in _models(typing.get_type_hints(model)["__pydantic_extra__"]):
+            _collect(inner, f"{prefix}COLUMN.", found, (*seen, inner))
 
 
 def _models(annotation) -> list[type[BaseModel]]:

@@ -140,6 +140,8 @@ class _Walk:
         # Aliases let a few lines stand for billions of values, or for themselves.
         if self.count > MAX_VALUES or len(keys) > MAX_DEPTH:
             raise InputError("the config holds too many values or is nested too deeply", file=self.path, row=node.start_mark.line + 1)
+        if isinstance(node, yaml.CollectionNode) and node.tag not in ("tag:yaml.org,2002:map", "tag:yaml.org,2002:seq"):
+            raise _tag_error(self.path, node.start_mark.line + 1, node.tag)
         if isinstance(node, yaml.MappingNode):
             return self._mapping(node, keys)
         if isinstance(node, yaml.SequenceNode):
@@ -218,7 +220,7 @@ def _syntax_error(error: yaml.MarkedYAMLError, text: str, path: Path | None) -> 
     if "\t" in line[: len(line) - len(line.lstrip())] or "'\\t'" in (error.problem or ""):
         cure = "Indent with spaces, not with tabs"
     elif isinstance(error, yaml.constructor.ConstructorError):
-        problem, cure = "a YAML tag that a config cannot have", "Remove the word that begins with `!`"
+        return _tag_error(path, row, line.strip())
     elif isinstance(error, yaml.composer.ComposerError) and "document" in (error.context or "") + (error.problem or ""):
         problem, cure = "the file holds more than one YAML document", "Keep one; remove the line `---`"
     elif re.search(r"\w:[^\s/]", line):
@@ -228,6 +230,10 @@ def _syntax_error(error: yaml.MarkedYAMLError, text: str, path: Path | None) -> 
     else:
         cure = "Look at this row and the one before it for a missing colon, bracket or quote, or a wrong indent"
     return InputError(problem, file=path, row=row, value=line.strip() or None, cure=cure)
+
+
+def _tag_error(path: Path | None, row: int | None, value: str) -> InputError:
+    return InputError("a YAML tag that a config cannot have", file=path, row=row, value=value, cure="Remove the word that begins with `!`")
 
 
 def _shorten(value, length: int = 60) -> str:

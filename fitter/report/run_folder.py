@@ -23,7 +23,12 @@ FOLDER_FORMAT = "mufitter run 1"
 _LOCK = ".lock"
 _WITHOUT_VALUE = (MARKER, _LOCK, "config.yaml", "run.log")
 # Later commands add these to a finished folder.
-_ADDED_LATER = ("figures/*", "tables/*", "report.html", "capsule*.json", "summary.*")
+_ADDED_LATER = (
+    *(f"figures/*.{kind}" for kind in ("pdf", "png", "svg", "eps", "txt")),
+    *(f"tables/*.{kind}" for kind in ("tex", "csv", "md")),
+    "report.html",
+    "capsule*.json",
+)
 
 _REASONS = {
     errno.ENOSPC: ("the disk is full", "Make room, then continue with --resume"),
@@ -184,7 +189,7 @@ class RunFolder:
 
     def _foreign(self) -> list[str]:
         written = set(_json_of(self.target / MARKER).get("files") or _REGULAR) | {MARKER}
-        present = (str(p.relative_to(self.target)) for p in sorted(self.target.rglob("*")) if not p.is_dir())
+        present = (str(p.relative_to(self.target)) for p in sorted(self.target.rglob("*")) if p.is_symlink() or not p.is_dir())
         return [name for name in present if name not in written and not any(fnmatch.fnmatch(name, known) for known in _ADDED_LATER)]
 
     def _refuse_unfinished(self, resume: bool) -> None:

@@ -1,0 +1,97 @@
+"""The proof that goes with every fit: each marginal checked, and the evidence had, by means independent of the chain."""
+
+from __future__ import annotations
+
+from dataclasses import dataclass
+
+import numpy as np
+
+from fitter.inference.importance import KOLMOGOROV, WeightedPosterior, importance
+from fitter.inference.quadrature import GridPosterior, integrate
+
+__all__ = ["Proof", "cross_check", "prove"]
+
+# Quadrature whose own error is larger than this proves nothing: importance sampling takes its place.
+_USABLE_ERROR = 0.02
+_SIGMAS = 4.0
+
+
+@dataclass(frozen=True)
+class Proof:
+    """What is known of the posterior without its chain.
+
+    Attributes
+    ----------
+    cross_check : dict
+        ``method``, ``max_cdf_difference``, ``tolerance``, ``agrees``, ``worst``.
+    evidence : dict
+        ``log_evidence``, ``log_evidence_error``, ``method``; ``quadrature`` and ``importance``: each [ln Z, error] or None;
+        ``methods_agree``: None where only one ran.
+    grid : GridPosterior or None
+    weighted : WeightedPosterior
+    """
+
+    cross_check: dict
+    evidence: dict
+    grid: GridPosterior | None
+    weighted: WeightedPosterior
+
+
+def prove(log_posterior, posterior, optimum, ess: dict[str, float], *, seed: np.random.SeedSequence) -> Proof:
+    """Check a chain and compute its evidence.
+
+    Parameters
+    ----------
+    log_posterior : LogPosterior
+    posterior : Posterior
+    optimum : Optimum
+    ess : dict
+        Effective sample size of each sampled parameter.
+    seed : SeedSequence
+    """
+    grid = integrate(log_posterior, optimum)
+    weighted = importance(log_posterior, posterior, seed=seed)
+    usable = grid is not None and grid.log_evidence_error <= _USABLE_ERROR
+    best = grid if usable else weighted
+    both = {"quadrature": [grid.log_evidence, grid.log_evidence_error] if usable else None}
+    both["importance"] = [weighted.log_evidence, weighted.log_evidence_error]
+    agree = None
+    if usable:
+        allowed = grid.log_evidence_error + _SIGMAS * weighted.log_evidence_error
+        agree = bool(abs(grid.log_evidence - weighted.log_evidence) <= allowed)
+    evidence = {"log_evidence": best.log_evidence, "log_evidence_error": best.log_evidence_error, "method": best.method}
+    return Proof(cross_check(best, posterior, ess), evidence | both | {"methods_agree": agree}, grid if usable else None, weighted)
+
+
+def cross_check(other: GridPosterior | WeightedPosterior, posterior, ess: dict[str, float]) -> dict:
+    """Compare every marginal of a chain with another account of the posterior.
+
+    Parameters
+    ----------
+    other : GridPosterior or WeightedPosterior
+        Anything with ``names``, ``cdf``, ``cdf_error`` and ``method``.
+    posterior : Posterior
+    ess : dict
+        Effective sample size of each sampled parameter: what its ESS allows is the tolerance.
+
+    Returns
+    -------
+    dict
+        The parameter that is worst against its tolerance, under the keys of summary.json.
+    """
+    worst = {"excess": -np.inf}
+    for name in other.names:
+        draws = np.sort(posterior.draws(name).ravel())
+        at = draws[np.linspace(0, len(draws) - 1, 513).astype(int)[1:-1]]
+        empirical = np.searchsorted(draws, at, side="right") / len(draws)
+        difference = float(np.abs(other.cdf(name, at) - empirical).max())
+        allowed = KOLMOGOROV / np.sqrt(max(ess[name], 1.0)) + other.cdf_error
+        if difference - allowed > worst["excess"]:
+            worst = {"excess": difference - allowed, "difference": difference, "allowed": float(allowed), "name": name}
+    return {
+        "method": other.method,
+        "max_cdf_difference": worst["difference"],
+        "tolerance": worst["allowed"],
+        "agrees": bool(worst["excess"] <= 0),
+        "worst": worst["name"],
+    }

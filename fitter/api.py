@@ -35,7 +35,7 @@ __all__ = ["Check", "Fit", "check", "fit", "load_config", "read_run"]
 
 _log = logging.getLogger("fitter")
 # Children of the seed; a number is never given a second meaning.
-_OPTIMUM, _SAMPLING = 1, 2
+_OPTIMUM, _SAMPLING, _PROOF = 1, 2, 3
 
 
 @dataclass(frozen=True)
@@ -281,11 +281,16 @@ class _Job:
         return self._summarised(optimum, chains)
 
     def _summarised(self, optimum: Optimum, chains: Posterior) -> Fit:
+        from fitter.inference.proof import prove
         from fitter.report.provenance import provenance
         from fitter.report.summary import Extras, summarise
 
         more = {"provenance": provenance(self.config.sampling.seed, config_hash(self.settings), self.sample.sources)}
-        extras = Extras(title=self.config.title, more=more)
+        ess = {name: min(chains.sampling["ess_bulk"][name], chains.sampling["ess_tail"][name]) for name in chains.names}
+        proof = prove(self.log_posterior, chains, optimum, ess, seed=self._seed(_PROOF))
+        _log.info("cross-check: %s; evidence: %s", proof.cross_check, proof.evidence)
+        more["evidence"] = proof.evidence
+        extras = Extras(title=self.config.title, cross_check=proof.cross_check, evidence=proof.evidence, more=more)
         summary = summarise(self.log_posterior, chains, optimum, extras)
         return Fit(self.config, self.sample, self.log_posterior, optimum, chains, None, summary)
 

@@ -37,25 +37,27 @@ def main() -> None:
     app(prog_name="mufitter")
 
 
-def _reported(command: Callable) -> Callable:
-    """Turn exceptions into messages on stderr and exit codes."""
+def _reported(command: Callable[..., int | None]) -> Callable[..., None]:
+    """Let a command end with the exit code that it returns, and turn exceptions into messages on stderr and exit codes."""
 
     @functools.wraps(command)
     def wrapped(*arguments, **options):
+        code: int | None = 0
         try:
-            command(*arguments, **options)
+            code = command(*arguments, **options)
         except MufitterError as error:
             _complain(error)
-            raise typer.Exit(error.exit_code) from None
+            code = error.exit_code
         except BrokenPipeError:
             # The reader of our output has left, as `head` does: nothing is wrong.
             os.dup2(os.open(os.devnull, os.O_WRONLY), sys.stdout.fileno())
         except KeyboardInterrupt:
             _say("mufitter: interrupted")
-            raise typer.Exit(INTERRUPTED) from None
+            code = INTERRUPTED
         except Exception as error:  # noqa: BLE001 - the last resort: a short message on screen, the traceback in a file
             _blame_ourselves(error)
-            raise typer.Exit(OUR_FAULT) from None
+            code = OUR_FAULT
+        raise typer.Exit(code or 0)
 
     return wrapped
 
@@ -124,7 +126,7 @@ def _fit(
     seed: Annotated[int | None, typer.Option(min=0, help="Seed of all randomness, instead of the config's.", show_default=False)] = None,
     json_: Annotated[bool, typer.Option("--json", help="Print summary.json to stdout instead of the readable summary.")] = False,
     quiet: Annotated[bool, typer.Option("--quiet", "-q", help="No progress and no summary, only warnings and errors.")] = False,
-) -> None:
+) -> int:
     """Fit a model to a sample: posterior, summary and figures in a run folder."""
     if replace and resume:
         raise InputError("--replace starts anew, --resume continues: choose one of them")
@@ -138,9 +140,10 @@ def _fit(
     _print_result(result, json_, quiet)
     if not quiet:
         _say(f"Written to {result.run_folder}")
-    if not result.converged:
-        _say(f"mufitter: not converged. {result.summary()['sampling'].get('advice') or ''}".rstrip())
-        raise typer.Exit(NOT_CONVERGED)
+    if result.converged:
+        return 0
+    _say(f"mufitter: not converged. {result.summary()['sampling'].get('advice') or ''}".rstrip())
+    return NOT_CONVERGED
 
 
 def _print_result(result, as_json: bool, quiet: bool) -> None:

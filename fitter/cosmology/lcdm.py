@@ -19,7 +19,7 @@ class FlatLCDM(FluidModel):
         return 1.0
 
     def equation_of_state(self, z, theta):
-        return np.full((len(theta), np.size(z)), -1.0)
+        return np.full(np.broadcast_shapes((len(theta), 1), np.shape(z)), -1.0)
 
 
 class CurvedLCDM(FlatLCDM):

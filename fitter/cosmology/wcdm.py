@@ -19,7 +19,7 @@ class FlatWCDM(FluidModel):
         return np.exp(3.0 * (1.0 + theta[:, -1:]) * np.log1p(z))
 
     def equation_of_state(self, z, theta):
-        return np.broadcast_to(theta[:, -1:], (len(theta), np.size(z)))
+        return theta[:, -1:] + np.zeros_like(np.asarray(z, float))  # z may be (M,) or (W, 1)
 
 
 class CurvedWCDM(FlatWCDM):

@@ -102,12 +102,20 @@ def information_criteria(log_posterior, posterior, optimum, evidence: dict) -> d
         "bic": best + k * math.log(n),
         "dic": dic,
         "k": k,
-        "k_names": list(log_posterior.names) + list(log_posterior.marginalised)[: k - len(log_posterior.names)],
+        "k_names": _counted(log_posterior, k),
         "n": n,
         "p_dic": p_dic,
         "log_evidence": evidence.get("log_evidence"),
         "log_evidence_error": evidence.get("log_evidence_error"),
     }
+
+
+def _counted(log_posterior, k: int) -> list[str]:
+    """Names of the k parameters counted: the sampled ones, and the zero point where it is marginalised."""
+    names = list(log_posterior.names)
+    if k > len(names):
+        names.append("absolute_magnitude" if "absolute_magnitude" in log_posterior.marginalised else "zero-point offset")
+    return names
 
 
 def _dic(log_posterior, posterior, optimum) -> tuple[float | None, float | None]:

@@ -27,23 +27,17 @@ class Extras:
     Parameters
     ----------
     title : str
-    radiation : bool
-        Whether radiation was part of the model.
     cross_check : object, optional
         Mapping or dataclass with method, max_cdf_difference, tolerance, agrees.
     evidence : object, optional
         Mapping or dataclass with log_evidence and log_evidence_error.
-    excluded_fraction : float, optional
-        Share of the prior outside the models that can be (no big bang inside the data and the like).
     more : dict
         Further top-level keys, written as they are.
     """
 
     title: str = ""
-    radiation: bool = False
     cross_check: object | None = None
     evidence: object | None = None
-    excluded_fraction: float | None = None
     more: dict = field(default_factory=dict)
 
 
@@ -72,14 +66,14 @@ def summarise(log_posterior, posterior, optimum, extras: Extras | None = None) -
         "schema": SCHEMA,
         "title": extras.title,
         "model": log_posterior.model.name,
-        "radiation": bool(extras.radiation),
+        "radiation": bool(log_posterior.radiation),
         "sample": _sample_facts(log_posterior.sample),
         "parameters": {name: _parameter_facts(log_posterior, posterior, name, best.get(name)) for name in posterior.kinds},
         "best_fit": _best_fit(log_posterior, optimum, best),
         "information": information_criteria(log_posterior, posterior, optimum, evidence),
         "sampling": dict(posterior.sampling),
         "cross_check": extras.cross_check,
-        "excluded_fraction": extras.excluded_fraction,
+        "prior_excluded_fraction": log_posterior.prior_excluded_fraction(np.random.default_rng(0)),
         "fixed": dict(log_posterior.fixed),
         "priors": {name: prior.describe() for name, prior in zip(log_posterior.names, log_posterior.priors, strict=True)},
         **extras.more,

@@ -5,7 +5,7 @@ from __future__ import annotations
 from fitter.report.digits import figures_for, plain_number
 from fitter.report.facts import parameter
 
-__all__ = ["excluded_prior_fraction", "practitioner_warnings"]
+__all__ = ["practitioner_warnings"]
 
 _LEANS = 0.135  # density at a prior's edge over the peak: the edge stands within 2σ of it
 _PRIOR_DOMINATED = 0.9  # posterior width over prior width
@@ -37,22 +37,6 @@ def practitioner_warnings(summary: dict, log_posterior) -> list[str]:
     texts += _prior_edges(summary, log_posterior) + _prior_share(summary)
     texts += _scale(summary) + _covariance(log_posterior.sample) + _evidence(summary)
     return texts + [str(text) for text in log_posterior.sample.warnings]
-
-
-def excluded_prior_fraction(log_posterior, rng, size: int = 1000) -> float:
-    """Share of draws from the prior that the model cannot take, by direct draws.
-
-    Parameters
-    ----------
-    log_posterior : LogPosterior
-    rng : numpy.random.Generator
-    size : int
-        Number of draws: the error is at most 0.5/√size.
-    """
-    import numpy as np
-
-    theta = np.column_stack([prior.sample(rng, size) for prior in log_posterior.priors])
-    return float(np.mean(~np.isfinite(log_posterior(theta))))
 
 
 def _cross_check(summary: dict) -> list[str]:
@@ -153,7 +137,7 @@ def _dominated(prior, facts: dict) -> bool:
 
 
 def _prior_share(summary: dict) -> list[str]:
-    excluded = summary.get("excluded_fraction")
+    excluded = summary.get("prior_excluded_fraction")
     if excluded is None or excluded <= _MOSTLY:
         return []
     return [

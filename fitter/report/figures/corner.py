@@ -1,0 +1,218 @@
+"""The corner plot: every pair of parameters, and each alone."""
+
+from __future__ import annotations
+
+from collections.abc import Mapping, Sequence
+from dataclasses import replace
+
+import numpy as np
+
+from fitter.errors import InputError
+from fitter.report.digits import figures_for
+from fitter.report.facts import axis_label, parameter
+from fitter.report.figures.panels import common_exponent, contours, draw_density, plot_range, runs_of, thinned
+from fitter.report.figures.style import COLOURS, LEVELS, new_figure, width_inches
+
+__all__ = ["corner_caption", "corner_figure", "main_parameters"]
+
+# Of the derived parameters, those that say something beside the sampled ones; the rest follow from them.
+_MAIN_DERIVED = ("omega_k", "omega_lambda", "q0")
+_MOST_PANELS = 7
+_LEFT, _BOTTOM, _TOP, _RIGHT, _GAP = 0.62, 0.62, 0.3, 0.1, 0.05  # inches
+
+
+def main_parameters(posterior) -> list[str]:
+    """Names for the corner plot: sampled, marginalised, and the main derived ones.
+
+    What hardly varies (a derived parameter that the model fixes) is left out.
+    """
+    names = [n for n, kind in posterior.kinds.items() if kind == "sampled"]
+    names += [n for n, kind in posterior.kinds.items() if kind == "marginalised"]
+    names += [n for n in _MAIN_DERIVED if posterior.kinds.get(n) == "derived"]
+    return [n for n in names if _varies(posterior, n)][:_MOST_PANELS]
+
+
+def _varies(posterior, name: str) -> bool:
+    draws = posterior.draws(name)
+    draws = draws[np.isfinite(draws)]
+    return draws.size > 1 and float(np.ptp(draws)) > 1e-10 * max(1e-300, float(np.abs(draws).max()))
+
+
+def corner_figure(
+    posteriors,
+    names: Sequence[str] | None = None,
+    *,
+    width: str | float = "double",
+    reference: Mapping[str, float] | None = None,
+    labels: Mapping[str, str] | None = None,
+):
+    """Draw the corner plot of one fit, or of several over each other.
+
+    Parameters
+    ----------
+    posteriors : Posterior or mapping of str to Posterior
+        Several are overlaid with a legend; each run is normalised by itself, whatever its length.
+    names : sequence of str, optional
+        Any subset in any order; :func:`main_parameters` of the first by default.
+    width : {"single", "double"} or float
+    reference : mapping, optional
+        Values marked by lines, e.g. the truth of a simulation.
+    labels : mapping, optional
+        Axis labels that replace the declared symbols.
+
+    Returns
+    -------
+    matplotlib.figure.Figure
+
+    Raises
+    ------
+    fitter.errors.InputError
+        For a name that none of the fits has.
+    """
+    runs = runs_of(posteriors)
+    names = list(names) if names is not None else main_parameters(next(iter(runs.values())))
+    _check(names, runs)
+    tables = {label: _columns(posterior, names) for label, posterior in runs.items()}
+    limits = {n: plot_range([t[n] for t in tables.values() if n in t]) for n in names}
+    scale = {n: 10.0 ** -common_exponent(limits[n]) for n in names}
+    figure, axes = _grid(len(names), width)
+    for index, (label, table) in enumerate(tables.items()):
+        _draw_run(axes, names, table, limits, scale, COLOURS[index % len(COLOURS)], alone=len(runs) == 1)
+        if len(runs) > 1:
+            axes[0, 0].plot([], [], color=COLOURS[index % len(COLOURS)], lw=2, label=label)
+    _dress(axes, names, limits, scale, labels or {})
+    if len(runs) == 1:
+        _titles(axes, names, next(iter(runs.values())), labels or {})
+    else:
+        _legend(figure, axes)
+    _mark(axes, names, reference or {}, scale)
+    return figure
+
+
+def corner_caption(posteriors, names: Sequence[str] | None = None) -> str:
+    """Return the caption of the corner plot."""
+    runs = runs_of(posteriors)
+    names = list(names) if names is not None else main_parameters(next(iter(runs.values())))
+    first, second = (f"{100 * level:.1f}" for level in LEVELS)
+    text = (
+        f"Marginal posteriors of {', '.join(names)}. The contours are the smallest regions that hold {first} % and {second} % of the probability "
+        "of each pair (not the 39.3 % and 86.5 % inside one and two standard deviations of a two-dimensional Gaussian)."
+    )
+    if len(runs) == 1:
+        return f"{text} Titles and dashed lines: median and equal-tailed 68.3 % interval of each parameter."
+    return f"{text} Overlaid: {', '.join(runs)}; each density is scaled to its own peak."
+
+
+def _check(names: Sequence[str], runs: Mapping) -> None:
+    known = list(dict.fromkeys(n for p in runs.values() for n in p.kinds))
+    for name in names:
+        if name not in known:
+            raise InputError("no such parameter in this fit", column="figures", value=name, cure=f"Known: {', '.join(known)}.")
+    if not names:
+        raise InputError("a corner plot needs a parameter that varies")
+
+
+def _columns(posterior, names: Sequence[str]) -> dict[str, np.ndarray]:
+    present = [n for n in names if n in posterior.kinds and _varies(posterior, n)]
+    return {n: thinned(posterior, n) for n in present}
+
+
+def _grid(k: int, width: str | float):
+    """Make only the panels of the lower triangle, with margins measured in inches."""
+    inches = width_inches(width)
+    inches = min(inches, _LEFT + _RIGHT + 1.9 * k) if isinstance(width, str) else inches
+    panel = (inches - _LEFT - _RIGHT - _GAP * (k - 1)) / k
+    height = _BOTTOM + _TOP + panel * k + _GAP * (k - 1)
+    figure = new_figure(inches, height=height)
+    axes = np.full((k, k), None, dtype=object)
+    for row in range(k):
+        for column in range(row + 1):
+            left = _LEFT + column * (panel + _GAP)
+            bottom = _BOTTOM + (k - 1 - row) * (panel + _GAP)
+            axes[row, column] = figure.add_axes([left / inches, bottom / height, panel / inches, panel / height])
+    return figure, axes
+
+
+def _draw_run(axes, names, table, limits, scale, colour, *, alone: bool) -> None:
+    scaled = {n: tuple(v * scale[n] for v in limits[n]) for n in names}
+    for row, y in enumerate(names):
+        if y not in table:
+            continue
+        draws = table[y] * scale[y]
+        draw_density(axes[row, row], draws, scaled[y], colour, fill=alone)
+        if alone:
+            for q in np.nanquantile(draws, [0.1587, 0.5, 0.8413]):
+                axes[row, row].axvline(q, color=colour, ls=(0, (4, 3)), lw=0.6)
+        for column, x in enumerate(names[:row]):
+            if x in table:
+                contours(axes[row, column], table[x] * scale[x], draws, (scaled[x], scaled[y]), colour)
+
+
+def _dress(axes, names, limits, scale, labels) -> None:
+    """Limits, ticks and labels; numbers only along the left and the bottom."""
+    from matplotlib.ticker import MaxNLocator
+
+    k = len(names)
+    for row in range(k):
+        for column in range(row + 1):
+            ax = axes[row, column]
+            x, y = names[column], names[row]
+            ax.set_xlim(*(v * scale[x] for v in limits[x]))
+            ax.xaxis.set_major_locator(MaxNLocator(3, prune="both"))
+            ax.tick_params(axis="x", labelrotation=45, labelbottom=row == k - 1)
+            if row == column:
+                ax.set_ylim(0, 1.12)
+                ax.set_yticks([])
+            else:
+                ax.set_ylim(*(v * scale[y] for v in limits[y]))
+                ax.yaxis.set_major_locator(MaxNLocator(3, prune="both"))
+                ax.tick_params(axis="y", labelrotation=45, labelleft=column == 0)
+            if row == k - 1:
+                ax.set_xlabel(labels.get(x, axis_label(x, common_exponent(limits[x]))))
+            if column == 0 and row > 0:
+                ax.set_ylabel(labels.get(y, axis_label(y, common_exponent(limits[y]))))
+    _align(axes, k)
+
+
+def _align(axes, k: int) -> None:
+    """Put the labels of a column, and of the bottom row, on one line at a fixed distance in inches."""
+    from matplotlib.transforms import ScaledTranslation
+
+    for i in range(k):
+        bottom, left = axes[k - 1, i], axes[i, 0]
+        below = bottom.transAxes + ScaledTranslation(0, -0.44, bottom.figure.dpi_scale_trans)
+        bottom.xaxis.set_label_coords(0.5, 0, transform=below)
+        if i > 0:
+            beside = left.transAxes + ScaledTranslation(-0.44, 0, left.figure.dpi_scale_trans)
+            left.yaxis.set_label_coords(0, 0.5, transform=beside)
+
+
+def _titles(axes, names, posterior, labels) -> None:
+    """Median and 68 % over each marginal, in the digits its width deserves; smaller where the panel is."""
+    panel_inches = axes[0, 0].get_position().width * axes[0, 0].figure.get_figwidth()
+    for i, name in enumerate(names):
+        draws = posterior.draws(name)
+        low, median, high = np.quantile(draws[np.isfinite(draws)], [0.1587, 0.5, 0.8413])
+        figures = figures_for(median, low, high)
+        # A power of ten goes before the symbol: 10⁵² Λ = 1.09 ± 0.05 is shorter, and as true.
+        power = f"10^{{{-figures.exponent}}}\\," if figures.exponent else ""
+        value = replace(figures, exponent=0).latex()
+        text = f"${power}{parameter(name).latex} = {value}$" if name not in labels else f"{labels[name]} $= {value}$"
+        size = 9 if panel_inches > 1.25 else 7.5 if panel_inches > 0.85 else 6
+        axes[i, i].set_title(text, fontsize=size, pad=4)
+
+
+def _legend(figure, axes) -> None:
+    handles, texts = axes[0, 0].get_legend_handles_labels()
+    figure.legend(handles, texts, loc="upper right", bbox_to_anchor=(0.99, 0.99))
+
+
+def _mark(axes, names, reference, scale) -> None:
+    for row, y in enumerate(names):
+        for column, x in enumerate(names[: row + 1]):
+            ax = axes[row, column]
+            style = {"color": "black", "lw": 0.7, "ls": ":"}
+            if x in reference:
+                ax.axvline(reference[x] * scale[x], **style)
+            if y in reference and row != column:
+                ax.axhline(reference[y] * scale[y], **style)

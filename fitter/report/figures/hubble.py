@@ -1,0 +1,277 @@
+"""The Hubble diagram: distances against redshift, and what the best fit leaves over."""
+
+from __future__ import annotations
+
+from collections.abc import Sequence
+from dataclasses import dataclass
+
+import numpy as np
+
+from fitter.errors import InputError
+from fitter.report.figures.binned import BinnedMeans, binned_means, redshift_edges
+from fitter.report.figures.style import COLOURS, GREY, new_figure
+from fitter.report.information import fitted_noise, noise_scale
+
+__all__ = ["REFERENCES", "HubbleData", "hubble_caption", "hubble_data", "hubble_figure"]
+
+_FEW = 80  # up to so many points each is drawn with its error instead of bins
+_MOST_POINTS = 20_000
+_MOST_GROUPS = 6
+_BAND_DRAWS = 200
+_LOW = 1e-6  # a redshift at which every distance is cz/H0
+REFERENCES = {"no_dark_energy": r"$\Omega_m$ as fitted, no dark energy", "empty": "empty", "matter_only": r"$\Omega_m = 1$, matter only"}
+
+
+@dataclass(frozen=True)
+class HubbleData:
+    """What the diagram shows, as arrays (calibrators left out: their redshift is not used).
+
+    Parameters
+    ----------
+    redshift, residual, error : (n,) float
+        Single supernovae: residual and its total standard deviation (None where bins are drawn), mag.
+    shown : (n,) float
+        Value on the upper axis.
+    group : (n,) str or None
+    bins : BinnedMeans or None
+        None where single points carry their errors.
+    curve_redshift, curve, band : (m,), (m,), (2, m) float
+        Best fit on the upper axis; the central 95.4 % of the posterior about it (zeros if it was not asked for).
+    intercept : float
+        Limit of the curve minus 5 log10 z at z → 0, mag.
+    label : str
+        Of the upper axis.
+    n_calibrators : int
+    """
+
+    redshift: np.ndarray
+    residual: np.ndarray
+    error: np.ndarray | None
+    shown: np.ndarray
+    group: np.ndarray | None
+    bins: BinnedMeans | None
+    curve_redshift: np.ndarray
+    curve: np.ndarray
+    band: np.ndarray
+    intercept: float
+    label: str
+    n_calibrators: int
+
+
+def hubble_data(log_posterior, optimum, posterior=None, *, bins: int | None = None) -> HubbleData:
+    """Work out what the Hubble diagram shows.
+
+    Parameters
+    ----------
+    log_posterior : LogPosterior
+    optimum : Optimum
+    posterior : Posterior, optional
+        For the band around the best fit.
+    bins : int, optional
+        Number of redshift bins; chosen by the number of supernovae otherwise.
+    """
+    sample, theta = log_posterior.sample, np.asarray(optimum.theta, dtype=float)
+    flow = ~np.asarray(sample.is_calibrator)
+    if not flow.any():
+        raise InputError("a Hubble diagram needs supernovae that are no calibrators")
+    residual = log_posterior.residuals(theta)
+    noise, scale = fitted_noise(log_posterior, optimum.values), noise_scale(log_posterior, optimum.values)
+    z = sample.redshift[flow]
+    label, shift = _axis(sample, log_posterior.zero_point(theta))
+    single = bins is None and flow.sum() <= _FEW
+    means = None if single else binned_means(noise, residual, sample.redshift, redshift_edges(z, bins), scale=scale, apart=~flow)
+    curve_z = np.exp(np.linspace(np.log(z.min() * 0.94), np.log(z.max() * 1.06), 160))
+    return HubbleData(
+        redshift=z,
+        residual=residual[flow],
+        error=scale * np.sqrt(noise.total_variance[flow]) if single else None,
+        shown=sample.data[flow] - shift,
+        group=None if sample.group is None else np.asarray(sample.group)[flow].astype(str),
+        bins=means,
+        curve_redshift=curve_z,
+        curve=_predicted(log_posterior, theta, curve_z) - shift,
+        band=_band(log_posterior, posterior, theta, curve_z),
+        intercept=float(_predicted(log_posterior, theta, np.array([_LOW]))[0] - shift - 5 * np.log10(_LOW)),
+        label=label,
+        n_calibrators=int(sample.n_calibrators),
+    )
+
+
+def _axis(sample, zero_point: float) -> tuple[str, float]:
+    """Label of the upper axis, and what is taken off the data to get there."""
+    if sample.distance_scale == "relative":
+        if sample.data_kind == "magnitude":
+            return "Standardised magnitude  $m$  [mag]", 0.0
+        return r"Distance modulus  $\mu$ + constant  [mag]", 0.0
+    if sample.data_kind == "magnitude":
+        return r"Distance modulus  $\mu = m - M$  [mag]", zero_point
+    return r"Distance modulus  $\mu$  [mag]", zero_point
+
+
+def _predicted(log_posterior, theta, z) -> np.ndarray:
+    """What the data would be at these redshifts without noise, mag."""
+    return log_posterior.distance_modulus(theta[None], z)[0] + log_posterior.zero_point(theta)
+
+
+def _band(log_posterior, posterior, theta, z) -> np.ndarray:
+    """Central 95.4 % of the predictions of posterior draws, minus the best fit, (2, m)."""
+    if posterior is None:
+        return np.zeros((2, len(z)))
+    flat = posterior.chain.reshape(-1, posterior.chain.shape[-1])
+    draws = flat[np.linspace(0, len(flat) - 1, min(_BAND_DRAWS, len(flat))).astype(int)]
+    moduli = log_posterior.distance_modulus(draws, z)
+    predicted = moduli + np.array([log_posterior.zero_point(row) for row in draws])[:, None]
+    low, high = np.nanquantile(predicted, [0.023, 0.977], axis=0)
+    return np.stack([low, high]) - _predicted(log_posterior, theta, z)
+
+
+def hubble_figure(
+    log_posterior,
+    optimum,
+    posterior=None,
+    *,
+    width: str | float = "double",
+    bins: int | None = None,
+    references: Sequence[str] = ("no_dark_energy", "matter_only"),
+):
+    """Draw the Hubble diagram with residuals from the best fit.
+
+    Parameters
+    ----------
+    log_posterior : LogPosterior
+    optimum : Optimum
+    posterior : Posterior, optional
+        For the band of the posterior in the residual panel.
+    width : {"single", "double"} or float
+    bins : int, optional
+        Number of redshift bins.
+    references : sequence of {"no_dark_energy", "empty", "matter_only"}
+        Models drawn beside the best fit in the residual panel, equal to it at z → 0.
+
+    Returns
+    -------
+    matplotlib.figure.Figure
+    """
+    unknown = [name for name in references if name not in REFERENCES]
+    if unknown:
+        raise InputError("unknown reference model", value=unknown[0], cure=f"Use any of {', '.join(REFERENCES)}.")
+    data = hubble_data(log_posterior, optimum, posterior, bins=bins)
+    figure = new_figure(width, 0.68 if width == "double" else 1.05)
+    upper, lower = figure.subplots(2, 1, sharex=True, height_ratios=[1.75, 1], gridspec_kw={"hspace": 0.0})
+    _draw_points(upper, lower, data)
+    _draw_model(upper, lower, data)
+    _draw_bins(upper, lower, data)
+    omega_m = {**log_posterior.fixed, **optimum.values}.get("omega_m")
+    _draw_references(lower, data, references, omega_m)
+    _dress(figure, upper, lower, data)
+    return figure
+
+
+def _draw_points(upper, lower, data: HubbleData) -> None:
+    if data.error is not None:
+        style = {"fmt": "o", "ms": 2.6, "lw": 0.8, "color": COLOURS[0], "zorder": 4}
+        upper.errorbar(data.redshift, data.shown, data.error, label="data", **style)
+        lower.errorbar(data.redshift, data.residual, data.error, **style)
+        return
+    n = len(data.redshift)
+    chosen = np.arange(n) if n <= _MOST_POINTS else np.unique(np.linspace(0, n - 1, _MOST_POINTS).astype(int))
+    size = 2.2 if n < 3000 else 1.2
+    for label, colour, members in _groups(data):
+        rows = chosen[members[chosen]]
+        # Thousands of vector dots make a PDF that takes seconds to open: they alone become an image.
+        style = {"ls": "", "marker": "o", "ms": size, "mew": 0, "color": colour, "alpha": 0.45, "rasterized": n > 2000, "zorder": 1}
+        upper.plot(data.redshift[rows], data.shown[rows], label=label, **style)
+        lower.plot(data.redshift[rows], data.residual[rows], **style)
+
+
+def _groups(data: HubbleData):
+    """Yield label, colour and members: by survey where there are a few of them."""
+    names = [] if data.group is None else sorted(set(data.group.tolist()))
+    if not 2 <= len(names) <= _MOST_GROUPS:
+        yield "single supernovae", GREY, np.ones(len(data.redshift), dtype=bool)
+        return
+    tints = ("#6f8fc4", "#e0a458", "#76bfb3", "#c385a5", "#b0a05c", "#9a9cc4")
+    for name, tint in zip(names, tints, strict=False):
+        yield name, tint, data.group == name
+
+
+def _draw_model(upper, lower, data: HubbleData) -> None:
+    upper.plot(data.curve_redshift, data.curve, color="black", lw=0.9, zorder=3, label="best fit")
+    lower.axhline(0.0, color="black", lw=0.9, zorder=3)
+    if data.band.any():
+        lower.fill_between(data.curve_redshift, *data.band, color="black", alpha=0.16, lw=0, zorder=2)
+
+
+def _draw_bins(upper, lower, data: HubbleData) -> None:
+    if data.bins is None:
+        return
+    bins = data.bins
+    at_model = np.interp(np.log(bins.redshift), np.log(data.curve_redshift), data.curve)
+    style = {"fmt": "s", "ms": 3.4, "lw": 1.0, "color": COLOURS[3], "mec": "white", "mew": 0.4, "zorder": 5}
+    upper.errorbar(bins.redshift, at_model + bins.mean, bins.error, label="binned", **style)
+    lower.errorbar(bins.redshift, bins.mean, bins.error, **style)
+
+
+def reference_distance(name: str, z: np.ndarray, omega_m: float | None) -> np.ndarray:
+    """Luminosity distance in units of c/H0 of a universe of matter alone (Mattig 1958, in the form without cancellation)."""
+    q = {"empty": 0.0, "matter_only": 0.5}.get(name, 0.5 * (omega_m or 0.0))
+    return z * (1 + z * (1 - q) / (np.sqrt(1 + 2 * q * z) + 1 + q * z))
+
+
+def _draw_references(lower, data: HubbleData, references: Sequence[str], omega_m: float | None) -> None:
+    z = data.curve_redshift
+    for name, dashes in zip(references, ((5, 2), (1, 1.5), (5, 2, 1, 2)), strict=False):
+        if name == "no_dark_energy" and omega_m is None:
+            continue
+        excess = 5 * np.log10(reference_distance(name, z, omega_m)) - (data.curve - data.intercept)
+        lower.plot(z, excess, color="black", lw=0.8, dashes=dashes, zorder=2, label=REFERENCES[name])
+
+
+def _dress(figure, upper, lower, data: HubbleData) -> None:
+    from matplotlib.ticker import FuncFormatter, NullFormatter
+
+    upper.set_xscale("log")
+    lower.set_xlim(data.curve_redshift[0], data.curve_redshift[-1])
+    spread = 1.4826 * float(np.median(np.abs(data.residual - np.median(data.residual))))
+    reach = max(4.0 * spread, 1.3 * float(np.max(np.abs(data.bins.mean) + data.bins.error)) if data.bins is not None else 0.0, 1e-3)
+    lower.set_ylim(-reach, reach)
+    margin = 0.04 * float(np.ptp(data.curve))
+    upper.set_ylim(min(data.curve.min(), data.shown.min()) - margin, max(data.curve.max(), data.shown.max()) + margin)
+    upper.set_ylabel(data.label)
+    lower.set_ylabel("Residual  [mag]")
+    lower.set_xlabel("Redshift  $z$")
+    upper.tick_params(labelbottom=False, which="both")
+    ticks = [t for t in _TICKS if data.curve_redshift[0] <= t <= data.curve_redshift[-1]]
+    lower.set_xticks(ticks)
+    lower.xaxis.set_major_formatter(FuncFormatter(lambda value, _: f"{value:g}"))
+    lower.xaxis.set_minor_formatter(NullFormatter())
+    upper.legend(loc="lower right", markerscale=1.5)
+    if lower.get_legend_handles_labels()[0]:
+        lower.legend(loc="lower left", ncols=2, handlelength=2.4)
+    width, height = figure.get_size_inches()
+    figure.subplots_adjust(left=0.5 / width, right=1 - 0.1 / width, bottom=0.42 / height, top=1 - 0.1 / height)
+    figure.align_ylabels([upper, lower])
+
+
+_TICKS = (0.001, 0.002, 0.005, 0.01, 0.02, 0.05, 0.1, 0.2, 0.5, 1, 2, 5)
+
+
+def hubble_caption(data: HubbleData) -> str:
+    """Return the caption of the Hubble diagram."""
+    text = "Hubble diagram with the best fit (line), and residuals from it. "
+    if data.bins is None:
+        text += "Error bars: square root of the whole covariance's diagonal. "
+    else:
+        text += (
+            f"Small points: {len(data.redshift)} single supernovae. Squares: means in {len(data.bins.mean)} redshift bins by generalised "
+            "least squares with the whole covariance; their errors, which the bins partly share, are the square root of the diagonal of the bin means' covariance. "
+        )
+    if data.band.any():
+        text += "Shaded: the central 95.4 % of the posterior's predictions. "
+    if "constant" in data.label or "Standardised" in data.label:
+        text += "The distance scale is relative: the best fit is shifted by its best offset. "
+    if data.n_calibrators:
+        text += f"{data.n_calibrators} calibrators, whose redshifts are not used, are not shown. "
+    if len(data.redshift) > _MOST_POINTS and data.bins is not None:
+        text += f"Only about {_MOST_POINTS} of the single points are drawn; the bins use all. "
+    return text.strip()

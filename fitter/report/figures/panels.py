@@ -1,0 +1,133 @@
+"""Pieces that several figures share: thinned draws, ranges, smooth densities, contours."""
+
+from __future__ import annotations
+
+from collections.abc import Mapping
+
+import numpy as np
+
+from fitter.report.figures.style import LEVELS
+
+__all__ = ["common_exponent", "contours", "density", "draw_density", "plot_range", "runs_of", "thinned"]
+
+_MOST_DRAWS = 150_000  # more make a slower figure, not a better one
+_BINS = 44
+_SMOOTHING = 1.3  # bins
+
+
+def runs_of(posteriors) -> dict[str, object]:
+    """Return {label: posterior} from one posterior or a mapping of several."""
+    return dict(posteriors) if isinstance(posteriors, Mapping) else {"": posteriors}
+
+
+def thinned(posterior, name: str, most: int = _MOST_DRAWS) -> np.ndarray:
+    """Return one parameter's draws, evenly thinned, the same ones for every parameter.
+
+    Parameters
+    ----------
+    posterior : Posterior
+    name : str
+    most : int
+        Draws at most (about).
+
+    Returns
+    -------
+    (n,) float
+        NaN where the parameter is undefined.
+    """
+    draws = posterior.draws(name)
+    # Whole steps are skipped: neighbours in a chain repeat each other, walkers do not.
+    stride = min(max(1, -(-draws.size // most)), max(1, draws.shape[1]))
+    return draws[:, ::stride, :].reshape(-1)
+
+
+def plot_range(columns, share: float = 0.9985) -> tuple[float, float]:
+    """Range that shows the given share of every run's draws of one parameter, with a margin.
+
+    Never beyond the draws themselves: a posterior cut by its prior is drawn with its edge on the frame.
+    """
+    tail = 0.5 * (1 - share)
+    columns = [c[np.isfinite(c)] for c in columns]
+    lows, highs = zip(*(np.quantile(c, [tail, 1 - tail]) for c in columns), strict=True)
+    low, high = min(lows), max(highs)
+    margin = 0.08 * (high - low)
+    low = max(low - margin, min(c.min() for c in columns))
+    high = min(high + margin, max(c.max() for c in columns))
+    if not high > low:
+        pad = 0.5 * abs(low) or 0.5
+        return low - pad, low + pad
+    return float(low), float(high)
+
+
+def common_exponent(limits: tuple[float, float]) -> int:
+    """Power of ten to take out of an axis's numbers, 0 where they are readable as they are."""
+    size = max(abs(limits[0]), abs(limits[1]))
+    power = int(np.floor(np.log10(size))) if size > 0 else 0
+    return power if power < -4 or power > 5 else 0
+
+
+def density(draws: np.ndarray, limits: tuple[float, float], bins: int = 120) -> tuple[np.ndarray, np.ndarray]:
+    """Smooth one-dimensional density with reflection at the ends, peak 1.
+
+    Returns
+    -------
+    x, y : (bins,) float
+    """
+    from scipy.ndimage import gaussian_filter1d
+
+    counts, edges = np.histogram(draws, bins=bins, range=limits)
+    # Scott's rule, in bins: wide enough to calm the noise, narrow beside the posterior's own width.
+    inside = draws[(draws >= limits[0]) & (draws <= limits[1])]
+    bandwidth = inside.std() * max(inside.size, 2) ** -0.2 if inside.size else 0.0
+    smooth = gaussian_filter1d(counts.astype(float), max(bandwidth / (edges[1] - edges[0]), 1.0), mode="reflect")
+    return 0.5 * (edges[1:] + edges[:-1]), smooth / max(smooth.max(), 1e-300)
+
+
+def draw_density(ax, draws, limits, colour, *, fill: bool = False) -> None:
+    """Draw a marginal density."""
+    x, y = density(draws, limits)
+    ax.plot(x, y, color=colour)
+    if fill:
+        ax.fill_between(x, y, color=colour, alpha=0.12, linewidth=0)
+
+
+def contours(ax, x, y, limits, colour, *, fill: bool = True, bins: int = _BINS) -> None:
+    """Draw the smallest regions that hold 68.3 and 95.4 % of the draws.
+
+    Parameters
+    ----------
+    ax : Axes
+    x, y : (n,) float
+    limits : ((low, high), (low, high))
+        Of x and y.
+    colour : str
+    fill : bool
+        Shade the regions, darker inside.
+    """
+    import corner
+    from matplotlib.colors import to_rgba
+
+    defined = np.isfinite(x) & np.isfinite(y)
+    if not defined.all():
+        x, y = x[defined], y[defined]
+    shades = [to_rgba(colour, 0.0), to_rgba(colour, 0.28), to_rgba(colour, 0.62)]
+    # corner warns about thin samples through logging; a report's own warnings say so already.
+    corner.hist2d(
+        x,
+        y,
+        ax=ax,
+        bins=bins,
+        range=limits,
+        levels=LEVELS,
+        smooth=_SMOOTHING,
+        color=colour,
+        quiet=True,
+        plot_datapoints=False,
+        plot_density=False,
+        no_fill_contours=True,
+        fill_contours=fill,
+        contourf_kwargs={"colors": shades, "antialiased": True},
+        contour_kwargs={"linewidths": 0.9},
+        new_fig=False,
+        force_range=True,
+    )

@@ -1,62 +1,302 @@
-"""From settings or arrays to a Sample: read, cut, check, put together."""
+"""From settings or arrays to a Sample: read, cut, check, put together; every problem is told at once."""
 
 from __future__ import annotations
+
+import os
+from collections.abc import Callable
+from contextlib import contextmanager
+from dataclasses import dataclass, field, replace
+from pathlib import Path
+from typing import Any
 
 import numpy as np
 
 from fitter.errors import InputError, InputErrors
-from fitter.sample.noise import Noise
-from fitter.sample.sample import Sample, make_sample
-from fitter.sample.uncertainty.term import Term
-from fitter.sample.validate import check_choice, check_matrix, check_rows
+from fitter.sample.advice import advice
+from fitter.sample.cuts import CutColumn, Cuts, one_per_object
+from fitter.sample.readers.layout import TextOptions
+from fitter.sample.readers.numbers import to_numbers
+from fitter.sample.sample import Sample
+from fitter.sample.settings import Columns, SampleSettings
+from fitter.sample.tables import Table, read_table, sha256_of
+from fitter.sample.uncertainty.base import Rows
+from fitter.sample.uncertainty.term import Term, combine, unique_labels
+from fitter.sample.validate import Place, check_duplicates, check_finite, check_inverse, check_redshift
 
-__all__ = ["assemble_arrays"]
+__all__ = ["Problems", "assemble", "finish"]
+
+_REDSHIFTS = ("redshift", "redshift_helio")
+_NUMBERS = (*_REDSHIFTS, "distance_modulus", "magnitude", "calibrator_modulus")
+_WORDS = ("group", "name")
 
 
-def assemble_arrays(
-    z, mu, *, sigma, covariance, precision, modes, intrinsic, covariance_scale, distance_scale, data_kind, **columns
-) -> Sample:
-    """Do the work of `Sample.from_arrays`."""
-    data = np.array(mu, dtype=float)
-    rows = {"redshift": np.array(z, dtype=float), "data": data}
-    z_helio = columns["z_helio"]
-    rows["redshift_helio"] = rows["redshift"] if z_helio is None else np.array(z_helio, dtype=float)
-    calibrators = columns["calibrator_modulus"]
-    rows["calibrator_modulus"] = np.full(data.shape, np.nan) if calibrators is None else np.array(calibrators, dtype=float)
-    problems = check_choice(data_kind, distance_scale) + check_rows(rows, distance_scale)
-    for key in ("group", "name"):
-        rows[key] = None if columns[key] is None else np.array([str(v) for v in columns[key]])
-    if problems:
-        raise InputErrors(problems)
-    terms = _array_terms(len(data), sigma=sigma, covariance=covariance, precision=precision, modes=modes, intrinsic=intrinsic)
-    free = intrinsic if isinstance(intrinsic, dict) else None
-    return make_sample(
-        rows, terms, data_kind=data_kind, distance_scale=distance_scale, intrinsic_prior=free, covariance_scale_prior=covariance_scale
+@dataclass
+class Problems:
+    """Collects errors so that one pass finds them all."""
+
+    found: list[InputError] = field(default_factory=list)
+
+    @contextmanager
+    def collect(self):
+        """Keep an InputError that is raised inside and carry on after it."""
+        try:
+            yield
+        except InputErrors as several:
+            self.found += several.errors
+        except InputError as problem:
+            self.found.append(problem)
+
+    def stop_if_any(self) -> None:
+        """Raise what was found: the one error, or all of them."""
+        unique = list({str(e): e for e in self.found}.values())
+        if len(unique) == 1:
+            raise unique[0]
+        if unique:
+            raise InputErrors(unique)
+
+
+def assemble(settings: SampleSettings, folder) -> Sample:
+    """Do the work of `Sample.from_config`."""
+    folder = Path(folder)
+    path = folder / os.path.expanduser(settings.table)
+    table = read_table(
+        path, _text_options(settings), numbers=_wanted_numbers(settings), texts=_wanted_words(settings), shown=settings.table
     )
+    problems = Problems()
+    observed = _Observed(settings, table, problems)
+    kept, cuts = observed.cut()
+    rows = Rows(
+        n=table.n,
+        redshift=observed.values["redshift"],
+        numbers=observed.numbers,
+        texts=observed.texts,
+        lines=table.lines,
+        keep=kept,
+        folder=folder,
+        table=settings.table,
+        sources={settings.table: sha256_of(path)},
+        notes=[note for note in (table.note, *cuts.notes) if note],
+    )
+    terms = _build(settings, rows, problems) if kept.any() else []
+    return _finish(observed, rows, terms, cuts.removed, problems)
 
 
-def _array_terms(n: int, *, sigma, covariance, precision, modes, intrinsic) -> list[Term]:
-    zero, terms, problems = np.zeros(n), [], []
-    if precision is not None and (sigma is not None or covariance is not None):
-        problems.append(InputError("a precision stands alone: it is the inverse of the whole covariance", column="precision"))
-    if sigma is not None:
-        sigma = np.broadcast_to(np.asarray(sigma, dtype=float), (n,))
-        if not np.all(sigma >= 0):
-            worst = int(np.argmin(np.nan_to_num(sigma, nan=-np.inf)))
-            problems.append(InputError("an error must be 0 or more", row=worst + 1, column="sigma", value=float(sigma[worst])))
-        terms.append(Term("sigma", "sigma", Noise(sigma**2)))
-    for kind, matrix in (("covariance", covariance), ("precision", precision)):
-        if matrix is not None:
-            matrix = np.array(matrix, dtype=float)
-            problems += check_matrix(matrix, n, kind)
-            if not problems:
-                terms.append(Term(kind, kind, Noise(zero, dense=matrix) if kind == "covariance" else Noise(zero, precision=matrix)))
-    if modes is not None:
-        modes = np.array(modes, dtype=float).reshape(n, -1)
-        names = tuple(f"mode {i + 1}" for i in range(modes.shape[1]))
-        terms.append(Term("modes", "modes", Noise(zero, modes=modes, mode_names=names)))
-    if intrinsic is not None and not isinstance(intrinsic, dict):
-        terms.append(Term("intrinsic", "intrinsic", Noise(np.full(n, float(intrinsic) ** 2))))
-    if problems:
-        raise InputErrors(problems)
+def _text_options(settings: SampleSettings) -> TextOptions:
+    return TextOptions(settings.header_tag, settings.row_tag, settings.delimiter, settings.comment)
+
+
+def _mapped(columns: Columns, ref):
+    """The column that a role or a column is read from."""
+    if isinstance(ref, str) and ref in Columns.model_fields and getattr(columns, ref) is not None:
+        return getattr(columns, ref)
+    return ref
+
+
+def _wanted_numbers(settings: SampleSettings) -> list:
+    roles = [getattr(settings.columns, role) for role in _NUMBERS]
+    return [r for r in roles if r is not None] + [r for t in settings.uncertainty for r in t.columns().get("numbers", [])]
+
+
+def _wanted_words(settings: SampleSettings) -> list:
+    rules = [ref for ref in settings.keep.rules if ref not in _NUMBERS]
+    refs = [*_WORDS, *rules, *(r for t in settings.uncertainty for r in t.columns().get("texts", []))]
+    refs += [settings.keep.one_per] if settings.keep.one_per is not None else []
+    mapped = [_mapped(settings.columns, ref) for ref in refs]
+    return [m for m, ref in zip(mapped, refs, strict=True) if m is not ref or ref not in Columns.model_fields]
+
+
+class _Observed:
+    """The columns of the table by role, before any cut."""
+
+    def __init__(self, settings: SampleSettings, table: Table, problems: Problems):
+        self.settings, self.table, self.problems = settings, table, problems
+        self.columns = settings.columns
+        self.unreadable: set[str] = set()
+        self.values: dict[str, np.ndarray] = {}
+        for role in ("redshift", "redshift_helio", settings.data_kind, "calibrator_modulus"):
+            self.values[role] = self._read(role)
+        # No modulus below 0 can be a host's: releases fill the column with such numbers where there is none.
+        calibrator = self.values["calibrator_modulus"]
+        self.values["calibrator_modulus"] = np.where(calibrator > 0, calibrator, np.nan)
+        self.words = {role: self._words(role) for role in _WORDS}
+        self.is_calibrator = np.isfinite(self.values["calibrator_modulus"])
+        self.calibrated = settings.distance_scale == "calibrated"
+
+    def _read(self, role: str) -> np.ndarray:
+        ref = getattr(self.columns, role)
+        if ref is not None:
+            with self.problems.collect():
+                return self.numbers(ref)
+            self.unreadable.add(role)
+        elif role == "redshift_helio":
+            return self.values["redshift"]
+        return np.full(self.table.n, np.nan)
+
+    def _words(self, role: str):
+        ref = getattr(self.columns, role)
+        if ref is None:
+            return None
+        with self.problems.collect():
+            return self.table.texts(ref)
+        return None
+
+    def numbers(self, ref) -> np.ndarray:
+        """Return a column as numbers, those that stand for a missing value turned to NaN."""
+        values = self.table.numbers(_mapped(self.columns, ref))
+        stand_ins = self.settings.missing_values
+        return np.where(np.isin(values, stand_ins), np.nan, values) if stand_ins else values
+
+    def texts(self, ref) -> np.ndarray:
+        """Return a column, or a role's, as words."""
+        return self.table.texts(_mapped(self.columns, ref))
+
+    def place(self, kept) -> Place:
+        """Return where the kept rows stand."""
+        columns = {role: getattr(self.columns, role) for role in Columns.model_fields if getattr(self.columns, role) is not None}
+        return Place(self.settings.table, self.table.lines[kept], columns | {"data": columns.get(self.settings.data_kind)})
+
+    def cut(self):
+        """Return the mask of the rows that are kept and the cuts that made it."""
+        cuts = Cuts(self.settings.keep, self._cut_column, self.words["group"], self.is_calibrator, self.calibrated, self.settings.table)
+        kept = cuts.apply()
+        self.problems.found += cuts.problems
+        if self.settings.missing == "drop":
+            whole = self._has_values()
+            cuts.removed["missing"] = int((kept & ~whole).sum())
+            kept = kept & whole
+        if not kept.any():
+            counts = ", ".join(f"{label} {count}" for label, count in cuts.removed.items()) or "none"
+            self.problems.found.append(
+                InputError(
+                    f"the cuts leave none of the {self.table.n} supernovae (removed by {counts})", file=self.settings.table,
+                    column="sample.keep", cure="Widen the cuts",
+                )
+            )  # fmt: skip
+        return kept, cuts
+
+    def _cut_column(self, ref: str) -> CutColumn:
+        mapped = _mapped(self.columns, ref)
+        if ref in Columns.model_fields and mapped is ref and (self.table.columns.names is None or ref not in self.table.columns.names):
+            raise InputError(
+                f"keep cuts on {ref}, but `columns` does not map it", column=f"sample.keep.{ref}", cure=f"Add `{ref}: COLUMN` to `columns`"
+            )
+        if ref in self.values:
+            return CutColumn(ref, None, lambda: self.values[ref], is_redshift=ref in _REDSHIFTS)
+        words = self.table.texts(mapped)
+        label = self.table.columns.label(self.table.columns.position(mapped))
+        is_redshift = mapped in (self.columns.redshift, self.columns.redshift_helio)
+        return CutColumn(ref, words, self._converter(words, label), is_redshift=is_redshift)
+
+    def _converter(self, words, label) -> Callable[[], np.ndarray]:
+        def convert():
+            values, problem = to_numbers(words, self.table.lines, label, self.settings.table)
+            if problem is not None:
+                raise problem
+            return values
+
+        return convert
+
+    def _has_values(self) -> np.ndarray:
+        needed = [self.values[role] for role in ("redshift", "redshift_helio", self.settings.data_kind) if role not in self.unreadable]
+        for term in self.settings.uncertainty:
+            for ref in term.columns().get("numbers", []):
+                with self.problems.collect():
+                    needed.append(self.numbers(ref))
+        return np.all([np.isfinite(values) for values in needed], axis=0) if needed else np.ones(self.table.n, dtype=bool)
+
+
+def _build(settings: SampleSettings, rows: Rows, problems: Problems) -> list[Term]:
+    terms = []
+    for item in settings.uncertainty:
+        with problems.collect():
+            term = item.build(rows)
+            if term is not None:
+                terms.append(term)
     return terms
+
+
+def _finish(observed: _Observed, rows: Rows, terms: list[Term], removed: dict, problems: Problems) -> Sample:
+    settings, kept = observed.settings, rows.keep
+    if settings.keep.one_per is not None and kept.any():
+        kept, terms = _one_per(observed, kept, terms, removed, problems)
+    take = {k: v[kept] for k, v in observed.values.items()}
+    take["data"] = take.pop(settings.data_kind)
+    take |= {role: None if words is None else words[kept] for role, words in observed.words.items()}
+    place = observed.place(kept)
+    inside = 0 if observed.calibrated else int(np.isfinite(take["calibrator_modulus"]).sum())
+    if not observed.calibrated:
+        take["calibrator_modulus"] = np.full(len(take["data"]), np.nan)
+    skip = {"data" if role == settings.data_kind else role for role in observed.unreadable}
+    return finish(
+        take, terms, place, problems, skip=skip, allow_duplicates=settings.duplicates == "allow", calibrators_inside=inside,
+        notes=tuple(rows.notes),
+        rest={
+            "data_kind": settings.data_kind,
+            "distance_scale": settings.distance_scale,
+            "intrinsic_prior": settings.intrinsic_prior,
+            "covariance_scale_prior": settings.covariance_scale_prior,
+            "removed": removed,
+            "row": place.lines,
+            "sources": rows.sources,
+        },
+    )  # fmt: skip
+
+
+def _one_per(observed: _Observed, kept, terms: list[Term], removed: dict, problems: Problems):
+    """Keep the row with the smallest error of each object; the terms follow."""
+    ref = observed.settings.keep.one_per
+    with problems.collect():
+        objects = observed.texts(ref)[kept]
+        if not terms:
+            return kept, terms
+        mask = one_per_object(objects, combine(terms).total_variance)
+        removed[f"one_per {ref}"] = int((~mask).sum())
+        thinned = np.zeros_like(kept)
+        thinned[np.flatnonzero(kept)[mask]] = True
+        return thinned, [term.select(mask) for term in terms]
+    return kept, terms
+
+
+def finish(
+    take: dict[str, Any], terms: list[Term], place: Place, problems: Problems, *, rest: dict, skip=frozenset(), allow_duplicates=False,
+    calibrators_inside=0, notes=(),
+) -> Sample:  # fmt: skip
+    """Check the rows and terms that are kept, and make the sample of them.
+
+    Raises
+    ------
+    InputError, InputErrors
+        Everything found here and before.
+    """
+    found, duplicates = _check(take, place, skip, rest["distance_scale"], allow_duplicates)
+    problems.found += found + check_inverse(terms)
+    problems.stop_if_any()
+    terms = unique_labels(terms)
+    with problems.collect():
+        noise = combine(terms, place.file)
+        _ = noise.log_det  # a covariance that is not positive definite is told now, and the factor kept
+    problems.stop_if_any()
+    sample = Sample(**take, terms=terms, noise=noise, **rest)
+    said = (*notes, *duplicates, *advice(sample, place.columns, calibrators_inside))
+    return replace(sample, warnings=said)
+
+
+def _check(take: dict, place: Place, skip, distance_scale: str, allow_duplicates: bool):
+    problems: list[InputError] = []
+    for role in _REDSHIFTS:
+        given = role == "redshift" or take[role] is not take["redshift"]
+        if role not in skip and given and not (role == "redshift_helio" and role not in place.columns):
+            problems += check_redshift(role, take[role], place)
+    if "data" not in skip:
+        problems += check_finite("data", take["data"], place)
+    if distance_scale == "calibrated" and "calibrator_modulus" not in skip and not np.isfinite(take["calibrator_modulus"]).any():
+        problems.append(
+            InputError(
+                "distance_scale: calibrated needs at least one row with a calibrator modulus, and none has one", file=place.file,
+                column=place.columns.get("calibrator_modulus"), cure="Check the column and the cuts, or use `distance_scale: relative`",
+            )
+        )  # fmt: skip
+    if take.get("name") is None or {"redshift", "data"} & set(skip):
+        return problems, []
+    found, notes = check_duplicates(take["name"], take.get("group"), take["redshift"], take["data"], place, allow_duplicates)
+    return problems + found, notes

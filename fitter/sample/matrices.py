@@ -13,7 +13,7 @@ import numpy as np
 from fitter.errors import InputError
 from fitter.sample.cholesky import mirror_lower
 from fitter.sample.files import open_binary, reading
-from fitter.sample.readers.layout import plain_number
+from fitter.sample.readers.numbers import plain_number
 
 __all__ = ["compact", "make_symmetric", "read_array", "read_matrix"]
 

@@ -11,7 +11,7 @@ import numpy as np
 
 from fitter.errors import InputError, InputErrors
 from fitter.sample.noise import Noise, read_only
-from fitter.sample.uncertainty.term import Term, combine, unique_labels
+from fitter.sample.uncertainty.term import Term, combine
 
 __all__ = ["DATA_KINDS", "DISTANCE_SCALES", "Sample"]
 
@@ -178,7 +178,7 @@ class Sample:
         InputError, InputErrors
             Everything that is wrong with the arrays.
         """
-        from fitter.sample.assembly import assemble_arrays
+        from fitter.sample.arrays import assemble_arrays
 
         given = {k: v for k, v in locals().items() if k not in ("cls", "assemble_arrays")}
         return assemble_arrays(**given)
@@ -218,9 +218,3 @@ class Sample:
         rows = {k: getattr(self, k)[index] for k in ("redshift", "redshift_helio", "data", "calibrator_modulus", "row")}
         rows |= {k: getattr(self, k)[index] for k in ("group", "name") if getattr(self, k) is not None}
         return replace(self, **rows, terms=terms, noise=combine(terms))
-
-
-def make_sample(columns: dict, terms, **rest) -> Sample:
-    """Put checked columns and terms together."""
-    terms = unique_labels(terms)
-    return Sample(**columns, terms=terms, noise=combine(terms), **rest)

@@ -1,44 +1,153 @@
-"""What is refused, and what is only asked about."""
+"""What is refused in a sample: every check returns the problems it finds, so that all are told at once."""
 
 from __future__ import annotations
+
+from dataclasses import dataclass, field
 
 import numpy as np
 
 from fitter.errors import InputError
+from fitter.sample.uncertainty.term import Term
 
-__all__ = ["check_choice", "check_matrix", "check_rows"]
+__all__ = ["Place", "check_duplicates", "check_finite", "check_inverse", "check_redshift"]
+
+_WILD_REDSHIFT = 0.01  # two redshifts of one supernova cannot differ by so much
+_LARGEST_VARIANCE = 4.0  # mag²: nobody's median distance error is above 2 mag
+_SAID = 3  # how many examples a message gives
 
 
-def check_choice(data_kind, distance_scale) -> list[InputError]:
-    from fitter.sample.sample import DATA_KINDS, DISTANCE_SCALES
+@dataclass(frozen=True)
+class Place:
+    """Where the rows of a sample stand, for messages.
 
+    Parameters
+    ----------
+    file : str or None
+    lines : (N,) array of int
+        Line of the file that each row stands in.
+    columns : dict
+        Role → column in the file.
+    """
+
+    file: str | None
+    lines: np.ndarray
+    columns: dict = field(default_factory=dict)
+
+    def error(self, problem: str, role: str, index: int, value, cure: str | None = None) -> InputError:
+        """Return an error about one value."""
+        return InputError(
+            problem, file=self.file, row=int(self.lines[index]), column=self.columns.get(role, role), value=value, cure=cure
+        )  # fmt: skip
+
+
+def check_finite(role: str, values, place: Place) -> list[InputError]:
+    """NaN and infinite values."""
+    bad = ~np.isfinite(values)
+    if not bad.any():
+        return []
+    index = int(np.argmax(bad))
+    what = "there is no value" if np.isnan(values[index]) else "the value is infinite"
+    return [
+        place.error(
+            f"{what}, but {role} must be a finite number{_more(bad)}", role, index, float(values[index]),
+            "Correct it, cut the row with `keep:`, or drop rows without values with `missing: drop`",
+        )
+    ]  # fmt: skip
+
+
+def check_redshift(role: str, values, place: Place) -> list[InputError]:
+    """NaN, infinite, or not above 0: a distance modulus diverges there."""
+    problems = check_finite(role, values, place)
+    bad = np.isfinite(values) & (values <= 0)
+    if bad.any():
+        index = int(np.argmax(bad))
+        cure = "Cut such rows with `keep: {redshift: [0.01, null]}`, or check the column"
+        problems.append(place.error(f"{role} must be above 0{_more(bad)}", role, index, float(values[index]), cure))
+    return problems
+
+
+def check_duplicates(name, group, redshift, data, place: Place, allowed: bool) -> tuple[list[InputError], list[str]]:
+    """Rows with the same name.
+
+    Releases legitimately list a supernova once per survey that saw it. So the same name in different groups is only told of, and the
+    same name within a group, or without groups to tell them apart, is refused where redshift or data differ. Redshifts of one name that
+    differ by more than 0.01 are refused in any case: those are two objects, or a slip. ``allowed`` turns all of it into warnings.
+
+    Returns
+    -------
+    problems : list of InputError
+    notes : list of str
+    """
+    order = np.argsort(name, kind="stable")
+    same = (name[order][1:] == name[order][:-1]) & (name[order][1:] != "")
+    first, second = order[:-1][same], order[1:][same]
+    if not len(first):
+        return [], []
+    differ = (redshift[first] != redshift[second]) | (data[first] != data[second])
+    wild = np.abs(redshift[first] - redshift[second]) > _WILD_REDSHIFT
+    across = np.zeros(len(first), dtype=bool) if group is None else group[first] != group[second]
+    wrong = differ & (wild | ~across)
+    if not wrong.any() or allowed:
+        names = list(dict.fromkeys(name[first].tolist()))
+        listed = ", ".join(names[:_SAID]) + (f" and {len(names) - _SAID} more" if len(names) > _SAID else "")
+        return [], [
+            f"{len(names)} supernovae stand in more than one row ({listed}). Each row counts as independent unless the covariance says "
+            "otherwise; `keep: {one_per: COLUMN}` keeps the best of each."
+        ]
+    index = int(np.argmax(wrong))
+    a, b = int(first[index]), int(second[index])
+    what = (
+        f"redshift {redshift[a]:g} and {redshift[b]:g}" if redshift[a] != redshift[b] else f"{data[a]:g} and {data[b]:g} mag"
+    )  # fmt: skip
+    cure = "" if group is not None else "map `group` where several surveys saw it, "
+    problem = place.error(
+        f"this name occurs twice with differing values, {what}; first in row {place.lines[a]}{_more(wrong, 'name')}", "name", b,
+        str(name[b]), f"Correct it, {cure}keep one row each with `keep: {{one_per: COLUMN}}`, or accept it with `duplicates: allow`",
+    )  # fmt: skip
+    return [problem], []
+
+
+def check_inverse(terms: list[Term]) -> list[InputError]:
+    """A covariance that looks like an inverse, and the reverse, judged by its diagonal."""
+    sigma = [term.noise.variance for term in terms if term.kind == "sigma"]
     problems = []
-    for key, value, known in (("data_kind", data_kind, DATA_KINDS), ("distance_scale", distance_scale, DISTANCE_SCALES)):
-        if value not in known:
-            problems.append(InputError(f"{key} must be one of {', '.join(known)}", column=key, value=value))
+    for term in terms:
+        matrix = term.noise.precision if term.kind == "precision" else term.noise.dense
+        if term.kind == "covariance" and _looks_inverse(np.diagonal(matrix), sum(sigma) if sigma else None):
+            problems.append(
+                InputError(
+                    f"this looks like an inverse covariance: its median diagonal element is {np.median(np.diagonal(matrix)):.3g}, "
+                    f"{_beside(np.diagonal(matrix), sum(sigma) if sigma else None)}",
+                    file=term.noise.source, column="covariance", cure="Use precision: {precision: FILE}, without a sigma term",
+                )
+            )  # fmt: skip
+        elif term.kind == "precision" and matrix is not None and np.median(np.diagonal(matrix)) < 1 / _LARGEST_VARIANCE:
+            median = np.median(np.diagonal(matrix))
+            problems.append(
+                InputError(
+                    f"this looks like a covariance, not its inverse: its median diagonal element is {median:.3g}; as an inverse covariance "
+                    f"that would mean errors of {abs(median) ** -0.5 if median else np.inf:.3g} mag",
+                    file=term.noise.source, column="precision", cure="Use covariance: {covariance: FILE}",
+                )
+            )  # fmt: skip
     return problems
 
 
-def check_rows(rows, distance_scale) -> list[InputError]:
-    n, problems = len(rows["data"]), []
-    for key in ("redshift", "redshift_helio", "data"):
-        values = rows[key]
-        if values.shape != (n,):
-            problems.append(InputError(f"{key} must have one number per supernova, {n}", column=key, value=values.shape))
-            continue
-        bad = np.flatnonzero(~np.isfinite(values))
-        if len(bad):
-            problems.append(InputError(f"{key} must be a finite number", row=int(bad[0]) + 1, column=key, value=float(values[bad[0]])))
-        elif key != "data" and np.any(values <= 0):
-            worst = int(np.argmin(values))
-            problems.append(InputError(f"{key} must be above 0", row=worst + 1, column=key, value=float(values[worst])))
-    return problems
+def _looks_inverse(diagonal, variance) -> bool:
+    if np.median(diagonal) > _LARGEST_VARIANCE:
+        return True
+    if variance is None or not np.all(variance > 0):
+        return False
+    product, ratio = np.median(diagonal * variance), np.median(diagonal / variance)
+    return 1 / 3 < product < 3 and not 0.1 < ratio < 10
 
 
-def check_matrix(matrix, n, kind) -> list[InputError]:
-    if matrix.shape != (n, n):
-        return [InputError(f"the {kind} is {' × '.join(map(str, matrix.shape))}, but there are {n} supernovae", column=kind)]
-    if not np.all(np.isfinite(matrix)):
-        i, j = np.argwhere(~np.isfinite(matrix))[0]
-        return [InputError(f"the {kind} holds a value that is not finite", row=int(i) + 1, column=int(j) + 1, value=float(matrix[i, j]))]
-    return []
+def _beside(diagonal, variance) -> str:
+    if variance is not None and np.all(variance > 0):
+        return f"and times the square of the sigma column it is {np.median(diagonal * variance):.3g}"
+    return f"an error of {np.sqrt(np.median(diagonal)):.3g} mag if it were a covariance"
+
+
+def _more(bad, what: str = "row") -> str:
+    others = int(np.sum(bad)) - 1
+    return f", here and in {others} more {what}{'s' if others > 1 else ''}" if others else ""

@@ -4,7 +4,6 @@ from __future__ import annotations
 
 import csv
 import io
-import re
 from collections.abc import Sequence
 from dataclasses import dataclass, field
 from pathlib import Path
@@ -13,12 +12,11 @@ import numpy as np
 
 from fitter.errors import InputError
 from fitter.sample.files import open_binary, reading
+from fitter.sample.readers.numbers import MISSING, is_number
 
-__all__ = ["MISSING", "WHITESPACE", "Layout", "TextOptions", "find_layout", "is_number", "plain_number", "split_fields"]
+__all__ = ["WHITESPACE", "Layout", "TextOptions", "find_layout", "split_fields"]
 
 WHITESPACE = r"\s+"
-MISSING = frozenset(["", "nan", "na", "n/a", "null", "none", "--", "-", "---", "...", "…", "\\n"])
-
 _COMMENTS = ("#", "%", "!", "//")
 _WORDS = {"whitespace": WHITESPACE, "space": WHITESPACE, " ": WHITESPACE, "tab": "\t", "\\t": "\t", "comma": ",", "semicolon": ";"}
 _CANDIDATES = ("\t", ";", "|", ",", WHITESPACE)  # in this order where nothing else decides
@@ -191,24 +189,6 @@ def _no_rows(scan: _Scan, options: TextOptions, shown: str) -> InputError:
             f"no line begins with the row tag {options.row_tag!r}", file=shown, cure=f"Lines begin with {words}: check `row_tag`"
         )
     return InputError("the table has no rows", file=shown, cure="Give a table with data")
-
-
-def plain_number(text: str) -> str:
-    """Write a number the way Python reads it: Unicode minus signs and Fortran exponents replaced."""
-    text = text.strip().replace("\u2212", "-").replace("\u2013", "-")
-    return re.sub(r"(?<=[\d.])[dD](?=[-+]?\d)", "e", text)
-
-
-def is_number(text: str, decimal_comma: bool = False) -> bool:
-    """Whether a field holds a number, or a sign that there is none."""
-    text = plain_number(text)
-    if text.lower() in MISSING:
-        return True
-    try:
-        float(text)
-    except ValueError:
-        return decimal_comma and re.fullmatch(r"[-+]?\d+,\d+([eE][-+]?\d+)?", text) is not None
-    return True
 
 
 def split_fields(line: str, delimiter: str, tag: str | None = None) -> list[str]:

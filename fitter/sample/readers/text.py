@@ -3,7 +3,6 @@
 from __future__ import annotations
 
 import io
-import re
 from collections.abc import Sequence
 from pathlib import Path
 
@@ -11,7 +10,8 @@ import numpy as np
 
 from fitter.errors import InputError
 from fitter.sample.files import open_binary, reading
-from fitter.sample.readers.layout import MISSING, WHITESPACE, Layout, TextOptions, find_layout, is_number, plain_number, split_fields
+from fitter.sample.readers.layout import WHITESPACE, Layout, TextOptions, find_layout, split_fields
+from fitter.sample.readers.numbers import MISSING, to_numbers
 from fitter.sample.tables import Columns, Table
 
 __all__ = ["read_text"]
@@ -55,12 +55,17 @@ def _read(path: Path, layout: Layout, columns: Columns, as_numbers, as_texts, sh
     for position in as_numbers:
         values = found[position]
         if values.dtype != np.float64:
-            values, problem = _to_numbers(values, layout.lines, columns.label(position), shown)
+            values, problem = to_numbers(values, layout.lines, columns.label(position), shown)
             if problem is not None:
                 problems[position] = problem
         floats[position] = values
-    words = {p: np.array([w.strip() for w in found[p]], dtype=str) for p in as_texts}
+    words = {p: np.array([_word(w) for w in found[p]], dtype=str) for p in as_texts}
     return Table(columns, layout.lines, floats, words, problems, layout.note)
+
+
+def _word(value) -> str:
+    """A field as a word; a column that is wanted as numbers too comes as those."""
+    return value.strip() if isinstance(value, str) else f"{value:.12g}"
 
 
 def _rows(path: Path, layout: Layout, options: TextOptions):
@@ -98,19 +103,20 @@ def _parse(path: Path, layout: Layout, options: TextOptions, as_numbers, needed)
 
     if layout.tagged and layout.delimiter != WHITESPACE:
         return _split(path, layout, options, needed)
-    shift = int(layout.tagged)  # the tag is a column of its own
+    names = ["tag"] * layout.tagged + [f"column {p}" for p in range(layout.n_columns)]  # words: pandas takes whole numbers for positions
+    chosen = {p: f"column {p}" for p in needed}
     missing = sorted({form for token in MISSING for form in (token, token.upper(), token.capitalize())} | {"NaN"})
     with io.TextIOWrapper(open_binary(path), encoding=layout.encoding) as source:
         frame = pd.read_csv(
             source,
             sep=layout.delimiter,
             header=None,
-            names=list(range(-shift, layout.n_columns)),
-            usecols=needed,
-            dtype={p: (np.float64 if p in as_numbers else object) for p in needed},
+            names=names,
+            usecols=list(chosen.values()),
+            dtype={name: (np.float64 if p in as_numbers else object) for p, name in chosen.items()},
             skiprows=layout.skip,
             keep_default_na=False,
-            na_values={p: missing for p in as_numbers},
+            na_values={chosen[p]: missing for p in as_numbers},
             skipinitialspace=layout.delimiter != WHITESPACE,
             float_precision="round_trip",
             index_col=False,
@@ -118,7 +124,7 @@ def _parse(path: Path, layout: Layout, options: TextOptions, as_numbers, needed)
         )
     if len(frame) != len(layout.lines):
         raise ValueError("a quotation mark is not closed")
-    return {p: frame[p].to_numpy() if p in as_numbers else frame[p].fillna("").to_numpy(dtype=object) for p in needed}
+    return {p: frame[c].to_numpy() if p in as_numbers else frame[c].fillna("").to_numpy(dtype=object) for p, c in chosen.items()}
 
 
 def _split(path: Path, layout: Layout, options: TextOptions, needed) -> dict[int, np.ndarray]:
@@ -129,33 +135,3 @@ def _split(path: Path, layout: Layout, options: TextOptions, needed) -> dict[int
         for position, words in found.items():
             words.append(fields[position] if position < len(fields) else "")
     return {p: np.array(words, dtype=object) for p, words in found.items()}
-
-
-def _to_numbers(words, lines, label, shown: str):
-    """Convert words to numbers the long way; return them and what is wrong with the first that is none."""
-    import pandas as pd
-
-    plain = [plain_number(str(w)) for w in words]
-    plain = ["nan" if p.lower() in MISSING else p for p in plain]
-    values = pd.to_numeric(pd.Series(plain, dtype=object), errors="coerce").to_numpy(dtype=float)
-    wrong = np.isnan(values) & np.array([p != "nan" for p in plain])
-    if not wrong.any():
-        return values, None
-    row = int(np.argmax(wrong))
-    word = str(words[row]).strip()
-    return values, InputError(
-        f"this is not a number{_count(wrong)}", file=shown, row=int(lines[row]), column=label, value=word, cure=_cure(word)
-    )
-
-
-def _cure(word: str) -> str:
-    if is_number(word, decimal_comma=True):
-        return "Write numbers with a decimal point, not a comma"
-    if re.fullmatch(r"[-+]?\d{1,3}(,\d{3})+(\.\d*)?", word):
-        return "Write numbers without thousands separators"
-    return "Correct it, or leave the field empty and cut the row with `keep:` or `missing: drop`"
-
-
-def _count(wrong) -> str:
-    others = int(wrong.sum()) - 1
-    return f", here and in {others} more row{'s' if others > 1 else ''}" if others else ""

@@ -1,0 +1,152 @@
+"""What is not refused but a practitioner would ask about, each with its cure."""
+
+from __future__ import annotations
+
+import re
+
+import numpy as np
+
+from fitter.sample.sample import Sample
+
+__all__ = ["advice"]
+
+_FEWEST_ROWS = 15  # below which a scatter about a curve says little
+
+
+def advice(sample: Sample, columns: dict | None = None, n_calibrators_inside: int = 0) -> list[str]:
+    """Return warnings about a sample.
+
+    Parameters
+    ----------
+    sample : Sample
+    columns : dict, optional
+        Role → column in the table.
+    n_calibrators_inside : int
+        Rows with a known host modulus in a fit whose scale is not calibrated.
+    """
+    found = [
+        _velocities(sample),
+        _data_range(sample),
+        _heliocentric(sample, columns or {}),
+        _calibrators(sample, n_calibrators_inside),
+        *_counted_twice(sample),
+        *_included_already(sample),
+        _systematics_only(sample),
+    ]
+    return [text for text in found if text]
+
+
+def _velocities(sample: Sample):
+    if np.median(sample.redshift) > 10:
+        return (
+            f"The redshifts look like velocities: their median is {np.median(sample.redshift):.4g}. Divide the column by 299792.458 km/s, "
+            "or map another one."
+        )
+    return None
+
+
+def _data_range(sample: Sample):
+    low, high = (5.0, 35.0) if sample.data_kind == "magnitude" else (20.0, 50.0)
+    outside = (sample.data < low) | (sample.data > high)
+    if not outside.any():
+        return None
+    row = int(np.argmax(outside))
+    other = "`distance_modulus`" if sample.data_kind == "magnitude" else "`magnitude`"
+    return (
+        f"{int(outside.sum())} of {sample.n} values are outside the {low:g} to {high:g} mag expected of a "
+        f"{sample.data_kind.replace('_', ' ')}, the first {sample.data[row]:g} in row {sample.row[row]}. Check the column; is it {other}?"
+    )
+
+
+def _heliocentric(sample: Sample, columns: dict):
+    name = str(columns.get("redshift", ""))
+    if re.search(r"hel", name, re.IGNORECASE):
+        return (
+            f"The redshift column {name!r} looks heliocentric. Distances need the cosmological (CMB) frame: map that to `redshift` and "
+            "this one to `redshift_helio`."
+        )
+    apart = np.abs(sample.redshift - sample.redshift_helio) > 0.01
+    if apart.any():
+        row = int(np.argmax(apart))
+        return (
+            f"In {int(apart.sum())} rows the cosmological and the heliocentric redshift differ by more than 0.01, the first in row "
+            f"{sample.row[row]} ({sample.redshift[row]:g} and {sample.redshift_helio[row]:g}). The Sun's motion makes 0.0012: check both."
+        )
+    return None
+
+
+def _calibrators(sample: Sample, inside: int):
+    if not inside:
+        return None
+    return (
+        f"{inside} calibrator rows (hosts with a known modulus) are inside a fit with distance_scale: {sample.distance_scale}, where they "
+        "are used like any other supernova and their covariance may hold the error of the host's distance. Drop them with "
+        "`keep: {calibrators: drop}`, or use `distance_scale: calibrated`."
+    )
+
+
+def _counted_twice(sample: Sample) -> list[str]:
+    """A covariance beside a sigma column that it holds already."""
+    sigma = [t.noise.variance for t in sample.terms if t.kind == "sigma"]
+    if not sigma or not np.all(sum(sigma) > 0):
+        return []
+    found = []
+    for term in (t for t in sample.terms if t.kind == "covariance"):
+        ratio = np.sqrt(np.abs(np.diagonal(term.noise.dense)) / sum(sigma))
+        share = np.mean(ratio >= 0.99)
+        if share > 0.95:
+            found.append(
+                f"The errors look counted twice: the covariance {term.label!r} has a diagonal at least as large as the sigma column in "
+                f"{100 * share:.0f} % of the rows (median ratio of the errors {np.median(ratio):.3g}, largest in row "
+                f"{sample.row[int(np.argmax(ratio))]}), so it probably holds the statistical errors already. Both are added, as the config "
+                "says; if it does, remove the sigma term."
+            )
+    return found
+
+
+def _included_already(sample: Sample) -> list[str]:
+    sigma = [t.noise.variance for t in sample.terms if t.kind == "sigma"]
+    total = sum(sigma) if sigma else None
+    if total is None:
+        held = [t for t in sample.terms if t.kind in ("covariance", "precision") and t.noise.n]
+        total = sum(t.variance for t in held) if held else None
+    if total is None:
+        return []
+    found = []
+    for term in (t for t in sample.terms if t.kind in ("peculiar_velocity", "lensing")):
+        if np.mean(total >= term.noise.variance) > 0.99:
+            share = np.max(term.noise.variance / np.maximum(total, 1e-300))
+            found.append(
+                f"{term.label} looks included already: the errors of the release are at least as large in every row (it is at most "
+                f"{100 * share:.0f} % of their variance). Released errors usually hold it; if these do, remove the term."
+            )
+    return found
+
+
+def _systematics_only(sample: Sample):
+    """Errors far below the scatter of the data about a smooth curve, where no statistical term was given."""
+    statistical = {"sigma", "precision", "intrinsic"}
+    if statistical & {t.kind for t in sample.terms} or sample.intrinsic_prior is not None:
+        return None
+    used = ~sample.is_calibrator & (sample.redshift < 10)
+    if used.sum() < _FEWEST_ROWS:
+        return None
+    pull, scatter = scatter_about_curve(sample.redshift[used], sample.data[used], np.sqrt(sample.noise.total_variance[used]))
+    if pull < 2:
+        return None
+    return (
+        f"The errors look systematic only: the data scatter by {scatter:.3g} mag about a smooth curve, {pull:.2g} times the errors given. "
+        "Add the statistical errors, e.g. {sigma: COLUMN}."
+    )
+
+
+def scatter_about_curve(z, data, sigma) -> tuple[float, float]:
+    """Robust scatter about a smooth Hubble diagram, in units of the errors and in mag."""
+    u = np.log1p(z)
+    x = 2 * u / u.max() - 1
+    design = np.polynomial.chebyshev.chebvander(x, min(4, len(z) // 5))
+    y = data - 5 * np.log10(z)
+    sigma = np.maximum(sigma, 1e-12)
+    fitted = np.linalg.lstsq(design / sigma[:, None], y / sigma, rcond=None)[0]
+    residual = y - design @ fitted
+    return 1.4826 * float(np.median(np.abs(residual / sigma))), 1.4826 * float(np.median(np.abs(residual)))

@@ -1,0 +1,125 @@
+"""A sample made of arrays, through the same checks as one read from files."""
+
+from __future__ import annotations
+
+import numpy as np
+
+from fitter.errors import InputError
+from fitter.sample.assembly import Problems, finish
+from fitter.sample.matrices import make_symmetric
+from fitter.sample.noise import Noise
+from fitter.sample.sample import DATA_KINDS, DISTANCE_SCALES, Sample
+from fitter.sample.uncertainty.term import Term
+from fitter.sample.validate import Place
+
+__all__ = ["assemble_arrays"]
+
+
+def assemble_arrays(z, mu, *, distance_scale, data_kind, intrinsic, covariance_scale, **given) -> Sample:
+    """Do the work of `Sample.from_arrays`."""
+    problems = Problems()
+    for key, value, known in (("data_kind", data_kind, DATA_KINDS), ("distance_scale", distance_scale, DISTANCE_SCALES)):
+        if value not in known:
+            problems.found.append(InputError(f"{key} must be one of {', '.join(known)}", column=key, value=value))
+    take = _rows(z, mu, given, problems)
+    problems.stop_if_any()
+    n = len(take["data"])
+    columns = {"redshift": "z", "data": "mu", "name": "name"} | ({"redshift_helio": "z_helio"} if given["z_helio"] is not None else {})
+    place = Place(None, np.arange(1, n + 1), columns)
+    inside = 0 if distance_scale == "calibrated" else int(np.isfinite(take["calibrator_modulus"]).sum())
+    if distance_scale != "calibrated":
+        take["calibrator_modulus"] = np.full(n, np.nan)
+    terms = _terms(n, given, intrinsic, problems)
+    rest = {
+        "data_kind": data_kind,
+        "distance_scale": distance_scale,
+        "intrinsic_prior": intrinsic if isinstance(intrinsic, dict) else None,
+        "covariance_scale_prior": covariance_scale,
+    }
+    return finish(take, terms, place, problems, rest=rest, calibrators_inside=inside)
+
+
+def _rows(z, mu, given: dict, problems: Problems) -> dict:
+    data = _numbers(mu, "mu", None, problems)
+    n = len(data)
+    if not n:
+        problems.found.append(InputError("there are no supernovae", column="mu", cure="Give at least one"))
+    redshift = _numbers(z, "z", n, problems)
+    helio = redshift if given["z_helio"] is None else _numbers(given["z_helio"], "z_helio", n, problems)
+    calibrators = np.full(n, np.nan)
+    if given["calibrator_modulus"] is not None:
+        calibrators = _numbers(given["calibrator_modulus"], "calibrator_modulus", n, problems)
+        calibrators = np.where(calibrators > 0, calibrators, np.nan)
+    take = {"redshift": redshift, "redshift_helio": helio, "data": data, "calibrator_modulus": calibrators}
+    for key in ("group", "name"):
+        values = given[key]
+        take[key] = None if values is None else np.array([str(v) for v in values], dtype=str)
+        if values is not None and len(take[key]) != n:
+            problems.found.append(InputError(f"{key} must have one value per supernova, {n}", column=key, value=len(take[key])))
+    return take
+
+
+def _numbers(values, key: str, n: int | None, problems: Problems):
+    """A private (N,) copy of an array of numbers."""
+    try:
+        numbers = np.array(values, dtype=float)
+    except (TypeError, ValueError) as problem:
+        problems.found.append(InputError(f"{key} must be an array of numbers: {problem}", column=key))
+        return np.full(n or 1, np.nan)
+    if numbers.ndim != 1 or (n is not None and len(numbers) != n):
+        expected = "one number per supernova" + (f", {n}" if n is not None else "")
+        problems.found.append(InputError(f"{key} must have {expected}", column=key, value=numbers.shape))
+        return np.full(n or 1, np.nan)
+    return numbers
+
+
+def _terms(n: int, given: dict, intrinsic, problems: Problems) -> list[Term]:
+    terms = []
+    sigma, precision = given["sigma"], given["precision"]
+    if precision is not None and (sigma is not None or given["covariance"] is not None):
+        problems.found.append(
+            InputError(
+                "a precision stands alone: it is the inverse of the whole covariance", column="precision", cure="Leave the others out"
+            )
+        )
+    if sigma is not None:
+        errors = np.full(n, float(sigma)) if np.ndim(sigma) == 0 else _numbers(sigma, "sigma", n, problems)
+        bad = ~((errors >= 0) & np.isfinite(errors))
+        if bad.any():
+            worst = int(np.argmax(bad))
+            problems.found.append(
+                InputError("an error must be a finite number, 0 or more", row=worst + 1, column="sigma", value=float(errors[worst]))
+            )
+        terms.append(Term("sigma", "sigma", Noise(errors**2)))
+    for kind in ("covariance", "precision"):
+        if given[kind] is not None:
+            with problems.collect():
+                matrix = _matrix(given[kind], n, kind)
+                part = {"dense": matrix} if kind == "covariance" else {"precision": matrix}
+                terms.append(Term(kind, kind, Noise(np.zeros(n), **part)))
+    if given["modes"] is not None:
+        with problems.collect():
+            terms.append(_modes(given["modes"], n))
+    if intrinsic is not None and not isinstance(intrinsic, dict):
+        terms.append(Term("intrinsic", "intrinsic", Noise(np.full(n, float(intrinsic) ** 2))))
+    return terms
+
+
+def _matrix(values, n: int, kind: str):
+    matrix = np.array(values, dtype=float, order="C")
+    if matrix.shape != (n, n):
+        shape = " × ".join(map(str, matrix.shape))
+        raise InputError(f"the {kind} is {shape}, but there are {n} supernovae", column=kind, cure="Give one row and column per supernova")
+    make_symmetric(matrix, f"the {kind}")
+    return matrix
+
+
+def _modes(values, n: int) -> Term:
+    modes = np.array(values, dtype=float)
+    modes = modes[:, None] if modes.ndim == 1 else modes
+    if modes.ndim != 2 or len(modes) != n or not np.all(np.isfinite(modes)):
+        raise InputError(
+            f"modes must be finite numbers, one row per supernova ({n}) and a column per systematic", column="modes", value=modes.shape
+        )
+    names = tuple(f"mode {i + 1}" for i in range(modes.shape[1]))
+    return Term("modes", "modes", Noise(np.zeros(n), modes=modes, mode_names=names))

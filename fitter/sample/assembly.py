@@ -14,11 +14,12 @@ import numpy as np
 from fitter.errors import InputError, InputErrors
 from fitter.sample.advice import advice
 from fitter.sample.cuts import CutColumn, Cuts, one_per_object
+from fitter.sample.files import reading, sha256_of
 from fitter.sample.readers.layout import TextOptions
 from fitter.sample.readers.numbers import to_numbers
 from fitter.sample.sample import Sample
 from fitter.sample.settings import Columns, SampleSettings
-from fitter.sample.tables import Table, read_table, sha256_of
+from fitter.sample.tables import Table, read_table
 from fitter.sample.uncertainty.base import Rows
 from fitter.sample.uncertainty.term import Term, combine, unique_labels
 from fitter.sample.validate import Place, check_duplicates, check_finite, check_inverse, check_redshift
@@ -59,10 +60,8 @@ def assemble(settings: SampleSettings, folder) -> Sample:
     """Do the work of `Sample.from_config`."""
     folder = Path(folder)
     path = folder / os.path.expanduser(settings.table)
-    table = read_table(
-        path, _text_options(settings), numbers=_wanted_numbers(settings), texts=_wanted_words(settings), shown=settings.table
-    )
     problems = Problems()
+    table = _table(settings, folder, path, problems)
     observed = _Observed(settings, table, problems)
     kept, cuts = observed.cut()
     rows = Rows(
@@ -79,6 +78,24 @@ def assemble(settings: SampleSettings, folder) -> Sample:
     )
     terms = _build(settings, rows, problems) if kept.any() else []
     return _finish(observed, rows, terms, cuts.removed, problems)
+
+
+def _table(settings: SampleSettings, folder: Path, path: Path, problems: Problems) -> Table:
+    """Read the table; where that fails, tell of the other files that are not there as well."""
+    if settings.layout == "bordered":
+        raise InputError(
+            "a bordered matrix is read from a FITS image only, and FITS is not read yet", file=settings.table, column="sample.layout",
+            cure="Save z and the moduli as a CSV table, and the inverse covariance as .npy",
+        )  # fmt: skip
+    options = _text_options(settings)
+    with problems.collect():
+        return read_table(path, options, numbers=_wanted_numbers(settings), texts=_wanted_words(settings), shown=settings.table)
+    for term in settings.uncertainty:
+        for given in term.files():
+            with problems.collect(), reading(folder / os.path.expanduser(given), given):
+                open(folder / os.path.expanduser(given), "rb").close()
+    problems.stop_if_any()
+    raise AssertionError("unreachable")
 
 
 def _text_options(settings: SampleSettings) -> TextOptions:
@@ -98,11 +115,11 @@ def _wanted_numbers(settings: SampleSettings) -> list:
 
 
 def _wanted_words(settings: SampleSettings) -> list:
-    rules = [ref for ref in settings.keep.rules if ref not in _NUMBERS]
-    refs = [*_WORDS, *rules, *(r for t in settings.uncertainty for r in t.columns().get("texts", []))]
+    rules = [ref for ref in settings.keep.rules if ref not in _NUMBERS or _mapped(settings.columns, ref) is ref]
+    refs = [*rules, *(ref for term in settings.uncertainty for ref in term.columns().get("texts", []))]
     refs += [settings.keep.one_per] if settings.keep.one_per is not None else []
-    mapped = [_mapped(settings.columns, ref) for ref in refs]
-    return [m for m, ref in zip(mapped, refs, strict=True) if m is not ref or ref not in Columns.model_fields]
+    roles = [getattr(settings.columns, role) for role in _WORDS]
+    return [ref for ref in roles if ref is not None] + [_mapped(settings.columns, ref) for ref in refs]
 
 
 class _Observed:
@@ -182,10 +199,12 @@ class _Observed:
             )
         if ref in self.values:
             return CutColumn(ref, None, lambda: self.values[ref], is_redshift=ref in _REDSHIFTS)
-        words = self.table.texts(mapped)
-        label = self.table.columns.label(self.table.columns.position(mapped))
+        position = self.table.columns.position(mapped)
         is_redshift = mapped in (self.columns.redshift, self.columns.redshift_helio)
-        return CutColumn(ref, words, self._converter(words, label), is_redshift=is_redshift)
+        if position in self.table.floats:
+            return CutColumn(ref, None, lambda: self.numbers(mapped), is_redshift=is_redshift)
+        words = self.table.texts(mapped)
+        return CutColumn(ref, words, self._converter(words, self.table.columns.label(position)), is_redshift=is_redshift)
 
     def _converter(self, words, label) -> Callable[[], np.ndarray]:
         def convert():

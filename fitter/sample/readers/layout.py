@@ -239,7 +239,7 @@ def _header(scan: _Scan, options: TextOptions, delimiter: str, wanted: list[str]
         return _commented_header(scan, options, delimiter, wanted), 0
     first = split_fields(scan.head[0], delimiter)
     below = [split_fields(row, delimiter) for row in scan.head[1:]]
-    if wanted and set(wanted) <= set(first):
+    if set(wanted) & set(first):
         return first, 1
     if not any(is_number(f, decimal_comma=True) for f in first):
         numeric = [f for row in below for f in row if is_number(f, decimal_comma=True)]
@@ -252,9 +252,9 @@ def _commented_header(scan: _Scan, options: TextOptions, delimiter: str, wanted:
     """A comment above the data that has a word for each column: the one with the wanted names, else the last."""
     n_columns = len(split_fields(scan.head[0], delimiter, options.row_tag))
     splits = [f for line in scan.comments for f in (split_fields(line, delimiter), line.replace(",", " ").split())]
-    named = [f for f in splits if wanted and len(f) >= n_columns and set(wanted) <= set(f)]
+    named = [f for f in splits if len(f) >= n_columns and set(wanted) & set(f)]
     if named:
-        return next((f for f in reversed(named) if len(f) == n_columns), named[-1])
+        return max(named, key=lambda f: (len(set(wanted) & set(f)), len(f) == n_columns))
     last = scan.comments[-1] if scan.comments else ""
     for fields in (split_fields(last, delimiter), last.replace(",", " ").split()):
         if len(fields) == n_columns and not any(is_number(f) for f in fields):
@@ -276,7 +276,7 @@ def _names_for(names: list[str], n_columns: int, delimiter: str, scan: _Scan, wa
     if not wanted:
         return None, None  # every column is asked for by its position
     row = scan.header_line + 1 if scan.header is not None else scan.data[0] + 1
-    if len(names) > n_columns and set(wanted) <= set(names[:n_columns]):
+    if len(names) > n_columns and set(wanted) & set(names) <= set(names[:n_columns]):
         spare = ", ".join(names[n_columns:])
         return names[:n_columns], (
             f"{shown}: the header has {len(names)} names, but the rows have {n_columns} columns; names are taken from the left, and "

@@ -6,6 +6,7 @@ table's rows into a `Term`. A new one is listed in ``uncertainty/__init__.py``; 
 
 from __future__ import annotations
 
+import os
 from collections.abc import Callable, Mapping
 from dataclasses import dataclass, field
 from pathlib import Path
@@ -77,6 +78,10 @@ class Rows:
     sources: dict[str, str] = field(default_factory=dict)
     notes: list[str] = field(default_factory=list)
 
+    def path(self, given: str) -> Path:
+        """Return where a file of the config lies."""
+        return self.folder / os.path.expanduser(given)
+
     def noise(self, variance=None, rows=None, **parts) -> Noise:
         """Return the share of a term, for the rows that are kept; ``variance`` is given for all rows."""
         kept = np.zeros(int(self.keep.sum())) if variance is None else np.asarray(variance, dtype=float)[self.keep]
@@ -96,6 +101,10 @@ class TermSettings(BaseModel):
     def columns(self) -> dict[str, list]:
         """References to columns of the table that the term needs, under "numbers" and "texts"."""
         return {}
+
+    def files(self) -> list[str]:
+        """Paths, as given, of the files that the term reads."""
+        return []
 
     def build(self, rows: Rows) -> Term | None:
         """Return the term for the rows that are kept; None where it is a free parameter and adds nothing fixed.

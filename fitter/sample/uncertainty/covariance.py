@@ -23,6 +23,9 @@ class MatrixSettings(TermSettings):
         path = str(getattr(self, self.kind))
         return Path(path.removesuffix(".gz")).stem
 
+    def files(self) -> list[str]:
+        return [getattr(self, self.kind)]
+
     def read(self, rows: Rows):
         """Return the matrix, symmetric, and the row of the file that each of its rows stands in.
 
@@ -32,7 +35,7 @@ class MatrixSettings(TermSettings):
         from fitter.sample.tables import sha256_of
 
         given = getattr(self, self.kind)
-        path = rows.folder / given
+        path = rows.path(given)
         kept = int(rows.keep.sum())
         matrix = read_matrix(path, sizes=(rows.n, kept), what=self.kind, array=self.array, table=rows.table, shown=given)
         rows.sources[given] = sha256_of(path)

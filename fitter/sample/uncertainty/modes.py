@@ -12,7 +12,9 @@ from fitter.errors import InputError
 from fitter.sample.uncertainty.base import ColumnRef, PathText, Rows, TermSettings
 from fitter.sample.uncertainty.term import Term
 
-__all__ = ["Modes"]
+__all__ = ["LARGEST_SHIFT", "Modes"]
+
+LARGEST_SHIFT = 5.0  # mag
 
 
 class Modes(TermSettings):
@@ -28,6 +30,9 @@ class Modes(TermSettings):
     def columns(self):
         return {"numbers": list(self.modes)} if isinstance(self.modes, list) else {}
 
+    def files(self) -> list[str]:
+        return [] if isinstance(self.modes, list) else [self.modes]
+
     def default_label(self) -> str:
         return self.kind if isinstance(self.modes, list) else Path(self.modes.removesuffix(".gz")).stem
 
@@ -38,8 +43,8 @@ class Modes(TermSettings):
         else:
             from fitter.sample.tables import read_numbers, sha256_of
 
-            names, shifts, lines = read_numbers(rows.folder / self.modes, use=self.use, shown=self.modes)
-            rows.sources[self.modes] = sha256_of(rows.folder / self.modes)
+            names, shifts, lines = read_numbers(rows.path(self.modes), use=self.use, shown=self.modes)
+            rows.sources[self.modes] = sha256_of(rows.path(self.modes))
             place = self.modes
         kept = int(rows.keep.sum())
         if len(shifts) not in (rows.n, kept):
@@ -60,5 +65,17 @@ class Modes(TermSettings):
                 column=names[column],
                 value=float(shifts[row, column]),
                 cure="Write 0 where a systematic does not touch a supernova",
+            )
+        large = np.abs(shifts).max(axis=0) > LARGEST_SHIFT
+        if large.any():
+            column = int(np.argmax(large))
+            row = int(np.argmax(np.abs(shifts[:, column])))
+            raise InputError(
+                f"a one-sigma shift above {LARGEST_SHIFT:g} mag is no systematic",
+                file=place,
+                row=int(lines[row]),
+                column=names[column],
+                value=float(shifts[row, column]),
+                cure="Where the column is no shift, list those that are: `use: [COLUMN, …]`",
             )
         return self.term(rows.noise(modes=shifts, mode_names=tuple(str(n) for n in names), source=place, rows=lines))

@@ -105,15 +105,13 @@ def _counted_twice(sample: Sample) -> list[str]:
 
 
 def _included_already(sample: Sample) -> list[str]:
-    sigma = [t.noise.variance for t in sample.terms if t.kind == "sigma"]
-    total = sum(sigma) if sigma else None
-    if total is None:
-        held = [t for t in sample.terms if t.kind in ("covariance", "precision") and t.noise.n]
-        total = sum(t.variance for t in held) if held else None
-    if total is None:
+    added = [t for t in sample.terms if t.kind in ("peculiar_velocity", "lensing")]
+    released = [t for t in sample.terms if t.kind == "sigma"] or [t for t in sample.terms if t.kind in ("covariance", "precision")]
+    if not added or not released:
         return []
+    total = sum(t.variance for t in released)
     found = []
-    for term in (t for t in sample.terms if t.kind in ("peculiar_velocity", "lensing")):
+    for term in added:
         if np.mean(total >= term.noise.variance) > 0.99:
             share = np.max(term.noise.variance / np.maximum(total, 1e-300))
             found.append(

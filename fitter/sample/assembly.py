@@ -61,7 +61,7 @@ def assemble(settings: SampleSettings, folder) -> Sample:
     folder = Path(folder)
     path = folder / os.path.expanduser(settings.table)
     problems = Problems()
-    table = _table(settings, folder, path, problems)
+    table = _table(settings, folder, path)
     observed = _Observed(settings, table, problems)
     kept, cuts = observed.cut()
     rows = Rows(
@@ -77,10 +77,10 @@ def assemble(settings: SampleSettings, folder) -> Sample:
         notes=[note for note in (table.note, *cuts.notes) if note],
     )
     terms = _build(settings, rows, problems) if kept.any() else []
-    return _finish(observed, rows, terms, cuts.removed, problems)
+    return _put_together(observed, rows, terms, cuts.removed, problems)
 
 
-def _table(settings: SampleSettings, folder: Path, path: Path, problems: Problems) -> Table:
+def _table(settings: SampleSettings, folder: Path, path: Path) -> Table:
     """Read the table; where that fails, tell of the other files that are not there as well."""
     if settings.layout == "bordered":
         raise InputError(
@@ -88,14 +88,19 @@ def _table(settings: SampleSettings, folder: Path, path: Path, problems: Problem
             cure="Save z and the moduli as a CSV table, and the inverse covariance as .npy",
         )  # fmt: skip
     options = _text_options(settings)
-    with problems.collect():
+    try:
         return read_table(path, options, numbers=_wanted_numbers(settings), texts=_wanted_words(settings), shown=settings.table)
-    for term in settings.uncertainty:
-        for given in term.files():
-            with problems.collect(), reading(folder / os.path.expanduser(given), given):
-                open(folder / os.path.expanduser(given), "rb").close()
-    problems.stop_if_any()
-    raise AssertionError("unreachable")
+    except InputError as problem:
+        raise _with_missing_files(problem, settings, folder) from None
+
+
+def _with_missing_files(problem: InputError, settings: SampleSettings, folder: Path) -> InputError:
+    problems = Problems([problem])
+    for given in (file for term in settings.uncertainty for file in term.files()):
+        path = folder / os.path.expanduser(given)
+        with problems.collect(), reading(path, given):
+            open(path, "rb").close()
+    return InputErrors(problems.found) if len(problems.found) > 1 else problem
 
 
 def _text_options(settings: SampleSettings) -> TextOptions:
@@ -234,7 +239,7 @@ def _build(settings: SampleSettings, rows: Rows, problems: Problems) -> list[Ter
     return terms
 
 
-def _finish(observed: _Observed, rows: Rows, terms: list[Term], removed: dict, problems: Problems) -> Sample:
+def _put_together(observed: _Observed, rows: Rows, terms: list[Term], removed: dict, problems: Problems) -> Sample:
     settings, kept = observed.settings, rows.keep
     if settings.keep.one_per is not None and kept.any():
         kept, terms = _one_per(observed, kept, terms, removed, problems)

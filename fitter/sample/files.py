@@ -51,7 +51,7 @@ def open_binary(path: Path) -> io.BufferedIOBase:
     """Open a file, unpacking it on the way where it is gzipped, whatever its name says."""
     stream = open(path, "rb", buffering=_BUFFER)
     packed = stream.peek(2)[:2] == b"\x1f\x8b"
-    return io.BufferedReader(gzip.GzipFile(fileobj=stream), _BUFFER) if packed else stream
+    return gzip.GzipFile(fileobj=stream) if packed else stream
 
 
 def sha256_of(path: Path) -> str:

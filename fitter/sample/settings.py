@@ -137,11 +137,6 @@ class SampleSettings(_Section):
             raise ValueError("distance_scale: calibrated needs calibrators: map `calibrator_modulus` to the column of their moduli")
         if self.distance_scale == "calibrated" and columns.magnitude is None:
             raise ValueError("distance_scale: calibrated needs magnitudes: map `magnitude` instead of `distance_modulus`")
-        if self.distance_scale == "absolute" and columns.magnitude is not None:
-            raise ValueError(
-                "distance_scale: absolute needs distance moduli; with magnitudes the scale is `relative`, or `calibrated` where some rows "
-                "have a known modulus"
-            )
         return self
 
     @model_validator(mode="after")

@@ -61,7 +61,7 @@ def check_redshift(role: str, values, place: Place) -> list[InputError]:
     bad = np.isfinite(values) & (values <= 0)
     if bad.any():
         index = int(np.argmax(bad))
-        cure = "Cut such rows with `keep: {redshift: [0.01, null]}`, or check the column"
+        cure = "Cut such rows with `keep: {redshift: [0.01, null]}` (a calibrator's redshift is not used: write any above 0 there)"
         problems.append(place.error(f"{role} must be above 0{_more(bad)}", role, index, float(values[index]), cure))
     return problems
 

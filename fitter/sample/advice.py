@@ -107,8 +107,8 @@ def _counted_twice(sample: Sample) -> list[str]:
 def _included_already(sample: Sample) -> list[str]:
     added = [t for t in sample.terms if t.kind in ("peculiar_velocity", "lensing")]
     released = [t for t in sample.terms if t.kind == "sigma"] or [t for t in sample.terms if t.kind in ("covariance", "precision")]
-    if not added or not released:
-        return []
+    if not added or not released or sample.intrinsic_prior is not None or any(t.kind == "intrinsic" for t in sample.terms):
+        return []  # errors to which an intrinsic scatter is still to be added are those of the measurement alone
     total = sum(t.variance for t in released)
     found = []
     for term in added:

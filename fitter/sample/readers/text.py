@@ -105,6 +105,8 @@ def _parse(path: Path, layout: Layout, options: TextOptions, as_numbers, needed)
         return _split(path, layout, options, needed)
     names = ["tag"] * layout.tagged + [f"column {p}" for p in range(layout.n_columns)]  # words: pandas takes whole numbers for positions
     chosen = {p: f"column {p}" for p in needed}
+    # Correctly rounded numbers are the default of newer releases of pandas, which warn when they are asked for.
+    exact = {"float_precision": "round_trip"} if tuple(map(int, pd.__version__.split(".")[:2])) < (3, 1) else {}
     missing = sorted({form for token in MISSING for form in (token, token.upper(), token.capitalize())} | {"NaN"})
     with io.TextIOWrapper(open_binary(path), encoding=layout.encoding) as source:
         frame = pd.read_csv(
@@ -118,7 +120,7 @@ def _parse(path: Path, layout: Layout, options: TextOptions, as_numbers, needed)
             keep_default_na=False,
             na_values={chosen[p]: missing for p in as_numbers},
             skipinitialspace=layout.delimiter != WHITESPACE,
-            float_precision="round_trip",
+            **exact,
             index_col=False,
             engine="c",
         )

@@ -66,7 +66,8 @@ def assemble(settings: SampleSettings, folder) -> Sample:
     kept, cuts = observed.cut()
     rows = Rows(
         n=table.n,
-        redshift=observed.values["redshift"],
+        # A calibrator's distance does not come from its redshift: velocities and lensing leave it alone.
+        redshift=np.where(observed.calibrated & observed.is_calibrator, np.nan, observed.values["redshift"]),
         numbers=observed.numbers,
         texts=observed.texts,
         lines=table.lines,

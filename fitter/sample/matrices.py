@@ -82,32 +82,36 @@ def make_symmetric(matrix, what: str, shown: str | None = None) -> None:
                 value=float(matrix[row, column]), cure="Correct it, or cut that supernova from table and matrix",
             )  # fmt: skip
     scale = np.sqrt(np.abs(np.diagonal(matrix)))
-    worst = (0.0, 0, 0)
+    worst = (0.0, 0, 0, 0.0, 0.0)
     for i in range(0, n, _BLOCK):
         for j in range(0, i + 1, _BLOCK):
             worst = max(worst, _symmetrise_block(matrix, slice(i, i + _BLOCK), slice(j, j + _BLOCK), scale))
-    if worst[0] > ASYMMETRY:
+    by, row, column, value, mirrored = worst
+    if by > ASYMMETRY:
         raise InputError(
-            f"{what} is not symmetric: element ({worst[1] + 1}, {worst[2] + 1}) and its mirror image differ by {worst[0]:.3g} of the "
-            "errors of the two supernovae",
-            file=shown, row=worst[1] + 1, column=worst[2] + 1, cure="Check how the file was written; the two must agree to 1e-5",
+            f"{what} is not symmetric: row {row + 1}, column {column + 1} holds {value:.6g}, row {column + 1}, column {row + 1} {mirrored:.6g} "
+            f"(a difference of {by:.3g} times the errors of the two supernovae)",
+            file=shown, row=row + 1, column=column + 1, cure="Check how the file was written; the two must agree to 1e-5",
         )  # fmt: skip
 
 
-def _symmetrise_block(matrix, rows: slice, columns: slice, scale) -> tuple[float, int, int]:
+def _symmetrise_block(matrix, rows: slice, columns: slice, scale) -> tuple[float, int, int, float, float]:
+    """Average a block with its mirror image; return the largest difference, beside the errors, its place and the two numbers."""
     block, mirror = matrix[rows, columns], matrix[columns, rows].T
     unequal = block != mirror
     if not unequal.any():
-        return 0.0, 0, 0
+        return 0.0, 0, 0, 0.0, 0.0
     beside = scale[rows, None] * scale[None, columns]
-    difference = np.abs(block - mirror)
     beside = np.where(beside > 0, beside, np.maximum(np.abs(block), np.abs(mirror)))
-    relative = np.divide(difference, beside, out=np.zeros_like(difference), where=unequal)
+    relative = np.divide(np.abs(block - mirror), beside, out=np.zeros_like(beside), where=unequal)
+    if rows == columns:
+        relative = np.tril(relative)
     i, j = np.unravel_index(np.argmax(relative), relative.shape)
+    worst = float(relative[i, j]), int(i) + rows.start, int(j) + columns.start, float(block[i, j]), float(mirror[i, j])
     mean = 0.5 * (block + mirror)
     matrix[rows, columns] = mean
     matrix[columns, rows] = mean.T
-    return float(relative[i, j]), int(i) + rows.start, int(j) + columns.start
+    return worst
 
 
 def compact(matrix, keep):
@@ -192,7 +196,7 @@ def _choose(headers: dict, wanted: str | None, sizes, shown: str) -> str:
             raise InputError("the .npz has no such array", file=shown, value=wanted, cure=f"It holds: {listed}")
         return wanted
     fitting = {n * n for n in sizes} | {n * (n + 1) // 2 for n in sizes}
-    large = [name for name, shape in headers.items() if math.prod(shape) > 1] or list(headers)
+    large = [n for n, shape in headers.items() if math.prod(shape) > 1] or [n for n, shape in headers.items() if shape] or list(headers)
     right = [name for name in large if math.prod(headers[name]) in fitting]
     candidates = right or large
     if len(candidates) != 1:

@@ -133,7 +133,7 @@ def _scan(path: Path, encoding: str, options: TextOptions, shown: str) -> _Scan:
             number = scan.n_lines
             scan.n_lines += 1
             characters += len(line)
-            if len(scan.head) < _LOOK_AT or number % 4096 == 0:
+            if len(scan.head) < _LOOK_AT or number % 4096 == 0 or len(line) > 100_000:
                 _refuse_absurd(line, number, characters, shown)
             stripped = line.strip()
             if not stripped:

@@ -48,7 +48,7 @@ class Rows:
     n : int
         Number of rows, N.
     redshift : (N,) array
-        Cosmological redshift; may hold NaN in rows that are cut later.
+        Cosmological redshift; NaN for calibrators, and maybe in rows that are cut later.
     numbers : callable
         Column reference → (N,) array of its numbers.
     texts : callable

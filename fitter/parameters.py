@@ -2,9 +2,12 @@
 
 from __future__ import annotations
 
-from dataclasses import dataclass, replace
+from collections.abc import Iterable, Mapping
+from dataclasses import asdict, dataclass, replace
 
-__all__ = ["PARAMETERS", "ZERO_POINT", "Parameter", "parameter"]
+from fitter.errors import InputError
+
+__all__ = ["PARAMETERS", "ZERO_POINT", "Parameter", "declare", "declare_again", "declared_elsewhere", "parameter"]
 
 
 @dataclass(frozen=True)
@@ -82,6 +85,38 @@ PARAMETERS: dict[str, Parameter] = {p.name: p for p in _DECLARED}
 ZERO_POINT = "zero_point:"
 
 
+_OWN: dict[str, Parameter] = {}
+
+
+def declare(parameters: Iterable[Parameter]) -> None:
+    """Make known the parameters of a model that came in a file of its own, so that tables and figures find their symbols.
+
+    A later declaration of the same name replaces an earlier one, but nothing replaces those of `PARAMETERS`.
+
+    Raises
+    ------
+    InputError
+        A name of `PARAMETERS` is declared with another symbol or unit.
+    """
+    for given in parameters:
+        ours = PARAMETERS.get(given.name)
+        if ours is None:
+            _OWN[given.name] = given
+        elif (ours.latex, ours.unit) != (given.latex, given.unit):
+            cure = f'Use PARAMETERS["{given.name}"].with_prior(…), or choose another name'
+            raise InputError(f"{given.name} is declared already: {ours.meaning}", value=given.latex, cure=cure)
+
+
+def declared_elsewhere(names: Iterable[str]) -> dict[str, dict]:
+    """Return the declarations of those names that are not in `PARAMETERS`, as plain dicts; `declare_again` takes them back."""
+    return {name: asdict(_OWN[name]) for name in names if name in _OWN}
+
+
+def declare_again(stored: Mapping[str, Mapping] | None) -> None:
+    """Declare what `declared_elsewhere` once returned: a run is read without the file of its model."""
+    declare(Parameter(**given) for given in (stored or {}).values())
+
+
 def parameter(name: str) -> Parameter:
     """The declaration of a parameter; zero points are made for each group by name.
 
@@ -94,4 +129,4 @@ def parameter(name: str) -> Parameter:
         group = name.removeprefix(ZERO_POINT)
         latex = r"\Delta_{{\mathrm{{{}}}}}".format(group.replace("_", r"\_"))
         return Parameter(name, latex, f"Δ({group})", "mag", f"zero-point shift of {group}", None, r"\mathrm{mag}")
-    return PARAMETERS[name]
+    return PARAMETERS[name] if name in PARAMETERS else _OWN[name]

@@ -1,14 +1,15 @@
 """Families of models behind one small interface, and the distances they give."""
 
-from fitter.cosmology.base import FluidModel, Model, radiation_density
+from fitter.cosmology.base import DistanceModel, FluidModel, Model, Within, radiation_density
+from fitter.cosmology.cosmographic import Cosmographic
 from fitter.cosmology.lcdm import CurvedLCDM, FlatLCDM
 from fitter.cosmology.w0wa import CurvedW0WA, FlatW0WA
 from fitter.cosmology.wcdm import CurvedWCDM, FlatWCDM
 from fitter.errors import InputError
 
-__all__ = ["MODELS", "FluidModel", "Model", "get_model", "radiation_density"]
+__all__ = ["MODELS", "DistanceModel", "FluidModel", "Model", "Within", "get_model", "radiation_density"]
 
-MODELS: dict[str, type[Model]] = {m.name: m for m in (FlatLCDM, CurvedLCDM, FlatWCDM, CurvedWCDM, FlatW0WA, CurvedW0WA)}
+MODELS: dict[str, type[Model]] = {m.name: m for m in (FlatLCDM, CurvedLCDM, FlatWCDM, CurvedWCDM, FlatW0WA, CurvedW0WA, Cosmographic)}
 
 
 def get_model(name: str) -> Model:

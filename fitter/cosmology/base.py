@@ -3,14 +3,17 @@
 from __future__ import annotations
 
 from abc import ABC, abstractmethod
+from collections.abc import Callable, Mapping
+from dataclasses import dataclass
 from typing import ClassVar
 
 import numpy as np
 
-from fitter.constants import N_EFF, photon_density_h2
+from fitter.constants import MAG_PER_LN, N_EFF, photon_density_h2
+from fitter.errors import InputError
 from fitter.parameters import Parameter
 
-__all__ = ["FluidModel", "Model", "radiation_density"]
+__all__ = ["DistanceModel", "FluidModel", "Model", "Within", "flatness", "radiation_density"]
 
 
 def radiation_density(h0):
@@ -26,16 +29,40 @@ def radiation_density(h0):
     return photon_density_h2() * (1 + per_neutrino * N_EFF) / (np.asarray(h0, float) / 100) ** 2
 
 
+@dataclass(frozen=True)
+class Within:
+    """A simpler model that a family becomes at certain values of its parameters.
+
+    Parameters
+    ----------
+    model : str
+        Name of the simpler model.
+    at : mapping
+        Parameter of the family → the number it is held at; or the name the simpler model has for it; or a function of
+        the simpler model's parameters (and ``omega_r``), a mapping of name to array. Those not named are shared as they are.
+    """
+
+    model: str
+    at: Mapping[str, float | str | Callable]
+
+
+def flatness(values):
+    """Dark-energy density of flat space, given the simpler model's values."""
+    return 1.0 - values["omega_m"] - values["omega_r"]
+
+
 class Model(ABC):
     """A homogeneous cosmology, vectorised over W parameter points.
 
     A new family says its `name`, its `parameters` and `e_squared`; a curved one also `omega_k`.
-    A family that has no E(z), only a distance, overrides `log_distance` (see `cosmographic`).
+    A family that has no E(z), only a distance, is a `DistanceModel`.
     """
 
     name: ClassVar[str]
     parameters: ClassVar[tuple[Parameter, ...]]
     has_expansion_rate: ClassVar[bool] = True
+    contains: ClassVar[tuple[Within, ...]] = ()
+    """Simpler models nested in this one, for likelihood-ratio tests and density ratios; theirs need not be repeated."""
 
     @abstractmethod
     def e_squared(self, z, theta, omega_r=0.0):
@@ -64,6 +91,44 @@ class Model(ABC):
     def is_flat(self) -> bool:
         """Whether space is flat for every value of the parameters."""
         return type(self).omega_k is Model.omega_k
+
+    def advice(self, redshift_max: float) -> tuple[str, ...]:
+        """What a practitioner would warn of when the data reach that redshift."""
+        return ()
+
+
+class DistanceModel(Model):
+    """A family known by its distance alone.
+
+    Radiation and curvature are whatever the distance holds: no density is added to it.
+    """
+
+    has_expansion_rate = False
+
+    @abstractmethod
+    def distance_over_z(self, z, theta):
+        """Transverse comoving distance D_M in units of c z / H0.
+
+        Parameters
+        ----------
+        z : (M,) array
+            Redshift, 0 included, where the ratio is 1.
+        theta : (W, p) array
+
+        Returns
+        -------
+        (W, M) array
+            Not positive, or NaN, where the model has no distance: outside the prior.
+        """
+
+    def log_distance(self, z, theta):
+        """5 log10[D_M H0 / (c z)], mag, (W, M); NaN outside the model's range."""
+        with np.errstate(invalid="ignore", divide="ignore", over="ignore"):
+            ratio = np.asarray(self.distance_over_z(z, theta), float)
+            return MAG_PER_LN * np.log(np.where(ratio > 0, ratio, np.nan))
+
+    def e_squared(self, z, theta, omega_r=0.0):
+        raise InputError(f"{self.name} gives distances, not an expansion rate")
 
 
 class FluidModel(Model):

@@ -9,6 +9,7 @@ import numpy as np
 
 from fitter.constants import C_M_S, GYR_S, critical_density, hubble_si
 from fitter.cosmology.base import FluidModel
+from fitter.cosmology.lcdm import FlatLCDM
 
 __all__ = ["age_gyr", "deceleration", "derived", "derived_names", "vacuum"]
 
@@ -19,8 +20,9 @@ _CHUNK = 20_000
 def derived_names(model, has_h0: bool) -> tuple[str, ...]:
     """Names of what `derived` returns, in reporting order."""
     if not isinstance(model, FluidModel):
-        return tuple(n for n in ("q0",) if model.has_expansion_rate)
-    is_lambda = "lcdm" in model.name
+        own = [p.name for p in model.parameters]
+        return ("q0",) if model.has_expansion_rate and "q0" not in own else ()
+    is_lambda = isinstance(model, FlatLCDM)
     names = [] if model.is_flat else ["omega_k"]
     if model.is_flat:
         names.append("omega_lambda" if is_lambda else "omega_de")
@@ -105,7 +107,7 @@ def vacuum(omega_lambda, h0):
 
 def _z_acceleration(model, theta, omega_r):
     """Redshift since which the expansion has been accelerating; NaN where it is not accelerating today."""
-    if "lcdm" in model.name and not np.any(omega_r):
+    if isinstance(model, FlatLCDM) and not np.any(omega_r):
         omega_m, omega_de, _ = model.densities(theta)
         with np.errstate(invalid="ignore", divide="ignore"):
             z = np.cbrt(2 * omega_de / omega_m) - 1.0
@@ -120,7 +122,7 @@ def _z_equality(model, theta, omega_r):
         omega_m, omega_de, _ = (x[:, None] for x in model.densities(theta[rows], omega_r[rows]))
         return omega_m * (1.0 + z) ** 3 - omega_de * model.dark_energy_growth(z, theta[rows])
 
-    if "lcdm" in model.name:
+    if isinstance(model, FlatLCDM):
         omega_m, omega_de, _ = model.densities(theta, omega_r)
         with np.errstate(invalid="ignore", divide="ignore"):
             z = np.cbrt(omega_de / omega_m) - 1.0

@@ -2,7 +2,7 @@
 
 import numpy as np
 
-from fitter.cosmology.base import FluidModel
+from fitter.cosmology.base import FluidModel, Within, flatness
 from fitter.parameters import PARAMETERS
 
 __all__ = ["CurvedLCDM", "FlatLCDM"]
@@ -28,3 +28,4 @@ class CurvedLCDM(FlatLCDM):
     name = "curved_lcdm"
     parameters = (PARAMETERS["omega_m"].with_prior(uniform=[0, 1.5]), PARAMETERS["omega_lambda"])
     curved = True
+    contains = (Within("flat_lcdm", {"omega_lambda": flatness}),)

@@ -2,7 +2,7 @@
 
 import numpy as np
 
-from fitter.cosmology.base import FluidModel
+from fitter.cosmology.base import FluidModel, Within, flatness
 from fitter.parameters import PARAMETERS
 
 __all__ = ["CurvedW0WA", "FlatW0WA"]
@@ -22,6 +22,7 @@ class FlatW0WA(FluidModel):
     name = "flat_w0wa"
     parameters = (PARAMETERS["omega_m"], PARAMETERS["w0"], PARAMETERS["wa"])
     curved = False
+    contains = (Within("flat_wcdm", {"w0": "w", "wa": 0.0}),)
 
     def dark_energy_growth(self, z, theta):
         z = np.asarray(z, float)
@@ -44,3 +45,4 @@ class CurvedW0WA(FlatW0WA):
         PARAMETERS["wa"],
     )
     curved = True
+    contains = (Within("flat_w0wa", {"omega_de": flatness}), Within("curved_wcdm", {"w0": "w", "wa": 0.0}))

@@ -2,7 +2,7 @@
 
 import numpy as np
 
-from fitter.cosmology.base import FluidModel
+from fitter.cosmology.base import FluidModel, Within, flatness
 from fitter.parameters import PARAMETERS
 
 __all__ = ["CurvedWCDM", "FlatWCDM"]
@@ -14,6 +14,7 @@ class FlatWCDM(FluidModel):
     name = "flat_wcdm"
     parameters = (PARAMETERS["omega_m"], PARAMETERS["w"])
     curved = False
+    contains = (Within("flat_lcdm", {"w": -1.0}),)
 
     def dark_energy_growth(self, z, theta):
         return np.exp(3.0 * (1.0 + theta[:, -1:]) * np.log1p(z))
@@ -28,3 +29,4 @@ class CurvedWCDM(FlatWCDM):
     name = "curved_wcdm"
     parameters = (PARAMETERS["omega_m"].with_prior(uniform=[0, 1.5]), PARAMETERS["omega_de"], PARAMETERS["w"])
     curved = True
+    contains = (Within("flat_wcdm", {"omega_de": flatness}), Within("curved_lcdm", {"omega_de": "omega_lambda", "w": -1.0}))

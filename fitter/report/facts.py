@@ -9,7 +9,8 @@ from pathlib import Path
 
 import numpy as np
 
-from fitter.parameters import PARAMETERS, Parameter
+from fitter.parameters import Parameter
+from fitter.parameters import parameter as declaration
 
 __all__ = ["axis_label", "edge_density", "json_safe", "parameter", "unit_text"]
 
@@ -18,9 +19,10 @@ _EDGE_BINS = 25
 
 def parameter(name: str) -> Parameter:
     """Return the declaration of a parameter; an undeclared name is its own symbol."""
-    if name in PARAMETERS:
-        return PARAMETERS[name]
-    safe = name.replace("_", r"\_")
+    try:
+        return declaration(name)
+    except KeyError:
+        safe = name.replace("_", r"\_")
     return Parameter(name, rf"\mathrm{{{safe}}}", name, "", name)
 
 

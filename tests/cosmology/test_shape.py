@@ -9,7 +9,7 @@ from fitter.cosmology.distances import curved_ratio, log_distance
 from fitter.cosmology.grid import Grid
 from fitter.errors import InputError
 
-TYPICAL = {"omega_m": 0.3, "omega_lambda": 0.75, "omega_de": 0.65, "w": -0.9, "w0": -0.8, "wa": -0.7}
+TYPICAL = {"omega_m": 0.3, "omega_lambda": 0.75, "omega_de": 0.65, "w": -0.9, "w0": -0.8, "wa": -0.7, "q0": -0.55, "j0": 1.0}
 
 
 def typical(model):

@@ -8,23 +8,26 @@ from typing import Any
 
 from pydantic import ValidationError
 
+from fitter.config.model_choice import chosen_model
 from fitter.config.parameters import parameter_problems
 from fitter.config.problems import problems_of
 from fitter.config.settings import Config, SampleSettings
 from fitter.config.yaml_file import Document, read_yaml
-from fitter.cosmology import MODELS
+from fitter.cosmology import Model
 from fitter.errors import InputError, InputErrors
 
 __all__ = ["config_from_mapping", "load_config", "raise_all", "validate"]
 
 
-def load_config(path: str | Path) -> Config:
+def load_config(path: str | Path, *, allow_code: bool = False) -> Config:
     """Read and validate a config file.
 
     Parameters
     ----------
     path : path-like
         A YAML file; the paths of inputs in it are relative to its folder.
+    allow_code : bool
+        Whether the file of a model of one's own may be run.
 
     Returns
     -------
@@ -38,12 +41,12 @@ def load_config(path: str | Path) -> Config:
         Several, in the order of the file.
     """
     document = read_yaml(path)
-    config, _, problems = validate(document, Path(path).parent)
+    config, _, problems = validate(document, Path(path).parent, allow_code=allow_code)
     raise_all(problems)
     return config
 
 
-def config_from_mapping(data: Mapping[str, Any], *, folder: str | Path = ".", sample=None) -> Config:
+def config_from_mapping(data: Mapping[str, Any], *, folder: str | Path = ".", sample=None, allow_code: bool = False) -> Config:
     """Validate settings given in Python.
 
     Parameters
@@ -54,12 +57,14 @@ def config_from_mapping(data: Mapping[str, Any], *, folder: str | Path = ".", sa
         What the paths of inputs are relative to.
     sample : Sample, optional
         The data, where there is no ``sample`` section to read them from.
+    allow_code : bool
+        Whether the file of a model of one's own may be run.
 
     Returns
     -------
     Config
     """
-    config, _, problems = validate(Document(dict(data)), Path(folder), sample)
+    config, _, problems = validate(Document(dict(data)), Path(folder), sample, allow_code=allow_code)
     raise_all(problems)
     return config
 
@@ -72,7 +77,9 @@ def raise_all(problems: list[InputError]) -> None:
         raise InputErrors(problems)
 
 
-def validate(document: Document, folder: Path, arrays=None) -> tuple[Config | None, SampleSettings | None, list[InputError]]:
+def validate(
+    document: Document, folder: Path, arrays=None, *, allow_code: bool = False
+) -> tuple[Config | None, SampleSettings | None, list[InputError]]:
     """Validate a document.
 
     Parameters
@@ -82,6 +89,8 @@ def validate(document: Document, folder: Path, arrays=None) -> tuple[Config | No
         What the paths of inputs are relative to.
     arrays : Sample, optional
         Data that stand in for the ``sample`` section.
+    allow_code : bool
+        Whether the file of a model of one's own may be run.
 
     Returns
     -------
@@ -93,9 +102,10 @@ def validate(document: Document, folder: Path, arrays=None) -> tuple[Config | No
         In the order of the file.
     """
     config, problems = None, []
+    model, refused = chosen_model(document, folder, allow_code)
     try:
         config = Config.model_validate(document.data)
-        config._document, config._folder = document, folder
+        config._document, config._folder, config._cosmology, config._allow_code = document, folder, model, allow_code
     except ValidationError as error:
         problems = problems_of(error, Config, document)
     except InputError as error:
@@ -104,7 +114,7 @@ def validate(document: Document, folder: Path, arrays=None) -> tuple[Config | No
         cure = "It says what was observed: `sample: {table: …, columns: {…}, uncertainty: […]}`"
         problems.insert(0, document.error("the key `sample` is missing", cure=cure))
     sample = config.sample if config is not None else _sample_settings(document)
-    problems += _parameter_problems(document, sample if arrays is None else arrays)
+    problems += refused + _parameter_problems(document, model, sample if arrays is None else arrays)
     problems.sort(key=lambda p: p.row or 0)
     return (None if problems else config), sample, problems
 
@@ -116,9 +126,10 @@ def _sample_settings(document: Document) -> SampleSettings | None:
         return None
 
 
-def _parameter_problems(document: Document, sample: SampleSettings | None) -> list[InputError]:
-    given, model = document.data.get("parameters") or {}, document.data.get("model")
-    if not isinstance(given, dict) or not isinstance(model, str) or model not in MODELS or sample is None:
+def _parameter_problems(document: Document, model: Model | None, sample: SampleSettings | None) -> list[InputError]:
+    given = document.data.get("parameters") or {}
+    # The parameters of a base are checked with each variant, whose model may be another.
+    if not isinstance(given, dict) or model is None or sample is None or document.data.get("variants"):
         return []
     return parameter_problems(given, model, sample.distance_scale, document, _data_kind(sample))
 

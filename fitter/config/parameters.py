@@ -6,7 +6,7 @@ import math
 
 from fitter.config.problems import nearest
 from fitter.config.yaml_file import Document
-from fitter.cosmology import MODELS, get_model
+from fitter.cosmology import MODELS, Model, get_model
 from fitter.errors import InputError
 from fitter.parameters import PARAMETERS, Parameter
 
@@ -19,19 +19,19 @@ _DARK_ENERGY = ("omega_lambda", "omega_de", "omega_k")
 _SET_IN_UNCERTAINTY = {"intrinsic_scatter": "intrinsic", "covariance_scale": "covariance_scale"}
 
 
-def free_parameters(model: str, distance_scale: str, data_kind: str = "distance_modulus") -> dict[str, Parameter]:
+def free_parameters(model: str | Model, distance_scale: str, data_kind: str = "distance_modulus") -> dict[str, Parameter]:
     """Return the parameters that a config may set, each with its default prior.
 
     Parameters
     ----------
-    model : str
-        Name of the cosmological model.
+    model : str or Model
+        The cosmological model.
     distance_scale : {"relative", "absolute", "calibrated"}
         What the zero point of the distances is known from.
     data_kind : {"distance_modulus", "magnitude"}
         What the table holds.
     """
-    parameters = {p.name: p for p in get_model(model).parameters}
+    parameters = {p.name: p for p in (get_model(model) if isinstance(model, str) else model).parameters}
     if distance_scale in ("absolute", "calibrated"):
         parameters["H0"] = PARAMETERS["H0"]
     if distance_scale == "calibrated" or (distance_scale == "absolute" and data_kind == "magnitude"):
@@ -39,13 +39,15 @@ def free_parameters(model: str, distance_scale: str, data_kind: str = "distance_
     return parameters
 
 
-def complete_parameters(given: dict, model: str, distance_scale: str, data_kind: str = "distance_modulus") -> dict[str, dict | float]:
+def complete_parameters(
+    given: dict, model: str | Model, distance_scale: str, data_kind: str = "distance_modulus"
+) -> dict[str, dict | float]:
     """Return every parameter with its prior or fixed value, the defaults filled in, in reporting order."""
     return {name: given.get(name, p.default_prior) for name, p in free_parameters(model, distance_scale, data_kind).items()}
 
 
 def parameter_problems(
-    given: dict, model: str, distance_scale: str, document: Document, data_kind: str = "distance_modulus"
+    given: dict, model: str | Model, distance_scale: str, document: Document, data_kind: str = "distance_modulus"
 ) -> list[InputError]:
     """Return everything that is wrong with a `parameters:` section, one error per entry."""
     known = free_parameters(model, distance_scale, data_kind)
@@ -53,7 +55,7 @@ def parameter_problems(
     for name, value in given.items():
         keys = ("parameters", name)
         if name in known:
-            problem = _value_problem(name, value, keys, document)
+            problem = _value_problem(name, value, known[name].default_prior, document)
         else:
             said, cure = _why_not(name, model, distance_scale, list(known))
             problem = document.error(said, keys, value=value, cure=cure)
@@ -108,8 +110,8 @@ def _why_no_density(name: str, model: str, known: list[str]) -> tuple[str, str]:
     return f"the dark-energy density of {model} is called {other}", f"Write `{other}` instead"
 
 
-def _value_problem(name: str, value, keys: tuple, document: Document) -> InputError | None:
-    default = PARAMETERS[name].default_prior
+def _value_problem(name: str, value, default: dict, document: Document) -> InputError | None:
+    keys = ("parameters", name)
     example = default if default != FLAT else {"normal": [-19.25, 0.03]}
     ((kind, numbers),) = example.items()
     cure = f"Write a prior, e.g. `{name}: {{{kind}: {numbers}}}`, or a number to hold it fixed"

@@ -7,23 +7,18 @@ from collections.abc import Mapping
 from pathlib import Path
 from typing import Annotated, Any
 
-from pydantic import AfterValidator, BaseModel, BeforeValidator, ConfigDict, Field, PrivateAttr, WithJsonSchema
-from pydantic_core import PydanticKnownError
+from pydantic import BaseModel, BeforeValidator, ConfigDict, Field, PrivateAttr, WithJsonSchema
 
+from fitter.config.model_choice import ModelChoice, model_source
 from fitter.config.parameters import complete_parameters
+from fitter.config.variants import CompareSettings, VariantSettings
 from fitter.config.yaml_file import Document
-from fitter.cosmology import MODELS
+from fitter.cosmology import Model, get_model
 from fitter.inference.settings import SamplingSettings
 from fitter.parameters import PARAMETERS
 from fitter.sample.settings import SampleSettings
 
 __all__ = ["Config"]
-
-
-def _known_model(name: str) -> str:
-    if name not in MODELS:
-        raise PydanticKnownError("literal_error", {"expected": ", ".join(f"'{m}'" for m in MODELS)})
-    return name
 
 
 def _empty_is_default(value):
@@ -51,7 +46,6 @@ def _parameters_schema() -> dict:
     }
 
 
-ModelName = Annotated[str, AfterValidator(_known_model), WithJsonSchema({"type": "string", "enum": list(MODELS)})]
 Parameters = Annotated[dict[str, Any], BeforeValidator(_empty_is_default), WithJsonSchema(_parameters_schema())]
 Sampling = Annotated[SamplingSettings, BeforeValidator(_empty_is_default)]
 
@@ -67,7 +61,7 @@ class Config(BaseModel):
 
     title: str = Field("", description="Free text, printed with the results.")
     sample: SampleSettings | None = Field(None, description="What was observed: the table, its columns, cuts and uncertainties.")
-    model: ModelName = Field(description="The cosmological model.")
+    model: ModelChoice = Field(description="The cosmological model: a name, or {file, name} of one of your own.")
     radiation: bool = Field(False, description="Count photons (2.7255 K) and 3.046 massless neutrinos in the expansion rate.")
     parameters: Parameters = Field(
         default_factory=dict, description="For each parameter a prior, or a number to hold it fixed; those left out have their default."
@@ -76,6 +70,12 @@ class Config(BaseModel):
     run_folder: str | None = Field(
         None, description="Where the results go, relative to the working directory; the default is runs/ and the config's name."
     )
+    variants: tuple[VariantSettings, ...] = Field(
+        (), description="What `mufitter compare` fits side by side: each changes a few keys of this config, which is the base."
+    )
+    compare: Annotated[CompareSettings, BeforeValidator(_empty_is_default)] = Field(
+        default_factory=CompareSettings, description="How `mufitter compare` weighs the variants."
+    )
     inputs: dict[str, str] = Field(
         default_factory=dict,
         description="SHA-256 of input files by path, as a run folder records them; a file that has changed since is refused.",
@@ -83,6 +83,8 @@ class Config(BaseModel):
 
     _document: Document = PrivateAttr(default_factory=lambda: Document({}))
     _folder: Path = PrivateAttr(default_factory=Path.cwd)
+    _cosmology: Model | None = PrivateAttr(None)
+    _allow_code: bool = PrivateAttr(False)
 
     @property
     def path(self) -> Path | None:
@@ -99,15 +101,25 @@ class Config(BaseModel):
         """The settings as given, with the row of each key."""
         return self._document
 
+    @property
+    def cosmology(self) -> Model:
+        """The model itself, built in or from a file."""
+        return get_model(self.model) if self._cosmology is None else self._cosmology
+
+    @property
+    def model_sources(self) -> dict[str, str]:
+        """Path → SHA-256 of the file of a model of one's own; empty for a built-in model."""
+        return model_source(self.model, self.folder)
+
     def complete_parameters(self, sample) -> dict[str, dict | float]:
         """Return every parameter of the fit of a `Sample` with its prior or fixed value."""
-        return complete_parameters(self.parameters, self.model, sample.distance_scale, sample.data_kind)
+        return complete_parameters(self.parameters, self.cosmology, sample.distance_scale, sample.data_kind)
 
     def default_run_folder(self) -> Path:
         """Return the folder for the results, relative to the working directory."""
         if self.run_folder:
             return Path(os.path.expanduser(self.run_folder))
-        return Path("runs") / (self.path.stem if self.path is not None else self.model)
+        return Path("runs") / (self.path.stem if self.path is not None else self.cosmology.name)
 
     def changed(self, changes: Mapping[str, Any]) -> Config:
         """Return the same settings with sections, or single keys such as ``sampling.seed``, replaced; validated again."""
@@ -117,6 +129,6 @@ class Config(BaseModel):
         for key, value in changes.items():
             section, _, name = key.partition(".")
             data[section] = {**(data.get(section) or {}), name: value} if name else value
-        config, _, problems = validate(Document(data, self.document.lines, self.path), self.folder)
+        config, _, problems = validate(Document(data, self.document.lines, self.path), self.folder, allow_code=self._allow_code)
         raise_all(problems)
         return config

@@ -77,10 +77,27 @@ _Dumper.yaml_implicit_resolvers = {
 }
 
 
+class _Block(dict):
+    """A section with one line for each key."""
+
+
+class _Line(dict):
+    """A section on one line, in braces."""
+
+
+for _kind, _flow in ((_Block, False), (_Line, True)):
+    _Dumper.add_representer(
+        _kind, lambda dumper, data, flow=_flow: dumper.represent_mapping("tag:yaml.org,2002:map", data, flow_style=flow)
+    )
+
+
 def config_text(settings: dict[str, Any], header: list[str]) -> str:
     """Return settings as YAML with a few lines of comment before them."""
     # Through JSON: no anchors for shared lists, no types that YAML would need a tag for.
     plain = json.loads(json.dumps(settings))
+    for section in ("parameters", "inputs"):
+        if plain.get(section):
+            plain[section] = _Block({k: _Line(v) if isinstance(v, dict) else v for k, v in plain[section].items()})
     body = yaml.dump(plain, Dumper=_Dumper, sort_keys=False, allow_unicode=True, default_flow_style=None, width=140)
     return "".join(f"# {line}\n" for line in header) + body
 

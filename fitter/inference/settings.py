@@ -38,12 +38,14 @@ class SamplingSettings(BaseModel):
 
     model_config = ConfigDict(extra="forbid", frozen=True)
 
-    replicas: int = Field(default=4, ge=1, le=256)
-    walkers: int = Field(default=128, ge=4, le=100_000)
-    target_ess: int = Field(default=10_000, ge=1)
-    max_steps: int = Field(default=20_000, ge=20)
-    seed: int = Field(default=DEFAULT_SEED, ge=0)
-    move: Literal["mixture", "stretch"] = "mixture"
+    replicas: int = Field(default=4, ge=1, le=256, description="Independent ensembles of walkers.")
+    walkers: int = Field(default=128, ge=4, le=100_000, description="Walkers in each ensemble, an even number.")
+    target_ess: int = Field(default=10_000, ge=1, description="Effective sample size that every sampled parameter must reach.")
+    max_steps: int = Field(default=20_000, ge=20, description="Longest chain of a replica, burn-in included.")
+    seed: int = Field(default=DEFAULT_SEED, ge=0, description="The one number that all randomness of a fit comes from.")
+    move: Literal["mixture", "stretch"] = Field(
+        default="mixture", description="How walkers move: `mixture` suits curved posteriors, `stretch` is the common ensemble move."
+    )
 
     @field_validator("walkers")
     @classmethod

@@ -1,11 +1,10 @@
 """χ² of the compressed likelihood against a direct sum over all supernovae, with distances by Gauss–Legendre panels.
 
-The direct sum below shares nothing with the package: no Chebyshev nodes, no QR, matrices read by the test's own readers.
+The direct sum (in conftest.py) shares nothing with the package: no Chebyshev nodes, no QR, matrices read by the test's own readers.
 """
 
 import numpy as np
 import pytest
-from scipy.linalg import cholesky, solve_triangular
 
 from fitter.likelihood.posterior import LogPosterior
 from fitter.sample.sample import Sample
@@ -22,65 +21,13 @@ PRIORS = {
 RELEASES = ("pantheon2018_binned", "union2.1", "dovekie2025_statonly", "dovekie2025_vpec")
 
 
-def e_squared(name, theta, z):
-    """E² of one point, written again for the test."""
-    flat = name.startswith("flat")
-    omega_m = theta[0]
-    omega_de = 1 - omega_m if flat else theta[1]
-    if name.endswith("lcdm"):
-        growth = np.ones_like(z)
-    elif name.endswith("wcdm"):
-        growth = (1 + z) ** (3 * (1 + theta[-1]))
-    else:
-        w0, wa = theta[-2:]
-        growth = (1 + z) ** (3 * (1 + w0 + wa)) * np.exp(-3 * wa * z / (1 + z))
-    return omega_m * (1 + z) ** 3 + (1 - omega_m - omega_de) * (1 + z) ** 2 + omega_de * growth
-
-
-class Direct:
-    """χ² with the offset minimised, by the full matrix."""
-
-    def __init__(self, release):
-        self.release = release
-        if release.precision is not None:
-            self.root = cholesky(release.precision)  # upper: P = Rᵀ R
-            self.whiten = lambda v: self.root @ v
-        else:
-            self.root = cholesky(release.covariance, lower=True)
-            self.whiten = lambda v: solve_triangular(self.root, v, lower=True)
-        self.ones = self.whiten(np.ones(len(release.z)))
-        grid = np.arange(0.0, release.z.max(), 0.002)
-        self.edges = np.unique(np.concatenate([[0.0], grid, release.z]))
-        x, self.weight = np.polynomial.legendre.leggauss(12)
-        self.half = 0.5 * np.diff(self.edges)
-        self.points = (self.edges[:-1] + self.half)[:, None] + self.half[:, None] * x
-        self.where = np.searchsorted(self.edges, release.z)
-
-    def __call__(self, name, theta):
-        """χ², or infinity without a big bang or behind the antipode."""
-        e2 = e_squared(name, theta, self.points)
-        if not e2.min() > 0:
-            return np.inf
-        panels = (e2**-0.5) @ self.weight * self.half
-        distance = np.concatenate([[0.0], np.cumsum(panels)])[self.where]
-        omega_k = 0.0 if name.startswith("flat") else 1 - theta[0] - theta[1]
-        root = np.sqrt(abs(omega_k))
-        if omega_k < 0 and root * distance.max() >= np.pi:
-            return np.inf
-        if root * distance.max() > 1e-4:
-            distance = (np.sinh if omega_k > 0 else np.sin)(root * distance) / root
-        r = self.whiten(self.release.data - 5 * np.log10((1 + self.release.z_helio) * distance))
-        r = r - self.ones * (self.ones @ r) / (self.ones @ self.ones)
-        return r @ r
-
-
 @pytest.fixture(scope="module", params=RELEASES)
-def case(request, release):
+def case(request, release, direct_sum):
     found = release(request.param)
     sample = Sample.from_arrays(
         found.z, found.data, z_helio=found.z_helio, data_kind=found.kind, covariance=found.covariance, precision=found.precision
     )
-    return sample, Direct(found)
+    return sample, direct_sum(found)
 
 
 def _compare(posterior, direct, name, theta):

@@ -14,15 +14,28 @@ MODELS = ("flat_lcdm", "curved_lcdm", "flat_wcdm", "flat_w0wa")
 GRID_ERROR = {"wa": 0.02}
 
 
+def _check_minimum(result, expected, direct):
+    """χ² at the optimum, within 0.005 of the reference; lower only with proof.
+
+    The smallest χ² on a grid lies above the true minimum: on the coarse grid of three parameters by up to 0.01.
+    """
+    names = result.log_posterior.names
+    found = result.best_fit
+    chi2 = result.summary()["best_fit"]["chi2"]
+    assert chi2 < expected["chi2_min"] + 0.005
+    assert chi2 > expected["chi2_min"] - (0.01 if len(names) == 3 else 0.005)
+    assert chi2 == pytest.approx(direct(result.config.model, [found[n] for n in names]), abs=1e-6)
+
+
 @pytest.mark.parametrize("model", MODELS)
 @pytest.mark.parametrize("name", RELEASES)
-def test_posterior(name, model, release_config, reference):
+def test_posterior(name, model, release, release_config, reference, direct_sum):
     expected = reference[name][model]
     parameters = {k: {"uniform": v} for k, v in expected["priors"].items()}
     result = fit(release_config(name), model=model, parameters=parameters, run_folder=False)
     summary = result.summary()
     assert result.converged
-    assert summary["best_fit"]["chi2"] == pytest.approx(expected["chi2_min"], abs=0.005)
+    _check_minimum(result, expected, direct_sum(release(name)))
     for key in expected["priors"]:
         found, wanted = summary["parameters"][key], expected[key]
         tolerance = 4 * found["mcse"] + GRID_ERROR.get(key, 0.001)
@@ -34,7 +47,7 @@ def test_posterior(name, model, release_config, reference):
             assert found[level] == pytest.approx(wanted[q], abs=4 * error + GRID_ERROR.get(key, 0.001) + 0.02 * wanted["std"]), key
 
 
-def test_one_parameter_against_quadrature(release, release_config):
+def test_one_parameter_against_quadrature(release_config):
     # The whole distribution, not only its moments: the share of draws below each of 19 quantiles of a fine quadrature.
     result = fit(release_config("union2.1"), model="flat_lcdm", parameters={"omega_m": {"uniform": [0, 1]}}, run_folder=False)
     grid = np.linspace(0.0, 1.0, 4001)

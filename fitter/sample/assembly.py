@@ -206,7 +206,8 @@ class _Observed:
         if ref in self.values:
             return CutColumn(ref, None, lambda: self.values[ref], is_redshift=ref in _REDSHIFTS)
         position = self.table.columns.position(mapped)
-        is_redshift = mapped in (self.columns.redshift, self.columns.redshift_helio)
+        redshifts = self.table.columns.known(r for r in (self.columns.redshift, self.columns.redshift_helio) if r is not None)
+        is_redshift = position in redshifts
         if position in self.table.floats:
             return CutColumn(ref, None, lambda: self.numbers(mapped), is_redshift=is_redshift)
         words = self.table.texts(mapped)

@@ -89,7 +89,7 @@ def make_symmetric(matrix, what: str, shown: str | None = None) -> None:
     by, row, column, value, mirrored = worst
     if by > ASYMMETRY:
         raise InputError(
-            f"{what} is not symmetric: row {row + 1}, column {column + 1} holds {value:.6g}, row {column + 1}, column {row + 1} {mirrored:.6g} "
+            f"{what} is not symmetric: row {row + 1}, column {column + 1} holds {value:.6g}, and its mirror image {mirrored:.6g} "
             f"(a difference of {by:.3g} times the errors of the two supernovae)",
             file=shown, row=row + 1, column=column + 1, cure="Check how the file was written; the two must agree to 1e-5",
         )  # fmt: skip
@@ -134,6 +134,7 @@ def compact(matrix, keep):
 def _from_npy(path: Path, sizes, table: str, shown: str):
     with open_binary(path) as stream:
         shape, dtype = _array_header(stream, shown)
+        _require_numbers(dtype, shown)
         n, packed = _size_of(shape, None, sizes, table, shown)
     return _unpack(read_array(path, shown), n, packed)
 
@@ -141,7 +142,7 @@ def _from_npy(path: Path, sizes, table: str, shown: str):
 def read_array(path: Path, shown: str):
     """Read an .npy file, never a pickle."""
     with open_binary(path) as stream:
-        _array_header(stream, shown)
+        _require_numbers(_array_header(stream, shown)[1], shown)
     with open_binary(path) as stream:
         return _load(stream, shown)
 
@@ -161,11 +162,14 @@ def _array_header(stream, shown: str):
         shape, _, dtype = read(stream)
     except ValueError as problem:
         raise InputError(f"this is no .npy array: {problem}", file=shown, cure="Write it with numpy.save") from None
-    if dtype.hasobject or dtype.kind not in "fiub":
+    return shape, dtype
+
+
+def _require_numbers(dtype, shown: str) -> None:
+    if dtype.kind not in "fiub":
         raise InputError(
             f"the array holds {dtype}, not real numbers", file=shown, cure="Save it as an array of floats; Python objects are never loaded"
         )
-    return shape, dtype
 
 
 def _from_npz(path: Path, sizes, wanted: str | None, table: str, shown: str):
@@ -173,31 +177,40 @@ def _from_npz(path: Path, sizes, wanted: str | None, table: str, shown: str):
     with open_binary(path) as stream:
         try:
             archive = zipfile.ZipFile(stream)
-            headers, counts = {}, []
-            for member in archive.namelist():
-                with archive.open(member) as entry:
-                    shape, dtype = _array_header(entry, f"{shown} ({member})")
-                headers[member.removesuffix(".npy")] = shape
-                if math.prod(shape) == 1 and dtype.kind in "iu":
-                    with archive.open(member) as entry:
-                        counts.append(int(_load(entry, shown).reshape(-1)[0]))
+            headers, counts = _npz_headers(archive, shown)
             name = _choose(headers, wanted, sizes, shown)
-            n, packed = _size_of(headers[name], counts, sizes, table, shown)
-            with archive.open(f"{name}.npy" if f"{name}.npy" in archive.namelist() else name) as entry:
+            shape, dtype = headers[name]
+            _require_numbers(dtype, f"{shown} ({name})")
+            n, packed = _size_of(shape, counts, sizes, table, shown)
+            with archive.open(f"{name}.npy") as entry:
                 return _unpack(_load(entry, shown), n, packed)
         except zipfile.BadZipFile as problem:
             raise InputError(f"the .npz file is damaged: {problem}", file=shown, cure="Fetch or write it again") from None
 
 
+def _npz_headers(archive: zipfile.ZipFile, shown: str):
+    """Shape and dtype of every array by name, and the values of whole numbers that stand alone: one may be N."""
+    headers, counts = {}, []
+    for member in (m for m in archive.namelist() if m.endswith(".npy")):
+        with archive.open(member) as entry:
+            shape, dtype = _array_header(entry, f"{shown} ({member})")
+        headers[member.removesuffix(".npy")] = shape, dtype
+        if math.prod(shape) == 1 and dtype.kind in "iu":
+            with archive.open(member) as entry:
+                counts.append(int(_load(entry, shown).reshape(-1)[0]))
+    return headers, counts
+
+
 def _choose(headers: dict, wanted: str | None, sizes, shown: str) -> str:
-    listed = ", ".join(f"{name} {shape}" for name, shape in headers.items())
+    listed = ", ".join(f"{name} {shape}" for name, (shape, _) in headers.items())
     if wanted is not None:
         if wanted not in headers:
             raise InputError("the .npz has no such array", file=shown, value=wanted, cure=f"It holds: {listed}")
         return wanted
     fitting = {n * n for n in sizes} | {n * (n + 1) // 2 for n in sizes}
-    large = [n for n, shape in headers.items() if math.prod(shape) > 1] or [n for n, shape in headers.items() if shape] or list(headers)
-    right = [name for name in large if math.prod(headers[name]) in fitting]
+    size = {name: math.prod(shape) for name, (shape, dtype) in headers.items() if dtype.kind in "fiub"}
+    large = [n for n in size if size[n] > 1] or [n for n in size if headers[n][0]] or list(size) or list(headers)
+    right = [n for n in large if size.get(n) in fitting]
     candidates = right or large
     if len(candidates) != 1:
         raise InputError(

@@ -61,7 +61,7 @@ FORMS = {
     "npz upper float32 big-endian": lambda m: npz(count=np.int32(N), x=m[UPPER].astype(">f4"), flag=np.array(True)),
     "npz lower": lambda m: npz(n=N, packed=m[LOWER]),
     "npz upper without N": lambda m: npz(packed=m[UPPER]),
-    "npz beside other arrays": lambda m: npz(z=np.arange(N) / 10, c=m),
+    "npz beside other arrays": lambda m: npz(z=np.arange(N) / 10, names=np.array(["a"] * N * N), c=m),
 }
 
 

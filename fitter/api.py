@@ -338,14 +338,14 @@ def _likelihood(config: Config, sample: Sample) -> LogPosterior:
 def _draw(result: Fit, folder: Path) -> None:
     """Draw the figures of a fit, each with its caption beside it."""
     from fitter.report.figures.corner import corner_caption, main_parameters
-    from fitter.report.figures.hubble import hubble_caption, hubble_data
+    from fitter.report.figures.hubble import draw_hubble, hubble_caption, hubble_data
     from fitter.report.figures.style import save_figure, styled
 
     with styled():
         if main_parameters(result.chains):
             save_figure(result.corner(), folder / "corner", corner_caption(result.chains))
         data = hubble_data(result.log_posterior, result.optimum, result.chains)
-        save_figure(result.hubble_diagram(), folder / "hubble_diagram", hubble_caption(data))
+        save_figure(draw_hubble(data), folder / "hubble_diagram", hubble_caption(data))
 
 
 class _RunLog(AbstractContextManager):

@@ -119,7 +119,10 @@ def _counted(log_posterior, k: int) -> list[str]:
 
 
 def _dic(log_posterior, posterior, optimum) -> tuple[float | None, float | None]:
-    """Effective number of parameters and DIC; None where the mean lies outside the prior."""
+    """Effective number of parameters, and DIC.
+
+    DIC is None where the posterior mean is no likely point (a curved, long posterior): p_D is negative there and means nothing.
+    """
     deviance = deviance_draws(log_posterior, posterior, optimum)
     mean = posterior.chain.reshape(-1, posterior.chain.shape[-1]).mean(axis=0)
     anchor = best_deviance(log_posterior, optimum) + 2.0 * float(log_posterior.log_likelihood(np.atleast_2d(optimum.theta))[0])
@@ -128,4 +131,4 @@ def _dic(log_posterior, posterior, optimum) -> tuple[float | None, float | None]
         return None, None
     flat_marginalised = log_posterior.n_parameters - len(log_posterior.names)
     p_dic = float(deviance.mean()) + flat_marginalised - at_mean
-    return p_dic, at_mean + 2 * p_dic
+    return p_dic, at_mean + 2 * p_dic if p_dic > 0 else None

@@ -17,6 +17,7 @@ __all__ = ["SCHEMA", "Extras", "summarise", "summary_csv", "summary_json", "summ
 SCHEMA = "mufitter summary 1"
 
 _QUANTILES = {"low95": 0.025, "low68": 0.1587, "median": 0.5, "high68": 0.8413, "high95": 0.975}
+_ENOUGH_DRAWS = 100_000
 _LIMIT_DENSITY = 0.6  # of the peak, at a prior's edge: the peak is within about 1σ of it
 
 
@@ -124,9 +125,9 @@ def chi2_p_value(chi2: float, dof: int) -> float | None:
     """Probability of a larger χ² by chance; None without degrees of freedom."""
     if dof <= 0:
         return None
-    from scipy.stats import chi2 as chi2_distribution
+    from scipy.special import gammaincc  # not scipy.stats, which takes over a second to import
 
-    return float(chi2_distribution.sf(chi2, dof))
+    return float(gammaincc(0.5 * dof, 0.5 * chi2))
 
 
 def _parameter_facts(log_posterior, posterior, name: str, best: float | None) -> dict:
@@ -139,7 +140,7 @@ def _parameter_facts(log_posterior, posterior, name: str, best: float | None) ->
     defined = np.isfinite(draws)
     everywhere = bool(defined.all())
     facts = {"kind": posterior.kinds[name], **_moments(draws.ravel() if everywhere else draws[defined]), "best": best}
-    facts.update(_accuracy(draws, defined, facts["sd"]))
+    facts.update(_accuracy(posterior, name, defined, facts["sd"]))
     if not everywhere:
         facts["undefined_fraction"] = float(1.0 - defined.mean())
     facts["unit"] = parameter(name).unit
@@ -159,22 +160,37 @@ def _moments(values: np.ndarray) -> dict:
     return {"mean": mean, "sd": sd, **{key: named[key] for key in order}}
 
 
-def _accuracy(draws: np.ndarray, defined: np.ndarray, sd: float | None) -> dict:
-    """Effective sample size, R̂ and the Monte Carlo error of the mean.
+def _accuracy(posterior, name: str, defined: np.ndarray, sd: float | None) -> dict:
+    """Effective sample size, R̂, and the Monte Carlo error of the mean, sd/√ess.
 
-    R̂ and the bulk ESS use ranks only, so undefined draws stand beyond every defined one: that the chains
-    agree on how often the parameter exists is part of convergence.
+    What decided on the end of sampling is taken over. The rest is judged by a thinned chain: R̂ and the bulk ESS change little,
+    as neighbouring steps repeat each other. Both use ranks only, so undefined draws stand beyond every defined one:
+    that the chains agree on how often the parameter exists is part of convergence.
     """
-    from fitter.inference.diagnostics import ess_bulk, split_rhat
-
     share = float(defined.mean())
     if share == 0 or not sd:
         return {"ess": None, "rhat": None, "mcse": None}
-    if share < 1:
-        beyond = np.max(draws[defined]) + abs(sd)
+    known = posterior.sampling
+    if name in known.get("rhat", {}) and name in known.get("ess_bulk", {}):
+        ess, rhat = float(known["ess_bulk"][name]), float(known["rhat"][name])
+    else:
+        ess, rhat = _diagnose(np.asarray(posterior.draws(name), dtype=float), defined, sd)
+    ess *= share
+    facts = {"ess": ess, "rhat": rhat, "mcse": sd / float(np.sqrt(ess)) if ess > 0 else None}
+    if name in known.get("ess_tail", {}):
+        facts["ess_tail"] = float(known["ess_tail"][name])
+    return facts
+
+
+def _diagnose(draws: np.ndarray, defined: np.ndarray, sd: float) -> tuple[float, float]:
+    from fitter.inference.diagnostics import ess_bulk, split_rhat
+
+    stride = max(1, draws.size // _ENOUGH_DRAWS)
+    draws, defined = draws[:, ::stride], defined[:, ::stride]
+    if not defined.all():
+        beyond = np.max(draws[defined], initial=-np.inf) + sd
         draws = np.where(defined, draws, beyond)
-    ess = float(ess_bulk(draws)) * share
-    return {"ess": ess, "rhat": float(split_rhat(draws)), "mcse": sd / float(np.sqrt(ess)) if ess > 0 else None}
+    return float(ess_bulk(draws)), float(split_rhat(draws))
 
 
 def _edge_facts(draws: np.ndarray, prior, facts: dict) -> dict:

@@ -62,7 +62,8 @@ def caption(summary: dict) -> str:
     priors = "; ".join(f"{parameter(name).plain} {text}" for name, text in summary.get("priors", {}).items())
     text = (
         f"Posterior medians with equal-tailed 68.3 % intervals; limits are one-sided, 95 %. Model {summary['model']}, "
-        f"{sample['n']} supernovae at {sample['redshift_min']:.3g} ≤ z ≤ {sample['redshift_max']:.3g}, {sample['distance_scale']} distance scale"
+        f"{sample['n']} supernovae at {sample['redshift_min']:.3g} ≤ z ≤ {sample['redshift_max']:.3g}, "
+        f"{sample['distance_scale']} distance scale"
     )
     text += f", {sample['n_calibrators']} of them calibrators" if sample["n_calibrators"] else ""
     text += ", radiation included" if summary["radiation"] else ", no radiation"

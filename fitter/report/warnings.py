@@ -35,7 +35,7 @@ def practitioner_warnings(summary: dict, log_posterior) -> list[str]:
     """
     texts = _cross_check(summary) + _convergence(summary) + _chi2(summary)
     texts += _prior_edges(summary, log_posterior) + _prior_share(summary)
-    texts += _scale(summary) + _covariance(log_posterior.sample) + _evidence(summary)
+    texts += _scale(summary) + _covariance(log_posterior.sample) + _model(summary, log_posterior.model) + _evidence(summary)
     return texts + [str(text) for text in log_posterior.sample.warnings]
 
 
@@ -45,7 +45,8 @@ def _cross_check(summary: dict) -> list[str]:
         return []
     return [
         f"CROSS-CHECK FAILED: the chain and {check.get('method') or 'the independent calculation'} disagree (largest difference of a "
-        f"cumulative distribution {plain_number(check.get('max_cdf_difference'), 2)}, allowed {plain_number(check.get('tolerance'), 2)}). "
+        f"cumulative distribution {plain_number(check.get('max_cdf_difference'), 2)}, allowed "
+        f"{plain_number(check.get('tolerance'), 2)}). "
         "Do not use these numbers: run longer with another seed, and report it if the two still disagree."
     ]
 
@@ -86,14 +87,16 @@ def _chi2(summary: dict) -> list[str]:
     far = dof >= _RATIO_DOF and not 1 / _RATIO_FAR < chi2 / dof < _RATIO_FAR
     if p_value < _P_TINY:
         return [
-            f"{said}: the p-value is tiny, the scatter is larger than the errors and the model allow. Look at the residuals for outliers; add an "
+            f"{said}: the p-value is tiny, the scatter is larger than the errors and the model allow. Look at the "
+            "residuals for outliers; add an "
             "intrinsic term or a missing covariance; the parameters' errors are too small as they stand."
         ]
     if p_value < _P_SMALL or (far and chi2 > dof):
         return [f"{said} is high: errors may be underestimated. Look for outliers, or let sample.uncertainty have an intrinsic term."]
     if p_value > 1 - _P_SMALL or (far and chi2 < dof):
         return [
-            f"{said} is low: the errors look too large, or one was counted twice (released errors often hold scatter, lensing and peculiar "
+            f"{said} is low: the errors look too large, or one was counted twice (released errors often hold scatter, "
+            "lensing and peculiar "
             "velocities already). Compare the uncertainty terms with the release notes, or fit a covariance_scale."
         ]
     return []
@@ -141,7 +144,8 @@ def _prior_share(summary: dict) -> list[str]:
     if excluded is None or excluded <= _MOSTLY:
         return []
     return [
-        f"{100 * excluded:.0f} % of the prior is excluded (no big bang inside the data's redshifts, or an antipode there): the effective prior "
+        f"{100 * excluded:.0f} % of the prior is excluded (no big bang inside the data's redshifts, or an antipode "
+        "there): the effective prior "
         "is not the one written in the config. Narrow the priors to what is meant; the evidence depends on it."
     ]
 
@@ -151,21 +155,29 @@ def _scale(summary: dict) -> list[str]:
     scale = sample["distance_scale"]
     if scale == "relative":
         return [
-            "No H0: the distance scale is relative, so H0 and the absolute magnitude are one offset, marginalised. For an H0, give moduli on "
+            "No H0: the distance scale is relative, so H0 and the absolute magnitude are one offset, marginalised. For "
+            "an H0, give moduli on "
             "an absolute scale, or calibrators (sample.distance_scale)."
         ] * ("H0" not in parameters)
     if "H0" not in parameters:
         return []
     if scale == "calibrated" and sample["n_calibrators"] < _FEW_CALIBRATORS:
         return [
-            f"H0 rests on only {sample['n_calibrators']} calibrators: one of them moves it noticeably. Repeat the fit leaving each out in turn."
+            f"H0 rests on only {sample['n_calibrators']} calibrators: one of them moves it noticeably. "
+            "Repeat the fit leaving each out in turn."
         ]
     if scale == "absolute":
         return [
-            "H0 rests on the zero point of the given moduli: its value is that of the anchor behind them, and its error is only right if the "
+            "H0 rests on the zero point of the given moduli: its value is that of the anchor behind them, and its "
+            "error is only right if the "
             "covariance holds the anchor's (1 % in H0 is 0.0216 mag common to all). Name the anchor when quoting it."
         ]
     return []
+
+
+def _model(summary: dict, model) -> list[str]:
+    """What the model itself says of data that reach this far."""
+    return list(model.advice(summary["sample"]["redshift_max"])) if hasattr(model, "advice") else []
 
 
 def _covariance(sample) -> list[str]:
@@ -173,7 +185,8 @@ def _covariance(sample) -> list[str]:
     if not noise.is_diagonal or noise.modes.shape[1] or sample.n < _MANY:
         return []
     return [
-        f"A diagonal is no covariance: {sample.n} supernovae share calibration and other systematics, which errors taken as independent leave "
+        f"A diagonal is no covariance: {sample.n} supernovae share calibration and other systematics, which errors "
+        "taken as independent leave "
         "out, so these intervals are too narrow. Add the release's covariance, or modes, to sample.uncertainty."
     ]
 

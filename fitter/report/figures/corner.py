@@ -11,7 +11,7 @@ from fitter.errors import InputError
 from fitter.report.digits import figures_for
 from fitter.report.facts import axis_label, parameter
 from fitter.report.figures.panels import common_exponent, contours, draw_density, plot_range, runs_of, thinned
-from fitter.report.figures.style import COLOURS, LEVELS, new_figure, width_inches
+from fitter.report.figures.style import COLOURS, LEVELS, in_style, new_figure, width_inches
 
 __all__ = ["corner_caption", "corner_figure", "main_parameters"]
 
@@ -38,6 +38,7 @@ def _varies(posterior, name: str) -> bool:
     return draws.size > 1 and float(np.ptp(draws)) > 1e-10 * max(1e-300, float(np.abs(draws).max()))
 
 
+@in_style
 def corner_figure(
     posteriors,
     names: Sequence[str] | None = None,
@@ -76,15 +77,13 @@ def corner_figure(
     limits = {n: plot_range([t[n] for t in tables.values() if n in t]) for n in names}
     scale = {n: 10.0 ** -common_exponent(limits[n]) for n in names}
     figure, axes = _grid(len(names), width)
-    for index, (label, table) in enumerate(tables.items()):
+    for index, table in enumerate(tables.values()):
         _draw_run(axes, names, table, limits, scale, COLOURS[index % len(COLOURS)], alone=len(runs) == 1)
-        if len(runs) > 1:
-            axes[0, 0].plot([], [], color=COLOURS[index % len(COLOURS)], lw=2, label=label)
     _dress(axes, names, limits, scale, labels or {})
     if len(runs) == 1:
         _titles(axes, names, next(iter(runs.values())), labels or {})
     else:
-        _legend(figure, axes)
+        _legend(figure, list(runs))
     _mark(axes, names, reference or {}, scale)
     return figure
 
@@ -95,8 +94,8 @@ def corner_caption(posteriors, names: Sequence[str] | None = None) -> str:
     names = list(names) if names is not None else main_parameters(next(iter(runs.values())))
     first, second = (f"{100 * level:.1f}" for level in LEVELS)
     text = (
-        f"Marginal posteriors of {', '.join(names)}. The contours are the smallest regions that hold {first} % and {second} % of the probability "
-        "of each pair (not the 39.3 % and 86.5 % inside one and two standard deviations of a two-dimensional Gaussian)."
+        f"Marginal posteriors of {', '.join(names)}. The contours are the smallest regions that hold {first} % and {second} % "
+        "of the probability of each pair (not the 39.3 % and 86.5 % inside one and two standard deviations of a two-dimensional Gaussian)."
     )
     if len(runs) == 1:
         return f"{text} Titles and dashed lines: median and equal-tailed 68.3 % interval of each parameter."
@@ -150,22 +149,20 @@ def _draw_run(axes, names, table, limits, scale, colour, *, alone: bool) -> None
 
 def _dress(axes, names, limits, scale, labels) -> None:
     """Limits, ticks and labels; numbers only along the left and the bottom."""
-    from matplotlib.ticker import MaxNLocator
-
     k = len(names)
     for row in range(k):
         for column in range(row + 1):
             ax = axes[row, column]
             x, y = names[column], names[row]
             ax.set_xlim(*(v * scale[x] for v in limits[x]))
-            ax.xaxis.set_major_locator(MaxNLocator(3, prune="both"))
+            ax.set_xticks(inner_ticks(limits[x], scale[x]))
             ax.tick_params(axis="x", labelrotation=45, labelbottom=row == k - 1)
             if row == column:
                 ax.set_ylim(0, 1.12)
                 ax.set_yticks([])
             else:
                 ax.set_ylim(*(v * scale[y] for v in limits[y]))
-                ax.yaxis.set_major_locator(MaxNLocator(3, prune="both"))
+                ax.set_yticks(inner_ticks(limits[y], scale[y]))
                 ax.tick_params(axis="y", labelrotation=45, labelleft=column == 0)
             if row == k - 1:
                 ax.set_xlabel(labels.get(x, axis_label(x, common_exponent(limits[x]))))
@@ -174,16 +171,29 @@ def _dress(axes, names, limits, scale, labels) -> None:
     _align(axes, k)
 
 
+def inner_ticks(limits: tuple[float, float], scale: float = 1.0) -> list[float]:
+    """Return round values well inside the limits: one at a corner would run into the next panel's."""
+    from matplotlib.ticker import MaxNLocator
+
+    low, high = (v * scale for v in limits)
+    margin = 0.08 * (high - low)
+    for wanted in (4, 5, 6):
+        ticks = [t for t in MaxNLocator(wanted, steps=[1, 2, 2.5, 5, 10]).tick_values(low, high) if low + margin < t < high - margin]
+        if len(ticks) >= 2:
+            break
+    return ticks
+
+
 def _align(axes, k: int) -> None:
     """Put the labels of a column, and of the bottom row, on one line at a fixed distance in inches."""
     from matplotlib.transforms import ScaledTranslation
 
     for i in range(k):
         bottom, left = axes[k - 1, i], axes[i, 0]
-        below = bottom.transAxes + ScaledTranslation(0, -0.44, bottom.figure.dpi_scale_trans)
+        below = bottom.transAxes + ScaledTranslation(0, -0.42, bottom.figure.dpi_scale_trans)
         bottom.xaxis.set_label_coords(0.5, 0, transform=below)
         if i > 0:
-            beside = left.transAxes + ScaledTranslation(-0.44, 0, left.figure.dpi_scale_trans)
+            beside = left.transAxes + ScaledTranslation(-0.42, 0, left.figure.dpi_scale_trans)
             left.yaxis.set_label_coords(0, 0.5, transform=beside)
 
 
@@ -202,9 +212,11 @@ def _titles(axes, names, posterior, labels) -> None:
         axes[i, i].set_title(text, fontsize=size, pad=4)
 
 
-def _legend(figure, axes) -> None:
-    handles, texts = axes[0, 0].get_legend_handles_labels()
-    figure.legend(handles, texts, loc="upper right", bbox_to_anchor=(0.99, 0.99))
+def _legend(figure, labels: Sequence[str]) -> None:
+    from matplotlib.lines import Line2D
+
+    handles = [Line2D([], [], color=COLOURS[i % len(COLOURS)], lw=2, label=label) for i, label in enumerate(labels)]
+    figure.legend(handles=handles, loc="upper right", bbox_to_anchor=(0.99, 0.99))
 
 
 def _mark(axes, names, reference, scale) -> None:

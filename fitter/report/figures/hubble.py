@@ -9,10 +9,10 @@ import numpy as np
 
 from fitter.errors import InputError
 from fitter.report.figures.binned import BinnedMeans, binned_means, redshift_edges
-from fitter.report.figures.style import COLOURS, GREY, new_figure
+from fitter.report.figures.style import COLOURS, GREY, in_style, new_figure, width_inches
 from fitter.report.information import fitted_noise, noise_scale
 
-__all__ = ["REFERENCES", "HubbleData", "hubble_caption", "hubble_data", "hubble_figure"]
+__all__ = ["REFERENCES", "HubbleData", "draw_hubble", "hubble_caption", "hubble_data", "hubble_figure"]
 
 _FEW = 80  # up to so many points each is drawn with its error instead of bins
 _MOST_POINTS = 20_000
@@ -39,6 +39,8 @@ class HubbleData:
         Best fit on the upper axis; the central 95.4 % of the posterior about it (zeros if it was not asked for).
     intercept : float
         Limit of the curve minus 5 log10 z at z → 0, mag.
+    omega_m : float or None
+        At the best fit, for the reference without dark energy.
     label : str
         Of the upper axis.
     n_calibrators : int
@@ -54,6 +56,7 @@ class HubbleData:
     curve: np.ndarray
     band: np.ndarray
     intercept: float
+    omega_m: float | None
     label: str
     n_calibrators: int
 
@@ -92,6 +95,7 @@ def hubble_data(log_posterior, optimum, posterior=None, *, bins: int | None = No
         curve=_predicted(log_posterior, theta, curve_z) - shift,
         band=_band(log_posterior, posterior, theta, curve_z),
         intercept=float(_predicted(log_posterior, theta, np.array([_LOW]))[0] - shift - 5 * np.log10(_LOW)),
+        omega_m={**log_posterior.fixed, **optimum.values}.get("omega_m"),
         label=label,
         n_calibrators=int(sample.n_calibrators),
     )
@@ -125,28 +129,33 @@ def _band(log_posterior, posterior, theta, z) -> np.ndarray:
     return np.stack([low, high]) - _predicted(log_posterior, theta, z)
 
 
-def hubble_figure(
-    log_posterior,
-    optimum,
-    posterior=None,
-    *,
-    width: str | float = "double",
-    bins: int | None = None,
-    references: Sequence[str] = ("no_dark_energy", "matter_only"),
-):
-    """Draw the Hubble diagram with residuals from the best fit.
+def hubble_figure(log_posterior, optimum, posterior=None, *, bins: int | None = None, **how):
+    """Draw the Hubble diagram of a fit with residuals from the best fit.
 
     Parameters
     ----------
-    log_posterior : LogPosterior
-    optimum : Optimum
-    posterior : Posterior, optional
-        For the band of the posterior in the residual panel.
+    log_posterior, optimum, posterior, bins
+        As for :func:`hubble_data`.
+    **how
+        As for :func:`draw_hubble`.
+
+    Returns
+    -------
+    matplotlib.figure.Figure
+    """
+    return draw_hubble(hubble_data(log_posterior, optimum, posterior, bins=bins), **how)
+
+
+@in_style
+def draw_hubble(data: HubbleData, *, width: str | float = "double", references: Sequence[str] = ("no_dark_energy", "matter_only")):
+    """Draw a Hubble diagram from what :func:`hubble_data` worked out.
+
+    Parameters
+    ----------
+    data : HubbleData
     width : {"single", "double"} or float
-    bins : int, optional
-        Number of redshift bins.
     references : sequence of {"no_dark_energy", "empty", "matter_only"}
-        Models drawn beside the best fit in the residual panel, equal to it at z → 0.
+        Models drawn beside the best fit, equal to it at z → 0.
 
     Returns
     -------
@@ -155,15 +164,18 @@ def hubble_figure(
     unknown = [name for name in references if name not in REFERENCES]
     if unknown:
         raise InputError("unknown reference model", value=unknown[0], cure=f"Use any of {', '.join(REFERENCES)}.")
-    data = hubble_data(log_posterior, optimum, posterior, bins=bins)
-    figure = new_figure(width, 0.68 if width == "double" else 1.05)
+    inches = width_inches(width)
+    figure = new_figure(inches, 0.68 if inches > 5 else 1.05)
     upper, lower = figure.subplots(2, 1, sharex=True, height_ratios=[1.75, 1], gridspec_kw={"hspace": 0.0})
     _draw_points(upper, lower, data)
     _draw_model(upper, lower, data)
     _draw_bins(upper, lower, data)
-    omega_m = {**log_posterior.fixed, **optimum.values}.get("omega_m")
-    _draw_references(lower, data, references, omega_m)
+    lines = _draw_references(upper, lower, data, references)
     _dress(figure, upper, lower, data)
+    main = upper.legend(handles=[h for h in upper.get_legend_handles_labels()[0] if h not in lines], loc="lower right", markerscale=1.5)
+    if lines:
+        upper.legend(handles=lines, loc="upper left", handlelength=2.6)
+        upper.add_artist(main)
     return figure
 
 
@@ -218,13 +230,17 @@ def reference_distance(name: str, z: np.ndarray, omega_m: float | None) -> np.nd
     return z * (1 + z * (1 - q) / (np.sqrt(1 + 2 * q * z) + 1 + q * z))
 
 
-def _draw_references(lower, data: HubbleData, references: Sequence[str], omega_m: float | None) -> None:
-    z = data.curve_redshift
+def _draw_references(upper, lower, data: HubbleData, references: Sequence[str]) -> list:
+    """Draw the reference models in both panels; return the lines of the upper one for the legend."""
+    z, lines = data.curve_redshift, []
     for name, dashes in zip(references, ((5, 2), (1, 1.5), (5, 2, 1, 2)), strict=False):
-        if name == "no_dark_energy" and omega_m is None:
+        if name == "no_dark_energy" and data.omega_m is None:
             continue
-        excess = 5 * np.log10(reference_distance(name, z, omega_m)) - (data.curve - data.intercept)
-        lower.plot(z, excess, color="black", lw=0.8, dashes=dashes, zorder=2, label=REFERENCES[name])
+        modulus = 5 * np.log10(reference_distance(name, z, data.omega_m)) + data.intercept
+        style = {"color": "black", "lw": 0.8, "dashes": dashes, "zorder": 2, "label": REFERENCES[name]}
+        lines += upper.plot(z, modulus, **style)
+        lower.plot(z, modulus - data.curve, **style)
+    return lines
 
 
 def _dress(figure, upper, lower, data: HubbleData) -> None:
@@ -245,11 +261,8 @@ def _dress(figure, upper, lower, data: HubbleData) -> None:
     lower.set_xticks(ticks)
     lower.xaxis.set_major_formatter(FuncFormatter(lambda value, _: f"{value:g}"))
     lower.xaxis.set_minor_formatter(NullFormatter())
-    upper.legend(loc="lower right", markerscale=1.5)
-    if lower.get_legend_handles_labels()[0]:
-        lower.legend(loc="lower left", ncols=2, handlelength=2.4)
     width, height = figure.get_size_inches()
-    figure.subplots_adjust(left=0.5 / width, right=1 - 0.1 / width, bottom=0.42 / height, top=1 - 0.1 / height)
+    figure.subplots_adjust(left=0.56 / width, right=1 - 0.1 / width, bottom=0.42 / height, top=1 - 0.1 / height)
     figure.align_ylabels([upper, lower])
 
 
@@ -264,7 +277,8 @@ def hubble_caption(data: HubbleData) -> str:
     else:
         text += (
             f"Small points: {len(data.redshift)} single supernovae. Squares: means in {len(data.bins.mean)} redshift bins by generalised "
-            "least squares with the whole covariance; their errors, which the bins partly share, are the square root of the diagonal of the bin means' covariance. "
+            "least squares with the whole covariance; their errors, which the bins partly share, come from the diagonal "
+            "of the covariance of the means. "
         )
     if data.band.any():
         text += "Shaded: the central 95.4 % of the posterior's predictions. "

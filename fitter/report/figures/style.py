@@ -5,17 +5,21 @@ from __future__ import annotations
 import os
 import tempfile
 from collections.abc import Mapping, Sequence
+from contextlib import contextmanager, nullcontext
+from contextvars import ContextVar
+from functools import wraps
 from pathlib import Path
 
 from fitter.errors import InputError
 
-__all__ = ["COLOURS", "DOUBLE", "GREY", "LEVELS", "SINGLE", "STYLE", "new_figure", "save_figure", "styled", "width_inches"]
+__all__ = ["COLOURS", "DOUBLE", "GREY", "LEVELS", "SINGLE", "STYLE", "in_style", "new_figure", "save_figure", "styled", "width_inches"]
 
 SINGLE, DOUBLE = 3.5, 7.1  # inches: one and two journal columns
 LEVELS = (0.683, 0.954)  # probability inside the contours
 # Distinct in hue and in lightness, so that they survive colour blindness and a grey printer.
 COLOURS = ("#1f4e9c", "#d9730d", "#2a9d8f", "#a23b72", "#7a5c00", "#5b5f97")
 GREY = "#8c8c8c"
+_active = ContextVar("style in force", default=False)
 _RESOLUTION = 200  # dots per inch of the PNG
 
 STYLE: dict[str, object] = {
@@ -51,8 +55,9 @@ STYLE: dict[str, object] = {
 }
 
 
+@contextmanager
 def styled(style: str | Path | Mapping | None = None):
-    """Return a context in which figures are drawn and saved in the house style.
+    """Draw and save figures in the house style while this context is open.
 
     Parameters
     ----------
@@ -65,25 +70,54 @@ def styled(style: str | Path | Mapping | None = None):
         If the style sheet cannot be read or holds an unknown setting.
     """
     import matplotlib
-    from matplotlib import style as matplotlib_style
 
-    settings = dict(STYLE)
-    if style is not None:
-        try:
-            with matplotlib.rc_context():
-                # Settings from a sheet are collected by applying it to a throw-away context.
-                before = matplotlib.rcParams.copy()
-                matplotlib_style.use(dict(style) if isinstance(style, Mapping) else str(style))
-                changed = {k: v for k, v in matplotlib.rcParams.items() if k != "backend" and v != before[k]}
-            settings.update(changed)
-        except (OSError, KeyError, ValueError) as error:
-            raise InputError(
-                "this figure style cannot be used",
-                file=None if isinstance(style, Mapping) else style,
-                value=str(error),
-                cure="Give a matplotlib style sheet (*.mplstyle).",
-            ) from error
-    return matplotlib.rc_context(settings)
+    settings = {**STYLE, **_settings_of(style)}
+    token = _active.set(True)
+    try:
+        with matplotlib.rc_context(settings):
+            yield
+    finally:
+        _active.reset(token)
+
+
+def in_style(draw):
+    """Decorate a function that returns a Figure: it draws in the house style unless a style is in force already."""
+
+    @wraps(draw)
+    def drawn(*args, **options):
+        if _active.get():
+            return draw(*args, **options)
+        with styled():
+            figure = draw(*args, **options)
+            figure.draw_without_rendering()  # ticks are made on first drawing, with the settings of that moment
+            return figure
+
+    return drawn
+
+
+def _settings_of(style: str | Path | Mapping | None) -> dict:
+    """Settings of a style sheet, a named style or a mapping, checked."""
+    if style is None:
+        return {}
+    import matplotlib
+
+    try:
+        if isinstance(style, Mapping):
+            given = dict(style)
+        elif str(style) in matplotlib.style.library:
+            given = dict(matplotlib.style.library[str(style)])
+        else:
+            given = dict(matplotlib.rc_params_from_file(str(style), fail_on_error=True, use_default_template=False))
+        given.pop("backend", None)
+        with matplotlib.rc_context(given):
+            return given
+    except (OSError, KeyError, ValueError) as error:
+        raise InputError(
+            "this figure style cannot be used",
+            file=None if isinstance(style, Mapping) else style,
+            value=str(error),
+            cure="Give a matplotlib style sheet (*.mplstyle).",
+        ) from error
 
 
 def width_inches(width: str | float) -> float:
@@ -138,7 +172,7 @@ def save_figure(figure, path: Path, caption: str = "", *, formats: Sequence[str]
     path = Path(path)
     path.parent.mkdir(parents=True, exist_ok=True)
     written = []
-    with styled(style):
+    with nullcontext() if _active.get() and style is None else styled(style):
         for fmt in formats:
             if fmt not in ("pdf", "png", "svg", "eps"):
                 raise InputError("unknown figure format", value=fmt, cure="Use pdf, png, svg or eps.")

@@ -252,7 +252,18 @@ def test_a_reader_that_leaves_early_is_no_error(project):
 def test_the_schema_describes_the_config():
     schema = json.loads(CliRunner().invoke(cli.app, ["schema"]).stdout)
     assert schema["required"] == ["sample", "model"]
-    assert set(schema["properties"]) == {"title", "sample", "model", "radiation", "parameters", "sampling", "run_folder", "inputs"}
+    assert set(schema["properties"]) == {
+        "title",
+        "sample",
+        "model",
+        "radiation",
+        "parameters",
+        "sampling",
+        "run_folder",
+        "inputs",
+        "variants",
+        "compare",
+    }
     assert "flat_w0wa" in schema["properties"]["model"]["enum"]
     assert "uniform" in json.dumps(schema["properties"]["parameters"]["properties"]["H0"])
     assert schema["properties"]["sample"] == {

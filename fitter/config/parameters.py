@@ -57,7 +57,7 @@ def parameter_problems(
         if name in known:
             problem = _value_problem(name, value, known[name].default_prior, document)
         else:
-            said, cure = _why_not(name, model, distance_scale, list(known))
+            said, cure = _why_not(name, model if isinstance(model, str) else model.name, distance_scale, list(known))
             problem = document.error(said, keys, value=value, cure=cure)
         if problem is not None:
             problems.append(problem)

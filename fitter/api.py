@@ -18,8 +18,9 @@ from fitter.config.parameters import FLAT
 from fitter.config.settings import Config
 from fitter.config.write import as_run, config_hash, config_text, differences, input_problems
 from fitter.config.yaml_file import read_yaml
-from fitter.errors import InputError, InputErrors
+from fitter.errors import InputError, InputErrors, MufitterError
 from fitter.inference.seeds import child_seed
+from fitter.parameters import declared_elsewhere
 from fitter.report.run_folder import Run, RunFolder, read_run, write_atomic, writing
 from fitter.sample.sample import Sample
 
@@ -31,7 +32,17 @@ if TYPE_CHECKING:
     from fitter.inference.posterior import Posterior
     from fitter.likelihood.posterior import LogPosterior
 
-__all__ = ["Check", "Fit", "check", "fit", "load_config", "read_run"]
+__all__ = ["Check", "Fit", "TooShort", "check", "fit", "load_config", "read_run"]
+
+# Fewer steps than this have no convergence diagnostics worth the name.
+_LEAST_STEPS = 10
+
+
+class TooShort(MufitterError):
+    """A fit was interrupted before it could be summarised."""
+
+    exit_code = 1
+
 
 _log = logging.getLogger("fitter")
 # Children of the seed; a number is never given a second meaning.
@@ -125,6 +136,7 @@ def fit(
     replace: bool = False,
     resume: bool = False,
     progress: bool = False,
+    allow_code: bool = False,
     **settings: Any,
 ) -> Fit:
     """Fit a model to a sample.
@@ -141,6 +153,8 @@ def fit(
         Continue an unfinished run of the same settings and data.
     progress : bool
         Show a progress bar on stderr.
+    allow_code : bool
+        Whether the file of a model of one's own may be run.
     **settings
         Sections of a config (title, sample, model, parameters, sampling, …); they override those of ``config``.
         ``sample`` may be a `Sample`.
@@ -161,7 +175,9 @@ def fit(
     >>> result = fit(sample=sample, model="flat_lcdm")                       # doctest: +SKIP
     >>> result.posterior["omega_m"].mean()                                   # doctest: +SKIP
     """
-    chosen, sample = _settings(config, settings)
+    chosen, sample = _settings(config, settings, allow_code)
+    if chosen.variants:
+        raise chosen.document.error("this config holds variants, not one fit", ("variants",), cure="Fit them with `mufitter compare`")
     target = chosen.run_folder if run_folder is None else run_folder
     if not target:
         return _Job.prepare(chosen, sample, None, progress).run()
@@ -179,10 +195,10 @@ def fit(
         folder.leave()
 
 
-def _settings(config, settings: dict[str, Any]) -> tuple[Config, Sample | None]:
+def _settings(config, settings: dict[str, Any], allow_code: bool = False) -> tuple[Config, Sample | None]:
     """Bring a path, mapping, Config and keywords to one Config, and the Sample if it was given as an object."""
     if isinstance(config, str | Path):
-        config = load_config(config)
+        config = load_config(config, allow_code=allow_code)
     data = settings.get("sample")
     sample = data if isinstance(data, Sample) else None
     settings = {k: v for k, v in settings.items() if sample is None or k != "sample"}
@@ -190,11 +206,12 @@ def _settings(config, settings: dict[str, Any]) -> tuple[Config, Sample | None]:
         if sample is None and not settings:
             return config, None
         given, folder = {**config.document.data, **settings}, config.folder
+        allow_code = allow_code or config._allow_code
     else:
         given, folder = {**(config or {}), **settings}, Path.cwd()
     if sample is not None:
         given.pop("sample", None)
-    return config_from_mapping(given, folder=folder, sample=sample), sample
+    return config_from_mapping(given, folder=folder, sample=sample, allow_code=allow_code), sample
 
 
 @dataclass
@@ -206,6 +223,7 @@ class _Job:
     log_posterior: LogPosterior
     folder: RunFolder | None
     progress: bool
+    processes: int | None = None
 
     @classmethod
     def prepare(cls, config: Config, sample: Sample | None, folder: RunFolder | None, progress: bool) -> _Job:
@@ -266,7 +284,7 @@ class _Job:
         from fitter.inference.progress import progress_bar
         from fitter.inference.sampling import sample_posterior
 
-        _log.info("%s, model %s, sampled: %s", self.sample_line(), self.config.model, ", ".join(self.log_posterior.names))
+        _log.info("%s, model %s, sampled: %s", self.sample_line(), self.config.cosmology.name, ", ".join(self.log_posterior.names))
         for text in self.sample.warnings:
             _log.warning(text)
         optimum = self._optimum()
@@ -276,8 +294,13 @@ class _Job:
             chains = sample_posterior(
                 self.log_posterior, self.config.sampling, optimum, seed=self._seed(_SAMPLING),
                 folder=folder, progress=bar, resume=resume, fingerprint=fingerprint,
+                processes=self.processes,
             )  # fmt: skip
         _log.info("sampled: %s", {k: v for k, v in chains.sampling.items() if k in ("steps", "burn_in", "converged", "reason", "seconds")})
+        steps = chains.log_posterior.shape[1]
+        if steps < _LEAST_STEPS:
+            cure = " Continue with --resume." if folder is not None else ""
+            raise TooShort(f"stopped after {steps} steps, too early to say anything.{cure}")
         return self._summarised(optimum, chains)
 
     def _summarised(self, optimum: Optimum, chains: Posterior) -> Fit:
@@ -290,6 +313,8 @@ class _Job:
         proof = prove(self.log_posterior, chains, optimum, ess, seed=self._seed(_PROOF))
         _log.info("cross-check: %s; evidence: %s", proof.cross_check, proof.evidence)
         more["evidence"] = proof.evidence
+        if declared := declared_elsewhere(chains.kinds):
+            more["declared"] = declared
         extras = Extras(title=self.config.title, cross_check=proof.cross_check, evidence=proof.evidence, more=more)
         summary = summarise(self.log_posterior, chains, optimum, extras)
         return Fit(self.config, self.sample, self.log_posterior, optimum, chains, None, summary)
@@ -332,7 +357,7 @@ def _likelihood(config: Config, sample: Sample) -> LogPosterior:
     from fitter.likelihood.posterior import LogPosterior
 
     given = {k: v for k, v in config.complete_parameters(sample).items() if v != FLAT}
-    return LogPosterior.build(sample, config.model, given, radiation=config.radiation)
+    return LogPosterior.build(sample, config.cosmology, given, radiation=config.radiation)
 
 
 def _draw(result: Fit, folder: Path) -> None:
@@ -393,13 +418,15 @@ class Check:
         return check_text(self.config, self.sample, self.log_posterior)
 
 
-def check(path: str | Path) -> Check:
+def check(path: str | Path, *, allow_code: bool = False) -> Check:
     """Read everything that a config names and fit nothing.
 
     Parameters
     ----------
     path : path-like
         The config file.
+    allow_code : bool
+        Whether the file of a model of one's own may be run.
 
     Returns
     -------
@@ -413,7 +440,7 @@ def check(path: str | Path) -> Check:
     except InputError as error:
         return Check((error,))
     folder = Path(path).parent
-    config, sample_settings, problems = validate(document, folder)
+    config, sample_settings, problems = validate(document, folder, allow_code=allow_code)
     sample = None
     if sample_settings is not None:
         try:
@@ -435,12 +462,12 @@ def _check_likelihood(config: Config, sample: Sample) -> Check:
     return Check(tuple(problems), config, sample, log_posterior)
 
 
-def load_run(path: str | Path) -> tuple[Run, Config]:
+def load_run(path: str | Path, *, allow_code: bool = False) -> tuple[Run, Config]:
     """Read a run folder together with its config."""
     run = read_run(path)
     document = read_yaml(run.config_file)
     # A fit of arrays has no sample section; what the parameters depend on stands in the summary.
     arrays = None if "sample" in document.data else SimpleNamespace(**run.summary["sample"])
-    config, _, problems = validate(document, run.folder, arrays)
+    config, _, problems = validate(document, run.folder, arrays, allow_code=allow_code)
     raise_all(problems)
     return run, config

@@ -27,6 +27,7 @@ app = typer.Typer(
 )
 
 ConfigFile = Annotated[Path, typer.Argument(metavar="CONFIG", help="The config, a YAML file.", show_default=False)]
+AllowCode = Annotated[bool, typer.Option("--allow-code", help="Run the file of a model of your own that the config names.")]
 
 
 def main() -> None:
@@ -126,13 +127,14 @@ def _fit(
     seed: Annotated[int | None, typer.Option(min=0, help="Seed of all randomness, instead of the config's.", show_default=False)] = None,
     json_: Annotated[bool, typer.Option("--json", help="Print summary.json to stdout instead of the readable summary.")] = False,
     quiet: Annotated[bool, typer.Option("--quiet", "-q", help="No progress and no summary, only warnings and errors.")] = False,
+    allow_code: AllowCode = False,
 ) -> int:
     """Fit a model to a sample: posterior, summary and figures in a run folder."""
     if replace and resume:
         raise InputError("--replace starts anew, --resume continues: choose one of them")
     from fitter.api import fit, load_config
 
-    settings = load_config(config)
+    settings = load_config(config, allow_code=allow_code)
     if seed is not None:
         settings = settings.changed({"sampling.seed": seed})
     target = run_folder or settings.default_run_folder()
@@ -162,11 +164,11 @@ def _print_result(result, as_json: bool, quiet: bool) -> None:
 
 @app.command("check")
 @_reported
-def _check(config: ConfigFile) -> None:
+def _check(config: ConfigFile, allow_code: AllowCode = False) -> None:
     """Read everything, say what will be fitted and all that is wrong; fit nothing."""
     from fitter.api import check
 
-    found = check(config)
+    found = check(config, allow_code=allow_code)
     text = str(found)
     if text:
         print(text, flush=True)

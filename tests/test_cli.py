@@ -264,7 +264,7 @@ def test_the_schema_describes_the_config():
         "variants",
         "compare",
     }
-    assert "flat_w0wa" in schema["properties"]["model"]["enum"]
+    assert "flat_w0wa" in schema["properties"]["model"]["anyOf"][0]["enum"]
     assert "uniform" in json.dumps(schema["properties"]["parameters"]["properties"]["H0"])
     assert schema["properties"]["sample"] == {
         "$ref": "#/$defs/SampleSettings",

@@ -43,13 +43,17 @@ def as_run(config: Config, sample, target: Path) -> dict[str, Any]:
     return {
         "title": config.title,
         **described,
-        "model": config.model,
+        "model": _model(config, moved),
         "radiation": config.radiation,
         "parameters": config.complete_parameters(sample),
         "sampling": config.sampling.model_dump(mode="json", by_alias=True, exclude_none=True),
         "run_folder": str(config.default_run_folder()),
-        "inputs": {moved(path): sha for path, sha in sample.sources.items()},
+        "inputs": {moved(path): sha for path, sha in {**sample.sources, **config.model_sources}.items()},
     }
+
+
+def _model(config: Config, moved: Callable[[str], str]) -> str | dict[str, str]:
+    return config.model if isinstance(config.model, str) else {"file": moved(config.model.file), "name": config.cosmology.name}
 
 
 def _from_run_folder(path: Path, target: Path) -> str:
@@ -119,6 +123,8 @@ def _deciding(settings: dict[str, Any]) -> dict[str, Any]:
     hashes = settings.pop("inputs", {})
     if "sample" in settings:
         settings["sample"] = _with_paths(settings["sample"], lambda path: hashes.get(path, path))
+    if isinstance(settings.get("model"), dict):
+        settings["model"]["file"] = hashes.get(settings["model"]["file"], settings["model"]["file"])
     flat: dict[str, Any] = {}
     _flatten(settings, "", flat)
     return {k: v for k, v in flat.items() if k not in _FREE_TO_CHANGE}
@@ -134,13 +140,13 @@ def _flatten(value, key: str, flat: dict[str, Any]) -> None:
 
 def input_problems(config: Config, sample) -> list[InputError]:
     """Return which inputs are no longer the files that `inputs:` recorded."""
-    found = {_resolved(config, path): sha for path, sha in sample.sources.items()}
+    found = {_resolved(config, path): sha for path, sha in {**sample.sources, **config.model_sources}.items()}
     problems = []
     for path, recorded in config.inputs.items():
         now = found.get(_resolved(config, path))
         keys = ("inputs", path)
         if now is None:
-            problems.append(config.document.error("the sample does not read this file", keys, cure="Remove the line"))
+            problems.append(config.document.error("this fit does not read this file", keys, cure="Remove the line"))
         elif now != recorded.lower():
             cure = "Restore the file; or remove the line to fit what the file holds now"
             problems.append(config.document.error(f"the file has changed: its SHA-256 is now {now}", keys, value=recorded, cure=cure))

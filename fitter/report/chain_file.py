@@ -8,6 +8,7 @@ from pathlib import Path
 
 from fitter.errors import InputError
 from fitter.inference.posterior import Posterior
+from fitter.parameters import declare_again, declared_elsewhere
 from fitter.report.facts import json_safe
 
 __all__ = ["CHAIN_FORMAT", "read_chain", "write_chain"]
@@ -29,7 +30,8 @@ def write_chain(path: str | Path, posterior: Posterior, attributes: dict[str, st
     Notes
     -----
     Datasets ``chain`` (R, S, W, n), ``log_posterior`` (R, S, W) and ``extra/NAME`` (R, S, W);
-    attributes ``format``, ``names``, ``kinds`` and ``sampling``, the last three as JSON.
+    attributes ``format``, ``names``, ``kinds``, ``sampling`` and ``declared`` (symbols of parameters from a model of one's
+    own), the last four as JSON.
     """
     import h5py
 
@@ -41,6 +43,7 @@ def write_chain(path: str | Path, posterior: Posterior, attributes: dict[str, st
             file.attrs["names"] = json.dumps(list(posterior.names))
             file.attrs["kinds"] = json.dumps(posterior.kinds)
             file.attrs["sampling"] = json.dumps(json_safe(posterior.sampling))
+            file.attrs["declared"] = json.dumps(declared_elsewhere(posterior.kinds))
             for name, value in (attributes or {}).items():
                 file.attrs[name] = value
             axes = "replica, step, walker"
@@ -78,6 +81,7 @@ def read_chain(path: str | Path) -> Posterior:
                     value=written,
                     cure="Another version of mufitter wrote it: use that one",
                 )
+            declare_again(json.loads(file.attrs.get("declared", "{}")))
             extra = {name: data[()] for name, data in file["extra"].items()} if "extra" in file else {}
             posterior = Posterior(
                 names=tuple(json.loads(file.attrs["names"])),

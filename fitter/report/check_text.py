@@ -25,7 +25,7 @@ def check_text(config, sample, log_posterior) -> str:
     if sample is not None:
         lines += _data(sample) + _terms(sample)
     if config is not None:
-        lines.append(f"Model: {config.model}, {'with' if config.radiation else 'no'} radiation")
+        lines.append(f"Model: {config.cosmology.name}, {'with' if config.radiation else 'no'} radiation")
     if log_posterior is not None:
         lines += _parameters(log_posterior)
     if sample is not None and sample.warnings:

@@ -14,6 +14,7 @@ from functools import cached_property
 from pathlib import Path
 
 from fitter.errors import InputError
+from fitter.parameters import declare_again
 from fitter.report.summary import SCHEMA
 
 __all__ = ["Run", "RunFolder", "is_run_folder", "read_run", "write_atomic", "writing"]
@@ -315,4 +316,5 @@ def read_run(path: str | Path) -> Run:
     if written != SCHEMA:
         problem = f"the format is not {SCHEMA!r}"
         raise InputError(problem, file=file, value=written, cure="Another version of mufitter wrote it: use that one")
+    declare_again(summary.get("declared"))
     return Run(folder, summary)

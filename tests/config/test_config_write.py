@@ -83,7 +83,7 @@ def test_inputs_that_changed_are_refused(config, project):
     changed, other = input_problems(config.changed({"inputs": recorded}), sample)
     assert "the file has changed: its SHA-256 is now bbbb" in str(changed)
     assert "remove the line to fit what the file holds now" in str(changed)
-    assert "the sample does not read this file" in str(other)
+    assert "this fit does not read this file" in str(other)
 
 
 def test_arrays_have_no_sample_section(project):

@@ -8,7 +8,7 @@ import pytest
 
 import fitter
 from fitter import InputError, Sample, fit
-from fitter.api import load_run
+from fitter.api import TooShort, load_run
 from fitter.report.run_folder import read_run
 
 SAMPLING = {"replicas": 2, "walkers": 32, "target_ess": 400}
@@ -141,3 +141,22 @@ def test_bad_keywords_have_the_messages_of_a_config(sample):
         fit(sample=sample, model="flat_lcdm", parameters={"w": -1})
     with pytest.raises(InputError, match="the key `sample` is missing"):
         fit(model="flat_lcdm")
+
+
+def test_an_interruption_too_early_to_summarise_keeps_the_checkpoint(sample, tmp_path, monkeypatch):
+    from dataclasses import replace
+
+    import fitter.inference.sampling as sampling
+
+    genuine = sampling.sample_posterior
+
+    def cut_short(*arguments, **options):
+        chains = genuine(*arguments, **options)
+        return replace(chains, chain=chains.chain[:, :3], log_posterior=chains.log_posterior[:, :3])
+
+    monkeypatch.setattr(sampling, "sample_posterior", cut_short)
+    with pytest.raises(TooShort, match="stopped after 3 steps.*Continue with --resume") as caught:
+        fit(sample=sample, model="flat_lcdm", sampling=SAMPLING, run_folder=tmp_path / "run")
+    assert caught.value.exit_code == 1
+    assert (tmp_path / "run.unfinished" / "checkpoint").is_dir()
+    assert not (tmp_path / "run").exists()

@@ -193,7 +193,7 @@ def test_an_unknown_option_ends_with_2_in_a_real_process(scratch):
 def test_our_own_faults_end_with_3_and_a_traceback_in_a_file(scratch):
     code = (
         "import sys, fitter.api\n"
-        "def broken(path): raise ZeroDivisionError('the inner works')\n"
+        "def broken(path, **_): raise ZeroDivisionError('the inner works')\n"
         "fitter.api.check = broken\n"
         "from fitter.cli import main\n"
         "sys.argv = ['mufitter', 'check', 'config.yaml']\n"
@@ -209,7 +209,7 @@ def test_our_own_faults_end_with_3_and_a_traceback_in_a_file(scratch):
 
 
 def test_an_interruption_ends_with_130(scratch, monkeypatch):
-    def interrupted(_):
+    def interrupted(_, **__):
         raise KeyboardInterrupt
 
     monkeypatch.setattr("fitter.api.check", interrupted)

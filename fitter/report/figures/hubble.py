@@ -9,6 +9,7 @@ import numpy as np
 
 from fitter.errors import InputError
 from fitter.report.figures.binned import BinnedMeans, binned_means, redshift_edges
+from fitter.report.figures.panels import redshift_ticks
 from fitter.report.figures.style import COLOURS, GREY, in_style, new_figure, width_inches
 from fitter.report.information import fitted_noise, noise_scale
 
@@ -244,8 +245,6 @@ def _draw_references(upper, lower, data: HubbleData, references: Sequence[str]) 
 
 
 def _dress(figure, upper, lower, data: HubbleData) -> None:
-    from matplotlib.ticker import FuncFormatter, NullFormatter
-
     upper.set_xscale("log")
     lower.set_xlim(data.curve_redshift[0], data.curve_redshift[-1])
     spread = 1.4826 * float(np.median(np.abs(data.residual - np.median(data.residual))))
@@ -257,16 +256,10 @@ def _dress(figure, upper, lower, data: HubbleData) -> None:
     lower.set_ylabel("Residual  [mag]")
     lower.set_xlabel("Redshift  $z$")
     upper.tick_params(labelbottom=False, which="both")
-    ticks = [t for t in _TICKS if data.curve_redshift[0] <= t <= data.curve_redshift[-1]]
-    lower.set_xticks(ticks)
-    lower.xaxis.set_major_formatter(FuncFormatter(lambda value, _: f"{value:g}"))
-    lower.xaxis.set_minor_formatter(NullFormatter())
+    redshift_ticks(lower)
     width, height = figure.get_size_inches()
     figure.subplots_adjust(left=0.56 / width, right=1 - 0.1 / width, bottom=0.42 / height, top=1 - 0.1 / height)
     figure.align_ylabels([upper, lower])
-
-
-_TICKS = (0.001, 0.002, 0.005, 0.01, 0.02, 0.05, 0.1, 0.2, 0.5, 1, 2, 5)
 
 
 def hubble_caption(data: HubbleData) -> str:

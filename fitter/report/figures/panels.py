@@ -8,11 +8,12 @@ import numpy as np
 
 from fitter.report.figures.style import LEVELS
 
-__all__ = ["common_exponent", "contours", "density", "draw_density", "plot_range", "runs_of", "thinned"]
+__all__ = ["common_exponent", "contours", "density", "draw_density", "plot_range", "redshift_ticks", "runs_of", "thinned"]
 
 _MOST_DRAWS = 150_000  # more make a slower figure, not a better one
 _BINS = 44
 _SMOOTHING = 1.3  # bins
+_REDSHIFTS = (0.001, 0.002, 0.005, 0.01, 0.02, 0.05, 0.1, 0.2, 0.5, 1, 2, 5)
 
 
 def runs_of(posteriors) -> dict[str, object]:
@@ -143,3 +144,15 @@ def contours(ax, x, y, limits, colour, *, fill: bool = True, bins: int = _BINS) 
         new_fig=False,
         force_range=True,
     )
+
+
+def redshift_ticks(ax) -> None:
+    """Put plain numbers (1, 2, 5 in each decade) on a logarithmic redshift axis whose limits are set."""
+    from matplotlib.ticker import FuncFormatter, NullFormatter
+
+    low, high = ax.get_xlim()
+    ticks = [z for z in _REDSHIFTS if low <= z <= high]
+    # Over many decades not all of them fit.
+    ax.set_xticks([z for z in ticks if f"{z:e}"[0] == "1"] if len(ticks) > 8 else ticks)
+    ax.xaxis.set_major_formatter(FuncFormatter(lambda value, _: f"{value:g}"))
+    ax.xaxis.set_minor_formatter(NullFormatter())

@@ -1,0 +1,203 @@
+"""Two parameters against each other, with the lines that give the plane its meaning."""
+
+from __future__ import annotations
+
+from collections.abc import Callable, Mapping
+from dataclasses import dataclass
+
+import numpy as np
+
+from fitter.errors import InputError
+from fitter.report.facts import axis_label
+from fitter.report.figures.panels import contours, plot_range, runs_of, thinned
+from fitter.report.figures.style import COLOURS, GREY, LEVELS, in_style, new_figure
+
+__all__ = ["PLANES", "no_big_bang", "plane_caption", "plane_figure", "planes_of", "recollapse"]
+
+
+def no_big_bang(omega_m) -> np.ndarray:
+    """Ω_Λ at and above which there was no big bang (Carroll, Press & Turner 1992, eq. 11).
+
+    Parameters
+    ----------
+    omega_m : array_like
+        Matter density, ≥ 0.
+    """
+    m = np.asarray(omega_m, dtype=float)
+    with np.errstate(invalid="ignore", divide="ignore"):
+        x = (1 - m) / m
+        # cosh below Ω_m = ½, cos above; at Ω_m = 0 the limit is 1.
+        root = np.where(m < 0.5, np.cosh(np.arccosh(np.maximum(x, 1)) / 3), np.cos(np.arccos(np.clip(x, -1, 1)) / 3))
+        return np.where(m > 0, 4 * m * root**3, 1.0)
+
+
+def recollapse(omega_m) -> np.ndarray:
+    """Ω_Λ below which the expansion ends in a recollapse (Carroll, Press & Turner 1992, eq. 12)."""
+    m = np.asarray(omega_m, dtype=float)
+    with np.errstate(invalid="ignore", divide="ignore"):
+        angle = np.arccos(np.clip((1 - m) / m, -1, 1)) / 3 + 4 * np.pi / 3
+    return np.where(m > 1, 4 * m * np.cos(angle) ** 3, 0.0)
+
+
+@dataclass(frozen=True)
+class Line:
+    """A labelled line y(x) of a plane; or x = const where ``at`` is given. ``where``: how far along the visible
+    part its label stands, above or below it."""
+
+    label: str
+    y: Callable | None = None
+    at: float | None = None
+    dashes: tuple = (5, 2)
+    where: float = 0.8
+    below: bool = False
+
+
+@dataclass(frozen=True)
+class Plane:
+    """Names of the axes, the least range each shows, and the lines."""
+
+    x: str
+    y: str
+    show: tuple[tuple[float, float], tuple[float, float]]
+    lines: tuple[Line, ...]
+    shade: Callable | None = None  # above this the plane is forbidden
+    shade_label: str = ""
+
+
+PLANES = {
+    "densities": Plane(
+        "omega_m",
+        "omega_lambda",
+        ((0.0, 1.0), (-0.2, 1.8)),
+        (
+            Line("flat", lambda m: 1 - m, where=0.85),
+            Line("$q_0 = 0$, accelerating above", lambda m: m / 2, dashes=(1, 1.5), where=0.3),
+            Line("recollapses", recollapse, dashes=(5, 2, 1, 2), where=0.25, below=True),
+        ),
+        no_big_bang,
+        "no big bang",
+    ),
+    "w": Plane("omega_m", "w", ((0.1, 0.5), (-1.2, -0.8)), (Line("cosmological constant", lambda m: -1 + 0 * m),)),
+    "w0wa": Plane(
+        "w0",
+        "wa",
+        ((-1.1, -0.9), (-0.2, 0.2)),
+        (
+            Line("", lambda w: 0 * w),
+            Line("", at=-1.0),
+            Line("$w_0 + w_a = 0$", lambda w: -w, dashes=(1, 1.5), where=0.12),
+        ),
+    ),
+}
+
+
+def planes_of(posterior) -> list[str]:
+    """Names of the planes that a fit can be drawn in."""
+    return [name for name, plane in PLANES.items() if {plane.x, plane.y} <= set(posterior.kinds) and posterior.kinds[plane.y] == "sampled"]
+
+
+@in_style
+def plane_figure(posteriors, plane: str, *, width: str | float = "single", reference: Mapping[str, float] | None = None):
+    """Draw 68.3 and 95.4 % contours in one of the planes.
+
+    Parameters
+    ----------
+    posteriors : Posterior or mapping of str to Posterior
+        Several are overlaid with a legend.
+    plane : {"densities", "w", "w0wa"}
+    width : {"single", "double"} or float
+    reference : mapping, optional
+        A point to mark, e.g. the truth of a simulation.
+
+    Returns
+    -------
+    matplotlib.figure.Figure
+    """
+    from matplotlib.lines import Line2D
+
+    if plane not in PLANES:
+        raise InputError("unknown plane", value=plane, cure=f"Use one of {', '.join(PLANES)}.")
+    chosen, runs = PLANES[plane], runs_of(posteriors)
+    missing = [n for n in (chosen.x, chosen.y) if any(n not in p.kinds for p in runs.values())]
+    if missing:
+        raise InputError(f"the {plane} plane needs {chosen.x} and {chosen.y}", value=missing[0], cure="Fit a model that has both.")
+    tables = [(thinned(p, chosen.x), thinned(p, chosen.y)) for p in runs.values()]
+    limits = tuple(_limits([t[i] for t in tables], chosen.show[i]) for i in (0, 1))
+    figure = new_figure(width, 0.9)
+    inches, height = figure.get_size_inches()
+    ax = figure.add_axes([0.52 / inches, 0.42 / height, 1 - 0.70 / inches, 1 - 0.54 / height])
+    for i, (x, y) in enumerate(tables):
+        contours(ax, x, y, tuple(plot_range([c]) for c in (x, y)), COLOURS[i % len(COLOURS)], bins=60)
+    ax.set_xlim(*limits[0])
+    ax.set_ylim(*limits[1])
+    ax.set_xlabel(axis_label(chosen.x))
+    ax.set_ylabel(axis_label(chosen.y))
+    _draw_lines(ax, chosen, limits)
+    if reference:
+        ax.plot(reference[chosen.x], reference[chosen.y], marker="+", color="black", ms=7, mew=1.2, zorder=6)
+    if len(runs) > 1:
+        handles = [Line2D([], [], color=COLOURS[i % len(COLOURS)], lw=2, label=label) for i, label in enumerate(runs)]
+        ax.legend(handles=handles, loc="lower right")
+    return figure
+
+
+def _limits(columns, show) -> tuple[float, float]:
+    low, high = plot_range(columns)
+    margin = 0.04 * (max(high, show[1]) - min(low, show[0]))
+    return (low - margin if low < show[0] and show[0] != 0 else min(low, show[0])), (high + margin if high > show[1] else show[1])
+
+
+def _draw_lines(ax, plane: Plane, limits) -> None:
+    x = np.linspace(*limits[0], 400)
+    if plane.shade is not None:
+        edge = plane.shade(x)
+        top = limits[1][1]
+        ax.fill_between(x, edge, max(top, edge.max()), color=GREY, alpha=0.3, lw=0, zorder=0)
+        ax.plot(x, edge, color=GREY, lw=0.8, zorder=0)
+        if edge[0] < top:
+            ax.text(0.03, 0.965, plane.shade_label, transform=ax.transAxes, ha="left", va="top", fontsize=8)
+    for line in plane.lines:
+        style = {"color": "black", "lw": 0.8, "dashes": line.dashes, "zorder": 4}
+        if line.at is not None:
+            ax.axvline(line.at, **style)
+            continue
+        y = line.y(x)
+        ax.plot(x, y, **style)
+        _label_along(ax, line, x, y, limits)
+
+
+def _label_along(ax, line: Line, x, y, limits) -> None:
+    """Write the label along the visible part of its line, turned with it."""
+    visible = np.flatnonzero((y >= limits[1][0]) & (y <= limits[1][1]))
+    if not line.label or len(visible) < 20:
+        return
+    i = visible[int(line.where * (len(visible) - 1))]
+    j = min(i + 5, len(x) - 1)
+    (x0, y0), (x1, y1) = ax.transData.transform([(x[i], y[i]), (x[j], y[j])])
+    ax.annotate(
+        line.label,
+        (x[i], y[i]),
+        xytext=(0, -2 if line.below else 2),
+        textcoords="offset points",
+        rotation=float(np.degrees(np.arctan2(y1 - y0, x1 - x0))),
+        rotation_mode="anchor",
+        ha="center",
+        va="top" if line.below else "bottom",
+        fontsize=8,
+        zorder=5,
+    )
+
+
+def plane_caption(plane: str, labels=()) -> str:
+    """Return the caption of a plane."""
+    chosen = PLANES[plane]
+    text = f"{chosen.y} against {chosen.x}. The contours are the smallest regions that hold {100 * LEVELS[0]:.1f} % and "
+    text += f"{100 * LEVELS[1]:.1f} % of the probability."
+    if plane == "densities":
+        text += " Lines: flat space; q0 = 0 (no acceleration today below it); recollapse; grey: no big bang (Carroll, Press & Turner 1992)."
+    elif plane == "w":
+        text += " Dashed: a cosmological constant, w = -1."
+    else:
+        text += " Dashed: w0 = -1 and wa = 0, a cosmological constant where they cross; dotted: w0 + wa = 0, above which dark energy grows faster "
+        text += "than matter towards the past."
+    return f"{text} Runs: {', '.join(labels)}." if labels else text

@@ -198,6 +198,6 @@ def plane_caption(plane: str, labels=()) -> str:
     elif plane == "w":
         text += " Dashed: a cosmological constant, w = -1."
     else:
-        text += " Dashed: w0 = -1 and wa = 0, a cosmological constant where they cross; dotted: w0 + wa = 0, above which dark energy grows faster "
-        text += "than matter towards the past."
+        text += " Dashed: w0 = -1 and wa = 0, a cosmological constant where they cross; dotted: w0 + wa = 0, above which dark energy grows "
+        text += "faster than matter towards the past."
     return f"{text} Runs: {', '.join(labels)}." if labels else text

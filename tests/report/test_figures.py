@@ -109,6 +109,12 @@ def test_main_parameters_leave_out_what_is_constant_or_follows(fit, build):
     assert main_parameters(flat.posterior) == ["omega_m", "omega_lambda", "H0"]
 
 
+def test_main_parameters_say_nothing_twice(build):
+    flat = build.fit()
+    flat.posterior.extra["omega_k"][:] = 1 - flat.posterior.draws("omega_m")
+    assert main_parameters(flat.posterior) == ["omega_m", "omega_lambda", "H0"]
+
+
 def test_corner_has_a_lower_triangle_with_symbols_and_titles(fit):
     figure = corner_figure(fit.posterior)
     assert len(figure.axes) == 10
@@ -302,7 +308,9 @@ def test_few_data_carry_their_own_errors(build):
     data = hubble_data(fit.log_posterior, fit.optimum)
     assert data.bins is None
     np.testing.assert_allclose(data.error, np.sqrt(np.diag(fit.sample.noise.covariance())))
-    assert_inside_canvas(hubble_figure(fit.log_posterior, fit.optimum))
+    figure = hubble_figure(fit.log_posterior, fit.optimum)
+    assert_inside_canvas(figure)
+    assert figure.axes[1].get_ylim()[1] > np.max(np.abs(data.residual) + data.error)
 
 
 def test_a_fitted_scale_and_scatter_widen_the_errors(build):

@@ -18,18 +18,29 @@ __all__ = ["corner_caption", "corner_figure", "main_parameters"]
 # Of the derived parameters, those that say something beside the sampled ones; the rest follow from them.
 _MAIN_DERIVED = ("omega_k", "omega_lambda", "q0")
 _MOST_PANELS = 7
+_SAME = 0.9999  # correlation of two parameters that say the same
 _LEFT, _BOTTOM, _TOP, _RIGHT, _GAP = 0.62, 0.62, 0.3, 0.1, 0.05  # inches
 
 
 def main_parameters(posterior) -> list[str]:
     """Names for the corner plot: sampled, marginalised, and the main derived ones.
 
-    What hardly varies (a derived parameter that the model fixes) is left out.
+    Left out: what hardly varies, and a derived parameter that repeats another of them (in flat space Ω_Λ is 1 − Ω_m: its panel
+    would be a line).
     """
-    names = [n for n, kind in posterior.kinds.items() if kind == "sampled"]
-    names += [n for n, kind in posterior.kinds.items() if kind == "marginalised"]
-    names += [n for n in _MAIN_DERIVED if posterior.kinds.get(n) == "derived"]
-    return [n for n in names if _varies(posterior, n)][:_MOST_PANELS]
+    names = [n for n, kind in posterior.kinds.items() if kind == "sampled" and _varies(posterior, n)]
+    names += [n for n, kind in posterior.kinds.items() if kind == "marginalised" and _varies(posterior, n)]
+    for name in _MAIN_DERIVED:
+        if posterior.kinds.get(name) == "derived" and _varies(posterior, name) and not any(_repeats(posterior, name, n) for n in names):
+            names.append(name)
+    return names[:_MOST_PANELS]
+
+
+def _repeats(posterior, name: str, other: str) -> bool:
+    """Whether one parameter is a linear function of another."""
+    a, b = (thinned(posterior, n, most=5000) for n in (name, other))
+    both = np.isfinite(a) & np.isfinite(b)
+    return both.sum() > 2 and abs(np.corrcoef(a[both], b[both])[0, 1]) > _SAME
 
 
 def _varies(posterior, name: str) -> bool:

@@ -244,14 +244,24 @@ def _draw_references(upper, lower, data: HubbleData, references: Sequence[str]) 
     return lines
 
 
+def _reach(data: HubbleData) -> float:
+    """Half the height of the residual panel: every error bar, and nearly all of the single points."""
+    if data.error is not None:
+        return 1.06 * float(np.max(np.abs(data.residual) + data.error))
+    spread = 1.4826 * float(np.median(np.abs(data.residual - np.median(data.residual))))
+    return max(4.0 * spread, 1.1 * float(np.max(np.abs(data.bins.mean) + data.bins.error)), 1e-3)
+
+
 def _dress(figure, upper, lower, data: HubbleData) -> None:
+    from matplotlib.ticker import MaxNLocator
+
     upper.set_xscale("log")
     lower.set_xlim(data.curve_redshift[0], data.curve_redshift[-1])
-    spread = 1.4826 * float(np.median(np.abs(data.residual - np.median(data.residual))))
-    reach = max(4.0 * spread, 1.3 * float(np.max(np.abs(data.bins.mean) + data.bins.error)) if data.bins is not None else 0.0, 1e-3)
+    reach = _reach(data)
     lower.set_ylim(-reach, reach)
     margin = 0.04 * float(np.ptp(data.curve))
     upper.set_ylim(min(data.curve.min(), data.shown.min()) - margin, max(data.curve.max(), data.shown.max()) + margin)
+    upper.yaxis.set_major_locator(MaxNLocator("auto", prune="lower"))  # a number at the seam would meet the lower panel's
     upper.set_ylabel(data.label)
     lower.set_ylabel("Residual  [mag]")
     lower.set_xlabel("Redshift  $z$")

@@ -204,7 +204,8 @@ class _Observed:
                 f"keep cuts on {ref}, but `columns` does not map it", column=f"sample.keep.{ref}", cure=f"Add `{ref}: COLUMN` to `columns`"
             )
         if ref in self.values:
-            return CutColumn(ref, None, lambda: self.values[ref], is_redshift=ref in _REDSHIFTS)
+            read = self.numbers if ref in self.unreadable else self.values.get  # the former says again what is wrong
+            return CutColumn(ref, None, lambda: read(ref), is_redshift=ref in _REDSHIFTS)
         position = self.table.columns.position(mapped)
         redshifts = self.table.columns.known(r for r in (self.columns.redshift, self.columns.redshift_helio) if r is not None)
         is_redshift = position in redshifts

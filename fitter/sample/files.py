@@ -32,7 +32,7 @@ def reading(path: Path, shown: str) -> Iterator[None]:
         raise InputError("the file may not be read", file=shown, cure="Change its permissions") from None
     except (EOFError, zlib.error, gzip.BadGzipFile) as problem:
         raise InputError(
-            f"the gzipped file is damaged or cut short ({problem})", file=shown, cure="Fetch it again, or unpack and look at it"
+            f"the compressed file is damaged or cut short ({problem})", file=shown, cure="Fetch it again, or unpack and look at it"
         ) from None
     except OSError as problem:
         raise InputError(f"the file cannot be read: {problem.strerror or problem}", file=shown) from None

@@ -3,7 +3,10 @@
 from __future__ import annotations
 
 import io
+import lzma
 import math
+import struct
+import tokenize
 import zipfile
 from collections.abc import Sequence
 from pathlib import Path
@@ -20,6 +23,9 @@ __all__ = ["compact", "make_symmetric", "read_array", "read_matrix"]
 # Beside √(c_ii c_jj). Rounding to float32 or to six digits in text stays below; what is accepted is averaged away.
 ASYMMETRY = 1e-5
 _BLOCK = 1024
+# What the readers of numpy and zipfile raise for damaged files, beside what `reading` turns into messages.
+_BAD_HEADER = (ValueError, SyntaxError, TypeError, KeyError, MemoryError, RecursionError, struct.error, tokenize.TokenError)
+_BAD_ZIP = (zipfile.BadZipFile, NotImplementedError, RuntimeError, ValueError, struct.error, lzma.LZMAError)
 _CHUNK = 1 << 24  # characters of text at a time
 
 
@@ -103,7 +109,8 @@ def _symmetrise_block(matrix, rows: slice, columns: slice, scale) -> tuple[float
         return 0.0, 0, 0, 0.0, 0.0
     beside = scale[rows, None] * scale[None, columns]
     beside = np.where(beside > 0, beside, np.maximum(np.abs(block), np.abs(mirror)))
-    relative = np.divide(np.abs(block - mirror), beside, out=np.zeros_like(beside), where=unequal)
+    with np.errstate(over="ignore"):
+        relative = np.divide(np.abs(block - mirror), beside, out=np.zeros_like(beside), where=unequal)
     if rows == columns:
         relative = np.tril(relative)
     i, j = np.unravel_index(np.argmax(relative), relative.shape)
@@ -150,7 +157,7 @@ def read_array(path: Path, shown: str):
 def _load(stream, shown: str):
     try:
         return np.lib.format.read_array(stream, allow_pickle=False)
-    except ValueError as problem:
+    except (ValueError, struct.error) as problem:
         raise InputError(f"the array cannot be read: {problem}", file=shown, cure="Check that the file is whole") from None
 
 
@@ -160,8 +167,10 @@ def _array_header(stream, shown: str):
         version = np.lib.format.read_magic(stream)
         read = np.lib.format.read_array_header_1_0 if version == (1, 0) else np.lib.format.read_array_header_2_0
         shape, _, dtype = read(stream)
-    except ValueError as problem:
+    except _BAD_HEADER as problem:
         raise InputError(f"this is no .npy array: {problem}", file=shown, cure="Write it with numpy.save") from None
+    if any(length < 0 for length in shape):
+        raise InputError("this is no .npy array: a length is negative", file=shown, value=shape, cure="Write it with numpy.save")
     return shape, dtype
 
 
@@ -184,7 +193,7 @@ def _from_npz(path: Path, sizes, wanted: str | None, table: str, shown: str):
             n, packed = _size_of(shape, counts, sizes, table, shown)
             with archive.open(f"{name}.npy") as entry:
                 return _unpack(_load(entry, shown), n, packed)
-        except zipfile.BadZipFile as problem:
+        except _BAD_ZIP as problem:
             raise InputError(f"the .npz file is damaged: {problem}", file=shown, cure="Fetch or write it again") from None
 
 

@@ -49,6 +49,8 @@ BODIES = {
     "comments and blank lines between": "! intro\n\nname,z,mu\n\na,0.01,33.1\n% half way\nb,0.5,42.25\n   \n//\nc,1.25,44.5\n\n\n",
     "spare delimiters": "name,z,mu,\na,0.01,33.1,\nb,0.5,42.25,\nc,1.25,44.5,\n",
     "spare delimiters in the rows": "name,z,mu\na,0.01,33.1,\nb,0.5,42.25,\nc,1.25,44.5,\n",
+    "trailing empties left out": "name,z,mu,host\na,0.01,33.1\nb,0.5,42.25,30\nc,1.25,44.5\n",
+    "empty last column": "name\tz\tmu\thost\na\t0.01\t33.1\t\nb\t0.5\t42.25\t\nc\t1.25\t44.5\t\n",
     "signs and exponents": "name z mu\na +1.0e-2 3.31E1\nb .5 42.25\nc 1.25d0 44.5D+00\n",
     "no newline at the end": "name,z,mu\na,0.01,33.1\nb,0.5,42.25\nc,1.25,44.5",
 }

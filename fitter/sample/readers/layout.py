@@ -117,9 +117,10 @@ def find_layout(path: Path, options: TextOptions, wanted: Sequence = (), shown: 
         raise InputError("the table has a header but no rows", file=shown, row=scan.data[0] + 1, cure="Give a table with data")
     is_data = np.zeros(scan.n_lines, dtype=bool)
     is_data[data] = True
-    n_columns = len(split_fields(scan.head[drop_first], delimiter, options.row_tag))
-    note = None
+    n_columns, note = _usual_length(scan.head[drop_first:], delimiter, options.row_tag), None
     if names is not None:
+        if delimiter != WHITESPACE:  # rows may leave out delimiters behind their last value
+            n_columns = max(n_columns, len(names))
         names, note = _names_for(names, n_columns, delimiter, scan, wanted, shown)
     return Layout(delimiter, names, n_columns, np.flatnonzero(~is_data), data + 1, options.row_tag is not None, encoding, note)
 
@@ -142,21 +143,21 @@ def _scan(path: Path, encoding: str, options: TextOptions, shown: str) -> _Scan:
                 scan.header, scan.header_line = stripped[len(header_tag) :].strip(" \t,;|"), number
             elif row_tag:
                 if _begins(stripped, row_tag):
-                    _add_row(scan, number, stripped)
+                    _add_row(scan, number, line)
                 elif len(scan.first_words) < 5:
                     scan.first_words[stripped.split()[0][:30]] = number
             elif stripped.startswith(comments):
                 if not scan.data:
                     scan.comments.append(_uncommented(stripped, comments))
             elif not header_tag or scan.header is not None:
-                _add_row(scan, number, stripped)
+                _add_row(scan, number, line)
     return scan
 
 
 def _add_row(scan: _Scan, number: int, line: str) -> None:
     scan.data.append(number)
     if len(scan.head) < _LOOK_AT:
-        scan.head.append(line)
+        scan.head.append(line.rstrip("\r\n"))  # a blank at the end may be a delimiter
 
 
 def _begins(line: str, tag: str) -> bool:
@@ -194,12 +195,12 @@ def _no_rows(scan: _Scan, options: TextOptions, shown: str) -> InputError:
 def split_fields(line: str, delimiter: str, tag: str | None = None) -> list[str]:
     """Cut a row into its fields, after its tag."""
     if tag:
-        line = line[len(tag) :].lstrip()
+        line = line.lstrip()[len(tag) :].lstrip(" ")
         line = line[1:] if delimiter != WHITESPACE and line[:1] == delimiter else line
     if delimiter == WHITESPACE:
         line, delimiter = line.replace("\t", " ").strip(), " "
     try:
-        fields = next(csv.reader([line], delimiter=delimiter, skipinitialspace=True), [])
+        fields = next(csv.reader([line], delimiter=delimiter, skipinitialspace=True), None) or [""]
     except csv.Error:
         fields = line.split(delimiter)
     return [f.strip() for f in fields]
@@ -218,11 +219,16 @@ def _delimiter(scan: _Scan, options: TextOptions, shown: str) -> str:
     return max(_CANDIDATES, key=lambda d: _plausibility(rows, d, options.row_tag))
 
 
+def _usual_length(rows: Sequence[str], delimiter: str, tag: str | None) -> int:
+    counts = [len(split_fields(row, delimiter, tag)) for row in rows]
+    return max(set(counts), key=lambda n: (counts.count(n), n))
+
+
 def _plausibility(rows: Sequence[str], delimiter: str, tag: str | None) -> tuple[bool, float]:
     """Whether it cuts rows into more than one column, most of them into equally many, and the share of fields that are numbers then."""
     split = [split_fields(row, delimiter, tag) for row in rows]
     counts = [len(fields) for fields in split]
-    usual = max(set(counts), key=counts.count)
+    usual = max(counts, key=counts.count)
     consistent = usual > 1 and counts.count(usual) >= 0.9 * len(counts)
     numbers = sum(is_number(f, decimal_comma=delimiter != ",") for fields in split for f in fields)
     return consistent, numbers / max(sum(counts), 1)
@@ -250,7 +256,7 @@ def _header(scan: _Scan, options: TextOptions, delimiter: str, wanted: list[str]
 
 def _commented_header(scan: _Scan, options: TextOptions, delimiter: str, wanted: list[str]):
     """A comment above the data that has a word for each column: the one with the wanted names, else the last."""
-    n_columns = len(split_fields(scan.head[0], delimiter, options.row_tag))
+    n_columns = _usual_length(scan.head, delimiter, options.row_tag)
     splits = [f for line in scan.comments for f in (split_fields(line, delimiter), line.replace(",", " ").split())]
     named = [f for f in splits if len(f) >= n_columns and set(wanted) & set(f)]
     if named:

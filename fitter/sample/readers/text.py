@@ -77,7 +77,7 @@ def _rows(path: Path, layout: Layout, options: TextOptions):
         for skipped, line in zip(skip.tolist(), text, strict=True):
             if skipped:
                 continue
-            line = line.strip("\r\n") if tag is None else line.strip()[len(tag) :].lstrip(" ")
+            line = line.strip("\r\n") if tag is None else line.strip("\r\n").lstrip()[len(tag) :].lstrip(" ")
             yield line if tag is None or layout.delimiter == WHITESPACE else line.removeprefix(layout.delimiter)
 
 

@@ -261,7 +261,9 @@ def _dress(figure, upper, lower, data: HubbleData) -> None:
     lower.set_ylim(-reach, reach)
     margin = 0.04 * float(np.ptp(data.curve))
     upper.set_ylim(min(data.curve.min(), data.shown.min()) - margin, max(data.curve.max(), data.shown.max()) + margin)
-    upper.yaxis.set_major_locator(MaxNLocator("auto", prune="lower"))  # a number at the seam would meet the lower panel's
+    upper.yaxis.set_major_locator(
+        MaxNLocator("auto", steps=[1, 2, 5, 10], prune="lower")
+    )  # a number at the seam would meet the lower panel's
     upper.set_ylabel(data.label)
     lower.set_ylabel("Residual  [mag]")
     lower.set_xlabel("Redshift  $z$")

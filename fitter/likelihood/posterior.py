@@ -21,6 +21,8 @@ __all__ = ["LogPosterior", "REFERENCE_H0"]
 # Radiation needs an H0 even where the data have no scale; Ω_r changes by 1e-5 over any sensible range.
 REFERENCE_H0 = 70.0
 _MAGNITUDE = "absolute_magnitude"
+_SCATTER = "intrinsic_scatter"
+_BLOCK = 16_384
 
 
 @dataclass(frozen=True)
@@ -64,10 +66,10 @@ class LogPosterior:
         self._set_up_linear(priors)
         self._set_up_prior_box()
         scatter = None
-        if "intrinsic_scatter" in self.names:
+        if _SCATTER in self.names:
             from fitter.likelihood.scatter import scatter_nodes
 
-            scatter = scatter_nodes(self.design, _scatter_limit(priors["intrinsic_scatter"]))
+            scatter = scatter_nodes(self.design, _scatter_limit(priors[_SCATTER]))
         self.kernel = Kernel(self.design, model, scatter)
 
     @classmethod
@@ -95,7 +97,7 @@ class LogPosterior:
             _assign(parameter.name, wanted.pop(parameter.name, parameter.default_prior), priors, fixed)
         if _MAGNITUDE in wanted and _takes_magnitude(sample):
             _assign(_MAGNITUDE, wanted.pop(_MAGNITUDE), priors, fixed)
-        for name, spec in (("intrinsic_scatter", sample.intrinsic_prior), ("covariance_scale", sample.covariance_scale_prior)):
+        for name, spec in ((_SCATTER, sample.intrinsic_prior), ("covariance_scale", sample.covariance_scale_prior)):
             if spec is not None:
                 _assign(name, wanted.pop(name, spec), priors, fixed)
         _refuse_unknown(wanted, sample, model)
@@ -109,7 +111,8 @@ class LogPosterior:
         """Decide what becomes of the zero point: a flat template, a Gaussian one, a sampled column, or a constant."""
         s = self.sample
         ones, none = np.ones((s.n, 1)), np.zeros((s.n, 0))
-        flat, gaussian, linear, shift = none, s.noise.modes, none, 0.0
+        noise = s.noise if _SCATTER not in self.fixed else s.noise.plus_variance(self.fixed[_SCATTER] ** 2)
+        flat, gaussian, linear, shift = none, noise.modes, none, 0.0
         names = list(s.noise.mode_names)
         self._magnitude_template = None
         prior = priors.get(_MAGNITUDE)
@@ -138,7 +141,7 @@ class LogPosterior:
         self.n_data = s.n
         self.n_parameters = len(self.names) + (self._n_flat or self._magnitude_template is not None)
         self.design = Design(
-            s.redshift, s.redshift_helio, s.data, s.calibrator_modulus, s.noise, flat, gaussian, linear, shift
+            s.redshift, s.redshift_helio, s.data, s.calibrator_modulus, noise, flat, gaussian, linear, shift
         )  # fmt: skip
 
     def _require_calibrators(self):
@@ -161,7 +164,7 @@ class LogPosterior:
         for i, name in enumerate(self.names):
             if name in ("H0", "covariance_scale"):
                 self._low[i] = max(self._low[i], np.nextafter(0, 1))
-            elif name == "intrinsic_scatter":
+            elif name == _SCATTER:
                 self._low[i] = max(self._low[i], 0.0)
 
     # ------------------------------------------------------------------ densities
@@ -221,12 +224,12 @@ class LogPosterior:
         h0 = self._h0(theta)
         offset = np.zeros(w) if h0 is None else hubble_term(h0)
         linear = theta[:, [self.names.index(_MAGNITUDE)]] if _MAGNITUDE in self.names else np.zeros((w, 0))
-        sigma = self._layout.column(theta, "intrinsic_scatter") if self._scatter_is_free else None
+        sigma = self._layout.column(theta, _SCATTER) if self._scatter_is_free else None
         return self._cosmology(theta), self._omega_r(theta, h0), offset, linear, sigma
 
     @property
     def _scatter_is_free(self):
-        return "intrinsic_scatter" in self.names
+        return _SCATTER in self.names
 
     def _cosmology(self, theta):
         """(W, p) parameters of the model, sampled or fixed."""
@@ -291,7 +294,11 @@ class LogPosterior:
         h0 = self._h0(theta)
         grid = Grid(z.max(), 256)
         f, _, inside = log_distance(self.model, self._cosmology(theta), grid, self._omega_r(theta, h0))
-        mu = f @ grid.interpolation(np.log1p(z)).T + data_term(z, z if z_helio is None else z_helio)
+        mu = np.empty((len(theta), len(z)))
+        for start in range(0, len(z), _BLOCK):  # the interpolation matrix of a million redshifts would take 2 GB
+            rows = slice(start, start + _BLOCK)
+            mu[:, rows] = f @ grid.interpolation(np.log1p(z[rows])).T
+        mu += data_term(z, z if z_helio is None else z_helio)
         mu[~inside] = np.nan
         return mu + hubble_term(REFERENCE_H0 if h0 is None else h0)[..., None]
 
@@ -358,8 +365,8 @@ def _why_not(name, sample, model):
     if sample.distance_scale == "relative" and name in ("H0", _MAGNITUDE):
         problem = f"{name} cannot be measured on a relative distance scale: H0 and the absolute magnitude only enter as one offset"
         return problem, "Remove it, or say distance_scale: absolute or calibrated if the data are anchored."
-    if name in ("intrinsic_scatter", "covariance_scale"):
-        term = "intrinsic" if name == "intrinsic_scatter" else "covariance_scale"
+    if name in (_SCATTER, "covariance_scale"):
+        term = "intrinsic" if name == _SCATTER else "covariance_scale"
         return f"{name} is not part of this fit", f"Add an uncertainty term {{{term}: PRIOR}} to the sample."
     if name in PARAMETERS:
         return f"{model.name} has no free parameter {name}", f"Its parameters are {own}."

@@ -180,6 +180,15 @@ def test_structured_noise_and_free_scatter(survey):
     np.testing.assert_allclose(lp.log_likelihood([[0.3, 0.2]]), expected, atol=5e-7)
 
 
+def test_a_scatter_held_at_a_number_is_in_the_covariance(survey):
+    z, mu, covariance = survey
+    sample = Sample.from_arrays(z, mu, covariance=covariance, intrinsic={"uniform": [0, 0.5]})
+    held = LogPosterior.build(sample, "flat_lcdm", {"intrinsic_scatter": 0.2})
+    free = LogPosterior.build(sample, "flat_lcdm")
+    assert held.names == ("omega_m",)
+    np.testing.assert_allclose(held.log_likelihood([[0.3]]), free.log_likelihood([[0.3, 0.2]]), atol=5e-7)
+
+
 def test_zero_points_get_a_posterior(survey):
     z, mu, _ = survey
     noise = Noise(np.full(N, 0.1**2), modes=0.05 * (np.arange(N) < 20)[:, None], mode_names=("zero_point:low",))

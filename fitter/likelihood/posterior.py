@@ -274,6 +274,12 @@ class LogPosterior:
                 out[name] = amplitude[:, column] * np.abs(self.sample.noise.modes[:, column]).max()
         return out
 
+    def cosmology(self, theta):
+        """The model's own parameters (W, p), Ω_r (W,), and H0 (W,) in km/s/Mpc or None on a relative scale."""
+        theta = np.atleast_2d(np.asarray(theta, float))
+        h0 = self._h0(theta)
+        return self._cosmology(theta), self._omega_r(theta, h0), h0
+
     @property
     def derived_names(self) -> tuple[str, ...]:
         return derived_names(self.model, self._has_h0)

@@ -311,7 +311,7 @@ def _from_text(path: Path, sizes, table: str, shown: str):
     """Read the numbers in their order, whatever the lines: N on the first, or N² alone, or a triangle."""
     values, total, first_alone = _numbers(path, max(n * n for n in sizes) + 1, shown)
     first = values[0] if total else math.nan
-    stated = int(first) if first_alone and first == int(first) and first > 0 else None
+    stated = int(first) if first_alone and 0 < first < 1e7 and first == int(first) else None
     for n in sizes:
         for count, packed in ((n * n, False), (n * (n + 1) // 2, True)):
             if stated == n and total == count + 1:

@@ -49,7 +49,7 @@ def _read(path: Path, layout: Layout, columns: Columns, as_numbers, as_texts, sh
     needed = sorted({*as_numbers, *as_texts})
     try:
         found = _parse(path, layout, options, as_numbers, needed)
-    except ValueError:  # a field is no number, or pandas cannot tell the rows apart
+    except (ValueError, IndexError):  # a field is no number, or pandas trips over rows of unequal length
         found = _split(path, layout, options, needed)
     floats, problems = {}, {}
     for position in as_numbers:

@@ -18,7 +18,7 @@ import numpy as np
 
 from fitter.likelihood.design import Design
 
-__all__ = ["Compressed", "compress", "stacked_qr"]
+__all__ = ["Compressed", "compress", "compress_many", "stacked_qr"]
 
 _ROWS = 8192  # rows of the design held at once
 
@@ -94,31 +94,52 @@ def compress(design: Design, noise=None, *, rotated=None) -> Compressed:
     -----
     Cost O(N² m) for a dense covariance, O(N m²) for a diagonal one, m ≈ 260 + templates; memory of the latter O(m) rows.
     """
+    return compress_many(design, design.data[None], noise, rotated=rotated)[0]
+
+
+def compress_many(design: Design, data, noise=None, *, rotated=None) -> list[Compressed]:
+    """Factor the whitened design once for M data vectors: each is one more column, not one more factorisation.
+
+    Parameters
+    ----------
+    design : Design
+        All but its data is used.
+    data : (M, N) array
+        What was observed instead, mag.
+    noise : Noise, optional
+        A covariance other than the design's own (same modes).
+    rotated : (N, m + M) array, optional
+        ``design.block(data=data)`` in the basis in which `noise` is diagonal.
+
+    Returns
+    -------
+    list of M Compressed
+        They share their matrices.
+    """
     noise = design.noise if noise is None else noise
     n, k, p = design.n, design.gaussian.shape[1], design.flat.shape[1]
     m = k + p
-    factor = stacked_qr(_whitened_blocks(design, noise, rotated))
-    nuisance_r = factor[:m, :m]
+    factor = stacked_qr(_whitened_blocks(design, noise, data, rotated))
+    nuisance_r = factor[:m, :m].copy()
     pivots = np.log(np.abs(np.diag(nuisance_r)))
-    log_norm = -0.5 * (n - p) * np.log(2 * np.pi) - 0.5 * noise.log_det - pivots.sum()
+    log_norm = float(-0.5 * (n - p) * np.log(2 * np.pi) - 0.5 * noise.log_det - pivots.sum())
+    q = factor.shape[1] - m - len(data)
+    nuisance_x, nuisance_y = factor[:m, m : m + q].copy(), factor[:m, m + q :].T.copy()
     rest = factor[m:, m:]
-    q = rest.shape[1] - 1
-    leftover = rest[q:, -1]
-    return Compressed(
-        np.ascontiguousarray(rest[:q, :-1]), rest[:q, -1].copy(), float(leftover @ leftover), float(log_norm),
-        nuisance_r.copy(), factor[:m, m:-1].copy(), factor[:m, -1].copy(),
-    )  # fmt: skip
+    r, y = np.ascontiguousarray(rest[:q, :q]), rest[:q, q:].T.copy()
+    rho2 = np.einsum("ij,ij->j", rest[q:, q:], rest[q:, q:])
+    return [Compressed(r, y[i], float(rho2[i]), log_norm, nuisance_r, nuisance_x, nuisance_y[i]) for i in range(len(data))]
 
 
-def _whitened_blocks(design, noise, rotated):
+def _whitened_blocks(design, noise, data, rotated):
     """The prior rows of the Gaussian templates, then the whitened rows."""
     k = design.gaussian.shape[1]
-    width = design.n_nuisance + design.grid.order + 1 + design.linear.shape[1] + 1
+    width = design.n_nuisance + design.grid.order + 1 + design.linear.shape[1] + len(data)
     if k:
         yield np.eye(k, width)
     if not noise.is_diagonal:
-        yield noise.whiten(design.block())
+        yield noise.whiten(design.block(data=data))
         return
     for start in range(0, design.n, _ROWS):
         rows = slice(start, min(start + _ROWS, design.n))
-        yield noise.whiten(design.block(rows) if rotated is None else rotated[rows], rows)
+        yield noise.whiten(design.block(rows, data) if rotated is None else rotated[rows], rows)

@@ -85,8 +85,9 @@ class Design:
         term = data_term(self.redshift[rows], self.redshift_helio[rows])
         return np.where(np.isnan(calibrator), term, calibrator) + self.shift
 
-    def block(self, rows=slice(None)) -> np.ndarray:
-        """Columns [U, T, B, x, d − B f_ref] for those rows."""
+    def block(self, rows=slice(None), data=None) -> np.ndarray:
+        """Columns [U, T, B, x, d − B f_ref] for those rows; `data` (M, N) in place of the design's own makes M last columns."""
         b = self.interpolation(rows)
-        d = self.data[rows] - self.known(rows) - b @ self.reference
-        return np.column_stack([self.gaussian[rows], self.flat[rows], b, self.linear[rows], d])
+        data = self.data[None] if data is None else np.asarray(data)
+        d = data[:, rows] - self.known(rows) - b @ self.reference
+        return np.column_stack([self.gaussian[rows], self.flat[rows], b, self.linear[rows], d.T])

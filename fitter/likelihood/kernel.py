@@ -2,13 +2,14 @@
 
 from __future__ import annotations
 
-from dataclasses import dataclass
+from collections.abc import Iterator
+from dataclasses import dataclass, replace
 
 import numpy as np
 
 from fitter.cosmology.distances import log_distance
 from fitter.cosmology.grid import Grid
-from fitter.likelihood.compression import Compressed, compress
+from fitter.likelihood.compression import Compressed, compress, compress_many
 from fitter.likelihood.design import FINEST_ORDER, Design
 from fitter.likelihood.direct import Direct
 
@@ -74,15 +75,27 @@ class Kernel:
     model : Model
     scatter : ScatterNodes, optional
         Where the intrinsic scatter is free.
+    compressed : Compressed, optional
+        The compression of the design, where it is known already.
     """
 
-    def __init__(self, design: Design, model, scatter=None):
+    def __init__(self, design: Design, model, scatter=None, compressed: Compressed | None = None):
         self.design, self.model, self.scatter = design, model, scatter
-        finest = scatter.compressed if scatter else (compress(design),)
+        finest = scatter.compressed if scatter else (compressed or compress(design),)
         self.levels = tuple(_Level.build(design, finest, order) for order in ORDERS)
         self.log_norms = np.array([c.log_norm for c in finest])
         self.counts = {"evaluations": 0, "refined": 0, "direct": 0, "excluded": 0}
         self._direct = Direct(design, design.noise)
+
+    def with_data(self, data) -> Iterator[Kernel]:
+        """The same likelihood for each of M other data vectors (M, N): the covariance is factored once for all."""
+        designs = (replace(self.design, data=row) for row in data)
+        if self.scatter:
+            nodes = self.scatter.with_data(self.design, data)
+            yield from (Kernel(design, self.model, scatter) for design, scatter in zip(designs, nodes, strict=True))
+        else:
+            tables = compress_many(self.design, data)
+            yield from (Kernel(design, self.model, compressed=table) for design, table in zip(designs, tables, strict=True))
 
     def __call__(self, theta, omega_r, offset, linear, sigma=None):
         """Evaluate W points.

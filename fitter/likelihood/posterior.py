@@ -2,7 +2,9 @@
 
 from __future__ import annotations
 
-from dataclasses import dataclass
+import copy
+from collections.abc import Iterator
+from dataclasses import dataclass, replace
 
 import numpy as np
 
@@ -327,6 +329,43 @@ class LogPosterior:
         predicted = self.distance_modulus(theta[:1], s.redshift, s.redshift_helio)[0]
         predicted = np.where(calibrator, s.calibrator_modulus, predicted)
         return s.data - predicted - self.zero_point(theta)
+
+    # ------------------------------------------------------------------ other data
+
+    def with_data(self, data) -> Iterator[LogPosterior]:
+        """The posterior given each of M other data vectors (M, N), all else being equal: one factorisation for all of them."""
+        data = np.atleast_2d(np.asarray(data, float))
+        for row, kernel in zip(data, self.kernel.with_data(data), strict=True):
+            other = copy.copy(self)
+            other.sample, other.design, other.kernel = replace(self.sample, data=row), kernel.design, kernel
+            yield other
+
+    def expected(self, theta):
+        """The data that theta predicts, (W, N) mag.
+
+        Marginalised parameters are at the mean of their prior; a flat one, which has none, at its best value.
+        """
+        theta = np.atleast_2d(np.asarray(theta, float))
+        s = self.sample
+        predicted = self.distance_modulus(theta, s.redshift, s.redshift_helio)
+        calibrator = ~np.isnan(s.calibrator_modulus)
+        predicted[:, calibrator] = s.calibrator_modulus[calibrator]
+        if self._n_flat:
+            flat = self.kernel.nuisance(*self._ingredients(theta))[:, -1]
+            return predicted + (flat if self._has_h0 else flat - hubble_term(REFERENCE_H0))[:, None]
+        magnitude = self._layout.column(theta, _MAGNITUDE)
+        return predicted + (self.design.shift if magnitude is None else magnitude[:, None])
+
+    def simulate(self, theta, rng: np.random.Generator):
+        """One mock data vector for each row of theta, (W, N) mag: the prediction and a draw of everything that scatters."""
+        theta = np.atleast_2d(np.asarray(theta, float))
+        scatter = self.design.noise.draw(rng, len(theta))
+        if self._scatter_is_free:
+            scatter = scatter + self._layout.column(theta, _SCATTER)[:, None] * rng.standard_normal(scatter.shape)
+        extra = self.design.gaussian[:, self.sample.noise.modes.shape[1] :]  # the prior of the absolute magnitude
+        scatter = scatter + rng.standard_normal((len(theta), extra.shape[1])) @ extra.T
+        scale = self._layout.column(theta, "covariance_scale")
+        return self.expected(theta) + (scatter if scale is None else scatter * scale[:, None])
 
     def prior_excluded_fraction(self, rng: np.random.Generator, draws: int = 2000) -> float:
         """Share of the prior that is outside the model's range (no big bang, or an antipode among the data)."""

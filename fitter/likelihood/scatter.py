@@ -12,7 +12,7 @@ import numpy as np
 
 from fitter.cosmology.grid import Grid
 from fitter.errors import MufitterError
-from fitter.likelihood.compression import Compressed, compress
+from fitter.likelihood.compression import Compressed, compress, compress_many
 from fitter.likelihood.design import Design
 
 __all__ = ["ScatterNodes", "scatter_nodes"]
@@ -29,6 +29,12 @@ class ScatterNodes:
     grid: Grid
     compressed: tuple[Compressed, ...]
     error: float
+
+    def with_data(self, design: Design, data) -> list[ScatterNodes]:
+        """The same nodes for M other data vectors (M, N), all compressed together."""
+        variance, rotated = _diagonal_basis(design, data)
+        tables = [compress_many(design, data, Diagonal(variance + (self.scale * np.sinh(t)) ** 2), rotated=rotated) for t in self.grid.u]
+        return [ScatterNodes(self.scale, self.grid, nodes, self.error) for nodes in zip(*tables, strict=True)]
 
     def weights(self, sigma) -> np.ndarray:
         """(W, m) interpolation weights for scatters `sigma`, (W,)."""
@@ -58,7 +64,7 @@ def scatter_nodes(design: Design, sigma_max: float) -> ScatterNodes:
     raise MufitterError(f"the free intrinsic scatter could not be tabulated: error {error:.1e} in −2 ln L with {order} nodes")
 
 
-def _diagonal_basis(design):
+def _diagonal_basis(design, data=None):
     """Variances, and the design's columns in the basis where the fixed covariance is diagonal."""
     noise = design.noise
     if noise.is_diagonal:
@@ -69,7 +75,7 @@ def _diagonal_basis(design):
     fixed = np.array(noise.dense)
     fixed[np.diag_indices(noise.n)] += noise.variance
     variance, vectors = eigh(fixed, overwrite_a=True)
-    return variance, vectors.T @ design.block()
+    return variance, vectors.T @ design.block(data=data)
 
 
 def _at(design, variance, rotated, sigma):

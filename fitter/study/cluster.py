@@ -1,0 +1,73 @@
+"""Tasks on a Dask cluster, the extra ``mufitter[cluster]``: the only file that imports ``distributed``."""
+
+from __future__ import annotations
+
+from collections.abc import Iterator
+from typing import Any
+
+from fitter.errors import InputError
+from fitter.study.tasks import Tasks, call, give_up, require_scheduler, task_seed
+
+__all__ = ["on_cluster"]
+
+_CONNECT_SECONDS = 10
+
+
+def on_cluster(tasks: Tasks, waiting, address: str) -> Iterator[tuple[str, Any]]:
+    """Run tasks on the workers of a scheduler; what they share is sent once to each worker.
+
+    A task whose worker dies runs again elsewhere; what was shared is sent anew where every worker that held it is gone.
+    """
+    require_scheduler(address)
+    client = _client(address)
+    try:
+        waiting, lost = dict(waiting), dict.fromkeys(waiting, 0)
+        while waiting:
+            yield from _round(client, tasks, waiting, lost)
+            give_up(lost)
+    finally:
+        client.close()
+
+
+def _client(address: str):
+    try:
+        from distributed import Client
+    except ImportError:
+        raise InputError(
+            "a scheduler needs the package `distributed`, which is not installed", value=address, cure="pip install 'mufitter[cluster]'"
+        ) from None
+    try:
+        client = Client(address, timeout=_CONNECT_SECONDS, set_as_default=False)
+    except (OSError, ValueError) as error:
+        raise InputError(f"the scheduler does not answer: {error}", value=address, cure="Is it running, and its port open?") from None
+    if not client.scheduler_info(n_workers=-1)["workers"]:
+        client.close()
+        raise InputError("the scheduler has no workers", value=address, cure="Start some, e.g. `dask worker ADDRESS`")
+    return client
+
+
+def _round(client, tasks: Tasks, waiting, lost) -> Iterator[tuple[str, Any]]:
+    """Submit all that waits and yield what ends well; what is lost stays in `waiting`."""
+    from distributed import as_completed
+
+    shared = client.scatter([tasks.shared], broadcast=True, hash=False)[0]
+    futures = {
+        client.submit(call, tasks.function, shared, argument, task_seed(tasks.seed, key), pure=False, retries=3): key
+        for key, argument in waiting.items()
+    }
+    for future in as_completed(list(futures)):
+        key = futures[future]
+        if future.status == "finished":
+            yield key, future.result()
+            del waiting[key]
+            future.release()
+        elif future.status == "error" and not _worker_died(future.exception()):
+            raise future.exception()
+        else:
+            lost[key] += 1
+
+
+def _worker_died(error) -> bool:
+    from distributed.scheduler import KilledWorker
+
+    return isinstance(error, KilledWorker)

@@ -6,11 +6,12 @@ from collections.abc import Iterator
 from typing import Any
 
 from fitter.errors import InputError
-from fitter.study.tasks import Tasks, call, give_up, require_scheduler, task_seed
+from fitter.study.tasks import Lost, Tasks, call, give_up, require_scheduler, task_seed
 
 __all__ = ["on_cluster"]
 
 _CONNECT_SECONDS = 10
+_BARREN_ROUNDS = 4
 
 
 def on_cluster(tasks: Tasks, waiting, address: str) -> Iterator[tuple[str, Any]]:
@@ -21,10 +22,14 @@ def on_cluster(tasks: Tasks, waiting, address: str) -> Iterator[tuple[str, Any]]
     require_scheduler(address)
     client = _client(address)
     try:
-        waiting, lost = dict(waiting), dict.fromkeys(waiting, 0)
+        waiting, lost, barren = dict(waiting), dict.fromkeys(waiting, 0), 0
         while waiting:
+            before = len(waiting)
             yield from _round(client, tasks, waiting, lost)
+            barren = barren + 1 if len(waiting) == before else 0
             give_up(lost)
+            if barren == _BARREN_ROUNDS:
+                raise Lost(f"the workers of {address} died {barren} times before any task was done: have they enough memory?")
     finally:
         client.close()
 
@@ -48,26 +53,25 @@ def _client(address: str):
 
 def _round(client, tasks: Tasks, waiting, lost) -> Iterator[tuple[str, Any]]:
     """Submit all that waits and yield what ends well; what is lost stays in `waiting`."""
+    from concurrent.futures import CancelledError
+
     from distributed import as_completed
+    from distributed.scheduler import KilledWorker
 
     shared = client.scatter([tasks.shared], broadcast=True, hash=False)[0]
     futures = {
         client.submit(call, tasks.function, shared, argument, task_seed(tasks.seed, key), pure=False, retries=3): key
         for key, argument in waiting.items()
     }
-    for future in as_completed(list(futures)):
+    for future in as_completed(list(futures), loop=client.loop):
         key = futures[future]
-        if future.status == "finished":
-            yield key, future.result()
-            del waiting[key]
-            future.release()
-        elif future.status == "error" and not _worker_died(future.exception()):
-            raise future.exception()
-        else:
+        try:
+            result = future.result()
+        except CancelledError:
+            continue  # the last worker that held what is shared is gone: another round
+        except KilledWorker:
             lost[key] += 1
-
-
-def _worker_died(error) -> bool:
-    from distributed.scheduler import KilledWorker
-
-    return isinstance(error, KilledWorker)
+            continue
+        yield key, result
+        del waiting[key]
+        future.release()

@@ -15,15 +15,17 @@ GRID_ERROR = {"wa": 0.02}
 
 
 def _check_minimum(result, expected, direct):
-    """χ² at the optimum, within 0.005 of the reference; lower only with proof.
+    """χ² at the optimum: within 0.005 of the reference, or lower with proof.
 
-    The smallest χ² on a grid lies above the true minimum: on the coarse grid of three parameters by up to 0.01.
+    The reference's is the smallest on a grid, which lies above the true minimum: in three parameters a grid of six million
+    points (125 × 160 × 300 over the priors) still misses 0.016 on the VPEC release. So there a lower value is allowed, and
+    a direct sum at the optimum shows for every case that the χ² is really attained.
     """
     names = result.log_posterior.names
     found = result.best_fit
     chi2 = result.summary()["best_fit"]["chi2"]
     assert chi2 < expected["chi2_min"] + 0.005
-    assert chi2 > expected["chi2_min"] - (0.01 if len(names) == 3 else 0.005)
+    assert chi2 > expected["chi2_min"] - (0.02 if len(names) == 3 else 0.005)
     assert chi2 == pytest.approx(direct(result.config.model, [found[n] for n in names]), abs=1e-6)
 
 

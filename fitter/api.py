@@ -13,6 +13,7 @@ from typing import TYPE_CHECKING, Any, Literal
 
 import numpy as np
 
+from fitter.config.figures import figure_problems
 from fitter.config.load import config_from_mapping, load_config, raise_all, validate
 from fitter.config.parameters import FLAT
 from fitter.config.settings import Config
@@ -233,6 +234,7 @@ class _Job:
             raise_all(input_problems(config, sample))
         log_posterior = _likelihood(config, sample)
         config.sampling.check_dimension(len(log_posterior.names))
+        raise_all(figure_problems(config, log_posterior))
         return cls(config, sample, log_posterior, folder, progress)
 
     @cached_property
@@ -346,7 +348,7 @@ class _Job:
             remove_checkpoint(path)
         for name, text in (("summary.md", summary_markdown(summary)), ("summary.csv", summary_csv(summary))):
             write_atomic(path / name, text)
-        _draw(result, path / "figures")
+        _draw(result, path)
         # Last: a folder with this file is complete.
         write_atomic(path / "summary.json", summary_json(summary))
         for text in result.warnings:
@@ -361,16 +363,16 @@ def _likelihood(config: Config, sample: Sample) -> LogPosterior:
 
 
 def _draw(result: Fit, folder: Path) -> None:
-    """Draw the figures of a fit, each with its caption beside it."""
-    from fitter.report.figures.corner import corner_caption, main_parameters
-    from fitter.report.figures.hubble import draw_hubble, hubble_caption, hubble_data
-    from fitter.report.figures.style import save_figure, styled
+    """Keep what the figures of a fit show, and draw those that were asked for."""
+    from fitter.report.facts import relabelled
+    from fitter.report.figures.data import DATA_FILE, collect, write_figure_data
+    from fitter.report.figures.draw import Drawable, drawings, save_drawings
 
-    with styled():
-        if main_parameters(result.chains):
-            save_figure(result.corner(), folder / "corner", corner_caption(result.chains))
-        data = hubble_data(result.log_posterior, result.optimum, result.chains)
-        save_figure(draw_hubble(data), folder / "hubble_diagram", hubble_caption(data))
+    data = collect(result.log_posterior, result.optimum, result.chains)
+    write_figure_data(folder / DATA_FILE, data)
+    how, run = result.config.figures, Drawable(result.chains, data)
+    with relabelled(result.config.labels):
+        save_drawings(drawings(run, how.only, how, strict=False), folder / "figures", how, style=result.config.style_file)
 
 
 class _RunLog(AbstractContextManager):
@@ -457,6 +459,7 @@ def _check_likelihood(config: Config, sample: Sample) -> Check:
     try:
         log_posterior = _likelihood(config, sample)
         config.sampling.check_dimension(len(log_posterior.names))
+        problems += figure_problems(config, log_posterior)
     except InputError as error:
         return Check((*problems, *getattr(error, "errors", [error])), config, sample)
     return Check(tuple(problems), config, sample, log_posterior)

@@ -117,6 +117,11 @@ def declare_again(stored: Mapping[str, Mapping] | None) -> None:
     declare(Parameter(**given) for given in (stored or {}).values())
 
 
+def _upright(text: str) -> str:
+    """Free text inside a formula: what would end or change it is escaped or left out."""
+    return "".join("\\" + c if c in "_%&#" else r"\ " if c == " " else "" if c in "\\{}$^~" else c for c in text)
+
+
 def parameter(name: str) -> Parameter:
     """The declaration of a parameter; zero points are made for each group by name.
 
@@ -127,6 +132,6 @@ def parameter(name: str) -> Parameter:
     """
     if name.startswith(ZERO_POINT):
         group = name.removeprefix(ZERO_POINT)
-        latex = r"\Delta_{{\mathrm{{{}}}}}".format(group.replace("_", r"\_"))
+        latex = rf"\Delta_{{\mathrm{{{_upright(group)}}}}}"
         return Parameter(name, latex, f"Δ({group})", "mag", f"zero-point shift of {group}", None, r"\mathrm{mag}")
     return PARAMETERS[name] if name in PARAMETERS else _OWN[name]

@@ -16,6 +16,7 @@ from fitter.config.yaml_file import Document
 from fitter.cosmology import Model, get_model
 from fitter.inference.settings import SamplingSettings
 from fitter.parameters import PARAMETERS
+from fitter.report.figures.settings import FigureSettings, Labels
 from fitter.sample.settings import SampleSettings
 
 __all__ = ["Config"]
@@ -76,6 +77,12 @@ class Config(BaseModel):
     compare: Annotated[CompareSettings, BeforeValidator(_empty_is_default)] = Field(
         default_factory=CompareSettings, description="How `mufitter compare` weighs the variants."
     )
+    figures: Annotated[FigureSettings, BeforeValidator(_empty_is_default)] = Field(
+        default_factory=FigureSettings, description="Which figures a fit draws, how wide, in which formats and style."
+    )
+    labels: Annotated[Labels, BeforeValidator(_empty_is_default)] = Field(
+        default_factory=dict, description="For a parameter another LaTeX symbol, without dollar signs; figures, tables and text follow."
+    )
     inputs: dict[str, str] = Field(
         default_factory=dict,
         description="SHA-256 of input files by path, as a run folder records them; a file that has changed since is refused.",
@@ -95,6 +102,11 @@ class Config(BaseModel):
     def folder(self) -> Path:
         """What the paths of inputs are relative to."""
         return self._folder
+
+    @property
+    def style_file(self) -> Path | None:
+        """The style sheet of the figures."""
+        return None if self.figures.style is None else self.folder / os.path.expanduser(self.figures.style)
 
     @property
     def document(self) -> Document:

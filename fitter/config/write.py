@@ -48,8 +48,17 @@ def as_run(config: Config, sample, target: Path) -> dict[str, Any]:
         "parameters": config.complete_parameters(sample),
         "sampling": config.sampling.model_dump(mode="json", by_alias=True, exclude_none=True),
         "run_folder": str(config.default_run_folder()),
+        **_looks(config, moved),
         "inputs": {moved(path): sha for path, sha in {**sample.sources, **config.model_sources}.items()},
     }
+
+
+def _looks(config: Config, moved: Callable[[str], str]) -> dict[str, Any]:
+    """How figures and tables look."""
+    figures = config.figures.model_dump(mode="json", exclude_none=True)
+    if config.figures.style is not None:
+        figures["style"] = moved(config.figures.style)
+    return {"figures": figures, **({"labels": dict(config.labels)} if config.labels else {})}
 
 
 def _model(config: Config, moved: Callable[[str], str]) -> str | dict[str, str]:
@@ -121,6 +130,8 @@ def differences(before: dict[str, Any], now: dict[str, Any]) -> list[str]:
 def _deciding(settings: dict[str, Any]) -> dict[str, Any]:
     settings = json.loads(json.dumps(settings))
     hashes = settings.pop("inputs", {})
+    for looks in ("figures", "labels"):
+        settings.pop(looks, None)
     if "sample" in settings:
         settings["sample"] = _with_paths(settings["sample"], lambda path: hashes.get(path, path))
     if isinstance(settings.get("model"), dict):

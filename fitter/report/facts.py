@@ -5,6 +5,8 @@ from __future__ import annotations
 import dataclasses
 import math
 from collections.abc import Mapping
+from contextlib import contextmanager
+from contextvars import ContextVar
 from pathlib import Path
 
 import numpy as np
@@ -12,18 +14,39 @@ import numpy as np
 from fitter.parameters import Parameter
 from fitter.parameters import parameter as declaration
 
-__all__ = ["axis_label", "edge_density", "json_safe", "parameter", "unit_text"]
+__all__ = ["axis_label", "edge_density", "json_safe", "parameter", "relabelled", "unit_text"]
 
 _EDGE_BINS = 25
 
 
-def parameter(name: str) -> Parameter:
-    """Return the declaration of a parameter; an undeclared name is its own symbol."""
+_labels: ContextVar[Mapping[str, str]] = ContextVar("symbols in force instead of the declared ones", default={})  # noqa: B039 - never changed
+
+
+@contextmanager
+def relabelled(labels: Mapping[str, str] | None):
+    """Use other LaTeX symbols than the declared ones, in every figure, table and text, while this context is open.
+
+    Parameters
+    ----------
+    labels : mapping
+        Parameter → symbol in LaTeX, without dollar signs.
+    """
+    token = _labels.set({**_labels.get(), **(labels or {})})
     try:
-        return declaration(name)
+        yield
+    finally:
+        _labels.reset(token)
+
+
+def parameter(name: str) -> Parameter:
+    """Return the declaration of a parameter, with the user's symbol if there is one; an undeclared name is its own symbol."""
+    try:
+        declared = declaration(name)
     except KeyError:
         safe = name.replace("_", r"\_")
-    return Parameter(name, rf"\mathrm{{{safe}}}", name, "", name)
+        declared = Parameter(name, rf"\mathrm{{{safe}}}", name, "", name)
+    symbol = _labels.get().get(name)
+    return declared if symbol is None else dataclasses.replace(declared, latex=symbol)
 
 
 def unit_text(name: str) -> str:

@@ -9,7 +9,7 @@ import pytest
 from fitter.errors import InputError
 from fitter.report.figures.chains import chains_caption, chains_figure
 from fitter.report.figures.planes import PLANES, no_big_bang, plane_caption, plane_figure, planes_of, recollapse
-from fitter.report.figures.residuals import decorrelated, residuals_caption, residuals_figure
+from fitter.report.figures.residuals import decorrelated, residual_data, residuals_caption, residuals_figure
 
 
 def _load(name):
@@ -102,7 +102,7 @@ def test_residuals_figure(build, width):
     drawn = quantiles.get_lines()[0].get_ydata()
     np.testing.assert_allclose(drawn, np.sort(decorrelated(fit.sample.noise, fit.log_posterior.residuals(fit.optimum.theta))))
     assert_inside_canvas(figure)
-    assert "decorrelated" in residuals_caption(fit.log_posterior)
+    assert "decorrelated" in residuals_caption(residual_data(fit.log_posterior, fit.optimum))
 
 
 def test_chains_figure(fit):

@@ -150,11 +150,11 @@ def draw_history(histories, *, width: str | float = "double"):
         _panel(ax, name, runs)
     for ax in axes.ravel()[len(names) :]:
         ax.remove()
-    for ax in axes.ravel()[:len(names)][-columns:]:
+    for ax in axes.ravel()[: len(names)][-columns:]:
         ax.tick_params(labelbottom=True)
         ax.set_xlabel("Redshift  $z$")
-    for column in axes.T:
-        figure.align_ylabels([ax for ax in column if ax.figure is not None])
+    for first in range(columns):
+        figure.align_ylabels(axes.ravel()[: len(names)][first::columns])
     if len(runs) > 1:
         _legend(figure, runs)
     return figure

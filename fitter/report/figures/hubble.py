@@ -45,6 +45,8 @@ class HubbleData:
     label : str
         Of the upper axis.
     n_calibrators : int
+    n : int
+        Supernovae, more than there are single points where they are very many.
     """
 
     redshift: np.ndarray
@@ -60,6 +62,7 @@ class HubbleData:
     omega_m: float | None
     label: str
     n_calibrators: int
+    n: int
 
 
 def hubble_data(log_posterior, optimum, posterior=None, *, bins: int | None = None) -> HubbleData:
@@ -84,13 +87,15 @@ def hubble_data(log_posterior, optimum, posterior=None, *, bins: int | None = No
     label, shift = _axis(sample, log_posterior.zero_point(theta))
     single = bins is None and flow.sum() <= _FEW
     means = None if single else binned_means(noise, residual, sample.redshift, redshift_edges(z, bins), scale=scale, apart=~flow)
+    points = np.unique(np.linspace(0, len(z) - 1, min(len(z), _MOST_POINTS)).astype(int))
+    rows = np.flatnonzero(flow)[points]
     curve_z = np.exp(np.linspace(np.log(z.min() * 0.94), np.log(z.max() * 1.06), 160))
     return HubbleData(
-        redshift=z,
-        residual=residual[flow],
-        error=scale * np.sqrt(noise.total_variance[flow]) if single else None,
-        shown=sample.data[flow] - shift,
-        group=None if sample.group is None else np.asarray(sample.group)[flow].astype(str),
+        redshift=z[points],
+        residual=residual[rows],
+        error=scale * np.sqrt(noise.total_variance[rows]) if single else None,
+        shown=sample.data[rows] - shift,
+        group=None if sample.group is None else np.asarray(sample.group)[rows].astype(str),
         bins=means,
         curve_redshift=curve_z,
         curve=_predicted(log_posterior, theta, curve_z) - shift,
@@ -99,6 +104,7 @@ def hubble_data(log_posterior, optimum, posterior=None, *, bins: int | None = No
         omega_m={**log_posterior.fixed, **optimum.values}.get("omega_m"),
         label=label,
         n_calibrators=int(sample.n_calibrators),
+        n=int(flow.sum()),
     )
 
 
@@ -186,15 +192,13 @@ def _draw_points(upper, lower, data: HubbleData) -> None:
         upper.errorbar(data.redshift, data.shown, data.error, label="data", **style)
         lower.errorbar(data.redshift, data.residual, data.error, **style)
         return
-    n = len(data.redshift)
-    chosen = np.arange(n) if n <= _MOST_POINTS else np.unique(np.linspace(0, n - 1, _MOST_POINTS).astype(int))
+    n = data.n
     size = 2.2 if n < 3000 else 1.2
     for label, colour, members in _groups(data):
-        rows = chosen[members[chosen]]
         # Thousands of vector dots make a PDF that takes seconds to open: they alone become an image.
         style = {"ls": "", "marker": "o", "ms": size, "mew": 0, "color": colour, "alpha": 0.45, "rasterized": n > 2000, "zorder": 1}
-        upper.plot(data.redshift[rows], data.shown[rows], label=label, **style)
-        lower.plot(data.redshift[rows], data.residual[rows], **style)
+        upper.plot(data.redshift[members], data.shown[members], label=label, **style)
+        lower.plot(data.redshift[members], data.residual[members], **style)
 
 
 def _groups(data: HubbleData):
@@ -281,7 +285,7 @@ def hubble_caption(data: HubbleData) -> str:
         text += "Error bars: square root of the whole covariance's diagonal. "
     else:
         text += (
-            f"Small points: {len(data.redshift)} single supernovae. Squares: means in {len(data.bins.mean)} redshift bins by generalised "
+            f"Small points: {data.n} single supernovae. Squares: means in {len(data.bins.mean)} redshift bins by generalised "
             "least squares with the whole covariance; their errors, which the bins partly share, come from the diagonal "
             "of the covariance of the means. "
         )
@@ -291,6 +295,6 @@ def hubble_caption(data: HubbleData) -> str:
         text += "The distance scale is relative: the best fit is shifted by its best offset. "
     if data.n_calibrators:
         text += f"{data.n_calibrators} calibrators, whose redshifts are not used, are not shown. "
-    if len(data.redshift) > _MOST_POINTS and data.bins is not None:
-        text += f"Only about {_MOST_POINTS} of the single points are drawn; the bins use all. "
+    if data.n > len(data.redshift) and data.bins is not None:
+        text += f"Only {len(data.redshift)} of the single points are drawn; the bins use all. "
     return text.strip()

@@ -1,0 +1,303 @@
+"""The covariance of the data as pictures: who shares errors with whom, and what the errors are made of."""
+
+from __future__ import annotations
+
+from collections.abc import Mapping
+from dataclasses import dataclass
+
+import numpy as np
+
+from fitter.report.figures.binned import redshift_edges
+from fitter.report.figures.groups import group_codes, short_name
+from fitter.report.figures.panels import redshift_ticks
+from fitter.report.figures.style import COLOURS, in_style, new_figure, width_inches
+from fitter.report.information import noise_parameter, noise_scale
+
+__all__ = [
+    "BudgetData", "CorrelationData", "budget_caption", "budget_data", "correlation_caption", "correlation_data", "draw_budget", "draw_correlation",
+]  # fmt: skip
+
+_CELLS = 36  # about so many rows and columns of cells
+_FEW = 60  # up to so many supernovae each is a cell of its own
+_MOST_TERMS = 8
+_LARGEST = 20_000  # rows of a dense matrix that are looked at
+_BLOCK = 2_000
+
+
+@dataclass(frozen=True)
+class CorrelationData:
+    """Mean correlation of the errors within and between cells of one survey and a range of redshift.
+
+    Parameters
+    ----------
+    matrix : (b, b) float
+        A supernova's correlation with itself is left out; NaN where a cell of one meets itself.
+    group : (b,) str
+        The survey of each cell.
+    low, high : (b,) float
+        The redshifts of its members.
+    count : (b,) int
+    """
+
+    matrix: np.ndarray
+    group: np.ndarray
+    low: np.ndarray
+    high: np.ndarray
+    count: np.ndarray
+
+
+def correlation_data(sample, noise=None) -> CorrelationData:
+    """Work out the mean correlations, survey by survey, each in order of redshift.
+
+    Parameters
+    ----------
+    sample : Sample
+        Calibrators are left out.
+    noise : Noise, optional
+        The covariance as fitted, the sample's own by default. A factor on all errors changes no correlation.
+
+    Notes
+    -----
+    No N × N array is made of a diagonal covariance with modes.
+    """
+    noise = sample.noise if noise is None else noise
+    cell, names, b = _cells(sample)
+    flow = np.flatnonzero(cell >= 0)
+    noise = noise.inverted() if noise.precision is not None else noise
+    sigma = np.sqrt(noise.total_variance)
+    total = np.zeros((b, b))
+    shifts = np.zeros((b, noise.modes.shape[1]))
+    np.add.at(shifts, cell[flow], noise.modes[flow] / sigma[flow, None])
+    total += shifts @ shifts.T
+    own = np.einsum("ij,ij->i", noise.modes, noise.modes) / sigma**2
+    if noise.dense is not None:
+        total += _dense_sums(noise.dense, sigma, cell, b)
+        own = own + np.diagonal(noise.dense) / sigma**2
+    # What is left of each datum's correlation with itself after the uncorrelated part, which was never added.
+    total[np.diag_indices(b)] -= np.bincount(cell[flow], weights=own[flow], minlength=b)
+    count = np.bincount(cell[flow], minlength=b)
+    pairs = np.outer(count, count) - np.diag(count)
+    with np.errstate(invalid="ignore", divide="ignore"):
+        matrix = np.where(pairs > 0, total / pairs, np.nan)
+    ends = [np.array([f(sample.redshift[cell == i]) for i in range(b)]) for f in (np.min, np.max)]
+    return CorrelationData(matrix, np.array(names), *ends, count)
+
+
+def _cells(sample) -> tuple[np.ndarray, list[str], int]:
+    """Cell of each row (−1 for calibrators), the survey of each cell, and their number."""
+    flow = np.flatnonzero(~np.asarray(sample.is_calibrator))
+    group = None if sample.group is None else np.asarray(sample.group)[flow]
+    names, code = group_codes(group, len(flow))
+    cell, of_cell = np.full(sample.n, -1), []
+    for i, name in enumerate(names):
+        rows = flow[code == i]
+        rows = rows[np.argsort(sample.redshift[rows], kind="stable")]
+        share = len(rows) if len(flow) <= _FEW else max(2, round(_CELLS * len(rows) / len(flow)))
+        for part in np.array_split(rows, min(share, len(rows))):
+            cell[part] = len(of_cell)
+            of_cell.append(name)
+    return cell, of_cell, len(of_cell)
+
+
+def _dense_sums(dense, sigma, cell, b: int) -> np.ndarray:
+    """Sum of dense_ij / (σi σj) over the members of every two cells, in blocks of rows."""
+    members = np.zeros((len(cell), b))
+    members[np.flatnonzero(cell >= 0), cell[cell >= 0]] = 1.0
+    members /= sigma[:, None]
+    total = np.zeros((b, b))
+    for start in range(0, len(cell), _BLOCK):
+        rows = slice(start, start + _BLOCK)
+        total += members[rows].T @ (dense[rows] @ members)
+    return total
+
+
+@in_style
+def draw_correlation(data: CorrelationData, *, width: str | float = "single"):
+    """Draw the matrix of mean correlations, with the surveys named along it.
+
+    Parameters
+    ----------
+    data : CorrelationData
+    width : {"single", "double"} or float
+
+    Returns
+    -------
+    matplotlib.figure.Figure
+    """
+    from matplotlib.ticker import MaxNLocator
+
+    inches = min(width_inches(width), 5.2) if isinstance(width, str) else width_inches(width)
+    left, right, below, above = 0.92, 0.62, 0.62, 0.08
+    side = inches - left - right
+    height = side + below + above
+    figure = new_figure(inches, height=height)
+    ax = figure.add_axes([left / inches, below / height, side / inches, side / height])
+    finite = np.abs(data.matrix[np.isfinite(data.matrix)])
+    reach = float(finite.max()) if finite.size and finite.max() > 0 else 1.0
+    image = ax.imshow(data.matrix, cmap="RdBu_r", vmin=-reach, vmax=reach, interpolation="nearest", origin="upper")
+    bar = figure.colorbar(image, cax=figure.add_axes([(left + side + 0.07) / inches, below / height, 0.1 / inches, side / height]))
+    bar.set_label("Mean correlation", labelpad=2)
+    bar.ax.yaxis.set_major_locator(MaxNLocator(5))
+    _name_surveys(ax, data, side)
+    return figure
+
+
+def _name_surveys(ax, data: CorrelationData, side: float) -> None:
+    b = len(data.group)
+    starts = np.flatnonzero(np.r_[True, data.group[1:] != data.group[:-1]])
+    stops = np.r_[starts[1:], b]
+    for edge in starts[1:] - 0.5:
+        ax.axhline(edge, color="black", lw=0.6)
+        ax.axvline(edge, color="black", lw=0.6)
+    ax.tick_params(left=False, bottom=False, top=False, right=False, labelleft=False, labelbottom=False)
+    room = -np.inf
+    for start, stop in zip(starts, stops, strict=True):
+        middle, inches = 0.5 * (start + stop - 1), side * (stop - start) / b
+        position = max(middle / b * side, room)  # names of narrow blocks are pushed apart
+        ax.text(-0.04, 1 - (position + 0.5 * side / b) / side, _survey_text(data, start, stop), transform=ax.transAxes, ha="right", va="center", fontsize=7.5, linespacing=1.0)  # fmt: skip
+        room = position + (0.28 if inches < 0.28 else max(0.5 * inches, 0.28))
+    ticks = np.unique(np.linspace(0, b - 1, min(b, 2 * len(starts) + 2)).astype(int))
+    ticks = _spread(np.unique(np.r_[starts, stops - 1]), 0.17 * b / side)
+    ax.set_xticks(ticks, [f"{0.5 * (data.low[i] + data.high[i]):.2g}" for i in ticks], rotation=90)
+    ax.tick_params(axis="x", labelbottom=True, bottom=True, direction="out", pad=2)
+    ax.set_xlabel("Redshift  $z$, survey by survey", labelpad=2)
+
+
+def _survey_text(data: CorrelationData, start: int, stop: int) -> str:
+    name = short_name(str(data.group[start]))
+    return f"{name}\n{data.low[start]:.2g}–{data.high[stop - 1]:.2g}"
+
+
+def _spread(positions, least: float) -> list[int]:
+    """Drop positions that stand closer to the one before than their labels allow."""
+    kept = []
+    for position in positions:
+        if not kept or position - kept[-1] >= least:
+            kept.append(int(position))
+    return kept
+
+
+def correlation_caption(data: CorrelationData) -> str:
+    """Return the caption of the correlation figure."""
+    groups = list(dict.fromkeys(data.group.tolist()))
+    single = bool((data.count == 1).all())
+    text = "Correlation of the errors of the data as fitted, "
+    text += "every supernova with every other, " if single else f"averaged over the pairs of supernovae of {len(data.group)} cells, "
+    text += "in order of redshift" + (
+        f" within each survey ({', '.join(groups)}; their redshifts beside the names)" if len(groups) > 1 else ""
+    )
+    return text + ". A supernova's correlation with itself is left out."
+
+
+# ---------------------------------------------------------------------- share of the variance
+
+
+@dataclass(frozen=True)
+class BudgetData:
+    """Mean variance of each uncertainty term in redshift bins.
+
+    Parameters
+    ----------
+    redshift : (b,) float
+        Geometric mean of the members.
+    edges : (b + 1,) float
+    labels : list of str
+    variance : (t, b) float
+        mag².
+    """
+
+    redshift: np.ndarray
+    edges: np.ndarray
+    labels: list[str]
+    variance: np.ndarray
+
+
+def budget_data(log_posterior, values: Mapping[str, float]) -> BudgetData:
+    """Work out what the variance of the data is made of, bin by bin.
+
+    Parameters
+    ----------
+    log_posterior : LogPosterior
+    values : mapping
+        Of the parameters at the best fit: a fitted scatter is a term of its own, a fitted scale multiplies all.
+    """
+    sample = log_posterior.sample
+    flow = ~np.asarray(sample.is_calibrator)
+    z = sample.redshift[flow]
+    scale2 = noise_scale(log_posterior, values) ** 2
+    terms = [(term.label, np.asarray(term.variance)[flow]) for term in sample.terms]
+    scatter = noise_parameter(log_posterior, values, "intrinsic_scatter", 0.0)
+    if scatter:
+        terms.append(("intrinsic scatter", np.full(len(z), scatter**2)))
+    edges = redshift_edges(z, int(np.clip(len(z) // 20, 3, 16)))
+    index = np.searchsorted(edges, z, side="right") - 1
+    present = np.unique(index)
+    count = np.bincount(index, minlength=len(edges) - 1)[present]
+    mean = lambda x: np.bincount(index, weights=x, minlength=len(edges) - 1)[present] / count  # noqa: E731
+    variance = scale2 * np.array([mean(v) for _, v in terms])
+    labels, variance = _largest([label for label, _ in terms], variance)
+    # An empty bin gives its room to the neighbours.
+    borders = np.r_[edges[0], np.sqrt(edges[present[:-1] + 1] * edges[present[1:]]), edges[-1]]
+    return BudgetData(np.exp(mean(np.log(z))), borders, labels, variance)
+
+
+def _largest(labels: list[str], variance: np.ndarray) -> tuple[list[str], np.ndarray]:
+    """Keep the terms that matter most, in their order, and sum up the rest."""
+    if len(labels) <= _MOST_TERMS:
+        return labels, variance
+    order = np.argsort(-variance.mean(axis=1), kind="stable")
+    kept, rest = np.sort(order[: _MOST_TERMS - 1]), order[_MOST_TERMS - 1 :]
+    return [*(labels[i] for i in kept), f"{len(rest)} others"], np.vstack([variance[kept], variance[rest].sum(axis=0)])
+
+
+@in_style
+def draw_budget(data: BudgetData, *, width: str | float = "single"):
+    """Draw the share of each term against redshift, and above it the whole standard deviation.
+
+    Parameters
+    ----------
+    data : BudgetData
+    width : {"single", "double"} or float
+
+    Returns
+    -------
+    matplotlib.figure.Figure
+    """
+    from matplotlib.ticker import MaxNLocator
+
+    inches = width_inches(width)
+    columns = 2 if inches < 5 else 4
+    legend = 0.06 + 0.165 * -(-len(data.labels) // columns)
+    height = 0.5 + legend + (2.6 if inches < 5 else 3.2)
+    figure = new_figure(inches, height=height)
+    upper, lower = figure.subplots(2, 1, sharex=True, height_ratios=[1, 2.2], gridspec_kw={"hspace": 0.06})
+    figure.subplots_adjust(left=0.56 / inches, right=1 - 0.12 / inches, bottom=0.42 / height, top=1 - (0.06 + legend) / height)
+    total = data.variance.sum(axis=0)
+    upper.stairs(np.sqrt(total), data.edges, color="black", lw=1.0, baseline=None)
+    upper.set_ylim(0, 1.15 * float(np.sqrt(total.max())))
+    upper.set_ylabel(r"$\sigma$  [mag]")
+    upper.yaxis.set_major_locator(MaxNLocator(3, prune="lower"))
+    below, patches = np.zeros(len(total)), []
+    for i, share in enumerate(data.variance / total):
+        shade = {"color": COLOURS[i % len(COLOURS)], "alpha": 0.85 if i < len(COLOURS) else 0.4, "lw": 0}
+        patches.append(lower.stairs(below + share, data.edges, baseline=below, fill=True, label=short_name(data.labels[i], 24), **shade))
+        below = below + share
+    lower.set_ylim(0, 1)
+    lower.set_ylabel("Share of the variance")
+    lower.set_xlabel("Redshift  $z$")
+    lower.set_xscale("log")
+    lower.set_xlim(data.edges[0], data.edges[-1])
+    redshift_ticks(lower)
+    upper.tick_params(labelbottom=False, which="both")
+    figure.align_ylabels([upper, lower])
+    figure.legend(handles=patches, loc="upper center", bbox_to_anchor=(0.5, 1.0), ncols=columns, handlelength=1.0, columnspacing=1.0, handletextpad=0.4, borderaxespad=0.2, labelspacing=0.25)  # fmt: skip
+    return figure
+
+
+def budget_caption(data: BudgetData) -> str:
+    """Return the caption of the budget figure."""
+    return (
+        f"What the variance of the data is made of, in {data.variance.shape[1]} redshift bins: {', '.join(data.labels)}. Bottom: each term's "
+        "mean variance over the sum; top: square root of the sum. Correlations between supernovae, which the share does not show, make the "
+        "systematic terms weigh more in the parameters than here."
+    )

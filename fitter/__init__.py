@@ -6,6 +6,7 @@ from typing import TYPE_CHECKING
 
 if TYPE_CHECKING:
     from fitter.api import Check, Fit, check, fit
+    from fitter.comparing import Comparison, compare
     from fitter.config.load import load_config
     from fitter.config.settings import Config
     from fitter.errors import InputError, InputErrors, MufitterError
@@ -13,11 +14,26 @@ if TYPE_CHECKING:
 
 __version__ = "0.1.0"
 
-__all__ = ["Check", "Config", "Fit", "InputError", "InputErrors", "MufitterError", "Sample", "__version__", "check", "fit", "load_config"]
+__all__ = [
+    "Check",
+    "Comparison",
+    "Config",
+    "Fit",
+    "InputError",
+    "InputErrors",
+    "MufitterError",
+    "Sample",
+    "__version__",
+    "check",
+    "compare",
+    "fit",
+    "load_config",
+]
 
 # Loaded on first use (PEP 562), so that `mufitter --help` does not wait for numpy and friends.
 _HOMES = {
     "Check": "fitter.api",
+    "Comparison": "fitter.comparing",
     "Config": "fitter.config.settings",
     "Fit": "fitter.api",
     "InputError": "fitter.errors",
@@ -25,6 +41,7 @@ _HOMES = {
     "MufitterError": "fitter.errors",
     "Sample": "fitter.sample.sample",
     "check": "fitter.api",
+    "compare": "fitter.comparing",
     "fit": "fitter.api",
     "load_config": "fitter.config.load",
 }

@@ -162,6 +162,51 @@ def _print_result(result, as_json: bool, quiet: bool) -> None:
     sys.stdout.flush()
 
 
+@app.command("compare")
+@_reported
+def _compare(
+    what: Annotated[
+        list[Path],
+        typer.Argument(metavar="CONFIG | RUN RUN …", help="A config with variants, or finished run folders.", show_default=False),
+    ],
+    reference: Annotated[str | None, typer.Option(help="The fit that differences are taken from.", show_default="the first")] = None,
+    scale: Annotated[str | None, typer.Option(help="Whose words for odds: kass_raftery or jeffreys.", show_default="kass_raftery")] = None,
+    average: Annotated[bool, typer.Option("--average", help="Add constraints averaged over the models, weighted by evidence.")] = False,
+    run_folder: Annotated[
+        Path | None, typer.Option(help="Where everything goes.", show_default="what the config says, or runs/comparison")
+    ] = None,
+    replace: Annotated[bool, typer.Option("--replace", help="Replace an earlier comparison there.")] = False,
+    json_: Annotated[bool, typer.Option("--json", help="Print comparison.json to stdout instead of the table.")] = False,
+    quiet: Annotated[bool, typer.Option("--quiet", "-q", help="No progress and no table, only warnings and errors.")] = False,
+    allow_code: AllowCode = False,
+) -> int:
+    """Set models, priors or data side by side: which one do the data want?"""
+    from fitter.comparing import compare
+
+    one = what[0] if len(what) == 1 and not what[0].is_dir() else what
+    tell = None if quiet else lambda text: _say(f"  {text}")
+    options = {"reference": reference, "scale": scale, "average": average or None, "run_folder": run_folder, "replace": replace}
+    result = compare(one, **options, allow_code=allow_code, tell=tell)
+    _print_comparison(result, json_, quiet)
+    if not quiet:
+        _say(f"Written to {result.run_folder}")
+    return 0 if result.converged else NOT_CONVERGED
+
+
+def _print_comparison(result, as_json: bool, quiet: bool) -> None:
+    import json
+
+    from fitter.report.comparison_table import comparison_text
+
+    if as_json:
+        print(json.dumps(result.report, indent=1, ensure_ascii=False), flush=True)
+    elif not quiet:
+        print(comparison_text(result.report, stream=sys.stdout), end="", flush=True)
+    if as_json or quiet:
+        for text in result.warnings:
+            _say(f"Warning: {text}")
+
+
 @app.command("check")
 @_reported
 def _check(config: ConfigFile, allow_code: AllowCode = False) -> None:

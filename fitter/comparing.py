@@ -1,0 +1,306 @@
+"""Comparisons: the variants of a config fitted and set side by side, or finished runs."""
+
+from __future__ import annotations
+
+import json
+import logging
+import os
+from collections.abc import Callable, Sequence
+from concurrent.futures import ProcessPoolExecutor, as_completed
+from dataclasses import dataclass, replace
+from pathlib import Path
+from typing import Any, Literal
+
+import numpy as np
+
+from fitter.api import _Job, _likelihood, _settings, load_run
+from fitter.config.expand import Variant, expand
+from fitter.config.load import raise_all
+from fitter.config.settings import Config
+from fitter.config.write import input_problems
+from fitter.errors import InputError
+from fitter.inference.replicas import available_cores
+from fitter.inference.seeds import child_seed
+from fitter.inference.settings import DEFAULT_SEED
+from fitter.report.run_folder import RunFolder, read_run, write_atomic, writing
+from fitter.sample.sample import Sample
+from fitter.study.entry import Entry
+
+__all__ = ["Comparison", "compare"]
+
+_log = logging.getLogger("fitter")
+_STUDY = 6  # child of the seed
+Report = Callable[[str], None]
+
+
+@dataclass(frozen=True)
+class Comparison:
+    """Fits set side by side.
+
+    Parameters
+    ----------
+    report : dict
+        The contents of comparison.json.
+    entries : tuple of Entry
+        The fits.
+    run_folder : Path or None
+        Where tables, figures and the fits were written.
+    """
+
+    report: dict[str, Any]
+    entries: tuple[Entry, ...]
+    run_folder: Path | None = None
+
+    @property
+    def converged(self) -> bool:
+        """Whether every fit converged."""
+        return all(v["converged"] for v in self.report["variants"])
+
+    @property
+    def warnings(self) -> list[str]:
+        """What a practitioner would warn of."""
+        return list(self.report["warnings"])
+
+    def table(self, fmt: Literal["text", "markdown", "csv", "latex"] = "text") -> str:
+        """Return the comparison as text."""
+        from fitter.report import comparison_table
+
+        makers = {k: getattr(comparison_table, f"comparison_{k}") for k in ("text", "markdown", "csv", "latex")}
+        if fmt not in makers:
+            raise InputError("unknown table format", value=fmt, cure=f"Use one of {', '.join(makers)}.")
+        return makers[fmt](self.report)
+
+    def __str__(self) -> str:
+        return self.table()
+
+
+def compare(
+    what: Config | str | Path | Sequence[str | Path],
+    *,
+    reference: str | None = None,
+    scale: str | None = None,
+    average: bool | None = None,
+    run_folder: str | Path | Literal[False] | None = None,
+    replace: bool = False,
+    allow_code: bool = False,
+    tell: Report | None = None,
+) -> Comparison:
+    """Compare models, priors or data: the variants of a config, or finished runs.
+
+    Parameters
+    ----------
+    what : config, its path, or a sequence of run folders
+        A config has ``variants``; they are fitted first, in parallel.
+    reference : str, optional
+        The fit that differences are taken from; the first by default.
+    scale : {"kass_raftery", "jeffreys"}, optional
+        Whose words are used for odds.
+    average : bool, optional
+        Add constraints averaged over the models.
+    run_folder : path-like or False, optional
+        Where everything goes. False writes nothing, and is for finished runs only.
+    replace : bool
+        Whether an earlier comparison there may be replaced.
+    allow_code : bool
+        Whether the file of a model of one's own may be run.
+    tell : callable, optional
+        Gets a line of text as each fit ends.
+
+    Returns
+    -------
+    Comparison
+
+    Raises
+    ------
+    InputError, InputErrors
+        Anything wrong with the config, the runs or the folder, before anything is fitted.
+    """
+    options = {k: v for k, v in (("reference", reference), ("scale", scale), ("average", average)) if v is not None}
+    _check_scale(options.get("scale"))
+    if isinstance(what, Config | str | Path):
+        return _compare_variants(what, options, run_folder, replace, allow_code, tell or (lambda _: None))
+    entries = [_entry_of_run(path, allow_code) for path in what]
+    entries = _with_different_names(entries, [Path(p) for p in what])
+    report = _report(entries, options, DEFAULT_SEED)
+    if run_folder is False:
+        return Comparison(report, tuple(entries))
+    folder = _target(run_folder or Path("runs") / "comparison", replace)
+    folder.open()
+    try:
+        _write(report, entries, folder.path)
+        return Comparison(report, tuple(entries), folder.finish())
+    finally:
+        folder.leave()
+
+
+def _target(path: str | Path, replaced: bool) -> RunFolder:
+    folder = RunFolder(Path(path).expanduser(), replace=replaced)
+    folder.check_target()
+    return folder
+
+
+def _check_scale(scale: str | None) -> None:
+    from fitter.study.odds import SCALES
+
+    if scale is not None and scale not in SCALES:
+        raise InputError("there is no such scale of odds", column="scale", value=scale, cure=f"Choose one of {', '.join(SCALES)}")
+
+
+def _report(entries: list[Entry], options: dict, seed: int) -> dict:
+    from fitter.report.facts import json_safe
+    from fitter.study.comparison import compare_entries
+
+    return json_safe(compare_entries(entries, seed=child_seed(np.random.SeedSequence(seed), _STUDY), **options))
+
+
+# ---------------------------------------------------------------------- variants of a config
+
+
+def _compare_variants(what, options: dict, run_folder, replace: bool, allow_code: bool, tell: Report) -> Comparison:
+    config, _ = _settings(what, {}, allow_code)
+    variants = expand(config)
+    if run_folder is False:
+        raise InputError("the fits of a comparison need a folder", cure="Give run_folder a path")
+    folder = _target(run_folder or config.default_run_folder(), replace)
+    samples = _samples(variants)
+    for variant, sample in zip(variants, samples, strict=True):
+        raise_all(input_problems(variant.config, sample))
+        _likelihood(variant.config, sample)  # what is wrong with one of them is told before any is fitted
+    given = config.compare.model_dump()
+    folder.open()
+    try:
+        runs = _fit_all(variants, samples, folder.path / "variants", folder.target / "variants", tell)
+        entries = [
+            Entry(v.name, run.summary, run.posterior, _likelihood(v.config, sample))
+            for v, run, sample in zip(variants, runs, samples, strict=True)
+        ]
+        report = _report(entries, given | options, config.sampling.seed)
+        _write(report, entries, folder.path)
+        return Comparison(report, tuple(entries), folder.finish())
+    finally:
+        folder.leave()
+
+
+def _samples(variants: list[Variant]) -> list[Sample]:
+    """The sample of each variant; what several share is read once."""
+    read: dict[str, Sample] = {}
+    found: dict[tuple, Sample] = {}
+    for variant in variants:
+        key = variant.data_key
+        if key not in read:
+            read[key] = Sample.from_config(variant.complete_sample, variant.config.folder)
+        if (key, variant.without) not in found:
+            found[key, variant.without] = _reduced(read[key], variant)
+    return [found[v.data_key, v.without] for v in variants]
+
+
+def _reduced(sample: Sample, variant: Variant) -> Sample:
+    """The sample without some of its uncertainty terms, and without the record of files that only these read."""
+    if not variant.without:
+        return sample
+    settings = variant.config.sample
+    files = {settings.table, *(f for term in settings.uncertainty for f in term.files())}
+    return replace(sample.without(variant.without), sources={k: v for k, v in sample.sources.items() if k in files})
+
+
+_work: tuple = ()
+
+
+def _start_worker(*work) -> None:
+    """Keep the samples in the worker: with forked processes they are shared, not copied."""
+    global _work
+    _work = work
+
+
+def _fit_one(i: int) -> None:
+    variants, samples, folder, final, processes = _work
+    variant = variants[i]
+    config = variant.config.model_copy(update={"run_folder": _said(final / variant.folder)})
+    target = RunFolder(folder / variant.folder)
+    job = _Job.prepare(config, samples[i], target, False)
+    job.processes = processes
+    target.open()
+    try:
+        job.run()
+    finally:
+        target.leave()
+
+
+def _said(path: Path) -> str:
+    """A path as people would write it: relative to the working directory where it lies below."""
+    here = Path.cwd().resolve()
+    return path.relative_to(here).as_posix() if path.is_relative_to(here) else str(path)
+
+
+def _fit_all(variants: list[Variant], samples: list[Sample], folder: Path, final: Path, tell: Report) -> list:
+    """Fit every variant, several at a time; return the runs, read back."""
+    import multiprocessing
+
+    cores = available_cores()
+    workers = min(cores, len(variants))
+    work = (variants, samples, folder, final, max(1, cores // workers))
+    if workers == 1:
+        _start_worker(*work)
+        for i, variant in enumerate(variants):
+            _fit_one(i)
+            tell(f"{variant.name} is done, {i + 1} of {len(variants)}")
+    else:
+        method = "fork" if "fork" in multiprocessing.get_all_start_methods() else None
+        context = multiprocessing.get_context(method)
+        with ProcessPoolExecutor(workers, mp_context=context, initializer=_start_worker, initargs=work) as pool:
+            # The longest first: a model with many parameters at the end would leave the other cores idle.
+            order = sorted(range(len(variants)), key=lambda i: -len(_sampled(variants[i])))
+            pending = {pool.submit(_fit_one, i): i for i in order}
+            for done, future in enumerate(as_completed(pending), 1):
+                future.result()
+                tell(f"{variants[pending[future]].name} is done, {done} of {len(variants)}")
+    return [read_run(folder / v.folder) for v in variants]
+
+
+def _sampled(variant: Variant) -> list[str]:
+    return [p.name for p in variant.config.cosmology.parameters if not isinstance(variant.config.parameters.get(p.name), int | float)]
+
+
+def _write(report: dict, entries: list[Entry], folder: Path) -> None:
+    from fitter.report.comparison_figures import draw_comparison
+    from fitter.report.comparison_table import comparison_csv, comparison_latex, comparison_markdown
+
+    with writing(folder):
+        texts = {"md": comparison_markdown, "csv": comparison_csv, "tex": comparison_latex}
+        for suffix, make in texts.items():
+            write_atomic(folder / f"comparison.{suffix}", make(report))
+        draw_comparison(report, {e.name: e.posterior for e in entries}, folder / "figures")
+        write_atomic(folder / "comparison.json", json.dumps(report, indent=1, ensure_ascii=False, allow_nan=False) + "\n")
+
+
+# ---------------------------------------------------------------------- finished runs
+
+
+def _entry_of_run(path: str | Path, allow_code: bool) -> Entry:
+    run = read_run(path)
+    name = run.summary["title"] or run.summary["model"]
+    return Entry(name, run.summary, run.posterior, _rebuilt(run, path, allow_code))
+
+
+def _rebuilt(run, path, allow_code: bool):
+    """The log-posterior of a run, where its data can be read again and are what they were."""
+    try:
+        _, config = load_run(path, allow_code=allow_code)
+        sample = Sample.from_config(config.sample, config.folder) if config.sample is not None else None
+        if sample is None or input_problems(config, sample):
+            return None
+        return _likelihood(config, sample) if sample.sha256 == run.summary["sample"]["sha256"] else None
+    except InputError as error:
+        _log.info("%s: cannot be evaluated anew: %s", path, error)
+        return None
+
+
+def _with_different_names(entries: list[Entry], paths: list[Path]) -> list[Entry]:
+    """Two runs of one title are told apart by their folders."""
+    names = [e.name for e in entries]
+    if len(set(names)) < len(names):
+        shared = os.path.commonpath([p.resolve().parent for p in paths])
+        names = [os.path.relpath(p.resolve(), shared) for p in paths]
+    if len(set(names)) < len(names):
+        raise InputError("the same run is given twice", value=sorted({n for n in names if names.count(n) > 1}))
+    return [replace(e, name=n) for e, n in zip(entries, names, strict=True)]

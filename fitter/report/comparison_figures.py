@@ -1,0 +1,66 @@
+"""Which figures a comparison gets, and writing them."""
+
+from __future__ import annotations
+
+from pathlib import Path
+
+__all__ = ["draw_comparison", "overlay_names"]
+
+_MOST_RUNS = 6  # as many as there are colours
+_MOST_NAMES = 5
+
+
+def overlay_names(posteriors: dict) -> list[str]:
+    """Parameters for the overlaid corner plot: those that the most fits have, each pair together in one fit at least."""
+    counts: dict[str, int] = {}
+    for posterior in posteriors.values():
+        for name, kind in posterior.kinds.items():
+            if kind != "derived" or name == "q0":
+                counts[name] = counts.get(name, 0) + 1
+    # Sampled parameters first; q0, which nearly all models have, makes up the number.
+    order = sorted(counts, key=lambda n: (n == "q0", -counts[n]))
+    chosen: list[str] = []
+    for name in order:
+        together = all(any({name, other} <= set(p.kinds) for p in posteriors.values()) for other in chosen)
+        if together and len(chosen) < _MOST_NAMES:
+            chosen.append(name)
+    return chosen
+
+
+def draw_comparison(report: dict, posteriors: dict, folder: Path) -> list[Path]:
+    """Draw the overlaid corner plot, the planes that two fits or more can be drawn in, and the forest plot.
+
+    Parameters
+    ----------
+    report : dict
+        As `fitter.study.comparison.compare_entries` makes it.
+    posteriors : dict
+        Name of each fit → Posterior.
+    folder : Path
+
+    Returns
+    -------
+    list of Path
+        The files written.
+    """
+    from fitter.report.figures.corner import corner_caption, corner_figure
+    from fitter.report.figures.forest import forest_caption, forest_figure
+    from fitter.report.figures.planes import PLANES, plane_caption, plane_figure, planes_of
+    from fitter.report.figures.style import save_figure, styled
+
+    shown = dict(list(posteriors.items())[:_MOST_RUNS])
+    left_out = f" Not drawn, for want of colours: {', '.join(list(posteriors)[_MOST_RUNS:])}." if len(posteriors) > _MOST_RUNS else ""
+    other_data = f" Other data: {', '.join(v['name'] for v in report['variants'] if v['delta'] is None)}."
+    note = left_out + (other_data if any(v["delta"] is None for v in report["variants"]) else "")
+    names = overlay_names(shown)
+    written = []
+    with styled():
+        having = {label: p for label, p in shown.items() if set(names) & set(p.kinds)}
+        if names:
+            written += save_figure(corner_figure(having, names), folder / "corner", corner_caption(having, names) + note)
+        for plane in PLANES:
+            fits = {label: p for label, p in shown.items() if plane in planes_of(p)}
+            if fits:
+                written += save_figure(plane_figure(fits, plane), folder / f"plane_{plane}", plane_caption(plane, list(fits)) + note)
+        written += save_figure(forest_figure(report), folder / "forest", forest_caption(report))
+    return written

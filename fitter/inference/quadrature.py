@@ -149,6 +149,17 @@ class GridPosterior:
         np.add.at(marginal, which.ravel(), self._rule.marginal(self._cells, axis))
         return strip[:, :1], strip[:, 1:], marginal
 
+    def points(self):
+        """The nodes, (M, d), and the share of the posterior that each stands for, (M,)."""
+        cells, rule = self._cells, self._rule
+        theta = cells.low[:, None] + 0.5 * (cells.high - cells.low)[:, None] * (1.0 + rule._mesh)
+        weight = rule.weight
+        for _ in range(rule.d - 1):
+            weight = np.multiply.outer(weight, rule.weight)
+        volume = np.prod(0.5 * (cells.high - cells.low), axis=1)
+        share = volume[:, None] * cells.value.reshape(len(volume), -1) * weight.ravel()
+        return theta.reshape(-1, rule.d), share.ravel() / share.sum()
+
     def moment(self, name: str, power: int = 1, about: float = 0.0) -> float:
         """Marginal moment about a value."""
         low, high, marginal = self._strips(self.names.index(name))

@@ -18,7 +18,7 @@ from fitter.inference.mixture import fit_mixture
 
 __all__ = ["KOLMOGOROV", "WeightedPosterior", "importance"]
 
-_COMPONENTS = 6
+_COMPONENTS = 8
 _FITTED = 6000  # draws of the chain that the mixture is fitted to
 _BATCH = 16_384
 # Kolmogorov: P(√n D > 2.2) = 2 exp(−2 · 2.2²) = 1.3e-4, so false alarms are rare even with several parameters.
@@ -79,7 +79,7 @@ def importance(log_posterior, posterior, *, seed: np.random.SeedSequence, draws:
     rng = np.random.default_rng(seed)
     chain = posterior.chain.reshape(-1, log_posterior.ndim)
     picked = rng.choice(len(chain), size=min(_FITTED, len(chain)), replace=False)
-    mixture = fit_mixture(chain[picked], _COMPONENTS, iterations=30, inflate=1.1)
+    mixture = fit_mixture(chain[picked], _COMPONENTS, iterations=30)
     theta = mixture.draw(rng, draws)
     log_weight = np.concatenate([log_posterior(theta[i : i + _BATCH]) for i in range(0, draws, _BATCH)])
     inside = log_weight > -np.inf

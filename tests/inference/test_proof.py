@@ -147,3 +147,23 @@ def test_five_parameters_fall_back_on_importance_sampling():
     assert "importance" in proof.cross_check["method"]
     assert proof.cross_check["agrees"] is True
     assert proof.evidence["methods_agree"] is None
+
+
+def test_a_chain_that_hardly_reaches_a_tail_is_caught():
+    """Three quarters of the lowest half per cent are missing: far below what a plain Kolmogorov bound sees."""
+    toy, target, covariance = gaussian(2)
+    draws = target.rvs(60000, random_state=np.random.default_rng(8))
+    low = np.flatnonzero(draws[:, 0] < 0.3 - 2.576 * 0.05)
+    draws = np.delete(draws, low[: 3 * len(low) // 4], axis=0)
+    grid = integrate(toy, optimum(toy, target.mean, covariance))
+    check = cross_check(grid, chain_of(draws, toy.names), {n: 10000.0 for n in toy.names})
+    assert check["agrees"] is False
+    assert check["worst"] == "p0"
+
+
+@pytest.mark.parametrize("seed", range(8))
+def test_independent_draws_raise_no_false_alarm(seed):
+    toy, target, covariance = gaussian(3)
+    grid = integrate(toy, optimum(toy, target.mean, covariance))
+    draws = target.rvs(12000, random_state=np.random.default_rng(seed))
+    assert cross_check(grid, chain_of(draws, toy.names), {n: 12000.0 for n in toy.names})["agrees"] is True

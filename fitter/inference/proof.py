@@ -17,7 +17,7 @@ _SIGMAS = 4.0
 # A distribution function is compared in the tails too, where the Kolmogorov bound is blind, at these probabilities
 # and to this many of its own standard errors √(F (1 − F) / ESS).
 _TAILS = (0.002, 0.01, 0.05, 0.95, 0.99, 0.998)
-_TAIL_SIGMAS = 5.0
+_TAIL_SIGMAS = 4.0
 
 
 @dataclass(frozen=True)

@@ -230,6 +230,8 @@ def _data_sets(study: _Study) -> list[dict]:
         if first.data == second.data or first.summary["model"] != second.summary["model"]:
             continue
         common = overlap(first, second)
+        if common == min(e.summary["sample"]["n"] for e in (first, second)):
+            continue  # a part of the same sample, or other errors: nobody takes them for independent
         if common != 0:
             why = "share supernovae" if common else "may share supernovae (their data are not at hand)"
             study.warnings.append(f"{first.name} and {second.name} {why}: a test of their consistency would need independent data.")

@@ -10,7 +10,7 @@ import numpy as np
 from fitter.errors import InputError
 from fitter.report.digits import figures_for
 from fitter.report.facts import axis_label, parameter
-from fitter.report.figures.panels import common_exponent, contours, draw_density, plot_range, runs_of, thinned
+from fitter.report.figures.panels import LINE, common_exponent, contours, draw_density, plot_range, runs_of, thinned
 from fitter.report.figures.style import COLOURS, LEVELS, in_style, new_figure, width_inches
 
 __all__ = ["corner_caption", "corner_figure", "main_parameters"]
@@ -18,7 +18,6 @@ __all__ = ["corner_caption", "corner_figure", "main_parameters"]
 # Of the derived parameters, those that say something beside the sampled ones; the rest follow from them.
 _MAIN_DERIVED = ("omega_k", "omega_lambda", "q0")
 _MOST_PANELS = 7
-_SAME = 0.9999  # correlation of two parameters that say the same
 _LEFT, _BOTTOM, _TOP, _RIGHT, _GAP = 0.62, 0.62, 0.3, 0.1, 0.05  # inches
 
 
@@ -40,7 +39,7 @@ def _repeats(posterior, name: str, other: str) -> bool:
     """Whether one parameter is a linear function of another."""
     a, b = (thinned(posterior, n, most=5000) for n in (name, other))
     both = np.isfinite(a) & np.isfinite(b)
-    return both.sum() > 2 and abs(np.corrcoef(a[both], b[both])[0, 1]) > _SAME
+    return both.sum() > 2 and abs(np.corrcoef(a[both], b[both])[0, 1]) > LINE
 
 
 def _varies(posterior, name: str) -> bool:
@@ -155,7 +154,9 @@ def _draw_run(axes, names, table, limits, scale, colour, *, alone: bool) -> None
                 axes[row, row].axvline(q, color=colour, ls=(0, (4, 3)), lw=0.6)
         for column, x in enumerate(names[:row]):
             if x in table:
-                contours(axes[row, column], table[x] * scale[x], draws, (scaled[x], scaled[y]), colour)
+                # Bins follow the run's own range: in that of the widest run a narrow one would be smeared.
+                own = tuple(plot_range([c]) for c in (table[x] * scale[x], draws))
+                contours(axes[row, column], table[x] * scale[x], draws, own, colour)
 
 
 def _dress(axes, names, limits, scale, labels) -> None:

@@ -15,7 +15,7 @@ from fitter.report.figures.style import COLOURS, GREY, in_style, new_figure, wid
 __all__ = ["forest_caption", "forest_figure", "forest_names"]
 
 _MOST_PANELS = 5
-_ROW, _BOTTOM, _TOP, _RIGHT, _GAP = 0.24, 0.62, 0.12, 0.12, 0.1  # inches
+_ROW, _BOTTOM, _TOP, _RIGHT, _GAP = 0.24, 0.46, 0.12, 0.12, 0.1  # inches
 _CHARACTER = 0.068  # inches that a letter of a fit's name takes
 _LONGEST_NAME = 26
 
@@ -60,9 +60,9 @@ def forest_figure(report: dict, names: Sequence[str] | None = None, *, width: st
         _draw_panel(ax, report, name)
         ax.set_yticks(range(len(variants)), labels if i == 0 else [""] * len(variants))
         ax.tick_params(axis="y", length=0)
-        ax.tick_params(axis="x", labelrotation=45)
         ax.set_ylim(len(variants) - 0.45, -0.55)
         ax.set_xlabel(axis_label(name))
+        ax.xaxis.set_label_coords(0.5, -0.29 / rows)
     return figure
 
 

@@ -77,7 +77,7 @@ PLANES = {
         no_big_bang,
         "no big bang",
     ),
-    "w": Plane("omega_m", "w", ((0.1, 0.5), (-1.2, -0.8)), (Line("cosmological constant", lambda m: -1 + 0 * m),)),
+    "w": Plane("omega_m", "w", ((0.1, 0.5), (-1.2, -0.8)), (Line("cosmological constant", lambda m: -1 + 0 * m, where=0.22),)),
     "w0wa": Plane(
         "w0",
         "wa",
@@ -97,7 +97,14 @@ def planes_of(posterior) -> list[str]:
 
 
 @in_style
-def plane_figure(posteriors, plane: str, *, width: str | float = "single", reference: Mapping[str, float] | None = None):
+def plane_figure(
+    posteriors,
+    plane: str,
+    *,
+    width: str | float = "single",
+    reference: Mapping[str, float] | None = None,
+    colours: Mapping[str, str] | None = None,
+):
     """Draw 68.3 and 95.4 % contours in one of the planes.
 
     Parameters
@@ -108,6 +115,8 @@ def plane_figure(posteriors, plane: str, *, width: str | float = "single", refer
     width : {"single", "double"} or float
     reference : mapping, optional
         A point to mark, e.g. the truth of a simulation.
+    colours : mapping, optional
+        Of each run, where it should keep the colour it has in another figure.
 
     Returns
     -------
@@ -122,12 +131,13 @@ def plane_figure(posteriors, plane: str, *, width: str | float = "single", refer
     if missing:
         raise InputError(f"the {plane} plane needs {chosen.x} and {chosen.y}", value=missing[0], cure="Fit a model that has both.")
     tables = [(thinned(p, chosen.x), thinned(p, chosen.y)) for p in runs.values()]
+    colours = colours or {label: COLOURS[i % len(COLOURS)] for i, label in enumerate(runs)}
     limits = tuple(_limits([t[i] for t in tables], chosen.show[i]) for i in (0, 1))
     figure = new_figure(width, 0.9)
     inches, height = figure.get_size_inches()
     ax = figure.add_axes([0.52 / inches, 0.42 / height, 1 - 0.70 / inches, 1 - 0.54 / height])
-    for i, (x, y) in enumerate(tables):
-        contours(ax, x, y, tuple(plot_range([c]) for c in (x, y)), COLOURS[i % len(COLOURS)], bins=60)
+    for label, (x, y) in zip(runs, tables, strict=True):
+        contours(ax, x, y, tuple(plot_range([c]) for c in (x, y)), colours[label], bins=60)
     ax.set_xlim(*limits[0])
     ax.set_ylim(*limits[1])
     ax.set_xlabel(axis_label(chosen.x))
@@ -136,8 +146,8 @@ def plane_figure(posteriors, plane: str, *, width: str | float = "single", refer
     if reference:
         ax.plot(reference[chosen.x], reference[chosen.y], marker="+", color="black", ms=7, mew=1.2, zorder=6)
     if len(runs) > 1:
-        handles = [Line2D([], [], color=COLOURS[i % len(COLOURS)], lw=2, label=label) for i, label in enumerate(runs)]
-        ax.legend(handles=handles, loc="lower right")
+        handles = [Line2D([], [], color=colours[label], lw=2, label=label) for label in runs]
+        ax.legend(handles=handles, loc="upper right")
     return figure
 
 

@@ -9,7 +9,7 @@ __all__ = ["maximise", "quadratic_model"]
 # Damping of the Newton step, in units of the mean curvature: all are tried in one call, the best is kept.
 _DAMPING = np.concatenate([[0.0], np.logspace(-4, 5, 14)])
 # Stencil half-width in units of the conditional standard deviation: coarse to get there, fine for the last digits.
-_WIDTHS = ((0.3, 1e-3, 100), (0.02, 1e-11, 60))
+_WIDTHS = ((0.3, 1e-3, 100), (0.02, 1e-11, 150))
 
 
 def maximise(function, starts, scale, low, high, free=None):
@@ -43,20 +43,21 @@ def maximise(function, starts, scale, low, high, free=None):
     room = np.where(np.isfinite(high - low), (high - low) / 4, np.inf)
     h = np.minimum(np.broadcast_to(np.asarray(scale, dtype=float), x.shape) * _WIDTHS[0][0], room)
     for width, tolerance, limit in _WIDTHS:
-        stalled = np.zeros(len(x), dtype=int)
-        for _ in range(limit):
+        stalled = np.zeros(len(x))
+        for turn in range(limit):
             todo = np.flatnonzero(stalled < 3)
             if todo.size == 0:
                 break
-            best, value, step = _iterate(function, x[todo], values[todo], h[todo], low, high, free[todo], width)
+            best, value, step, good = _iterate(function, x[todo], values[todo], h[todo], low, high, free[todo], width, turn)
             gain = value - values[todo]
             x[todo], values[todo], h[todo] = best, value, np.minimum(step, room)
-            stalled[todo] = np.where(gain > tolerance, 0, stalled[todo] + 1)
+            # Beside a region of −inf only chance directions are left: more patience.
+            stalled[todo] = np.where(gain > tolerance, 0.0, stalled[todo] + np.where(good, 1.0, 0.2))
     return x, values
 
 
-def _iterate(function, x, values, h, low, high, free, width):
-    """One stencil and one set of damped steps for every problem; returns points, values, new stencil widths."""
+def _iterate(function, x, values, h, low, high, free, width, turn):
+    """One stencil and one set of damped steps for every problem; returns points, values, new stencil widths, stencil finite."""
     centre, stencil, f, gradient, curvature, good = _stencil(function, x, h, low, high, free)
     gradient, curvature = gradient * h, curvature * h[:, :, None] * h[:, None, :]
     # A bound holds a coordinate where the gradient pushes against it.
@@ -67,7 +68,8 @@ def _iterate(function, x, values, h, low, high, free, width):
     steps = _damped_steps(gradient, curvature) * h[:, None, :]
     start = np.where(held, x, centre)
     trial = np.clip(start[:, None, :] + steps, low, high)
-    trial = np.where(good[:, None, None], trial, x[:, None, :] + 0.0 * trial)
+    if not good.all():
+        trial[~good] = _chance_steps(x[~good], np.where(free, h, 0.0)[~good], low, high, turn)
     tried = np.asarray(function(trial.reshape(-1, x.shape[1]))).reshape(trial.shape[:2])
     points = np.concatenate([x[:, None], trial, stencil], axis=1)
     scores = np.concatenate([values[:, None], tried, f], axis=1)
@@ -76,9 +78,10 @@ def _iterate(function, x, values, h, low, high, free, width):
     diagonal = np.where(held, 1.0, np.einsum("bii->bi", curvature))
     with np.errstate(divide="ignore", invalid="ignore"):
         factor = np.where(diagonal > 0, width / np.sqrt(np.abs(diagonal)), 2.0)
-    factor = np.where(good[:, None], np.clip(factor, 0.1, 10.0), 0.4)
+    shrink = np.where(scores[rows, pick] > values, 1.2, 0.6)
+    factor = np.where(good[:, None], np.clip(factor, 0.1, 10.0), shrink[:, None])
     factor = np.where(held & good[:, None], 1.0, factor)
-    return points[rows, pick], scores[rows, pick], h * factor
+    return points[rows, pick], scores[rows, pick], h * factor, good
 
 
 def _damped_steps(gradient, curvature):
@@ -90,6 +93,12 @@ def _damped_steps(gradient, curvature):
     along = np.einsum("bij,bi->bj", v, gradient)
     damped = along[:, None, :] / (np.maximum(w, floor)[:, None, :] + _DAMPING[None, :, None] * mean[:, None, :])
     return np.einsum("bij,blj->bli", v, np.nan_to_num(damped, posinf=0.0, neginf=0.0))
+
+
+def _chance_steps(x, h, low, high, turn):
+    """Steps of about `h` in directions that change from turn to turn, always the same ones in the same turn."""
+    directions = np.random.default_rng(turn).standard_normal((len(_DAMPING), x.shape[1]))
+    return np.clip(x[:, None, :] + directions * h[:, None, :], low, high)
 
 
 def quadratic_model(function, x, h, low, high):

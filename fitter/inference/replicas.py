@@ -167,6 +167,12 @@ class Replicas:
             if look is not None:
                 look(min(self._board.steps))
 
+    def map(self, function, arguments: list[tuple]) -> list:
+        """Return ``function(log_posterior, *args)`` for every tuple of `arguments`, in order, from the worker processes."""
+        if self._pool is None:
+            return [function(self.log_posterior, *args) for args in arguments]
+        return list(self._pool.map(_call_in_worker, [(function, args) for args in arguments]))
+
     def _task(self, i, target):
         r = self.replicas[i]
         return _Task(i, r.positions, r.log_prob, r.random_state, r.steps, target - r.steps, self.move)
@@ -243,6 +249,11 @@ def _end_with(parent):
 
 def _advance_in_worker(task):
     return _advance(_worker["log_posterior"], task, _worker["board"])
+
+
+def _call_in_worker(work):
+    function, args = work
+    return function(_worker["log_posterior"], *args)
 
 
 def _advance(log_posterior, task, board) -> Chunk:

@@ -76,9 +76,9 @@ def sample_posterior(
         replicas = [_begin(log_posterior, settings, optimum, child_seed(seed, 0, i)) for i in range(settings.replicas)]
         with Replicas(log_posterior, replicas, settings.move, processes or available_cores(), checkpoint) as ensembles:
             status = _run(ensembles, log_posterior.names, settings, progress)
-        chain, values = ensembles.chain(status.steps)
-        chain, values = chain[:, status.burn_in :], values[:, status.burn_in :]
-        extra = _extra(log_posterior, chain, child_seed(seed, 1))
+            chain, values = ensembles.chain(status.steps)
+            chain, values = chain[:, status.burn_in :], values[:, status.burn_in :]
+            extra = _extra(log_posterior, chain, child_seed(seed, 1), ensembles.map)
     facts = _facts(ensembles, status, settings, time.monotonic() - began)
     kinds = {n: "sampled" for n in log_posterior.names} | {n: "marginalised" for n in log_posterior.marginalised}
     kinds |= {n: kinds.get(n, "derived") for n in extra}
@@ -129,17 +129,37 @@ def _reporter(progress, first, aim, status):
     return look
 
 
-def _extra(log_posterior, chain, seed):
+def _extra(log_posterior, chain, seed, run):
     """Marginalised parameters, drawn, and derived ones, computed, for every position; in blocks to bound the memory."""
     rows = chain.reshape(-1, chain.shape[-1])
-    extra: dict[str, np.ndarray] = {}
-    for k, start in enumerate(range(0, len(rows), _BLOCK)):
-        block = rows[start : start + _BLOCK]
-        columns = dict(log_posterior.draw_marginalised(block, np.random.default_rng(child_seed(seed, k))))
-        columns |= log_posterior.derived(block)
-        for name, column in columns.items():
-            extra.setdefault(name, np.empty(len(rows)))[start : start + _BLOCK] = column
+    # A rejected proposal repeats a position: what is derived from it is computed once.
+    moved = np.ones(chain.shape[:3], dtype=bool)
+    moved[:, 1:] = (chain[:, 1:] != chain[:, :-1]).any(axis=-1)
+    order = np.where(moved, np.cumsum(moved).reshape(moved.shape) - 1, 0)
+    order = np.maximum.accumulate(order, axis=1).ravel()
+    extra = {}
+    if log_posterior.marginalised:
+        extra |= _joined(run(_draw_block, [(b, child_seed(seed, k)) for k, b in enumerate(_blocks(rows))]))
+    if log_posterior.derived_names:
+        distinct = _joined(run(_derive_block, [(b,) for b in _blocks(rows[moved.ravel()])]))
+        extra |= {name: column[order] for name, column in distinct.items()}
     return {name: column.reshape(chain.shape[:-1]) for name, column in extra.items()}
+
+
+def _blocks(rows):
+    return [rows[start : start + _BLOCK] for start in range(0, len(rows), _BLOCK)]
+
+
+def _draw_block(log_posterior, theta, seed):
+    return log_posterior.draw_marginalised(theta, np.random.default_rng(seed))
+
+
+def _derive_block(log_posterior, theta):
+    return log_posterior.derived(theta)
+
+
+def _joined(parts):
+    return {name: np.concatenate([part[name] for part in parts]) for name in parts[0]}
 
 
 def _facts(ensembles, status, settings, seconds):

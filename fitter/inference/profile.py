@@ -1,0 +1,194 @@
+"""Profile-likelihood intervals: how far one parameter can go while all others adapt."""
+
+from __future__ import annotations
+
+from dataclasses import dataclass
+
+import numpy as np
+
+from fitter.inference.maximise import maximise
+
+__all__ = ["ProfileInterval", "profile_intervals", "profile_likelihood"]
+
+
+@dataclass(frozen=True)
+class ProfileInterval:
+    """Where −2 ln L, minimised over all other parameters, is `delta` above its minimum.
+
+    Parameters
+    ----------
+    name : str
+    delta : float
+        Δχ²: 1 for 68.27 %, 4 for 95.45 % of a Gaussian likelihood.
+    best : float
+        Maximum-likelihood value within the prior.
+    low, high : float
+        The interval; a bound of the prior where it is reached first.
+    low_at_edge, high_at_edge : bool
+        Whether it is.
+    """
+
+    name: str
+    delta: float
+    best: float
+    low: float
+    high: float
+    low_at_edge: bool
+    high_at_edge: bool
+
+
+def profile_likelihood(log_posterior, optimum, name: str, values):
+    """−2 ln L, minimised over the other parameters, at fixed values of one.
+
+    Parameters
+    ----------
+    log_posterior : LogPosterior
+    optimum : Optimum
+        Starting point of the minimisations.
+    name : str
+        A sampled parameter.
+    values : (V,) array
+        Inside the prior.
+
+    Returns
+    -------
+    (V,) ndarray
+        +inf where no model is possible.
+    """
+    profile = _Profile(log_posterior, optimum)
+    i = log_posterior.names.index(name)
+    values = np.asarray(values, dtype=float)
+    return profile.at(np.full(len(values), i), values)[1]
+
+
+def profile_intervals(log_posterior, optimum, deltas=(1.0, 4.0)) -> tuple[ProfileInterval, ...]:
+    """Profile-likelihood intervals of every sampled parameter.
+
+    The prior only gives the bounds: the likelihood is profiled, not the posterior.
+
+    Parameters
+    ----------
+    log_posterior : LogPosterior
+    optimum : Optimum
+    deltas : sequence of float
+
+    Returns
+    -------
+    tuple of ProfileInterval
+        For each parameter one of each delta, in order.
+    """
+    from threadpoolctl import threadpool_limits
+
+    with threadpool_limits(1):
+        profile = _Profile(log_posterior, optimum)
+        n = len(log_posterior.names)
+        sides = [(i, delta, side) for i in range(n) for delta in deltas for side in (-1, 1)]
+        ends, edges = _crossings(profile, sides)
+    out = []
+    for k in range(0, len(sides), 2):
+        i, delta, _ = sides[k]
+        low, high = float(ends[k]), float(ends[k + 1])
+        best = float(profile.best[i])
+        out.append(ProfileInterval(log_posterior.names[i], delta, best, low, high, bool(edges[k]), bool(edges[k + 1])))
+    return tuple(out)
+
+
+class _Profile:
+    """Constrained maxima of the likelihood, many at a time, started from the nearest ones already known."""
+
+    def __init__(self, log_posterior, optimum):
+        self.low = np.array([p.low for p in log_posterior.priors], dtype=float)
+        self.high = np.array([p.high for p in log_posterior.priors], dtype=float)
+        self.function = _InsidePrior(log_posterior, self.low, self.high)
+        self.scale = np.sqrt(np.diag(optimum.covariance))
+        self.covariance = optimum.covariance
+        best, height = maximise(self.function, optimum.theta[None], self.scale, self.low, self.high)
+        self.best, self.height = best[0], float(height[0])
+        self.known = self.best[None]
+
+    def at(self, index, values):
+        """Maximise with parameter ``index[k]`` held at ``values[k]``: points (V, n) and −2 ln L (V,)."""
+        rows = np.arange(len(values))
+        starts = self._starts(index, values)
+        flat = starts.reshape(-1, starts.shape[-1])
+        heights = self.function(flat).reshape(starts.shape[:2])
+        start = starts[rows, np.argmax(heights, axis=1)]
+        possible = np.isfinite(heights.max(axis=1))
+        points, value = start.copy(), np.full(len(values), -np.inf)
+        if possible.any():
+            free = np.ones(start.shape, dtype=bool)
+            free[rows, index] = False
+            points[possible], value[possible] = maximise(self.function, start[possible], self.scale, self.low, self.high, free[possible])
+            self.known = np.concatenate([self.known, points[possible]])
+            if value.max() > self.height:
+                self.height, self.best = float(value.max()), points[int(np.argmax(value))]
+        return points, -2 * value
+
+    def _starts(self, index, values):
+        """For each value: the known points nearest to it, and the Gaussian ridge from the best one."""
+        n = len(self.best)
+        starts = []
+        for i, value in zip(index, values, strict=True):
+            near = self.known[np.argsort(np.abs(self.known[:, i] - value), kind="stable")[:4]]
+            near = np.concatenate([near, np.repeat(self.best[None], 5 - len(near), axis=0)])
+            ridge = near[:2] + (value - near[:2, i : i + 1]) * self.covariance[i] / self.covariance[i, i]
+            guess = np.clip(np.concatenate([near, ridge]), self.low, self.high)
+            guess[:, i] = value
+            starts.append(guess)
+        return np.array(starts).reshape(len(values), -1, n)
+
+
+class _InsidePrior:
+    """ln likelihood, −inf where the prior is zero."""
+
+    def __init__(self, log_posterior, low, high):
+        self.log_posterior, self.low, self.high = log_posterior, low, high
+
+    def __call__(self, theta):
+        value = np.full(len(theta), -np.inf)
+        inside = np.isfinite(self.log_posterior.log_prior(theta))
+        if inside.any():
+            value[inside] = self.log_posterior.log_likelihood(theta[inside])
+        return value
+
+
+def _crossings(profile, sides, turns: int = 60):
+    """Ends of the intervals `sides`, (index, Δ, −1 or 1), by stepping outwards and then by secants kept in a bracket."""
+    index = np.array([s[0] for s in sides])
+    delta = np.array([s[1] for s in sides])
+    sign = np.array([s[2] for s in sides])
+    bound = np.where(sign < 0, profile.low[index], profile.high[index])
+    inner = profile.best[index].astype(float)
+    f_inner = -delta
+    outer, f_outer = np.full(len(sides), np.nan), np.full(len(sides), np.nan)
+    step = profile.scale[index] * np.sqrt(delta)
+    at_edge = inner == bound
+    active = ~at_edge
+    for turn in range(turns):
+        k = np.flatnonzero(active)
+        if k.size == 0:
+            break
+        bracketed = np.isfinite(outer[k])
+        trial = np.where(bracketed, _inside(inner[k], f_inner[k], outer[k], f_outer[k], delta[k], turn), inner[k] + sign[k] * step[k])
+        trial = np.where(sign[k] < 0, np.maximum(trial, bound[k]), np.minimum(trial, bound[k]))
+        f = profile.at(index[k], trial)[1] + 2 * profile.height - delta[k]
+        out = f > 0
+        outer[k[out]], f_outer[k[out]] = trial[out], f[out]
+        within = k[~out]
+        inner[within], f_inner[within] = trial[~out], f[~out]
+        step[k] *= 1.6
+        at_edge[within] |= inner[within] == bound[within]
+        done = np.abs(f) < 1e-6 * delta[k]
+        done |= np.abs(outer[k] - inner[k]) < 1e-9 * profile.scale[index[k]]
+        inner[k[done]] = trial[done]
+        active[k] = ~(done | at_edge[k])
+    return inner, at_edge
+
+
+def _inside(a, fa, b, fb, delta, turn):
+    """Next trial in the bracket (a, b): a secant in √Δχ², in which profiles are nearly straight; every third time the middle."""
+    root_a, root_b = np.sqrt(np.maximum(fa + delta, 0)), np.sqrt(np.maximum(fb + delta, 0))
+    share = np.full(len(a), 0.5)
+    straight = np.isfinite(fb) & (root_b > root_a) & (turn % 3 != 2)
+    share[straight] = ((np.sqrt(delta) - root_a) / (root_b - root_a))[straight]
+    return a + np.clip(share, 0.001, 0.999) * (b - a)

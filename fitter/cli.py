@@ -207,6 +207,59 @@ def _print_comparison(result, as_json: bool, quiet: bool) -> None:
             _say(f"Warning: {text}")
 
 
+Processes = Annotated[int | None, typer.Option(min=1, help="Local processes.", show_default="one a core")]
+Scheduler = Annotated[str | None, typer.Option(metavar="ADDRESS", help="Run on the workers of this Dask scheduler.", show_default=False)]
+
+
+@app.command("stress")
+@_reported
+def _stress(
+    config: ConfigFile,
+    run_folder: Annotated[Path | None, typer.Option(help="Where the results go.", show_default="the config's, with _stress")] = None,
+    replace: Annotated[bool, typer.Option("--replace", help="Replace an earlier study there.")] = False,
+    resume: Annotated[bool, typer.Option("--resume", help="Continue an interrupted study.")] = False,
+    processes: Processes = None,
+    scheduler: Scheduler = None,
+    json_: Annotated[bool, typer.Option("--json", help="Print stress.json to stdout instead of the tables.")] = False,
+    quiet: Annotated[bool, typer.Option("--quiet", "-q", help="No progress and no tables.")] = False,
+    allow_code: AllowCode = False,
+) -> None:
+    """Does the answer survive? Refit without each group, cut, systematic and prior; single supernovae; residuals."""
+    from fitter.studies import Place, stress
+
+    running = {"processes": processes, "scheduler": scheduler, "progress": _counting(quiet)}
+    study = stress(config, Place(run_folder, replace, resume), **running, allow_code=allow_code)
+    _print_study(study, json_, quiet)
+
+
+def _counting(quiet: bool) -> Callable[[int, int], None] | None:
+    """A progress bar on stderr, or None where nobody looks."""
+    if quiet or not sys.stderr.isatty():
+        return None
+    from tqdm import tqdm
+
+    bar = tqdm(unit="task", file=sys.stderr, leave=False)
+
+    def show(done: int, total: int) -> None:
+        bar.total = total
+        bar.update(done - bar.n)
+        if done == total:
+            bar.close()
+
+    return show
+
+
+def _print_study(study, as_json: bool, quiet: bool) -> None:
+    import json
+
+    if as_json:
+        print(json.dumps(study.result, indent=1, ensure_ascii=False), flush=True)
+    elif not quiet:
+        print(study.text, end="", flush=True)
+    if not quiet:
+        _say(f"Written to {study.run_folder}")
+
+
 @app.command("check")
 @_reported
 def _check(config: ConfigFile, allow_code: AllowCode = False) -> None:

@@ -9,7 +9,7 @@ import numpy as np
 
 from fitter.errors import InputError
 from fitter.likelihood.priors import LogUniform, Normal, Prior, TruncatedNormal, Uniform
-from fitter.parameters import ZERO_POINT
+from fitter.parameters import ZERO_POINT, parameter
 from fitter.sample.noise import Noise
 from fitter.sample.uncertainty.term import Term, combine
 from fitter.study.setup import FitSetup
@@ -176,7 +176,7 @@ def _priors(setup, centres) -> Iterator[Scenario]:
         for factor, said in ((0.5, "halved"), (2.0, "doubled")):
             scaled = prior and _scaled(prior, centre, factor)
             if scaled:
-                yield Scenario(f"prior {name} {said}", "prior", f"prior of {name} {said}", "prior", (name, scaled.spec()))
+                yield Scenario(f"prior {name} {said}", "prior", f"prior of {parameter(name).plain} {said}", "prior", (name, scaled.spec()))
 
 
 def _sampled_priors(setup):

@@ -208,10 +208,16 @@ def _verdict(result: dict) -> list[str]:
 
 
 def _trend_sentences(trends) -> list[str]:
-    beyond = [t for t in trends if abs(t["significance"]) > FLAG]
-    return [
-        f"The residuals ask for {t['label']}: {t['amplitude']:+.3f} ± {t['error']:.3f} mag ({abs(t['significance']):.1f}σ)." for t in beyond
-    ]
+    beyond = sorted((t for t in trends if abs(t["significance"]) > FLAG), key=lambda t: -abs(t["significance"]))
+    said = []
+    for t in beyond:
+        size = f"{t['amplitude']:+.3f} ± {t['error']:.3f} mag ({abs(t['significance']):.1f}σ)"
+        said.append(f"The residuals ask for {_article(t['label'])}{t['label']}: {size}.")
+    return said
+
+
+def _article(label: str) -> str:
+    return "an " if label[0] in "aeiou" else "a "
 
 
 def _fit_sentences(facts: dict) -> list[str]:

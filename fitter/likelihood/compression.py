@@ -20,7 +20,9 @@ from fitter.likelihood.design import Design
 
 __all__ = ["Compressed", "compress", "compress_many", "stacked_qr"]
 
-_ROWS = 8192  # rows of the design held at once
+_ROWS = 2048  # rows of the design held at once: a block that stays in the cache
+_PANEL = 32  # columns that LAPACK eliminates at once
+_MANY = 50_000  # rows above which one thread is asked for: threads gain nothing on blocks so narrow, and lose much on a busy machine
 
 
 @dataclass(frozen=True)
@@ -69,14 +71,31 @@ class Compressed:
 
 
 def stacked_qr(blocks) -> np.ndarray:
-    """R of the QR factorisation of blocks stacked on top of each other, one block at a time."""
+    """R of the QR factorisation of blocks stacked on top of each other, one block at a time.
+
+    Once R is square, a block is eliminated below it without touching the zeros of R (LAPACK's tpqrt).
+    """
     from scipy.linalg import qr
+    from scipy.linalg.lapack import dtpqrt
 
     r = None
     for block in blocks:
+        if r is not None and len(r) == block.shape[1]:
+            r = dtpqrt(0, min(_PANEL, len(r)), r, np.asfortranarray(block), overwrite_a=True, overwrite_b=True)[0]
+            continue
         block = block if r is None else np.vstack([r, block])
-        r = qr(block, mode="r", overwrite_a=True, check_finite=False)[0][: block.shape[1]]
+        r = np.asfortranarray(qr(block, mode="r", overwrite_a=True, check_finite=False)[0][: block.shape[1]])
     return r
+
+
+def _threads(n: int):
+    """One BLAS thread where there are many rows."""
+    from contextlib import nullcontext
+
+    import scipy.linalg  # noqa: F401 - a library that is not loaded yet cannot be held to one thread
+    from threadpoolctl import threadpool_limits
+
+    return threadpool_limits(1) if n > _MANY else nullcontext()
 
 
 def compress(design: Design, noise=None, *, rotated=None) -> Compressed:
@@ -119,7 +138,8 @@ def compress_many(design: Design, data, noise=None, *, rotated=None) -> list[Com
     noise = design.noise if noise is None else noise
     n, k, p = design.n, design.gaussian.shape[1], design.flat.shape[1]
     m = k + p
-    factor = stacked_qr(_whitened_blocks(design, noise, data, rotated))
+    with _threads(n if noise.is_diagonal else 0):
+        factor = stacked_qr(_whitened_blocks(design, noise, data, rotated))
     nuisance_r = factor[:m, :m].copy()
     pivots = np.log(np.abs(np.diag(nuisance_r)))
     log_norm = float(-0.5 * (n - p) * np.log(2 * np.pi) - 0.5 * noise.log_det - pivots.sum())

@@ -78,8 +78,11 @@ def _limits(base: dict, rows: list[dict]) -> tuple[float, float]:
 
 
 def _draw_row(axes, y: float, row: dict, low: float, high: float) -> None:
+    from matplotlib.transforms import blended_transform_factory
+
     if "heading" in row:
-        axes.text(-0.58, y, row["heading"], transform=axes.get_yaxis_transform(), va="center", fontsize=8, fontweight="bold")
+        across = blended_transform_factory(axes.figure.transFigure, axes.transData)
+        axes.text(0.01, y, row["heading"], transform=across, va="center", fontsize=8, fontweight="bold")
         return
     axes.text(-0.02, y, _short(row["label"]), transform=axes.get_yaxis_transform(), va="center", ha="right", fontsize=8)
     for facts, filled in zip(row["facts"], (True, False), strict=False):

@@ -340,13 +340,18 @@ class _Job:
     def _write_results(self, result: Fit) -> None:
         from fitter.inference.checkpoint import remove_checkpoint
         from fitter.report.chain_file import write_chain
+        from fitter.report.facts import relabelled
+        from fitter.report.methods import methods_files
         from fitter.report.summary import summary_csv, summary_json, summary_markdown
 
         path, summary = self.folder.path, result.summary()
         write_chain(path / "chain.h5", result.chains, {"config_sha256": config_hash(self.settings)})
         if result.converged:
             remove_checkpoint(path)
-        for name, text in (("summary.md", summary_markdown(summary)), ("summary.csv", summary_csv(summary))):
+        texts = {"summary.md": summary_markdown(summary), "summary.csv": summary_csv(summary)}
+        with relabelled(result.config.labels):
+            texts |= methods_files(summary, self.settings)
+        for name, text in texts.items():
             write_atomic(path / name, text)
         _draw(result, path)
         # Last: a folder with this file is complete.
@@ -449,9 +454,23 @@ def check(path: str | Path, *, allow_code: bool = False) -> Check:
             sample = Sample.from_config(sample_settings, folder)
         except InputError as error:
             problems += getattr(error, "errors", [error])
+    problems += _variant_problems(config)
     if config is None or sample is None or problems:
         return Check(tuple(problems), config, sample)
     return _check_likelihood(config, sample)
+
+
+def _variant_problems(config: Config | None) -> list[InputError]:
+    """Return what is wrong with the variants of a config, if it has any."""
+    if config is None or not config.variants:
+        return []
+    from fitter.config.expand import expand
+
+    try:
+        expand(config)
+    except InputError as error:
+        return list(getattr(error, "errors", [error]))
+    return []
 
 
 def _check_likelihood(config: Config, sample: Sample) -> Check:

@@ -296,8 +296,10 @@ def _rebuilt(run, path, allow_code: bool):
 
 
 def _with_different_names(entries: list[Entry], paths: list[Path]) -> list[Entry]:
-    """Two runs of one title are told apart by their folders."""
+    """What all titles begin with is dropped; two runs of one title are told apart by their folders."""
     names = [e.name for e in entries]
+    start = os.path.commonprefix(names).rfind(": ") + 2
+    names = [n[start:] for n in names] if start > 1 else names
     if len(set(names)) < len(names):
         shared = os.path.commonpath([p.resolve().parent for p in paths])
         names = [os.path.relpath(p.resolve(), shared) for p in paths]

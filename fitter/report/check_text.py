@@ -26,6 +26,10 @@ def check_text(config, sample, log_posterior) -> str:
         lines += _data(sample) + _terms(sample)
     if config is not None:
         lines.append(f"Model: {config.cosmology.name}, {'with' if config.radiation else 'no'} radiation")
+    if config is not None and config.variants:
+        lines.append(
+            f"Variants, compared with {config.compare.reference or config.variants[0].name}: {', '.join(v.name for v in config.variants)}"
+        )
     if log_posterior is not None:
         lines += _parameters(log_posterior)
     if sample is not None and sample.warnings:

@@ -86,7 +86,7 @@ def _rows(report: dict) -> list[list[str]]:
     for key, label in _DIFFERENCES:
         rows.append([label, *(signed((v["delta"] or {}).get(key)) for v in variants)])
     rows.append(["Δ ln Z", *(evidence_text(v["delta"]) for v in variants)])
-    rows.append([f"odds to {report['reference']}", *(_odds(v["delta"]) for v in variants)])
+    rows.append(["odds to the reference", *(_odds(v["delta"]) for v in variants)])
     rows.append(["in words", *(_words(v["delta"]) for v in variants)])
     return rows
 

@@ -10,7 +10,7 @@ import numpy as np
 
 from fitter.errors import InputError
 from fitter.inference.seeds import child_seed
-from fitter.parameters import PARAMETERS
+from fitter.parameters import PARAMETERS, parameter
 from fitter.study.averaging import averaged
 from fitter.study.consistency import consistency, overlap
 from fitter.study.density_ratio import density_ratio
@@ -25,6 +25,7 @@ __all__ = ["SCHEMA", "compare_entries"]
 SCHEMA = "mufitter comparison 1"
 _CRITERIA = ("aic", "aicc", "bic", "dic")
 _SIGMAS = 4.0
+_STRETCH = {0.5: "halved", 2.0: "doubled"}
 
 
 @dataclass
@@ -279,5 +280,5 @@ def _width_warning(study: _Study, name: str, rows: list[dict]) -> str:
     if not changed:
         return ""
     now = next(v["delta"]["strength"] for v in (_variant(study, e) for e in study.entries if e.name == name))
-    said = [f"“{r['strength']}” with that of {r['parameter']} {'halved' if r['factor'] < 1 else 'doubled'}" for r in changed]
+    said = [f"“{r['strength']}” with that of {parameter(r['parameter']).plain} {_STRETCH[r['factor']]}" for r in changed]
     return f"The verdict on {name} ({now}) depends on the widths of the priors: {'; '.join(said)}."

@@ -156,8 +156,9 @@ def _sentence(facts: dict) -> str:
     if facts["log_r"] is None:
         return f"{text}. No evidence ratio: it needs the same sampled parameters and priors, four at most."
     log_r, error = facts["log_r"]
+    size = f" ± {error:.1g}" if error >= 0.005 else ""
     said = "one set of parameters explains both" if log_r > 0 else "each wants parameters of its own"
     return (
-        f"{text}; the evidence ratio is ln R = {log_r:.2f} ± {error:.2g}, {said}. R grows with the width of the priors (twice the width of "
+        f"{text}; the evidence ratio is ln R = {log_r:.2f}{size}, {said}. R grows with the width of the priors (twice the width of "
         "one adds up to ln 2 = 0.69 to ln R), so that agreement by R alone says little under wide priors."
     )

@@ -109,12 +109,5 @@ def _differences(other, draws, name, ess):
     points = np.interp(order, below, at, left=at[0], right=at[-1])
     for x, f in zip(points, other.cdf(name, points), strict=True):
         share = np.searchsorted(flat, x, side="right") / len(flat)
-        effective = min(ess, _effective_share(draws <= x))
-        yield abs(float(f) - share), float(_TAIL_SIGMAS * np.sqrt(max(f * (1 - f), 1e-6) / effective) + other.cdf_error)
-
-
-def _effective_share(inside):
-    """Effective number of draws behind the share of draws that satisfy a condition, (R, S, W) bool."""
-    from fitter.inference.diagnostics import ess_mean
-
-    return ess_mean(inside) if 0 < inside.mean() < 1 else np.inf
+        # Not the ESS of the tail itself: where that is lower, the tail is what has not been sampled.
+        yield abs(float(f) - share), float(_TAIL_SIGMAS * np.sqrt(max(f * (1 - f), 1e-6) / ess) + other.cdf_error)

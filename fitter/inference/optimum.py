@@ -83,8 +83,12 @@ def find_optimum(log_posterior, seed: np.random.SeedSequence) -> Optimum:
         starts, scale = _choose_starts(draws, values)
         points, heights = maximise(log_posterior, starts, scale, low, high)
         best = int(np.argmax(heights))
-        theta = points[best]
-        covariance = hessian_covariance(log_posterior, theta, draws.std(axis=0), low, high)
+        width = draws.std(axis=0)
+        covariance = hessian_covariance(log_posterior, points[best], width, low, high)
+        # Once more from the top, with widths that fit: the last digits along a narrow ridge.
+        polished, height = maximise(log_posterior, points[best : best + 1], np.sqrt(np.diag(covariance)), low, high)
+        theta, heights[best] = polished[0], height[0]
+        covariance = hessian_covariance(log_posterior, theta, width, low, high)
         marginalised = {k: float(v[0]) for k, v in log_posterior.best_marginalised(theta[None]).items()}
         chi2 = float(log_posterior.chi2(theta[None])[0])
     edges = tuple(n for n, t, a, b in zip(log_posterior.names, theta, low, high, strict=True) if t in (a, b))

@@ -152,37 +152,65 @@ class _InsidePrior:
         return value
 
 
-def _crossings(profile, sides, turns: int = 60):
-    """Ends of the intervals `sides`, (index, Δ, −1 or 1), by stepping outwards and then by secants kept in a bracket."""
-    index = np.array([s[0] for s in sides])
-    delta = np.array([s[1] for s in sides])
-    sign = np.array([s[2] for s in sides])
-    bound = np.where(sign < 0, profile.low[index], profile.high[index])
-    inner = profile.best[index].astype(float)
-    f_inner = -delta
-    outer, f_outer = np.full(len(sides), np.nan), np.full(len(sides), np.nan)
-    step = profile.scale[index] * np.sqrt(delta)
-    at_edge = inner == bound
-    active = ~at_edge
+class _Bracket:
+    """The end of every interval of `sides`, (index, Δ, −1 or 1), between a value inside and one outside."""
+
+    def __init__(self, profile, sides):
+        self.profile = profile
+        self.index = np.array([s[0] for s in sides])
+        self.delta = np.array([s[1] for s in sides], dtype=float)
+        self.sign = np.array([s[2] for s in sides])
+        self.bound = np.where(self.sign < 0, profile.low[self.index], profile.high[self.index])
+        self.inner = profile.best[self.index].astype(float)
+        self.f_inner = -self.delta
+        self.outer, self.f_outer = np.full((2, len(sides)), np.nan)
+        self.scale = profile.scale[self.index]
+        self.step = self.scale * np.sqrt(self.delta)
+        self.at_edge = self.inner == self.bound
+        self.active = ~self.at_edge
+        self.doubted = np.zeros(len(sides), dtype=int)
+
+    def trial(self, k, turn):
+        """Next values to try: outwards until something outside is found, then inside the bracket."""
+        outwards = self.inner[k] + self.sign[k] * self.step[k]
+        between = _inside(self.inner[k], self.f_inner[k], self.outer[k], self.f_outer[k], self.delta[k], turn)
+        trial = np.where(np.isfinite(self.outer[k]), between, outwards)
+        self.step[k] *= 1.6
+        return np.where(self.sign[k] < 0, np.maximum(trial, self.bound[k]), np.minimum(trial, self.bound[k]))
+
+    def take(self, k, trial, f):
+        """Narrow the brackets by Δχ² − Δ at the trial values."""
+        outside = f > 0
+        self.outer[k[outside]], self.f_outer[k[outside]] = trial[outside], f[outside]
+        within = k[~outside]
+        self.inner[within], self.f_inner[within] = trial[~outside], f[~outside]
+        self.at_edge[within] |= self.inner[within] == self.bound[within]
+        done = np.abs(f) < 1e-6 * self.delta[k]
+        self.inner[k[done]] = trial[done]
+        self.active[k] = ~(done | self.at_edge[k])
+        self._doubt(k)
+
+    def _doubt(self, k):
+        """A jump in the profile may be a minimisation that failed: look outwards again, a few times, before believing it."""
+        shut = k[self.active[k] & (np.abs(self.outer[k] - self.inner[k]) < 1e-5 * self.scale[k])]
+        self.doubted[shut] += 1
+        again = shut[self.doubted[shut] <= 5]
+        self.outer[again] = self.f_outer[again] = np.nan
+        self.step[again] = 0.1 * 2.0 ** self.doubted[again] * self.scale[again]
+        self.active[shut[self.doubted[shut] > 5]] = False
+
+
+def _crossings(profile, sides, turns: int = 200):
+    """Ends of the intervals, and whether each is a bound of the prior."""
+    bracket = _Bracket(profile, sides)
     for turn in range(turns):
-        k = np.flatnonzero(active)
+        k = np.flatnonzero(bracket.active)
         if k.size == 0:
             break
-        bracketed = np.isfinite(outer[k])
-        trial = np.where(bracketed, _inside(inner[k], f_inner[k], outer[k], f_outer[k], delta[k], turn), inner[k] + sign[k] * step[k])
-        trial = np.where(sign[k] < 0, np.maximum(trial, bound[k]), np.minimum(trial, bound[k]))
-        f = profile.at(index[k], trial)[1] + 2 * profile.height - delta[k]
-        out = f > 0
-        outer[k[out]], f_outer[k[out]] = trial[out], f[out]
-        within = k[~out]
-        inner[within], f_inner[within] = trial[~out], f[~out]
-        step[k] *= 1.6
-        at_edge[within] |= inner[within] == bound[within]
-        done = np.abs(f) < 1e-6 * delta[k]
-        done |= np.abs(outer[k] - inner[k]) < 1e-9 * profile.scale[index[k]]
-        inner[k[done]] = trial[done]
-        active[k] = ~(done | at_edge[k])
-    return inner, at_edge
+        trial = bracket.trial(k, turn)
+        f = profile.at(bracket.index[k], trial)[1] + 2 * profile.height - bracket.delta[k]
+        bracket.take(k, trial, f)
+    return bracket.inner, bracket.at_edge
 
 
 def _inside(a, fa, b, fb, delta, turn):

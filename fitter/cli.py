@@ -11,6 +11,7 @@ from typing import Annotated, TextIO
 
 import typer
 
+from fitter.commands import paper
 from fitter.errors import InputError, InputErrors, MufitterError
 
 __all__ = ["app", "main"]
@@ -295,6 +296,9 @@ def _explain(
     from fitter.config.schema import explain
 
     print(explain(key), flush=True)
+
+
+paper.register(app, _reported)
 
 
 if __name__ == "__main__":

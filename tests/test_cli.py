@@ -263,6 +263,8 @@ def test_the_schema_describes_the_config():
         "inputs",
         "variants",
         "compare",
+        "figures",
+        "labels",
     }
     assert "flat_w0wa" in schema["properties"]["model"]["anyOf"][0]["enum"]
     assert "uniform" in json.dumps(schema["properties"]["parameters"]["properties"]["H0"])

@@ -11,7 +11,20 @@ import unicodedata
 
 from fitter.report.facts import parameter
 
-__all__ = ["ascii_formula", "cite", "cited", "latex", "latex_text", "listed", "math", "model_text", "plain", "symbol", "with_unit"]
+__all__ = [
+    "ascii_formula",
+    "cite",
+    "cited",
+    "latex",
+    "latex_text",
+    "listed",
+    "math",
+    "model_text",
+    "plain",
+    "redshift_range",
+    "symbol",
+    "with_unit",
+]
 
 _MATH = re.compile("\ue000(.*?)\ue001(.*?)\ue002", re.DOTALL)
 _CITE = re.compile("\ue003(.*?)\ue002")
@@ -47,6 +60,11 @@ _MODELS = {
 def math(tex: str, unicode: str) -> str:
     """Return a mark for a formula: LaTeX without dollar signs, and what stands for it in plain text."""
     return f"\ue000{tex}\ue001{unicode}\ue002"
+
+
+def redshift_range(low: str, high: str) -> str:
+    """Return a mark for a range of redshifts."""
+    return math(rf"{low} \le z \le {high}", f"{low} ≤ z ≤ {high}")
 
 
 def cite(*keys: str) -> str:
@@ -95,7 +113,7 @@ def plain(text: str, references: dict[str, str] | None = None) -> str:
     """
     known = references or {}
     text = _MATH.sub(lambda m: m.group(2), text)
-    return _CITE.sub(lambda m: "; ".join(known.get(k, k) for k in m.group(1).split(",")), text)
+    return _CITE.sub(lambda m: "(" + "; ".join(known.get(k, k) for k in m.group(1).split(",")) + ")", text)
 
 
 def latex(text: str) -> str:
@@ -150,3 +168,6 @@ def _greek(name: str) -> str:
     if case == "CAPITAL":
         return f"${_GREEK_LIKE_LATIN.get(letter) or chr(92) + letter.capitalize()}$"
     return "$o$" if letter == "OMICRON" else r"$\varsigma$" if letter == "FINAL" else f"$\\{letter.lower()}$"
+
+
+CHI2 = math(r"\chi^2", "χ²")

@@ -27,6 +27,7 @@ _WITHOUT_VALUE = (MARKER, _LOCK, "config.yaml", "run.log")
 _ADDED_LATER = (
     *(f"figures/*.{kind}" for kind in ("pdf", "png", "svg", "eps", "txt")),
     *(f"tables/*.{kind}" for kind in ("tex", "csv", "md")),
+    *(f"{name}.{kind}" for name in ("posterior", "densities") for kind in ("csv", "parquet")),
     "report.html",
     "capsule*.json",
 )
@@ -164,7 +165,7 @@ class RunFolder:
     def _copy_target(self) -> None:
         copy = self.target.with_name(f".{self.target.name}.copied-by-mufitter")
         shutil.rmtree(copy, ignore_errors=True)
-        shutil.copytree(self.target, copy, ignore=shutil.ignore_patterns("figures", "tables", "summary.*", "chain.h5", "report.html"))
+        shutil.copytree(self.target, copy, ignore=shutil.ignore_patterns("figures", "tables", *_NOT_COPIED))
         write_atomic(copy / MARKER, json.dumps({"format": FOLDER_FORMAT}))
         os.rename(copy, self.path)
 
@@ -245,6 +246,10 @@ class RunFolder:
             self._lock = None
 
 
+_NOT_COPIED = (
+    *("figures", "tables", "summary.*", "chain.h5", "figures_data.h5"),
+    *("methods.*", "references.bib", "posterior.*", "densities.*", "report.html"),
+)
 _REGULAR = ("config.yaml", "summary.json", "summary.md", "summary.csv", "chain.h5", "run.log")
 
 

@@ -18,6 +18,7 @@ SCHEMA = "mufitter summary 1"
 
 _QUANTILES = {"low95": 0.025, "low68": 0.1587, "median": 0.5, "high68": 0.8413, "high95": 0.975}
 _ENOUGH_DRAWS = 100_000
+_MOST_GROUPS = 50
 _LIMIT_DENSITY = 0.6  # of the peak, at a prior's edge: the peak is within about 1σ of it
 
 
@@ -106,7 +107,19 @@ def _sample_facts(sample) -> dict:
         "distance_scale": sample.distance_scale,
         "data_kind": sample.data_kind,
         "removed": dict(sample.removed),
+        "terms": [{"label": t.label, "kind": t.kind, "median_sigma": float(np.sqrt(np.median(t.variance)))} for t in sample.terms],
+        "groups": _group_counts(sample),
     }
+
+
+def _group_counts(sample) -> dict[str, int]:
+    """Data of each survey, the largest first; empty where there are too many to list."""
+    if sample.group is None:
+        return {}
+    names, counts = np.unique(np.asarray(sample.group).astype(str), return_counts=True)
+    if len(names) > _MOST_GROUPS:
+        return {}
+    return {str(names[i]): int(counts[i]) for i in np.argsort(-counts, kind="stable")}
 
 
 def _best_fit(log_posterior, optimum, best: dict) -> dict:

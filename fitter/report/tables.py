@@ -6,11 +6,12 @@ import csv
 import io
 from collections.abc import Sequence
 
-from fitter.report.digits import figures_for
+from fitter.report.digits import figures_for, plain_number
 from fitter.report.facts import parameter, unit_text
+from fitter.report.prose import CHI2, ascii_formula, latex, latex_text, listed, math, model_text, plain, redshift_range, symbol
 from fitter.report.terminal import best_text, cell_text
 
-__all__ = ["TABLE_FORMATS", "caption", "parameter_table"]
+__all__ = ["TABLE_FORMATS", "caption", "caption_text", "fit_table", "latex_float", "latex_text", "parameter_table"]
 
 _RULES = {"booktabs": (r"\toprule", r"\midrule", r"\bottomrule"), "latex": (r"\hline", r"\hline", r"\hline")}
 TABLE_FORMATS = ("booktabs", "latex", "markdown", "csv")
@@ -22,7 +23,7 @@ def parameter_table(summaries: dict | Sequence[dict], fmt: str = "booktabs", nam
     Parameters
     ----------
     summaries : dict or sequence of dict
-        As :func:`fitter.report.summary.summarise` makes them.
+        As :func:`fitter.report.summary.summarise` makes them; the title of each is its name in the table.
     fmt : {"booktabs", "latex", "markdown", "csv"}
         ``latex`` needs no package; ``booktabs`` needs the one of that name.
     names : sequence of str, optional
@@ -57,17 +58,48 @@ def _names(summaries: list[dict], names: Sequence[str] | None) -> list[str]:
 
 
 def caption(summary: dict) -> str:
-    """Return the caption that a table or figure of this fit must carry: intervals, priors, data."""
+    """Return the caption that a table or figure of this fit must carry, in plain text: intervals, priors, data."""
+    return plain(caption_text([summary]))
+
+
+def caption_text(summaries: Sequence[dict], labels: Sequence[str] | None = None) -> str:
+    """Return the caption of a table of one fit or several, with marks (`fitter.report.prose`) for formulas.
+
+    Parameters
+    ----------
+    summaries : sequence of dict
+    labels : sequence of str, optional
+        What the fits are called in the table, where there are several.
+    """
+    text = "Posterior medians with equal-tailed 68.3 % intervals"
+    if any(facts.get("limit") for s in summaries for facts in s["parameters"].values()):
+        text += "; limits are one-sided, 95 %"
+    if len(summaries) == 1:
+        return f"{text}. Model {_fit_text(summaries[0])}{_undefined(summaries[0])}"
+    names = labels or [s["title"] or s["model"] for s in summaries]
+    # A fit that goes by the name of its model need not be told which one it is.
+    each = [f"{name}: {_fit_text(s).removeprefix(name + ', ')}{_undefined(s)}" for name, s in zip(names, summaries, strict=True)]
+    return text + ". " + " ".join(f"{one[:1].upper()}{one[1:]}" for one in each)
+
+
+def _fit_text(summary: dict) -> str:
+    """Model, data and priors of a fit."""
     sample = summary["sample"]
-    priors = "; ".join(f"{parameter(name).plain} {text}" for name, text in summary.get("priors", {}).items())
-    text = (
-        f"Posterior medians with equal-tailed 68.3 % intervals; limits are one-sided, 95 %. Model {summary['model']}, "
-        f"{sample['n']} supernovae at {sample['redshift_min']:.3g} ≤ z ≤ {sample['redshift_max']:.3g}, "
-        f"{sample['distance_scale']} distance scale"
-    )
+    low, high = (f"{sample[k]:.3g}" for k in ("redshift_min", "redshift_max"))
+    text = f"{model_text(summary['model'])}, {sample['n']:,} supernovae at {redshift_range(low, high)}"
     text += f", {sample['n_calibrators']} of them calibrators" if sample["n_calibrators"] else ""
+    text += f", {sample['distance_scale']} distance scale"
     text += ", radiation included" if summary["radiation"] else ", no radiation"
-    return f"{text}. Priors: {priors}." if priors else f"{text}."
+    priors = "; ".join(f"{symbol(name)} {said}" for name, said in summary.get("priors", {}).items())
+    held = "; ".join(f"{symbol(name)} = {value:g}" for name, value in (summary.get("fixed") or {}).items())
+    return text + (f". Priors: {priors}" if priors else "") + (f". Held: {held}." if held else ".")
+
+
+def _undefined(summary: dict) -> str:
+    """Which parameters do not exist in a part of the posterior."""
+    shares = {n: facts.get("undefined_fraction") for n, facts in summary["parameters"].items()}
+    said = [f"{symbol(n)} in {100 * share:.2g} %" for n, share in shares.items() if share]
+    return f" Undefined, and left out of the values, are {listed(said)} of the posterior." if said else ""
 
 
 def _markdown(summaries: list[dict], names: list[str]) -> str:
@@ -76,7 +108,7 @@ def _markdown(summaries: list[dict], names: list[str]) -> str:
         facts = summaries[0]["parameters"]
         rows += [[f"{parameter(n).plain}{unit_text(n)}", cell_text(facts[n]), best_text(facts[n]), facts[n]["kind"]] for n in names]
     else:
-        rows = [["parameter", *(s["title"] or s["model"] for s in summaries)]]
+        rows = [["parameter", *(plain(s["title"] or s["model"]) for s in summaries)]]
         rows += [[f"{parameter(n).plain}{unit_text(n)}", *(_cell(s, n, cell_text) for s in summaries)] for n in names]
     rows.insert(1, ["---"] * len(rows[0]))
     return "\n".join("| " + " | ".join(cell.replace("|", r"\|") for cell in row) + " |" for row in rows)
@@ -95,7 +127,7 @@ def _csv(summaries: list[dict], names: list[str]) -> str:
             values = ["" if facts[c] is None else repr(facts[c]) for c in columns]
             limit = facts.get("limit")
             said = "" if not limit else f"{'<' if limit['side'] == 'upper' else '>'} {limit['value']!r}"
-            writer.writerow([summary["title"] or summary["model"], name, facts["kind"], parameter(name).unit, *values, said])
+            writer.writerow([plain(summary["title"] or summary["model"]), name, facts["kind"], parameter(name).unit, *values, said])
     return out.getvalue()
 
 
@@ -118,22 +150,13 @@ def latex_cell(facts: dict) -> str:
 def _latex_symbol(name: str) -> str:
     declared = parameter(name)
     unit = rf"\ [{declared.latex_unit}]" if declared.latex_unit else ""
-    return f"${declared.latex}{unit}$"
-
-
-def latex_text(text: str) -> str:
-    """Escape plain text for LaTeX."""
-    special = {"\\": r"\textbackslash{}", "~": r"\textasciitilde{}", "^": r"\textasciicircum{}"}
-    special |= {c: "\\" + c for c in "&%$#_{}"}
-    special |= {"≤": r"$\le$", "≥": r"$\ge$", "χ": r"$\chi$", "σ": r"$\sigma$", "Λ": r"$\Lambda$", "Ω": r"$\Omega$", "−": "$-$"}
-    special |= {"±": r"$\pm$", "×": r"$\times$", "²": r"$^2$", "ρ": r"$\rho$", "…": r"\dots{}", "⁻": r"$^-$", "³": r"$^3$", "→": r"$\to$"}
-    return "".join(special.get(c, c) for c in text)
+    return f"${ascii_formula(declared.latex + unit)}$"
 
 
 def _latex(summaries: list[dict], names: list[str], rules: tuple[str, str, str]) -> str:
     top, middle, bottom = rules
     single = len(summaries) == 1
-    heads = ["Median", "Best fit"] if single else [latex_text(s["title"] or s["model"]) for s in summaries]
+    heads = ["Median", "Best fit"] if single else [latex(s["title"] or s["model"]) for s in summaries]
     lines = [rf"\begin{{tabular}}{{l{'c' * len(heads)}}}", top, " & ".join(["Parameter", *heads]) + r" \\", middle]
     for name in names:
         if single:
@@ -144,3 +167,90 @@ def _latex(summaries: list[dict], names: list[str], rules: tuple[str, str, str])
             cells = [_cell(s, name, latex_cell).replace("—", "--") for s in summaries]
         lines.append(" & ".join([_latex_symbol(name), *cells]) + r" \\")
     return "\n".join([*lines, bottom, r"\end{tabular}"]) + "\n"
+
+
+_NUMBERS = (
+    ("N", lambda s: f"{s['sample']['n']}"),
+    (CHI2, lambda s: f"{s['best_fit']['chi2']:.2f}"),
+    ("d.o.f.", lambda s: f"{s['best_fit']['dof']}"),
+    (math("p", "p"), lambda s: _number(s["best_fit"]["p_value"], 2)),
+    (math("k", "k"), lambda s: f"{s['information']['k']}"),
+    ("AIC", lambda s: _decimals(s["information"]["aic"])),
+    ("AICc", lambda s: _decimals(s["information"]["aicc"])),
+    ("BIC", lambda s: _decimals(s["information"]["bic"])),
+    ("DIC", lambda s: _decimals(s["information"]["dic"])),
+    (math(r"\ln Z", "ln Z"), lambda s: _log_evidence(s["information"])),
+)
+FIT_CAPTION = (
+    f"Quality of the fits. {math('N', 'N')}: data; {math('k', 'k')}: parameters counted, with an offset marginalised under a flat prior; "
+    f"{CHI2} where the posterior density is highest, {math('p', 'p')} the probability of a larger one by chance; "
+    f"{math('Z', 'Z')}: evidence, under the priors given with the parameters."
+)
+
+
+def _number(x, significant: int) -> str:
+    return "—" if x is None else plain_number(x, significant)
+
+
+def _decimals(x) -> str:
+    return "—" if x is None else f"{x:.2f}"
+
+
+def _log_evidence(information: dict) -> str:
+    value, error = information.get("log_evidence"), information.get("log_evidence_error")
+    if value is None:
+        return "—"
+    # More than two decimals of ln Z say nothing: a tenth is an odds ratio of 1.1.
+    return f"{value:.2f}" if not error or error < 0.05 else f"{value:.1f}"
+
+
+def fit_table(summaries: Sequence[dict], fmt: str = "booktabs") -> str:
+    """Return the table of goodness of fit, information criteria and evidence: a row for each fit.
+
+    Parameters
+    ----------
+    summaries : sequence of dict
+        The title of each is its name in the table.
+    fmt : {"booktabs", "latex", "markdown", "csv"}
+    """
+    heads = ["Fit", *(head for head, _ in _NUMBERS)]
+    rows = [[s["title"] or model_text(s["model"]), *(form(s) for _, form in _NUMBERS)] for s in summaries]
+    if fmt == "csv":
+        return "".join(",".join(_quoted("" if c == "—" else plain(c)) for c in row) + "\n" for row in [heads, *rows])
+    if fmt == "markdown":
+        lines = ["| " + " | ".join(plain(c).replace("|", r"\|") for c in row) + " |" for row in [heads, *rows]]
+        return "\n".join([lines[0], "| " + " | ".join(["---"] * len(heads)) + " |", *lines[1:]])
+    top, middle, bottom = _RULES[fmt]
+    lines = [" & ".join("--" if c == "—" else latex(c) for c in row) + r" \\" for row in [heads, *rows]]
+    head, *body = lines
+    return "\n".join([rf"\begin{{tabular}}{{l{'r' * len(_NUMBERS)}}}", top, head, middle, *body, bottom, r"\end{tabular}"]) + "\n"
+
+
+def _quoted(cell: str) -> str:
+    return '"' + cell.replace('"', '""') + '"' if any(c in cell for c in ',"\n') else cell
+
+
+def latex_float(tabular: str, text: str, label: str, *, wide: bool = False) -> str:
+    """Return a table environment with a caption, above the tabular as journals want it, and a label.
+
+    Parameters
+    ----------
+    tabular : str
+    text : str
+        The caption, with marks.
+    label : str
+        For ``\\ref``, after ``tab:``.
+    wide : bool
+        Over both columns of a page that has two.
+    """
+    name = "table*" if wide else "table"
+    lines = [
+        rf"\begin{{{name}}}",
+        r"\centering",
+        rf"\caption{{{latex(text)}}}",
+        rf"\label{{tab:{label}}}",
+        r"\renewcommand{\arraystretch}{1.25}",  # room for errors above and below the line
+        tabular.rstrip(),
+        rf"\end{{{name}}}",
+    ]
+    return "\n".join(lines) + "\n"

@@ -12,6 +12,7 @@ from fitter.report.figures.corner import corner_caption, corner_figure, inner_ti
 from fitter.report.figures.hubble import hubble_caption, hubble_data, hubble_figure, reference_distance
 from fitter.report.figures.panels import contours, density, plot_range, thinned
 from fitter.report.figures.style import DOUBLE, LEVELS, SINGLE, new_figure, save_figure, styled, width_inches
+from fitter.report.prose import plain
 
 
 def assert_inside_canvas(figure):
@@ -157,8 +158,8 @@ def test_contours_hold_what_they_say():
 
 
 def test_levels_and_intervals_are_said_in_the_caption(fit):
-    text = corner_caption(fit.posterior)
-    assert "68.3 %" in text and "95.4 %" in text and "omega_lambda" in text
+    text = plain(corner_caption(fit.posterior))
+    assert "68.3 %" in text and "95.4 %" in text and "Ωm, ΩΛ, H0" in text
     assert "Overlaid: a, b" in corner_caption({"a": fit.posterior, "b": fit.posterior})
 
 

@@ -107,10 +107,13 @@ def test_residuals_figure(build, width):
 
 def test_chains_figure(fit):
     figure = chains_figure(fit.posterior)
-    assert len(figure.axes) == 9
-    trace, running, rhat = figure.axes[:3]
+    assert len(figure.axes) == 12
+    trace, running, correlation, rhat = figure.axes[:4]
     np.testing.assert_array_equal(trace.get_lines()[0].get_ydata(), fit.posterior.draws("omega_m")[0, :, 0])
     assert running.get_lines()[0].get_ydata()[-1] == pytest.approx(fit.posterior.draws("omega_m")[0].mean())
+    # Independent draws: no autocorrelation beyond lag 0, to four times 1/√(250 steps × 16 walkers).
+    assert correlation.get_lines()[0].get_ydata()[0] == 1
+    np.testing.assert_allclose(correlation.get_lines()[0].get_ydata()[1:10], 0, atol=4 / np.sqrt(250 * 16))
     assert rhat.get_yscale() == "log" and (rhat.get_lines()[0].get_ydata() < 0.01).all()
     assert_inside_canvas(figure)
     assert "4 independent replicas" in chains_caption(fit.posterior)

@@ -64,4 +64,4 @@ def test_caption_states_intervals_priors_and_data(fit):
     text = caption(fit.summary())
     for part in ("equal-tailed 68.3 %", "300 supernovae", "Ωm uniform(0, 1)", "no radiation"):
         assert part in text
-    assert latex_text("Ωm < 50 %") == r"$\Omega$m < 50 \%"
+    assert latex_text("Ωm < 50 %") == r"$\Omega$m $<$ 50 \%"

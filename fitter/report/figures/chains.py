@@ -8,18 +8,19 @@ import numpy as np
 
 from fitter.errors import InputError
 from fitter.report.facts import axis_label
-from fitter.report.figures.style import COLOURS, in_style, new_figure
+from fitter.report.figures.style import COLOURS, in_style, new_figure, width_inches
 
 __all__ = ["chains_caption", "chains_figure"]
 
 _STEPS_DRAWN = 600
 _LENGTHS = 8
 _DRAWS_A_LENGTH = 60_000
+_WALKERS = 64  # of each replica, for the autocorrelation
 
 
 @in_style
 def chains_figure(posterior, names: Sequence[str] | None = None, *, width: str | float = "double"):
-    """Draw, for each parameter, the trace of every replica, its running mean, and R̂ against length.
+    """Draw, for each parameter, the trace of every replica, its running mean and autocorrelation, and R̂ against length.
 
     Parameters
     ----------
@@ -36,22 +37,41 @@ def chains_figure(posterior, names: Sequence[str] | None = None, *, width: str |
     unknown = [n for n in names if n not in posterior.kinds]
     if unknown or not names:
         raise InputError("no such parameter in this fit", value=(unknown or [None])[0], cure=f"Known: {', '.join(posterior.kinds)}.")
-    figure = new_figure(width, height=0.62 + 1.3 * len(names))
+    wide = width_inches(width) > 5
+    columns, rows = (4, len(names)) if wide else (2, 2 * len(names))
+    figure = new_figure(width, height=0.62 + (1.3 if wide else 1.25) * rows)
     inches, height = figure.get_size_inches()
-    axes = figure.subplots(len(names), 3, sharex=True, squeeze=False, gridspec_kw={"wspace": 0.36, "hspace": 0.1})
-    figure.subplots_adjust(left=0.68 / inches, right=1 - 0.12 / inches, bottom=0.42 / height, top=1 - 0.26 / height)
-    for row, name in zip(axes, names, strict=True):
+    axes = figure.subplots(rows, columns, squeeze=False, gridspec_kw={"wspace": 0.42, "hspace": 0.12 if wide else 0.42})
+    figure.subplots_adjust(left=0.62 / inches, right=1 - 0.08 / inches, bottom=0.42 / height, top=1 - 0.26 / height)
+    for row, name in zip(axes.reshape(len(names), 4), names, strict=True):
         draws = np.asarray(posterior.draws(name), dtype=float)
         _trace(row[0], draws)
         _running_mean(row[1], draws)
-        _rhat(row[2], draws)
+        _autocorrelation(row[2], draws)
+        _rhat(row[3], draws)
         row[0].set_ylabel(axis_label(name))
-    for ax, title in zip(axes[0], ("One walker of each replica", "Running mean", r"$\hat{R} - 1$"), strict=True):
-        ax.set_title(title)
-    for ax in axes[-1]:
-        ax.set_xlabel("Step")
-    figure.align_ylabels(axes[:, 0])
+    _dress(axes.reshape(len(names), 4), wide)
     return figure
+
+
+_TITLES = ("One walker each", "Running mean", "Autocorrelation", r"$\hat{R} - 1$")
+
+
+def _dress(axes, wide: bool) -> None:
+    """Titles over the columns, or over each panel where they stand in pairs; numbers only where they are not repeated."""
+    for row in axes if not wide else axes[:1]:
+        for ax, title in zip(row, _TITLES, strict=True):
+            ax.set_title(title, pad=4)
+    reach = max(ax.get_xlim()[1] for ax in axes[:, 2])
+    for ax in axes[:, 2]:
+        ax.set_xlim(0, reach)
+    for row in axes[:-1] if wide else ():
+        for ax in row:
+            ax.tick_params(labelbottom=False)
+    for ax, name in zip(axes[-1], ("Step", "Step", "Lag  [steps]", "Step"), strict=True):
+        if wide or ax in axes[-1][2:]:
+            ax.set_xlabel(name)
+    axes[0, 0].figure.align_ylabels(axes[:, 0])
 
 
 def _trace(ax, draws) -> None:
@@ -75,6 +95,39 @@ def _running_mean(ax, draws) -> None:
     ax.set_ylim(mean - 0.6 * sd, mean + 0.6 * sd)
 
 
+def _autocorrelation(ax, draws) -> None:
+    """Autocorrelation of each replica, averaged over its walkers, well beyond the lag where it has died away."""
+    middle = np.nanmedian(draws)
+    curves = [autocorrelation(np.where(np.isfinite(replica), replica, middle)[:, :_WALKERS]) for replica in draws]
+    small = np.flatnonzero(np.mean(curves, axis=0) < 0.05)
+    half = max(len(curves[0]) // 2, 2)
+    reach = int(np.clip(1.6 * small[0] if len(small) else half, min(15, half), half))
+    for i, curve in enumerate(curves):
+        ax.plot(np.arange(half), curve[:half], color=COLOURS[i % len(COLOURS)], lw=0.9)
+    ax.axhline(0, color="black", lw=0.6, ls=":")
+    ax.set_xlim(0, reach)
+    ax.set_ylim(-0.15, 1.05)
+
+
+def autocorrelation(walkers: np.ndarray) -> np.ndarray:
+    """Return the autocorrelation at each lag, averaged over walkers, about their common mean.
+
+    Parameters
+    ----------
+    walkers : (S, W) float
+
+    Returns
+    -------
+    (S,) float
+        1 at lag 0; zeros beyond it where nothing ever moved.
+    """
+    steps = len(walkers)
+    x = walkers - walkers.mean()
+    power = np.abs(np.fft.rfft(x, 2 * steps, axis=0)) ** 2
+    covariance = np.fft.irfft(power.sum(axis=1), 2 * steps)[:steps] / np.arange(steps, 0, -1)
+    return covariance / covariance[0] if covariance[0] > 0 else np.eye(1, steps)[0]
+
+
 def _rhat(ax, draws) -> None:
     from fitter.inference.diagnostics import split_rhat
 
@@ -95,7 +148,7 @@ def chains_caption(posterior) -> str:
     """Return the caption of the chains figure."""
     replicas, steps, walkers = posterior.log_posterior.shape
     return (
-        f"The chains after burn-in: {replicas} independent replicas of {walkers} walkers, {steps} steps. Left: one walker of each replica. "
-        "Middle: running mean of each replica, over 0.6 standard deviations about the mean (dotted). Right: rank-normalised split R-hat "
-        "minus 1 against length; dotted: the limit, 0.01."
+        f"The chains after burn-in: {replicas} independent replicas of {walkers} walkers, {steps} steps. For each parameter: one walker of "
+        "each replica; the running mean of each replica, within 0.6 standard deviations of the mean (dotted); the autocorrelation of each "
+        "replica, averaged over walkers; rank-normalised split R-hat minus 1 against length (dotted: the limit, 0.01)."
     )

@@ -12,6 +12,7 @@ from fitter.report.digits import figures_for
 from fitter.report.facts import axis_label, parameter
 from fitter.report.figures.panels import LINE, common_exponent, contours, draw_density, plot_range, runs_of, thinned
 from fitter.report.figures.style import COLOURS, LEVELS, in_style, new_figure, width_inches
+from fitter.report.prose import listed, symbol
 
 __all__ = ["corner_caption", "corner_figure", "main_parameters"]
 
@@ -104,7 +105,8 @@ def corner_caption(posteriors, names: Sequence[str] | None = None) -> str:
     names = list(names) if names is not None else main_parameters(next(iter(runs.values())))
     first, second = (f"{100 * level:.1f}" for level in LEVELS)
     text = (
-        f"Marginal posteriors of {', '.join(names)}. The contours are the smallest regions that hold {first} % and {second} % "
+        f"Marginal posteriors of {listed(symbol(name) for name in names)}. The contours are the smallest regions that hold "
+        f"{first} % and {second} % "
         "of the probability of each pair (not the 39.3 % and 86.5 % inside one and two standard deviations of a two-dimensional Gaussian)."
     )
     if len(runs) == 1:

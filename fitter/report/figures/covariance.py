@@ -14,14 +14,22 @@ from fitter.report.figures.style import COLOURS, in_style, new_figure, width_inc
 from fitter.report.information import noise_parameter, noise_scale
 
 __all__ = [
-    "BudgetData", "CorrelationData", "budget_caption", "budget_data", "correlation_caption", "correlation_data", "draw_budget", "draw_correlation",
-]  # fmt: skip
+    "BudgetData",
+    "CorrelationData",
+    "budget_caption",
+    "budget_data",
+    "correlation_caption",
+    "correlation_data",
+    "draw_budget",
+    "draw_correlation",
+]
 
 _CELLS = 36  # about so many rows and columns of cells
 _FEW = 60  # up to so many supernovae each is a cell of its own
 _MOST_TERMS = 8
 _LARGEST = 20_000  # rows of a dense matrix that are looked at
 _BLOCK = 2_000
+_NAME_HEIGHT = 0.28  # inches that a survey's two lines need
 
 
 @dataclass(frozen=True)
@@ -66,8 +74,9 @@ def correlation_data(sample, noise=None) -> CorrelationData:
     noise = noise.inverted() if noise.precision is not None else noise
     sigma = np.sqrt(noise.total_variance)
     total = np.zeros((b, b))
-    shifts = np.zeros((b, noise.modes.shape[1]))
-    np.add.at(shifts, cell[flow], noise.modes[flow] / sigma[flow, None])
+    members = cell[flow]
+    # Mode by mode: a second N × k array of a million supernovae is a gigabyte.
+    shifts = np.array([np.bincount(members, weights=mode[flow] / sigma[flow], minlength=b) for mode in noise.modes.T]).reshape(-1, b).T
     total += shifts @ shifts.T
     own = np.einsum("ij,ij->i", noise.modes, noise.modes) / sigma**2
     if noise.dense is not None:
@@ -124,17 +133,22 @@ def draw_correlation(data: CorrelationData, *, width: str | float = "single"):
     -------
     matplotlib.figure.Figure
     """
+    from matplotlib import colormaps
+    from matplotlib.colors import ListedColormap
     from matplotlib.ticker import MaxNLocator
 
     inches = min(width_inches(width), 5.2) if isinstance(width, str) else width_inches(width)
-    left, right, below, above = 0.92, 0.62, 0.62, 0.08
+    left, right, below, above = 0.92, 0.68, 0.44, 0.08
     side = inches - left - right
     height = side + below + above
     figure = new_figure(inches, height=height)
     ax = figure.add_axes([left / inches, below / height, side / inches, side / height])
     finite = np.abs(data.matrix[np.isfinite(data.matrix)])
     reach = float(finite.max()) if finite.size and finite.max() > 0 else 1.0
-    image = ax.imshow(data.matrix, cmap="RdBu_r", vmin=-reach, vmax=reach, interpolation="nearest", origin="upper")
+    lowest = -reach if np.nanmin(data.matrix, initial=0.0) < -0.02 * reach else 0.0
+    # White is zero, red positive, blue negative, whatever the range.
+    half = ListedColormap(colormaps["RdBu_r"](np.linspace(0.5 if lowest == 0 else 0.0, 1.0, 256)))
+    image = ax.imshow(data.matrix, cmap=half, vmin=lowest, vmax=reach, interpolation="nearest", origin="upper")
     bar = figure.colorbar(image, cax=figure.add_axes([(left + side + 0.07) / inches, below / height, 0.1 / inches, side / height]))
     bar.set_label("Mean correlation", labelpad=2)
     bar.ax.yaxis.set_major_locator(MaxNLocator(5))
@@ -149,32 +163,21 @@ def _name_surveys(ax, data: CorrelationData, side: float) -> None:
     for edge in starts[1:] - 0.5:
         ax.axhline(edge, color="black", lw=0.6)
         ax.axvline(edge, color="black", lw=0.6)
-    ax.tick_params(left=False, bottom=False, top=False, right=False, labelleft=False, labelbottom=False)
+    ax.set_xticks([])
+    ax.set_yticks([])
     room = -np.inf
     for start, stop in zip(starts, stops, strict=True):
-        middle, inches = 0.5 * (start + stop - 1), side * (stop - start) / b
-        position = max(middle / b * side, room)  # names of narrow blocks are pushed apart
-        ax.text(-0.04, 1 - (position + 0.5 * side / b) / side, _survey_text(data, start, stop), transform=ax.transAxes, ha="right", va="center", fontsize=7.5, linespacing=1.0)  # fmt: skip
-        room = position + (0.28 if inches < 0.28 else max(0.5 * inches, 0.28))
-    ticks = np.unique(np.linspace(0, b - 1, min(b, 2 * len(starts) + 2)).astype(int))
-    ticks = _spread(np.unique(np.r_[starts, stops - 1]), 0.17 * b / side)
-    ax.set_xticks(ticks, [f"{0.5 * (data.low[i] + data.high[i]):.2g}" for i in ticks], rotation=90)
-    ax.tick_params(axis="x", labelbottom=True, bottom=True, direction="out", pad=2)
-    ax.set_xlabel("Redshift  $z$, survey by survey", labelpad=2)
+        position = max(side * 0.5 * (start + stop) / b, room)  # names of narrow blocks are pushed apart
+        place = {"transform": ax.transAxes, "ha": "right", "va": "center", "fontsize": 7.5, "linespacing": 1.0}
+        ax.text(-0.04, 1 - position / side, _survey_text(data, start, stop), **place)
+        room = position + _NAME_HEIGHT
+    several = len(starts) > 1
+    ax.set_xlabel("Surveys in the same order,\nredshift rising in each" if several else "Redshift, rising", labelpad=4)
 
 
 def _survey_text(data: CorrelationData, start: int, stop: int) -> str:
     name = short_name(str(data.group[start]))
     return f"{name}\n{data.low[start]:.2g}–{data.high[stop - 1]:.2g}"
-
-
-def _spread(positions, least: float) -> list[int]:
-    """Drop positions that stand closer to the one before than their labels allow."""
-    kept = []
-    for position in positions:
-        if not kept or position - kept[-1] >= least:
-            kept.append(int(position))
-    return kept
 
 
 def correlation_caption(data: CorrelationData) -> str:
@@ -235,7 +238,7 @@ def budget_data(log_posterior, values: Mapping[str, float]) -> BudgetData:
     count = np.bincount(index, minlength=len(edges) - 1)[present]
     mean = lambda x: np.bincount(index, weights=x, minlength=len(edges) - 1)[present] / count  # noqa: E731
     variance = scale2 * np.array([mean(v) for _, v in terms])
-    labels, variance = _largest([label for label, _ in terms], variance)
+    labels, variance = _largest([label.replace("_", " ") for label, _ in terms], variance)
     # An empty bin gives its room to the neighbours.
     borders = np.r_[edges[0], np.sqrt(edges[present[:-1] + 1] * edges[present[1:]]), edges[-1]]
     return BudgetData(np.exp(mean(np.log(z))), borders, labels, variance)
@@ -267,11 +270,11 @@ def draw_budget(data: BudgetData, *, width: str | float = "single"):
 
     inches = width_inches(width)
     columns = 2 if inches < 5 else 4
-    legend = 0.06 + 0.165 * -(-len(data.labels) // columns)
+    legend = 0.05 + 0.15 * -(-len(data.labels) // columns)
     height = 0.5 + legend + (2.6 if inches < 5 else 3.2)
     figure = new_figure(inches, height=height)
     upper, lower = figure.subplots(2, 1, sharex=True, height_ratios=[1, 2.2], gridspec_kw={"hspace": 0.06})
-    figure.subplots_adjust(left=0.56 / inches, right=1 - 0.12 / inches, bottom=0.42 / height, top=1 - (0.06 + legend) / height)
+    figure.subplots_adjust(left=0.56 / inches, right=1 - 0.12 / inches, bottom=0.42 / height, top=1 - (0.04 + legend) / height)
     total = data.variance.sum(axis=0)
     upper.stairs(np.sqrt(total), data.edges, color="black", lw=1.0, baseline=None)
     upper.set_ylim(0, 1.15 * float(np.sqrt(total.max())))
@@ -290,14 +293,16 @@ def draw_budget(data: BudgetData, *, width: str | float = "single"):
     redshift_ticks(lower)
     upper.tick_params(labelbottom=False, which="both")
     figure.align_ylabels([upper, lower])
-    figure.legend(handles=patches, loc="upper center", bbox_to_anchor=(0.5, 1.0), ncols=columns, handlelength=1.0, columnspacing=1.0, handletextpad=0.4, borderaxespad=0.2, labelspacing=0.25)  # fmt: skip
+    tight = {"handlelength": 1.0, "columnspacing": 1.0, "handletextpad": 0.4, "borderaxespad": 0.2, "labelspacing": 0.25}
+    figure.legend(handles=patches, loc="upper center", bbox_to_anchor=(0.5, 1.0), ncols=columns, **tight)
     return figure
 
 
 def budget_caption(data: BudgetData) -> str:
     """Return the caption of the budget figure."""
     return (
-        f"What the variance of the data is made of, in {data.variance.shape[1]} redshift bins: {', '.join(data.labels)}. Bottom: each term's "
+        f"What the variance of the data is made of, in {data.variance.shape[1]} redshift bins: {', '.join(data.labels)}. Bottom: each "
+        "term's "
         "mean variance over the sum; top: square root of the sum. Correlations between supernovae, which the share does not show, make the "
         "systematic terms weigh more in the parameters than here."
     )

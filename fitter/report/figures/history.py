@@ -18,7 +18,7 @@ __all__ = ["HistoryData", "draw_history", "history_caption", "history_data"]
 
 PROBABILITIES = (0.023, 0.15865, 0.5, 0.84135, 0.977)  # ends of 95.4 and 68.3 %, and the median
 REFERENCE_OMEGA_M = 0.3
-_DRAWS = 600
+_DRAWS = 3000
 _POINTS = 121
 _STEP = 1e-4  # in ln(1+z), for the derivative of E²: an error of about 1e-8
 _NODES = 96
@@ -139,12 +139,15 @@ def draw_history(histories, *, width: str | float = "double"):
     if len({"expansion", "relative_expansion"} & set(names)) == 2:
         raise InputError("fits on a relative and on an absolute distance scale share no axis for H(z)", cure="Draw them apart.")
     wide = width_inches(width) > 5
-    columns = min(2, len(names)) if wide else 1
+    columns = {1: 1, 2: 2, 3: 3}.get(len(names), 2) if wide else 1
     rows = -(-len(names) // columns)
     legend = 0.26 if len(runs) > 1 else 0.0
-    figure = new_figure(width, height=0.5 + legend + (2.0 if wide else 1.7) * rows)
+    # One panel as wide as two columns would be a strip.
+    figure = new_figure(4.6 if width == "double" and len(names) == 1 else width, height=0.5 + legend + (2.0 if wide else 1.7) * rows)
     inches, height = figure.get_size_inches()
-    axes = figure.subplots(rows, columns, sharex=True, squeeze=False, gridspec_kw={"wspace": 0.28, "hspace": 0.08})
+    axes = figure.subplots(
+        rows, columns, sharex=True, squeeze=False, gridspec_kw={"wspace": 0.45 if columns == 3 else 0.28, "hspace": 0.08}
+    )
     figure.subplots_adjust(left=0.58 / inches, right=1 - 0.1 / inches, bottom=0.42 / height, top=1 - (0.1 + legend) / height)
     for ax, name in zip(axes.ravel(), names, strict=False):
         _panel(ax, name, runs)
@@ -184,6 +187,7 @@ def _panel(ax, name: str, runs: Mapping[str, HistoryData]) -> None:
     margin = 0.07 * (max(ends) - min(ends))
     ax.set_ylim(min(ends) - margin, max(ends) + margin)
     ax.set_xlim(0, max(run.redshift[-1] for run in runs.values()))
+    ax.xaxis.set_major_locator(MaxNLocator(6, steps=[1, 2, 5, 10]))
     ax.yaxis.set_major_locator(MaxNLocator(5, steps=[1, 2, 5, 10], prune="both"))
     ax.set_ylabel(_LABELS[name])
 

@@ -11,6 +11,7 @@ from fitter.errors import InputError
 from fitter.report.facts import axis_label
 from fitter.report.figures.panels import contours, plot_range, runs_of, thinned
 from fitter.report.figures.style import COLOURS, GREY, LEVELS, in_style, new_figure
+from fitter.report.prose import cite, symbol
 
 __all__ = ["PLANES", "no_big_bang", "plane_caption", "plane_figure", "planes_of", "recollapse"]
 
@@ -201,13 +202,18 @@ def _label_along(ax, line: Line, x, y, limits) -> None:
 def plane_caption(plane: str, labels=()) -> str:
     """Return the caption of a plane."""
     chosen = PLANES[plane]
-    text = f"{chosen.y} against {chosen.x}. The contours are the smallest regions that hold {100 * LEVELS[0]:.1f} % and "
+    text = f"{symbol(chosen.y)} against {symbol(chosen.x)}. The contours are the smallest regions that hold {100 * LEVELS[0]:.1f} % and "
     text += f"{100 * LEVELS[1]:.1f} % of the probability."
     if plane == "densities":
-        text += " Lines: flat space; q0 = 0 (no acceleration today below it); recollapse; grey: no big bang (Carroll, Press & Turner 1992)."
+        text += (
+            f" Lines: flat space; {symbol('q0')} = 0 (no acceleration today below it); recollapse; grey: no big bang {cite('Carroll1992')}."
+        )
     elif plane == "w":
-        text += " Dashed: a cosmological constant, w = -1."
+        text += f" Dashed: a cosmological constant, {symbol('w')} = −1."
     else:
-        text += " Dashed: w0 = -1 and wa = 0, a cosmological constant where they cross; dotted: w0 + wa = 0, above which dark energy grows "
-        text += "faster than matter towards the past."
+        w0, wa = symbol("w0"), symbol("wa")
+        text += (
+            f" Dashed: {w0} = −1 and {wa} = 0, a cosmological constant where they cross; dotted: {w0} + {wa} = 0, above which dark energy "
+        )
+        text += "grows faster than matter towards the past."
     return f"{text} Runs: {', '.join(labels)}." if labels else text

@@ -11,6 +11,8 @@ from functools import wraps
 from pathlib import Path
 
 from fitter.errors import InputError
+from fitter.report.citations import SHORT
+from fitter.report.prose import plain
 
 __all__ = ["COLOURS", "DOUBLE", "GREY", "LEVELS", "SINGLE", "STYLE", "in_style", "new_figure", "save_figure", "styled", "width_inches"]
 
@@ -159,7 +161,7 @@ def save_figure(figure, path: Path, caption: str = "", *, formats: Sequence[str]
     path : Path
         Without suffix: ``figures/corner`` makes corner.pdf, corner.png and corner.txt.
     caption : str
-        What a reader must know: levels, intervals, bins.
+        What a reader must know: levels, intervals, bins; may hold marks (`fitter.report.prose`).
     formats : sequence of {"pdf", "png", "svg", "eps"}
     style : optional
         As for :func:`styled`.
@@ -183,7 +185,7 @@ def save_figure(figure, path: Path, caption: str = "", *, formats: Sequence[str]
             written.append(target)
     if caption:
         target = path.with_name(f"{path.name}.txt")
-        _atomically(target, lambda f: f.write((caption.strip() + "\n").encode()))
+        _atomically(target, lambda f: f.write((plain(caption, SHORT).strip() + "\n").encode()))
         written.append(target)
     return written
 

@@ -19,7 +19,7 @@ from fitter.sample.readers.layout import TextOptions
 from fitter.sample.readers.numbers import to_numbers
 from fitter.sample.sample import Sample
 from fitter.sample.settings import Columns, SampleSettings
-from fitter.sample.tables import Table, read_table
+from fitter.sample.tables import Table, bordered_table, read_table
 from fitter.sample.uncertainty.base import Rows
 from fitter.sample.uncertainty.term import Term, combine, unique_labels
 from fitter.sample.validate import Place, check_duplicates, check_finite, check_inverse, check_redshift
@@ -76,6 +76,8 @@ def assemble(settings: SampleSettings, folder) -> Sample:
         table=settings.table,
         sources={settings.table: sha256_of(path)},
         notes=[note for note in (table.note, *cuts.notes) if note],
+        names=observed.words["name"],
+        bordered=settings.layout == "bordered",
     )
     terms = _build(settings, rows, problems) if kept.any() else []
     return _put_together(observed, rows, terms, cuts.removed, problems)
@@ -83,13 +85,10 @@ def assemble(settings: SampleSettings, folder) -> Sample:
 
 def _table(settings: SampleSettings, folder: Path, path: Path) -> Table:
     """Read the table; where that fails, tell of the other files that are not there as well."""
-    if settings.layout == "bordered":
-        raise InputError(
-            "a bordered matrix is read from a FITS image only, and FITS is not read yet", file=settings.table, column="sample.layout",
-            cure="Save z and the moduli as a CSV table, and the inverse covariance as .npy",
-        )  # fmt: skip
     options = _text_options(settings)
     try:
+        if settings.layout == "bordered":
+            return bordered_table(path, settings.data_kind, settings.table)
         return read_table(path, options, numbers=_wanted_numbers(settings), texts=_wanted_words(settings), shown=settings.table)
     except InputError as problem:
         raise _with_missing_files(problem, settings, folder) from None

@@ -8,7 +8,7 @@ import math
 import struct
 import tokenize
 import zipfile
-from collections.abc import Sequence
+from collections.abc import Callable, Sequence
 from pathlib import Path
 
 import numpy as np
@@ -29,13 +29,17 @@ _BAD_ZIP = (zipfile.BadZipFile, NotImplementedError, RuntimeError, ValueError, s
 _CHUNK = 1 << 24  # characters of text at a time
 
 
-def read_matrix(path, *, sizes: Sequence[int], what: str, array: str | None = None, table: str = "the table", shown: str | None = None):
+def read_matrix(
+    path, *, sizes: Sequence[int], what: str, array: str | None = None, table: str = "the table", shown: str | None = None,
+    bordered: bool = False, on_labels: Callable[[list[str]], None] | None = None,
+):  # fmt: skip
     """Read an N×N matrix.
 
     Parameters
     ----------
     path : path-like
-        Text or CSV (square; or one number after the other, N first or not), .npy or .npz (square, or a packed triangle).
+        Text or CSV (square, with labels or without; or one number after the other, N first or not), .npy or .npz (square, or a
+        packed triangle), or a FITS image.
     sizes : sequence of int
         The N that are possible; the first is the number of rows of the table.
     what : str
@@ -44,6 +48,10 @@ def read_matrix(path, *, sizes: Sequence[int], what: str, array: str | None = No
         Name of the array in an .npz.
     table, shown : str
         The table and the path, for messages.
+    bordered : bool
+        Whether a FITS image has redshifts in its first row and moduli in its first column, which are left out.
+    on_labels : callable, optional
+        Called with the N labels of the rows of a text matrix that has them.
 
     Returns
     -------
@@ -64,8 +72,10 @@ def read_matrix(path, *, sizes: Sequence[int], what: str, array: str | None = No
             matrix = _from_npy(path, sizes, table, shown)
         elif magic[:4] == b"PK\x03\x04":
             matrix = _from_npz(path, sizes, array, table, shown)
+        elif magic == b"SIMPLE":
+            matrix = _from_fits(path, sizes, bordered, table, shown)
         else:
-            matrix = _from_text(path, sizes, table, shown)
+            matrix = _from_text(path, sizes, table, shown, on_labels)
     make_symmetric(matrix, f"the {what}", shown)
     return matrix
 
@@ -307,8 +317,23 @@ def _plausible(matrix) -> bool:
     return all(np.all(np.abs(matrix[i : i + _BLOCK]) <= 1.001 * scale[i : i + _BLOCK, None] * scale) for i in range(0, len(matrix), _BLOCK))
 
 
-def _from_text(path: Path, sizes, table: str, shown: str):
-    """Read the numbers in their order, whatever the lines: N on the first, or N² alone, or a triangle."""
+def _from_fits(path: Path, sizes, bordered: bool, table: str, shown: str):
+    from fitter.sample.readers.astro import read_bordered, read_image
+
+    image = read_bordered(path, shown)[2] if bordered else read_image(path, shown)
+    n, _ = _size_of(image.shape, None, sizes, table, shown)
+    return _unpack(image, n, False)
+
+
+def _from_text(path: Path, sizes, table: str, shown: str, on_labels=None):
+    """Read the numbers in their order, whatever the lines: N on the first, or N² alone, or a triangle; or a labelled matrix."""
+    from fitter.sample.readers.labelled import read_labelled
+
+    labelled = read_labelled(path, sizes, shown)
+    if labelled is not None:
+        if on_labels is not None:
+            on_labels(labelled[1])
+        return labelled[0]
     values, total, first_alone = _numbers(path, max(n * n for n in sizes) + 1, shown)
     first = values[0] if total else math.nan
     stated = int(first) if first_alone and 0 < first < 1e7 and first == int(first) else None

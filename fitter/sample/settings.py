@@ -102,7 +102,9 @@ class SampleSettings(_Section):
     )
     comment: str | None = Field(None, min_length=1, description="What begins a comment; #, %, ! and // by default.")
     layout: Literal["rows", "bordered"] = Field(
-        "rows", description="`bordered`: one matrix with z in its first row and the moduli in its first column."
+        "rows",
+        description="`bordered`: the table is a FITS image with z in its first row, the moduli in its first column and the inverse "
+        "covariance inside; `columns` and `uncertainty` can then be left out.",
     )
     missing: Literal["refuse", "drop"] = Field("refuse", description="What to do with rows that lack a needed number.")
     missing_values: list[Number] = Field(default_factory=list, description="Numbers that stand for a missing value, e.g. -999.")
@@ -129,6 +131,14 @@ class SampleSettings(_Section):
     def covariance_scale_prior(self) -> dict | float | None:
         """Prior, or held value, of the factor on all errors."""
         return next((t.covariance_scale for t in self.uncertainty if t.kind == "covariance_scale"), None)
+
+    @model_validator(mode="before")
+    @classmethod
+    def _border_is_all(cls, given: Any) -> Any:
+        # A bordered matrix says by itself where everything is.
+        if isinstance(given, dict) and given.get("layout") == "bordered":
+            return {"columns": {"redshift": 0, "distance_modulus": 1}, "uncertainty": [{"precision": given.get("table")}]} | given
+        return given
 
     @model_validator(mode="after")
     def _scale_fits_columns(self):

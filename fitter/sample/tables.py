@@ -15,7 +15,7 @@ import numpy as np
 from fitter.errors import InputError
 from fitter.sample.files import reading, sha256_of
 
-__all__ = ["Columns", "Table", "read_numbers", "read_table", "sha256_of"]
+__all__ = ["Columns", "Table", "bordered_table", "read_numbers", "read_table", "sha256_of"]
 
 _NAMES_SHOWN = 40
 
@@ -155,10 +155,48 @@ def read_table(path, options=None, *, numbers: Sequence = (), texts: Sequence = 
     InputError
         The file cannot be read as a table. A missing column is said when the `Table` is asked for it.
     """
-    from fitter.sample.readers.layout import TextOptions
-    from fitter.sample.readers.text import read_text
+    return _read(Path(path), options, numbers=numbers, texts=texts, shown=shown or str(path))
 
-    return read_text(Path(path), options or TextOptions(), numbers=numbers, texts=texts, shown=shown or str(path))
+
+def _read(path: Path, options=None, **wanted) -> Table:
+    """Dispatch to the reader of the format that the content shows."""
+    from fitter.sample.readers.formats import format_of
+
+    kind = format_of(path, wanted["shown"])
+    if kind == "text":
+        from fitter.sample.readers.layout import TextOptions
+        from fitter.sample.readers.text import read_text
+
+        return read_text(path, options or TextOptions(), **wanted)
+    if kind == "Parquet":
+        from fitter.sample.readers.parquet import read_parquet
+
+        return read_parquet(path, **wanted)
+    from fitter.sample.readers.astro import read_astro
+
+    return read_astro(path, kind, **wanted)
+
+
+def bordered_table(path, data_kind: str, shown: str) -> Table:
+    """Read the redshifts and the data at the border of a FITS image, as columns 0 and 1.
+
+    Raises
+    ------
+    InputError
+        The file is no FITS image, or not square.
+    """
+    from fitter.sample.readers.astro import read_bordered
+    from fitter.sample.readers.formats import format_of, table_of
+
+    path = Path(path)
+    if format_of(path, shown) != "FITS":
+        raise InputError(
+            "a bordered matrix is read from a FITS image only", file=shown, column="sample.layout",
+            cure="Save z and the moduli as a CSV table, and the inverse covariance as .npy",
+        )  # fmt: skip
+    redshift, data, _ = read_bordered(path, shown)
+    found = (redshift, data)
+    return table_of(("redshift", data_kind), len(data), lambda i: found[i], everything=True, shown=shown)
 
 
 def read_numbers(path, *, use: Sequence | None = None, shown: str | None = None):
@@ -176,9 +214,6 @@ def read_numbers(path, *, use: Sequence | None = None, shown: str | None = None)
     InputError
         The file cannot be read, or a column holds something else.
     """
-    from fitter.sample.readers.layout import TextOptions
-    from fitter.sample.readers.text import read_text
-
     path, shown = Path(path), shown or str(path)
     with reading(path, shown):
         is_array = open(path, "rb").read(6) == b"\x93NUMPY"
@@ -189,7 +224,7 @@ def read_numbers(path, *, use: Sequence | None = None, shown: str | None = None)
         values = values.reshape(len(values), -1)
         positions = range(values.shape[1]) if use is None else Columns(None, values.shape[1], shown).known(use)
         return list(positions), np.ascontiguousarray(values[:, list(positions)], dtype=float), np.arange(1, len(values) + 1)
-    table = read_text(path, TextOptions(), numbers=use or (), everything=use is None, shown=shown)
+    table = _read(path, numbers=use or (), everything=use is None, shown=shown)
     refs = list(range(table.columns.n)) if use is None else list(use)
     refs = [r for r in refs if use is not None or table.columns.label(r) != "" or not np.isnan(table.floats[r]).all()]
     try:

@@ -65,6 +65,10 @@ class Rows:
         Path → SHA-256; a term adds the files that it reads.
     notes : list
         Warnings; a term adds its own.
+    names : (N,) array of str or None
+        Names of the supernovae.
+    bordered : bool
+        Whether the table is the border of a matrix.
     """
 
     n: int
@@ -77,6 +81,8 @@ class Rows:
     table: str
     sources: dict[str, str] = field(default_factory=dict)
     notes: list[str] = field(default_factory=list)
+    names: np.ndarray | None = None
+    bordered: bool = False
 
     def path(self, given: str) -> Path:
         """Return where a file of the config lies."""

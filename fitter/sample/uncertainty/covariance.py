@@ -8,6 +8,7 @@ from typing import ClassVar
 import numpy as np
 from pydantic import Field
 
+from fitter.errors import InputError
 from fitter.sample.uncertainty.base import PathText, Rows, TermSettings
 from fitter.sample.uncertainty.term import Term
 
@@ -37,7 +38,10 @@ class MatrixSettings(TermSettings):
         given = getattr(self, self.kind)
         path = rows.path(given)
         kept = int(rows.keep.sum())
-        matrix = read_matrix(path, sizes=(rows.n, kept), what=self.kind, array=self.array, table=rows.table, shown=given)
+        matrix = read_matrix(
+            path, sizes=(rows.n, kept), what=self.kind, array=self.array, table=rows.table, shown=given,
+            bordered=rows.bordered and given == rows.table, on_labels=lambda labels: self._check_labels(labels, rows, given),
+        )  # fmt: skip
         rows.sources[given] = sha256_of(path)
         if len(matrix) == rows.n:
             return matrix, np.arange(1, rows.n + 1)[rows.keep]
@@ -46,6 +50,23 @@ class MatrixSettings(TermSettings):
             "the rows that are kept."
         )
         return matrix, np.arange(1, kept + 1)
+
+    def _check_labels(self, labels: list[str], rows: Rows, given: str) -> None:
+        """Refuse a matrix whose labels are the names of the table in another order; tell of labels that say nothing."""
+        if all(label.isdigit() for label in labels):
+            return
+        names = None if rows.names is None else (rows.names if len(labels) == rows.n else rows.names[rows.keep]).tolist()
+        if names is None or not set(labels) & set(names):
+            rows.notes.append(
+                f"The labels of {given} ({labels[0]}, …) are no names of the table: its rows are taken to follow those of the table. Map "
+                "`name` to the column that holds them, and the order is checked."
+            )
+        elif labels != names:
+            at = next(i for i, pair in enumerate(zip(labels, names, strict=True)) if pair[0] != pair[1])
+            raise InputError(
+                f"its rows do not follow those of {rows.table}: label {at + 1} is {labels[at]!r}, but the table has {names[at]!r} there",
+                file=given, row=at + 1, cure="Write matrix and table in the same order",
+            )  # fmt: skip
 
 
 class Covariance(MatrixSettings):

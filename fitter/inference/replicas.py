@@ -17,8 +17,9 @@ from fitter.inference.checkpoint import Checkpoint, Chunk, add_counts
 
 __all__ = ["Replica", "Replicas", "available_cores"]
 
-# Longest time a replica works before its chain is handed back (and stored), in seconds.
-_CHUNK_SECONDS = 2.0
+# Longest time a replica works before another one has its turn, and between two writes of its chain, in seconds.
+_SLICE_SECONDS = 0.25
+_STORE_SECONDS = 2.0
 _LOOK_SECONDS = 0.2
 
 
@@ -148,12 +149,13 @@ class Replicas:
             self._flush(everything=True)
 
     def _advance_here(self, target, look):
-        for i, replica in enumerate(self.replicas):
-            while replica.steps < target and not self.interrupted:
-                chunk = _advance(self.log_posterior, self._task(i, target), self._board)
-                self._take(i, chunk)
-                if look is not None:
-                    look(self.steps)
+        # In turns, so that an interrupt finds all of them about equally long.
+        while self.steps < target and not self.interrupted:
+            for i in range(len(self.replicas)):
+                if self.replicas[i].steps < target and not self.interrupted:
+                    self._take(i, _advance(self.log_posterior, self._task(i, target), self._board))
+            if look is not None:
+                look(self.steps)
 
     def _advance_in_pool(self, target, look):
         running = {self._submit(i, target): i for i, r in enumerate(self.replicas) if r.steps < target}
@@ -192,7 +194,7 @@ class Replicas:
             return
         now = time.monotonic()
         for i, replica in enumerate(self.replicas):
-            if replica.unwritten and (everything or now - replica.written_at >= _CHUNK_SECONDS):
+            if replica.unwritten and (everything or now - replica.written_at >= _STORE_SECONDS):
                 self.checkpoint.write(i, replica.unwritten)
                 replica.unwritten = []
                 replica.written_at = now
@@ -269,7 +271,7 @@ def _advance(log_posterior, task, board) -> Chunk:
     # emcee wraps the function to print a traceback of its own at every exception.
     sampler.log_prob_fn = log_posterior
     state = State(task.positions, log_prob=task.log_prob, random_state=task.random_state, copy=True)
-    end = time.monotonic() + _CHUNK_SECONDS
+    end = time.monotonic() + _SLICE_SECONDS
     with threadpool_limits(1):
         for _ in sampler.sample(state, iterations=task.steps, skip_initial_state_check=True):
             done = sampler.backend.iteration

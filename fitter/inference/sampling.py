@@ -18,6 +18,8 @@ from fitter.inference.start import starting_walkers
 
 __all__ = ["sample_posterior"]
 
+# Below this number of steps there is nothing to summarise.
+_FEWEST = 20
 # Rows for which derived parameters are computed at once.
 _BLOCK = 16384
 
@@ -66,6 +68,9 @@ def sample_posterior(
     ------
     InputError
         If there is nothing to sample, no starting point, a checkpoint of another run, or no room on the disk.
+    KeyboardInterrupt
+        If interrupted before the first few steps. Later an interrupt ends the sampling cleanly: what is there is returned, with
+        ``converged`` False and ``reason`` "interrupted".
     """
     from threadpoolctl import threadpool_limits
 
@@ -108,6 +113,8 @@ def _run(ensembles: Replicas, names, settings, progress) -> Status:
     while True:
         ensembles.advance(target, _reporter(progress, ensembles.steps, target, status))
         reached = min(target, ensembles.steps)
+        if ensembles.interrupted and reached < _FEWEST:
+            raise KeyboardInterrupt
         chain, _ = ensembles.chain(reached)
         status = assess(chain, names, settings.target_ess)
         if ensembles.interrupted or status.converged or reached >= settings.max_steps:

@@ -11,7 +11,7 @@ from typing import Annotated, TextIO
 
 import typer
 
-from fitter.commands import paper
+from fitter.commands import paper, start
 from fitter.errors import InputError, InputErrors, MufitterError
 
 __all__ = ["app", "main"]
@@ -299,6 +299,7 @@ def _explain(
 
 
 paper.register(app, _reported)
+start.register(app, _reported)
 
 
 if __name__ == "__main__":

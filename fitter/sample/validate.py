@@ -9,7 +9,7 @@ import numpy as np
 from fitter.errors import InputError
 from fitter.sample.uncertainty.term import Term
 
-__all__ = ["Place", "check_duplicates", "check_finite", "check_inverse", "check_redshift"]
+__all__ = ["Place", "check_duplicates", "check_finite", "check_inverse", "check_redshift", "looks_inverse"]
 
 _WILD_REDSHIFT = 0.01  # two redshifts of one supernova cannot differ by so much
 _LARGEST_VARIANCE = 4.0  # mag²: nobody's median distance error is above 2 mag
@@ -113,7 +113,7 @@ def check_inverse(terms: list[Term]) -> list[InputError]:
     problems = []
     for term in terms:
         matrix = term.noise.precision if term.kind == "precision" else term.noise.dense
-        if term.kind == "covariance" and _looks_inverse(np.diagonal(matrix), sum(sigma) if sigma else None):
+        if term.kind == "covariance" and looks_inverse(np.diagonal(matrix), sum(sigma) if sigma else None):
             problems.append(
                 InputError(
                     f"this looks like an inverse covariance: its median diagonal element is {np.median(np.diagonal(matrix)):.3g}, "
@@ -133,7 +133,8 @@ def check_inverse(terms: list[Term]) -> list[InputError]:
     return problems
 
 
-def _looks_inverse(diagonal, variance) -> bool:
+def looks_inverse(diagonal, variance) -> bool:
+    """Whether a matrix is the inverse of a covariance: its diagonal is absurd as mag², or times σ² about 1."""
     if np.median(diagonal) > _LARGEST_VARIANCE:
         return True
     if variance is None or not np.all(variance > 0):

@@ -233,6 +233,36 @@ def _stress(
     _print_study(study, json_, quiet)
 
 
+@app.command("rehearse")
+@_reported
+def _rehearse(
+    config: ConfigFile,
+    mocks: Annotated[int, typer.Option(min=1, help="How many mock samples.")] = 500,
+    truth: Annotated[
+        str | None, typer.Option(help="`best` fit, `prior`, or values: omega_m=0.3,H0=70.", show_default="best; prior without data")
+    ] = None,
+    draw_from: Annotated[
+        Path | None, typer.Option(help="A config whose model and covariance the mocks are drawn from.", show_default="CONFIG")
+    ] = None,
+    sampler: Annotated[bool, typer.Option("--sampler", help="Fit with the sampler, as `mufitter fit` does: hours.")] = False,
+    run_folder: Annotated[Path | None, typer.Option(help="Where the results go.", show_default="the config's, with _rehearsal")] = None,
+    replace: Annotated[bool, typer.Option("--replace", help="Replace an earlier study there.")] = False,
+    resume: Annotated[bool, typer.Option("--resume", help="Continue an interrupted study.")] = False,
+    processes: Processes = None,
+    scheduler: Scheduler = None,
+    json_: Annotated[bool, typer.Option("--json", help="Print rehearsal.json to stdout instead of the table.")] = False,
+    quiet: Annotated[bool, typer.Option("--quiet", "-q", help="No progress and no table.")] = False,
+    allow_code: AllowCode = False,
+) -> None:
+    """Fit mock samples: bias, coverage, calibration of the errors, and the precision of a survey to come."""
+    from fitter.studies import MockOptions, Place, parse_truth, rehearse
+
+    options = MockOptions(mocks, parse_truth(truth), draw_from, "sampler" if sampler else "quick")
+    running = {"processes": processes, "scheduler": scheduler, "progress": _counting(quiet)}
+    study = rehearse(config, options, Place(run_folder, replace, resume), **running, allow_code=allow_code)
+    _print_study(study, json_, quiet)
+
+
 def _counting(quiet: bool) -> Callable[[int, int], None] | None:
     """A progress bar on stderr, or None where nobody looks."""
     if quiet or not sys.stderr.isatty():

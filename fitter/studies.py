@@ -10,10 +10,11 @@ from typing import Any, Literal
 import numpy as np
 
 from fitter.api import _settings
-from fitter.config.load import raise_all
+from fitter.config.load import raise_all, validate
 from fitter.config.parameters import FLAT
 from fitter.config.settings import Config
 from fitter.config.write import as_run, config_hash, config_text, input_problems
+from fitter.config.yaml_file import Document, read_yaml
 from fitter.errors import InputError
 from fitter.inference.seeds import child_seed
 from fitter.report.run_folder import RunFolder, write_atomic, writing
@@ -21,9 +22,9 @@ from fitter.sample.sample import Sample
 from fitter.study.setup import FitSetup
 from fitter.study.tasks import Store
 
-__all__ = ["Study", "stress"]
+__all__ = ["MockOptions", "Place", "Study", "parse_truth", "rehearse", "stress"]
 
-_STRESS = 7  # children of the seed
+_STRESS, _REHEARSAL = 7, 8  # children of the seed
 _TASKS = "tasks.jsonl"
 Progress = Callable[[int, int], None]
 
@@ -101,23 +102,139 @@ def stress(
 
 
 @dataclass(frozen=True)
+class MockOptions:
+    """Which mocks are drawn, and how they are fitted.
+
+    Parameters
+    ----------
+    mocks : int
+    truth : "best", "prior" or dict, optional
+        Where they are drawn: at the best fit of the data, at draws from the prior, or at given values. By default the best fit; the
+        prior where there are no data or the fit is blinded.
+    draw_from : path-like, optional
+        Another config, for the same supernovae, whose model and covariance the mocks are drawn from.
+    method : {"quick", "sampler"}
+        Without a chain, or with the sampler as the config sets it.
+    """
+
+    mocks: int = 500
+    truth: str | dict[str, float] | None = None
+    draw_from: str | Path | None = None
+    method: Literal["quick", "sampler"] = "quick"
+
+
+def rehearse(
+    config: Config | str | Path,
+    mocks: MockOptions | None = None,
+    place: Place | None = None,
+    *,
+    processes: int | None = None,
+    scheduler: str | None = None,
+    progress: Progress | None = None,
+    allow_code: bool = False,
+) -> Study:
+    """Fit mock samples: bias, coverage, ranks of the truth, χ² against expectation, precision.
+
+    Parameters
+    ----------
+    config : Config or path
+        A table without moduli, of a survey that does not exist yet, will do: map neither ``distance_modulus`` nor ``magnitude``.
+    mocks : MockOptions, optional
+    place : Place, optional
+        Where the results go; by default the config's run folder with ``_rehearsal`` at its end.
+    processes, scheduler, progress, allow_code
+        As for `stress`.
+
+    Raises
+    ------
+    InputError, InputErrors
+        Anything wrong with config, data, truth, folder or scheduler.
+    """
+    from fitter.report.rehearsal_table import rehearsal_text
+    from fitter.study.rehearse import METHODS
+    from fitter.study.rehearse import rehearse as run
+
+    options = mocks or MockOptions()
+    if options.mocks < 1 or options.method not in METHODS:
+        what = options.mocks if options.mocks < 1 else options.method
+        raise InputError("this cannot be rehearsed", value=what, cure=f"Take a mock or more, and a method of {', '.join(METHODS)}")
+    job = StudyJob.prepare(config, allow_code, planned=True)
+    source = job if options.draw_from is None else StudyJob.prepare(options.draw_from, allow_code, planned=True)
+    rehearsal = _rehearsal(job, source, options)
+    running = {"processes": processes, "scheduler": scheduler, "progress": progress}
+
+    def study(store: Store | None) -> dict:
+        found = run(rehearsal, seed=job.seed(_REHEARSAL), store=store, **running)
+        return {"schema": found["schema"], "title": job.config.title, "planned": job.planned, **found}
+
+    decided_by = f"{options.mocks} {rehearsal.truth} {options.method} {source.hash}"
+    return job.run(study, place or Place(), "rehearsal", rehearsal_text, _write_rehearsal, decided_by)
+
+
+def parse_truth(text: str | None) -> str | dict[str, float] | None:
+    """Read ``best``, ``prior`` or ``omega_m=0.3,H0=70``.
+
+    Raises
+    ------
+    InputError
+        A value that is no number.
+    """
+    if text is None or "=" not in text:
+        return text
+    found = {}
+    for item in text.split(","):
+        name, _, value = item.partition("=")
+        try:
+            found[name.strip()] = float(value)
+        except ValueError:
+            raise InputError("this says no truth", column="truth", value=item, cure="Write NAME=NUMBER, separated by commas") from None
+    return found
+
+
+def _rehearsal(job: StudyJob, source: StudyJob, options: MockOptions):
+    from fitter.study.rehearse import Rehearsal, best_truth
+
+    truth, hidden = options.truth, bool(job.blind or source.blind)
+    if truth is None:
+        truth = "prior" if source.planned or hidden else "best"
+    if truth == "best" and (source.planned or hidden):
+        why = "a survey without data has no best fit" if source.planned else "the best fit of a blinded config is hidden"
+        raise InputError(why, column="truth", cure="Draw from the prior, or give the true values")
+    if isinstance(truth, str) and truth not in ("best", "prior"):
+        raise InputError("this says no truth", column="truth", value=truth, cure="Give `best`, `prior` or values such as omega_m=0.3")
+    if truth == "best":
+        truth = best_truth(source.setup, source.seed(_REHEARSAL))
+    values = None if truth == "prior" else dict(truth)
+    return Rehearsal(job.setup, source.setup, values, options.mocks, options.method, job.config.sampling)
+
+
+@dataclass(frozen=True)
 class StudyJob:
     """A study on its way from settings to results."""
 
     config: Config
     setup: FitSetup
     blind: tuple[str, ...] = ()
+    planned: bool = False
 
     @classmethod
-    def prepare(cls, config: Config | str | Path, allow_code: bool) -> StudyJob:
-        """Read config and data; nothing is written."""
-        config, _ = _settings(config, {}, allow_code)
+    def prepare(cls, config: Config | str | Path, allow_code: bool, *, planned: bool = False) -> StudyJob:
+        """Read config and data; nothing is written. `planned` allows a table without moduli."""
+        without_data = None
+        if planned and not isinstance(config, Config):
+            without_data = _planned_config(Path(config), allow_code)
+        config, _ = _settings(without_data or config, {}, allow_code)
         if config.variants:
             problem = "this config holds variants, not one fit"
             raise config.document.error(problem, ("variants",), cure="Give each variant a config of its own")
         sample = Sample.from_config(config.sample, config.folder)
         raise_all(input_problems(config, sample))
-        return cls(config, setup_of(config, sample), blinded_names(config, sample))
+        return cls(config, setup_of(config, sample), blinded_names(config, sample), without_data is not None)
+
+    @property
+    def hash(self) -> str:
+        """SHA-256 of the settings as run and of the data."""
+        return config_hash(as_run(self.config, self.setup.sample, Path.cwd()))
 
     def seed(self, purpose: int) -> np.random.SeedSequence:
         """Return the seed for one purpose."""
@@ -162,6 +279,23 @@ class StudyJob:
         write_atomic(path, config_text(settings, [f"As run by mufitter {__version__} {kind}, every default written out."]))
 
 
+def _planned_config(path: Path, allow_code: bool) -> Config | None:
+    """Return the config of a survey that does not exist yet, or None where there are data.
+
+    The redshift stands in for the moduli: any number will do, since every mock brings its own.
+    """
+    document = read_yaml(path)
+    sample = document.data.get("sample")
+    columns = sample.get("columns") if isinstance(sample, dict) else None
+    if not isinstance(columns, dict) or "redshift" not in columns or {"distance_modulus", "magnitude"} & set(columns):
+        return None
+    role = "magnitude" if "calibrator_modulus" in columns else "distance_modulus"
+    data = {**document.data, "sample": {**sample, "columns": {**columns, role: columns["redshift"]}}}
+    config, _, problems = validate(Document(data, document.lines, document.path), path.parent, allow_code=allow_code)
+    raise_all(problems)
+    return config
+
+
 def setup_of(config: Config, sample: Sample) -> FitSetup:
     """Return the fit that a config describes."""
     given = {k: v for k, v in config.complete_parameters(sample).items() if v != FLAT}
@@ -187,6 +321,18 @@ def _write_stress(result: dict, folder: Path) -> None:
     write_atomic(folder / "stress.md", stress_markdown(result))
     write_atomic(folder / "stress.csv", stress_csv(result))
     write_result(folder / "stress.json", result)
+
+
+def _write_rehearsal(result: dict, folder: Path) -> None:
+    from fitter.report.figures.rehearsal import rehearsal_caption, rehearsal_figure
+    from fitter.report.figures.style import save_figure, styled
+    from fitter.report.rehearsal_table import rehearsal_csv, rehearsal_markdown
+
+    with styled():
+        save_figure(rehearsal_figure(result), folder / "figures" / "rehearsal", rehearsal_caption(result))
+    write_atomic(folder / "rehearsal.md", rehearsal_markdown(result))
+    write_atomic(folder / "rehearsal.csv", rehearsal_csv(result))
+    write_result(folder / "rehearsal.json", result)
 
 
 def write_result(path: Path, result: dict) -> None:

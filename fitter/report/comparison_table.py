@@ -158,10 +158,9 @@ def nested_sentence(pair: dict) -> str:
     ratio, odds = pair["savage_dickey"], pair["delta_log_evidence"]
     if odds is None:
         return f"{text}."
-    if ratio is None:
-        return f"{text}; Δ ln Z = {signed(odds[0])}, too far from the posterior for a Savage–Dickey ratio."
     agrees = "agrees with" if pair["agrees"] else "DISAGREES WITH"
-    return f"{text}; Savage–Dickey ln ratio {signed(ratio['log_ratio'])} ± {ratio['error']:.1g} {agrees} Δ ln Z = {signed(odds[0])}."
+    value = f"{signed(ratio['log_ratio'])} ± {max(ratio['error'], 0.01):.1g}"
+    return f"{text}; Savage–Dickey ln ratio {value} {agrees} Δ ln Z = {signed(odds[0])}."
 
 
 def _width_sentences(report: dict) -> list[str]:

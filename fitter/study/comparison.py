@@ -13,7 +13,7 @@ from fitter.inference.seeds import child_seed
 from fitter.parameters import PARAMETERS, parameter
 from fitter.study.averaging import averaged
 from fitter.study.consistency import consistency, overlap
-from fitter.study.density_ratio import density_ratio
+from fitter.study.density_ratio import density_ratio, ratio_along
 from fitter.study.entry import Entry
 from fitter.study.likelihood_ratio import likelihood_ratio
 from fitter.study.nested import nesting
@@ -25,6 +25,7 @@ __all__ = ["SCHEMA", "compare_entries"]
 SCHEMA = "mufitter comparison 1"
 _CRITERIA = ("aic", "aicc", "bic", "dic")
 _SIGMAS = 4.0
+_PAIRED, _ALONG = 0, 1  # children of the seed
 _STRETCH = {0.5: "halved", 2.0: "doubled"}
 
 
@@ -162,8 +163,11 @@ def _pair(study: _Study, small: Entry, large: Entry, nest) -> dict:
     edge = nest.at_edge()
     test = likelihood_ratio(small.deviance - large.deviance, len(nest.extra), len(edge))
     ratio, odds = density_ratio(large.posterior, nest), _log_odds(small, large)
+    if ratio is None:
+        seed = child_seed(study.seed, _ALONG, study.entries.index(small), study.entries.index(large))
+        ratio = ratio_along(small.posterior, large.posterior, nest, seed)
     agrees = None
-    if ratio is not None and odds is not None:
+    if odds is not None:
         agrees = bool(abs(ratio["log_ratio"] - odds[0]) <= _SIGMAS * math.hypot(ratio["error"], odds[1]))
         if not agrees:
             study.warnings.append(
@@ -237,7 +241,7 @@ def _data_sets(study: _Study) -> list[dict]:
             why = "share supernovae" if common else "may share supernovae (their data are not at hand)"
             study.warnings.append(f"{first.name} and {second.name} {why}: a test of their consistency would need independent data.")
             continue
-        result = consistency(first, second, np.random.default_rng(child_seed(study.seed, i)))
+        result = consistency(first, second, np.random.default_rng(child_seed(study.seed, _PAIRED, i)))
         found += [result] if result else []
     return found
 

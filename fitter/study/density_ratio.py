@@ -11,14 +11,18 @@ from __future__ import annotations
 
 import numpy as np
 
+from fitter.inference.importance import importance
+from fitter.inference.seeds import child_seed
 from fitter.study.entry import batch_error
 from fitter.study.nested import Nesting
 
-__all__ = ["density_ratio"]
+__all__ = ["density_ratio", "ratio_along"]
 
 _NEAREST = 4000  # draws that set the width of the window: their number limits the error to about 2 %
 _WIDEST = 1.5  # conditional standard deviations; with the nested value farther out there are too few draws near
 _TOO_FEW = 100
+# Draws that rarely come so far make a mean that a few of them rule: its own error is then too small to be believed.
+_TRUSTED = 0.12
 
 
 def density_ratio(posterior, nest: Nesting) -> dict | None:
@@ -33,7 +37,8 @@ def density_ratio(posterior, nest: Nesting) -> dict | None:
     Returns
     -------
     dict or None
-        ``log_ratio``, ``error`` and ``draws``: how many there were near the nested values; None where there were too few.
+        ``log_ratio``, ``error``, ``draws``, how many there were near the nested values, and ``method``; None where they were too few to
+        tell.
 
     Notes
     -----
@@ -65,7 +70,54 @@ def density_ratio(posterior, nest: Nesting) -> dict | None:
     terms = np.zeros(len(theta))
     terms[near] = np.exp(log_term - top)
     mean, error = batch_error(terms.reshape(posterior.log_posterior.shape))
-    return {"log_ratio": float(np.log(mean) + top), "error": error / mean, "draws": int(near.sum())}
+    if error > _TRUSTED * mean:
+        return None
+    return {
+        "log_ratio": float(np.log(mean) + top),
+        "error": error / mean,
+        "draws": int(near.sum()),
+        "method": "draws near the nested values",
+    }
+
+
+class _Along:
+    """The larger fit's likelihood along the nested values, under the simpler fit's priors."""
+
+    def __init__(self, nest: Nesting):
+        self.names, self.priors, self.ndim, self._nest = nest.small.names, nest.small.priors, len(nest.small.names), nest
+
+    def __call__(self, theta):
+        value = self._nest.small.log_prior(theta)
+        inside = value > -np.inf
+        value[inside] += self._nest.large.log_likelihood(self._nest.points(theta[inside]))
+        return value
+
+
+def ratio_along(small_posterior, large_posterior, nest: Nesting, seed: np.random.SeedSequence) -> dict:
+    """The same ratio where the posterior of the larger fit hardly reaches the nested values.
+
+    Its density is integrated along them, and over everything, by importance sampling: weighted draws instead of the chain's.
+
+    Parameters
+    ----------
+    small_posterior, large_posterior : Posterior
+        Chains that say where to propose.
+    nest : Nesting
+    seed : SeedSequence
+
+    Returns
+    -------
+    dict
+        ``log_ratio``, ``error``, ``draws`` (how many good ones they are worth) and ``method``.
+    """
+    along = importance(_Along(nest), small_posterior, seed=child_seed(seed, 0))
+    whole = importance(nest.large, large_posterior, seed=child_seed(seed, 1))
+    return {
+        "log_ratio": along.log_evidence - whole.log_evidence,
+        "error": float(np.hypot(along.log_evidence_error, whole.log_evidence_error)),
+        "draws": int(min(along.effective, whole.effective)),
+        "method": "importance sampling along the nested values",
+    }
 
 
 def _column(nest: Nesting, small_name: str) -> int:

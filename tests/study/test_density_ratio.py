@@ -8,7 +8,7 @@ import pytest
 
 from fitter.inference.quadrature import integrate
 from fitter.likelihood.priors import Normal, Prior, Uniform
-from fitter.study.density_ratio import density_ratio
+from fitter.study.density_ratio import density_ratio, ratio_along
 from fitter.study.nested import Nesting
 
 MEAN, SD, CORRELATION = np.array([0.3, -1.2]), np.array([0.05, 0.2]), -0.8
@@ -105,3 +105,18 @@ def test_agrees_with_the_quadrature_of_the_package():
 def test_too_far_out_there_is_no_ratio():
     large, small = Toy(("a", "b"), FLAT), Toy(("a",), (Uniform(0, 1),), lambda a: 0.9)
     assert density_ratio(chain_of(large), Nesting(("b",), {"a": "a", "b": 0.9}, small, large)) is None
+
+
+def test_far_out_importance_sampling_takes_over():
+    # Nine standard deviations from the posterior, where no chain comes.
+    at, wide = 0.6, Uniform(-1, 1)
+    large, small = Toy(("a", "b"), (wide, FLAT[1])), Toy(("a",), (wide,), lambda a: at)
+    conditional = MEAN[0] + CORRELATION * SD[0] / SD[1] * (at - MEAN[1]), SD[0] * np.sqrt(1 - CORRELATION**2)
+    along = SimpleNamespace(chain=np.random.default_rng(1).normal(*conditional, (4, 20, 100, 1)))
+    nest = Nesting(("b",), {"a": "a", "b": at}, small, large)
+    assert density_ratio(chain_of(large), nest) is None
+    found = ratio_along(along, chain_of(large), nest, np.random.SeedSequence(2))
+    # The marginal of b is a Gaussian; over its prior density, 1/4.
+    expected = -0.5 * 9**2 - 0.5 * np.log(2 * np.pi) - np.log(SD[1]) + np.log(4)
+    assert found["log_ratio"] == pytest.approx(expected, abs=4 * found["error"])
+    assert found["error"] < 0.02

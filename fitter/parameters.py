@@ -119,7 +119,8 @@ def declare_again(stored: Mapping[str, Mapping] | None) -> None:
 
 def _upright(text: str) -> str:
     """Free text inside a formula: what would end or change it is escaped or left out."""
-    return "".join("\\" + c if c in "_%&#" else r"\ " if c == " " else "" if c in "\\{}$^~" else c for c in text)
+    special = {"_": r"\_", "%": r"\%", " ": r"\ ", "&": "+", **dict.fromkeys("\\{}$^~#", "")}
+    return "".join(special.get(c, c) for c in text)
 
 
 def parameter(name: str) -> Parameter:

@@ -178,7 +178,8 @@ def _looks(runs, given: dict):
         changed = FigureSettings.model_validate({**how.model_dump(), **given})
     except ValidationError as error:
         first = error.errors(include_url=False)[0]
-        raise InputError(str(first["msg"]).removeprefix("Value error, "), column=f"--{first['loc'][0]}", value=first["input"]) from None
+        option = {"formats": "format"}.get(first["loc"][0], first["loc"][0])
+        raise InputError(f"--{option}: {str(first['msg']).removeprefix('Value error, ')}", value=first["input"]) from None
     style = None if how.style is None else runs[0].folder / Path(how.style).expanduser()
     return changed, labels, style
 
@@ -193,7 +194,7 @@ def _width(text: str | None) -> str | float | None:
     try:
         return float(text)
     except ValueError:
-        raise InputError("unknown figure width", column="--width", value=text, cure="Use single, double or a number of inches") from None
+        raise InputError("--width: unknown figure width", value=text, cure="Use single, double or a number of inches") from None
 
 
 def _numbers(text: str | None) -> dict[str, float] | None:
@@ -204,7 +205,7 @@ def _numbers(text: str | None) -> dict[str, float] | None:
         try:
             found[name.strip()] = float(number)
         except ValueError:
-            raise InputError("this is no NAME=VALUE", column="--mark", value=pair, cure="Write e.g. --mark omega_m=0.31,w=-1") from None
+            raise InputError("--mark: this is no NAME=VALUE", value=pair, cure="Write e.g. --mark omega_m=0.31,w=-1") from None
     return found or None
 
 

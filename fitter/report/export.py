@@ -37,7 +37,7 @@ def posterior_table(posterior, draws: int | None = None):
         known = [e for e in (posterior.sampling.get("ess_bulk") or {}).values() if e]
         draws = int(min(known, default=total))
     if draws < 1:
-        raise InputError("an export needs one draw at least", column="draws", value=draws)
+        raise InputError("an export needs one draw at least", value=draws)
     rows = np.unique(np.linspace(0, total - 1, min(draws, total)).astype(int))
     columns = {name: posterior.draws(name).reshape(-1)[rows] for name in posterior.kinds}
     return pd.DataFrame(columns | {"log_posterior": posterior.log_posterior.reshape(-1)[rows]})
@@ -91,7 +91,7 @@ def export(posterior, folder: Path, fmt: str = "csv", draws: int | None = None) 
         An unknown format, or Parquet without a library that writes it.
     """
     if fmt not in EXPORT_FORMATS:
-        raise InputError("unknown export format", column="format", value=fmt, cure=f"Use {' or '.join(EXPORT_FORMATS)}.")
+        raise InputError("unknown export format", value=fmt, cure=f"Use {' or '.join(EXPORT_FORMATS)}.")
     written = []
     for name, table in (("posterior", posterior_table(posterior, draws)), ("densities", densities_table(posterior))):
         target = Path(folder) / f"{name}.{fmt}"

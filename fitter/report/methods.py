@@ -69,7 +69,7 @@ def _groups(sample: dict) -> list[str]:
     if not 2 <= len(groups) <= _MANY_GROUPS:
         return []
     too = ", calibrators included," if sample["n_calibrators"] else ""
-    return [f"By survey{too} they are {listed(f'{count} of {name}' for name, count in groups.items())}."]
+    return [f"By survey{too} there are {listed(f'{count} of {name}' for name, count in groups.items())}."]
 
 
 def _cuts(sample: dict) -> list[str]:

@@ -70,7 +70,7 @@ def table_files(runs: Sequence[PaperRun], formats: Sequence[str] = tuple(_SUFFIX
     """
     unknown = [fmt for fmt in formats if fmt not in _SUFFIX]
     if unknown:
-        raise InputError("unknown table format", column="format", value=unknown[0], cure=f"Use any of {', '.join(_SUFFIX)}.")
+        raise InputError("unknown table format", value=unknown[0], cure=f"Use any of {', '.join(_SUFFIX)}.")
     labels = run_labels(runs)
     named = [{**run.summary, "title": label} for run, label in zip(runs, labels, strict=True)]
     text = caption_text(named, labels)

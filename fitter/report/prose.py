@@ -149,9 +149,8 @@ def _character(c: str) -> str:
         return f"${_SYMBOLS[c]}$" if c in _SYMBOLS else f"$^{{{_SUPERSCRIPTS[c]}}}$"
     if c in _TYPED:
         return _TYPED[c]
-    name = unicodedata.name(c, "")
-    if re.fullmatch("GREEK (SMALL|CAPITAL) LETTER [A-Z]+", name):
-        return _greek(name)
+    if (greek := _greek(unicodedata.name(c, ""))) is not None:
+        return greek
     base, *marks = unicodedata.normalize("NFD", c)
     if len(marks) == 1 and marks[0] in _ACCENTS and base.isascii():
         return rf"\{_ACCENTS[marks[0]]}{{{base}}}"
@@ -159,15 +158,21 @@ def _character(c: str) -> str:
     return "" if unicodedata.combining(c) else "?"
 
 
-_GREEK_LIKE_LATIN = dict(zip("ALPHA BETA EPSILON ZETA ETA IOTA KAPPA MU NU OMICRON RHO TAU CHI".split(), "ABEZHIKMNOPTX", strict=True))
+_GREEK = (
+    "alpha beta gamma delta epsilon zeta eta theta iota kappa lambda mu nu xi omicron pi rho sigma tau upsilon phi chi psi omega".split()
+)
+_LIKE_LATIN = dict(zip("alpha beta epsilon zeta eta iota kappa mu nu omicron rho tau chi".split(), "ABEZHIKMNOPTX", strict=True))
 
 
-def _greek(name: str) -> str:
-    _, case, _, letter = name.split()
-    letter = {"LAMDA": "LAMBDA"}.get(letter, letter)
-    if case == "CAPITAL":
-        return f"${_GREEK_LIKE_LATIN.get(letter) or chr(92) + letter.capitalize()}$"
-    return "$o$" if letter == "OMICRON" else r"$\varsigma$" if letter == "FINAL" else f"$\\{letter.lower()}$"
+def _greek(name: str) -> str | None:
+    """The command for a Greek letter by its Unicode name; None for any other character."""
+    head, _, letter = name.lower().rpartition(" letter ")
+    letter = {"lamda": "lambda", "final sigma": "varsigma"}.get(letter, letter)
+    if head == "greek small" and letter in (*_GREEK, "varsigma"):
+        return "$o$" if letter == "omicron" else rf"$\{letter}$"
+    if head == "greek capital" and letter in _GREEK:
+        return f"${_LIKE_LATIN[letter]}$" if letter in _LIKE_LATIN else rf"$\{letter.capitalize()}$"
+    return None
 
 
 CHI2 = math(r"\chi^2", "χ²")

@@ -250,7 +250,10 @@ _NOT_COPIED = (
     *("figures", "tables", "summary.*", "chain.h5", "figures_data.h5"),
     *("methods.*", "references.bib", "posterior.*", "densities.*", "report.html"),
 )
-_REGULAR = ("config.yaml", "summary.json", "summary.md", "summary.csv", "chain.h5", "run.log")
+_REGULAR = (
+    *("config.yaml", "summary.json", "summary.md", "summary.csv", "chain.h5", "run.log"),
+    *("figures_data.h5", "methods.md", "methods.tex", "references.bib"),
+)
 
 
 def _sync(folder: Path) -> None:

@@ -7,6 +7,7 @@ import numpy as np
 import pytest
 
 from fitter.inference.posterior import Posterior
+from fitter.likelihood.posterior import LogPosterior
 from fitter.likelihood.priors import Uniform
 from fitter.report.summary import Extras, summarise
 from fitter.sample.sample import Sample
@@ -150,4 +151,42 @@ def fit():
 @pytest.fixture(scope="session")
 def build():
     """The makers of the doubles, for a test that wants its own."""
-    return SimpleNamespace(fit=make_fit, sample=make_sample, dense=make_dense, uniform=Uniform, modulus=modulus)
+    return SimpleNamespace(
+        fit=make_fit, sample=make_sample, dense=make_dense, uniform=Uniform, modulus=modulus, real=make_real_fit, truth=TRUTH, spread=SPREAD
+    )  # fmt: skip
+
+
+@pytest.fixture(scope="session")
+def real():
+    """A flat_wcdm fit of a relative sample of three surveys."""
+    return make_real_fit(sample=make_sample(distance_scale="relative", group=np.repeat(["near", "far", "middle"], 100)))
+
+
+def make_real_fit(model="flat_wcdm", sample=None, truth=None, sd=None, shape=(4, 100, 16), seed=3, **parameters):
+    """A true likelihood with a Gaussian stand-in for its chain: for figures that ask the model itself."""
+    density = LogPosterior.build(sample or make_sample(distance_scale="relative"), model, parameters or None)
+    theta = np.array([(truth or TRUTH)[name] for name in density.names])
+    spread = np.array([(sd or SPREAD)[name] for name in density.names])
+    rng = np.random.default_rng(seed)
+    chain = np.clip(theta + spread * rng.normal(size=(*shape, len(theta))), density._low, density._high)
+    flat = chain.reshape(-1, len(theta))
+    extra = {n: v.reshape(shape) for n, v in {**density.draw_marginalised(flat, rng), **density.derived(flat)}.items()}
+    kinds = dict.fromkeys(density.names, "sampled") | dict.fromkeys(density.marginalised, "marginalised")
+    kinds |= {name: "derived" for name in extra if name not in kinds}
+    facts = {"replicas": shape[0], "walkers": shape[2], "steps": shape[1] + 20, "burn_in": 20, "autocorrelation": {}, "move": "mixture"}
+    facts |= {"rhat": dict.fromkeys(density.names, 1.00041), "ess_bulk": dict.fromkeys(density.names, 5432.1)}
+    facts |= {"ess_tail": dict.fromkeys(density.names, 4321.9), "acceptance": 0.5, "converged": True, "seed": 7}
+    posterior = Posterior(density.names, chain, density(flat).reshape(shape), extra, kinds, facts)
+    values = dict(zip(density.names, theta.tolist(), strict=True))
+    values |= {n: float(v[0]) for n, v in density.best_marginalised(theta[None]).items()}
+    optimum = SimpleNamespace(
+        theta=theta, log_posterior=float(density(theta[None])[0]), chi2=float(density.chi2(theta[None])[0]),
+        covariance=np.diag(spread**2), values=values,
+    )  # fmt: skip
+    return Fit(density, posterior, optimum)
+
+
+TRUTH = {"omega_m": 0.3, "omega_lambda": 0.7, "omega_de": 0.7, "w": -1.0, "w0": -1.0, "wa": 0.0, "H0": 70.0, "q0": -0.55, "j0": 1.0}
+TRUTH |= {"absolute_magnitude": -19.3, "intrinsic_scatter": 0.1, "covariance_scale": 1.1}
+SPREAD = {"omega_m": 0.02, "omega_lambda": 0.04, "omega_de": 0.04, "w": 0.05, "w0": 0.05, "wa": 0.2, "H0": 0.5, "q0": 0.05, "j0": 0.3}
+SPREAD |= {"absolute_magnitude": 0.02, "intrinsic_scatter": 0.01, "covariance_scale": 0.03}

@@ -8,6 +8,7 @@ from functools import cached_property
 from pathlib import Path
 
 from fitter.errors import InputError
+from fitter.report.comparison_figures import overlay_names
 from fitter.report.figures.chains import chains_caption, chains_figure
 from fitter.report.figures.corner import corner_caption, corner_figure, main_parameters
 from fitter.report.figures.covariance import budget_caption, correlation_caption, draw_budget, draw_correlation
@@ -87,7 +88,7 @@ def overlays(runs: Mapping[str, Drawable], only: Sequence[str] | None = None, ho
     found = []
     for name in _known(only or OVERLAID, OVERLAID):
         if name == "corner":
-            found.append(_corner(posteriors, how, how.parameters or _shared(posteriors)))
+            found.append(_corner(posteriors, how, how.parameters or overlay_names(posteriors)))
         elif name == "planes":
             shared = [p for p in PLANES if all(p in planes_of(posterior) for posterior in posteriors.values())]
             found += [_plane(posteriors, plane, how) for plane in shared]
@@ -106,13 +107,8 @@ def _known(names: Sequence[str], known: Sequence[str]) -> list[str]:
         if name not in known:
             one = name in FIGURES
             problem = f"`{name}` is a figure of one run, several cannot share it" if one else "there is no such figure"
-            raise InputError(problem, column="only", value=name, cure=f"Choose any of {', '.join(known)}.")
+            raise InputError(problem, value=name, cure=f"Choose any of {', '.join(known)}.")
     return list(dict.fromkeys(names))
-
-
-def _shared(posteriors) -> list[str]:
-    """The main parameters of all runs, in the order of the first that has each."""
-    return list(dict.fromkeys(n for posterior in posteriors.values() for n in main_parameters(posterior)))[:7]
 
 
 def _corner(posteriors, how: FigureSettings, names) -> Drawing:

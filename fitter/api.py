@@ -3,9 +3,11 @@
 from __future__ import annotations
 
 import logging
+import shutil
 from collections.abc import Mapping
 from contextlib import AbstractContextManager
 from dataclasses import dataclass, field, replace
+from datetime import UTC, datetime
 from functools import cached_property
 from pathlib import Path
 from types import SimpleNamespace
@@ -22,6 +24,16 @@ from fitter.config.yaml_file import read_yaml
 from fitter.errors import InputError, InputErrors, MufitterError
 from fitter.inference.seeds import child_seed
 from fitter.parameters import declared_elsewhere
+from fitter.report.blinding import (
+    blind_optimum,
+    blind_posterior,
+    blind_summary,
+    hidden_labels,
+    hidden_names,
+    offsets,
+    true_chain,
+    veil_key,
+)
 from fitter.report.run_folder import Run, RunFolder, read_run, write_atomic, writing
 from fitter.sample.sample import Sample
 
@@ -115,6 +127,8 @@ class Fit:
 
     def hubble_diagram(self) -> Figure:
         """Return the Hubble diagram with the residuals from the best fit."""
+        if self._summary.get("blinded"):
+            raise InputError("the Hubble diagram would show the best fit, which is hidden", cure="Unblind the run first")
         from fitter.report.figures.hubble import hubble_figure
 
         return hubble_figure(self.log_posterior, self.optimum, self.chains)
@@ -262,17 +276,53 @@ class _Job:
         if self.config.sampling.target_ess > sampling.get("target_ess", np.inf):
             problem = f"the run there has ended with a target_ess of {sampling['target_ess']}, it cannot be continued"
             raise InputError(problem, file=self.folder.target, cure="Make a longer one with --replace")
-        return Fit(self.config, self.sample, self.log_posterior, self._optimum(), run.posterior, self.folder.target, run.summary)
+        optimum = self._optimum()
+        if self.hidden and run.summary.get("blinded"):
+            optimum = blind_optimum(optimum, self.log_posterior.names, self.hidden)
+        return Fit(self.config, self.sample, self.log_posterior, optimum, run.posterior, self.folder.target, run.summary)
 
     def run(self, *, resume: bool = False) -> Fit:
         """Find the optimum, sample, summarise, draw and write."""
         if self.folder is None:
-            return self._compute(None, resume=False)
+            return self._blinded(self._compute(None, resume=False))
         with writing(self.folder.path), _RunLog(self.folder.path / "run.log"):
             self._write_config()
-            result = self._compute(self.folder.path, resume=resume)
+            result = self._blinded(self._compute(self.folder.path, resume=resume))
             self._write_results(result)
         return replace(result, run_folder=self.folder.finish())
+
+    @cached_property
+    def hidden(self) -> dict[str, float]:
+        """Hidden offset of each blinded parameter."""
+        return offsets(self.sample.sha256, hidden_names(self.config.blind, self.log_posterior))
+
+    def _blinded(self, result: Fit) -> Fit:
+        """Hide what the config hides; from here on nothing knows the values."""
+        if not self.hidden:
+            return result
+        chains = blind_posterior(result.chains, self.hidden)
+        optimum = blind_optimum(result.optimum, self.log_posterior.names, self.hidden)
+        return replace(result, chains=chains, optimum=optimum, _summary=blind_summary(result.summary(), self.hidden, self.log_posterior))
+
+    def unblind(self, run: Run) -> Fit:
+        """Write a blinded run again with its values, and when that was."""
+        shutil.copytree(run.folder, self.folder.path, dirs_exist_ok=True, ignore=shutil.ignore_patterns("figures", "summary.*", ".*"))
+        with writing(self.folder.path), _RunLog(self.folder.path / "run.log"):
+            record = {"when": datetime.now(UTC).isoformat(timespec="seconds"), "config_sha256": config_hash(self.settings)}
+            _log.info("unblinded, config SHA-256 %s", record["config_sha256"])
+            result = self._summarised(self._optimum(), self._opened(run.posterior))
+            result._summary.update(unblinded=record)
+            self._write_results(result)
+        return replace(result, run_folder=self.folder.finish())
+
+    def _opened(self, chains: Posterior) -> Posterior:
+        from fitter.inference.sampling import derive_and_draw
+
+        chain = true_chain(chains, self.hidden)
+        run = lambda function, arguments: [function(self.log_posterior, *a) for a in arguments]  # noqa: E731
+        extra = derive_and_draw(self.log_posterior, chain, self._seed(_SAMPLING), run)
+        sampling = {k: v for k, v in chains.sampling.items() if k != "blinded"}
+        return replace(chains, chain=chain, extra=extra, sampling=sampling)
 
     def _seed(self, purpose: int) -> np.random.SeedSequence:
         return child_seed(np.random.SeedSequence(self.config.sampling.seed), purpose)
@@ -290,13 +340,13 @@ class _Job:
         for text in self.sample.warnings:
             _log.warning(text)
         optimum = self._optimum()
-        _log.info("optimum: chi2 %.4f at %s", optimum.chi2, optimum.values)
+        _log.info("optimum: chi2 %.4f at %s", optimum.chi2, "hidden values" if self.hidden else optimum.values)
         fingerprint = config_hash(self.settings)
         with progress_bar(quiet=not self.progress) as bar:
             chains = sample_posterior(
                 self.log_posterior, self.config.sampling, optimum, seed=self._seed(_SAMPLING),
                 folder=folder, progress=bar, resume=resume, fingerprint=fingerprint,
-                processes=self.processes,
+                processes=self.processes, veil=veil_key(self.sample.sha256) if self.hidden else b"",
             )  # fmt: skip
         _log.info("sampled: %s", {k: v for k, v in chains.sampling.items() if k in ("steps", "burn_in", "converged", "reason", "seconds")})
         steps = chains.log_posterior.shape[1]
@@ -349,11 +399,12 @@ class _Job:
         if result.converged:
             remove_checkpoint(path)
         texts = {"summary.md": summary_markdown(summary), "summary.csv": summary_csv(summary)}
-        with relabelled(result.config.labels):
-            texts |= methods_files(summary, self.settings)
+        if not summary.get("blinded"):
+            with relabelled(result.config.labels):
+                texts |= methods_files(summary, self.settings)
         for name, text in texts.items():
             write_atomic(path / name, text)
-        _draw(result, path)
+        _draw_blinded(result, path) if summary.get("blinded") else _draw(result, path)
         # Last: a folder with this file is complete.
         write_atomic(path / "summary.json", summary_json(summary))
         for text in result.warnings:
@@ -377,6 +428,21 @@ def _draw(result: Fit, folder: Path) -> None:
     write_figure_data(folder / DATA_FILE, data)
     how, run = result.config.figures, Drawable(result.chains, data)
     with relabelled(result.config.labels):
+        save_drawings(drawings(run, how.only, how, strict=False), folder / "figures", how, style=result.config.style_file)
+
+
+def _draw_blinded(result: Fit, folder: Path) -> None:
+    """Draw the chains and the corner plot of shifted parameters: any other figure would show where they are."""
+    from fitter.report.facts import relabelled
+    from fitter.report.figures.draw import Drawable, drawings, save_drawings
+    from fitter.report.figures.settings import FigureSettings
+
+    names = result.chains.names
+    how = FigureSettings.model_validate(
+        {**result.config.figures.model_dump(), "only": ["corner", "chains"], "parameters": list(names), "mark": {}}
+    )
+    with relabelled({**result.config.labels, **hidden_labels(result.summary()["blinded"])}):
+        run = Drawable(result.chains, folder)
         save_drawings(drawings(run, how.only, how, strict=False), folder / "figures", how, style=result.config.style_file)
 
 
@@ -493,3 +559,42 @@ def load_run(path: str | Path, *, allow_code: bool = False) -> tuple[Run, Config
     config, _, problems = validate(document, run.folder, arrays, allow_code=allow_code)
     raise_all(problems)
     return run, config
+
+
+def unblind(path: str | Path, *, allow_code: bool = False) -> Fit:
+    """Show the hidden values of a blinded run: write its summary, tables, chain and figures again, with a record of when.
+
+    Parameters
+    ----------
+    path : path-like
+        The run folder.
+    allow_code : bool
+        Whether the file of a model of one's own may be run.
+
+    Raises
+    ------
+    InputError
+        The run is not blinded, or its data are not those that it was made of.
+    """
+    run, config = load_run(path, allow_code=allow_code)
+    require_blinded(run)
+    if config.sample is None:
+        raise InputError(
+            "the data came as arrays from Python, the folder cannot name them", file=run.folder, cure="Fit again without blind"
+        )
+    folder = RunFolder(run.folder, replace=True)
+    job = _Job.prepare(config, None, folder, False)
+    if job.sample.sha256 != run.summary["sample"]["sha256"]:
+        raise InputError("the data are not those that this run was made of", file=run.folder, cure="Restore the input files")
+    folder.open()
+    try:
+        return job.unblind(run)
+    finally:
+        folder.leave()
+
+
+def require_blinded(run: Run) -> None:
+    """Refuse a run that hides nothing."""
+    if not run.summary.get("blinded"):
+        when = (run.summary.get("unblinded") or {}).get("when")
+        raise InputError(f"this run was unblinded on {when}" if when else "this run is not blinded", file=run.folder)

@@ -11,7 +11,7 @@ from typing import Annotated, TextIO
 
 import typer
 
-from fitter.commands import paper, start
+from fitter.commands import blinding, paper, start
 from fitter.errors import InputError, InputErrors, MufitterError
 
 __all__ = ["app", "main"]
@@ -328,6 +328,7 @@ def _explain(
     print(explain(key), flush=True)
 
 
+blinding.register(app, _reported)
 paper.register(app, _reported)
 start.register(app, _reported)
 

@@ -304,10 +304,9 @@ def setup_of(config: Config, sample: Sample) -> FitSetup:
 
 def blinded_names(config: Config, sample: Sample) -> tuple[str, ...]:
     """Return the parameters whose values the config hides."""
-    blind = getattr(config, "blind", False)
-    if not blind:
-        return ()
-    return setup_of(config, sample).posterior().names
+    from fitter.report.blinding import hidden_names
+
+    return hidden_names(config.blind, setup_of(config, sample).posterior()) if config.blind else ()
 
 
 def _write_stress(result: dict, folder: Path) -> None:

@@ -83,6 +83,9 @@ class Config(BaseModel):
     labels: Annotated[Labels, BeforeValidator(_empty_is_default)] = Field(
         default_factory=dict, description="For a parameter another LaTeX symbol, without dollar signs; figures, tables and text follow."
     )
+    blind: bool | list[str] = Field(
+        False, description="Hide central values until `mufitter unblind`: of every cosmological parameter (true), or of a list of them."
+    )
     inputs: dict[str, str] = Field(
         default_factory=dict,
         description="SHA-256 of input files by path, as a run folder records them; a file that has changed since is refused.",

@@ -47,6 +47,7 @@ def as_run(config: Config, sample, target: Path) -> dict[str, Any]:
         "radiation": config.radiation,
         "parameters": config.complete_parameters(sample),
         "sampling": config.sampling.model_dump(mode="json", by_alias=True, exclude_none=True),
+        **({"blind": config.blind} if config.blind else {}),
         "run_folder": str(config.default_run_folder()),
         **_looks(config, moved),
         "inputs": {moved(path): sha for path, sha in {**sample.sources, **config.model_sources}.items()},

@@ -9,14 +9,14 @@ from __future__ import annotations
 
 import json
 import os
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
 from pathlib import Path
 
 import numpy as np
 
 from fitter.errors import InputError
 
-__all__ = ["Checkpoint", "Chunk", "remove_checkpoint", "write_atomically"]
+__all__ = ["Checkpoint", "Chunk", "remove_checkpoint", "veiled", "write_atomically"]
 
 _FORMAT = 1
 _ABOUT = "about.json"
@@ -63,6 +63,8 @@ class Checkpoint:
         What must agree for a chain to be continued, e.g. the fingerprint, names, replicas, walkers, seed. JSON types only.
     resume : bool
         Continue an existing checkpoint. If False, an existing one is refused.
+    veil : bytes, optional
+        Positions are stored unreadable without this key, and come back bit by bit with it.
 
     Raises
     ------
@@ -70,8 +72,9 @@ class Checkpoint:
         If there is a checkpoint that may not be continued, naming what differs; or if nothing can be written there.
     """
 
-    def __init__(self, folder, about: dict, *, resume: bool):
+    def __init__(self, folder, about: dict, *, resume: bool, veil: bytes = b""):
         self.folder = Path(folder) / "checkpoint"
+        self._veil = veil
         self.about = json.loads(json.dumps({"format": _FORMAT, **about}))
         path = self.folder / _ABOUT
         if path.exists():
@@ -104,7 +107,7 @@ class Checkpoint:
         name, key, position, has_gauss, gauss = last.random_state
         arrays = {
             "start": first.start,
-            "chain": np.concatenate([c.chain for c in chunks]),
+            "chain": veiled(np.concatenate([c.chain for c in chunks]), self._veil),
             "log_posterior": np.concatenate([c.log_posterior for c in chunks]),
             "accepted": sum(c.accepted for c in chunks),
             "random_name": name,
@@ -121,10 +124,20 @@ class Checkpoint:
         chunks: list[Chunk] = []
         for path in sorted(self.folder.glob(f"replica_{replica}_from_*.npz")):
             chunk = _read_chunk(path)
+            chunk = replace(chunk, chain=veiled(chunk.chain, self._veil))
             if chunk.start != (chunks[-1].stop if chunks else 0):
                 raise InputError("a chunk of the chain before this one is missing", file=path, cure="Start anew with --replace")
             chunks.append(chunk)
         return chunks
+
+
+def veiled(values, key: bytes) -> np.ndarray:
+    """Return an array of the same shape with its bits turned by a stream from the key; twice gives it back."""
+    if not key:
+        return values
+    bits = np.ascontiguousarray(values, dtype=float).view(np.uint64)
+    stream = np.random.Generator(np.random.PCG64(int.from_bytes(key, "little")))
+    return (bits ^ stream.integers(0, 2**64, size=bits.shape, dtype=np.uint64)).view(float)
 
 
 def _read_chunk(path):

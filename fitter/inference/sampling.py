@@ -9,6 +9,7 @@ import numpy as np
 
 from fitter.inference.checkpoint import Checkpoint
 from fitter.inference.convergence import FIRST_STEPS, Status, assess, next_length
+from fitter.inference.pilot import pilot_mixture
 from fitter.inference.posterior import Posterior
 from fitter.inference.progress import ProgressReport
 from fitter.inference.replicas import Replica, Replicas, available_cores
@@ -16,7 +17,7 @@ from fitter.inference.seeds import child_seed, random_state
 from fitter.inference.settings import SamplingSettings
 from fitter.inference.start import starting_walkers
 
-__all__ = ["sample_posterior"]
+__all__ = ["derive_and_draw", "sample_posterior"]
 
 # Below this number of steps there is nothing to summarise.
 _FEWEST = 20
@@ -35,6 +36,7 @@ def sample_posterior(
     resume: bool = False,
     fingerprint: str = "",
     processes: int | None = None,
+    veil: bytes = b"",
 ) -> Posterior:
     """Draw from the posterior with R independent ensembles.
 
@@ -59,6 +61,8 @@ def sample_posterior(
         Identifies config and data; a checkpoint with another one is refused.
     processes : int, optional
         By default one for each core, at most one for each replica.
+    veil : bytes, optional
+        Key that hides the positions in the checkpoint.
 
     Returns
     -------
@@ -76,14 +80,16 @@ def sample_posterior(
 
     began = time.monotonic()
     settings.check_dimension(len(log_posterior.names))
-    checkpoint = None if folder is None else Checkpoint(folder, _about(log_posterior, settings, seed, fingerprint), resume=resume)
+    about = _about(log_posterior, settings, seed, fingerprint)
+    checkpoint = None if folder is None else Checkpoint(folder, about, resume=resume, veil=veil)
     with threadpool_limits(1):
+        pilot = pilot_mixture(log_posterior, optimum, child_seed(seed, 2)) if settings.move == "mixture" else None
         replicas = [_begin(log_posterior, settings, optimum, child_seed(seed, 0, i)) for i in range(settings.replicas)]
-        with Replicas(log_posterior, replicas, settings.move, processes or available_cores(), checkpoint) as ensembles:
+        with Replicas(log_posterior, replicas, settings.move, pilot, processes or available_cores(), checkpoint) as ensembles:
             status = _run(ensembles, log_posterior.names, settings, progress)
             chain, values = ensembles.chain(status.steps)
             chain, values = chain[:, status.burn_in :], values[:, status.burn_in :]
-            extra = _extra(log_posterior, chain, child_seed(seed, 1), ensembles.map)
+            extra = derive_and_draw(log_posterior, chain, seed, ensembles.map)
     facts = _facts(ensembles, status, settings, time.monotonic() - began)
     kinds = {n: "sampled" for n in log_posterior.names} | {n: "marginalised" for n in log_posterior.marginalised}
     kinds |= {n: kinds.get(n, "derived") for n in extra}
@@ -136,8 +142,19 @@ def _reporter(progress, first, aim, status):
     return look
 
 
-def _extra(log_posterior, chain, seed, run):
-    """Marginalised parameters, drawn, and derived ones, computed, for every position; in blocks to bound the memory."""
+def derive_and_draw(log_posterior, chain, seed, run):
+    """Marginalised parameters, drawn, and derived ones, computed, for every position; in blocks to bound the memory.
+
+    Parameters
+    ----------
+    log_posterior : LogPosterior
+    chain : (R, S, W, n) ndarray
+    seed : SeedSequence
+        That of the sampling.
+    run : callable
+        ``run(function, arguments)`` → list of ``function(log_posterior, *a)``.
+    """
+    seed = child_seed(seed, 1)
     rows = chain.reshape(-1, chain.shape[-1])
     # A rejected proposal repeats a position: what is derived from it is computed once.
     moved = np.ones(chain.shape[:3], dtype=bool)

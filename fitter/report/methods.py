@@ -259,8 +259,7 @@ def _computation(summary: dict, settings: dict) -> list[str]:
 
 
 _MOVES = {
-    "mixture": "nine in ten steps, on average, propose from Student-t mixtures fitted to the other half of the ensemble, "
-    "the rest are stretch moves {}",
+    "mixture": "most steps propose from Student-t mixtures fitted to the other half of the ensemble, the rest are stretch moves {}",
     "stretch": "all steps are stretch moves {}",
 }
 
@@ -315,7 +314,7 @@ def _evidence(summary: dict) -> list[str]:
     if value is None:
         return []
     if not error:
-        return [f"The evidence is {_LN_Z} = {plain_number(value, 6)} under the priors above."]
+        return [f"The evidence is {_LN_Z} = {plain_number(value, 6).replace('-', '−')} under the priors above."]
     digits = figures_for(value, value - error, value + error)
     number = math(rf"\ln Z = {digits.latex()}", f"ln Z = {digits.plain()}")
     return [f"The evidence is {number} under the priors above."]

@@ -78,7 +78,7 @@ def table_files(runs: Sequence[PaperRun], formats: Sequence[str] = tuple(_SUFFIX
     for fmt in formats:
         parameters, fits = parameter_table(named, fmt, names), fit_table(named, fmt)
         if fmt in ("booktabs", "latex"):
-            parameters = latex_float(parameters, text, "parameters", wide=len(runs) > 2)
+            parameters = latex_float(parameters, text, "parameters", wide=len(runs) > 1)
             fits = latex_float(fits, FIT_CAPTION, "fits", wide=True)
         elif fmt == "markdown":
             parameters, fits = f"{parameters.rstrip()}\n\n{plain(text)}\n", f"{fits.rstrip()}\n\n{plain(FIT_CAPTION)}\n"

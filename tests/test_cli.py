@@ -134,8 +134,8 @@ def test_a_check_says_what_will_be_fitted(project):
         "near: 13 rows, 0.02 ≤ z ≤ 0.2908",
         "far: 27 rows, 0.3133 ≤ z ≤ 0.9",
     ]
-    assert "sigma 0.1000 (sigma)" in lines
-    assert "calibration 0.0100 (covariance)" in lines
+    assert "sigma 0.1000 99.0 % (sigma)" in lines
+    assert "calibration 0.0100 1.0 % (covariance)" in lines
     assert "together 0.1005" in lines
     assert "Model: flat_lcdm, no radiation" in lines
     assert any(line.startswith("omega_m uniform(0.05, 0.8)") for line in lines)

@@ -8,6 +8,8 @@ from fitter.report.facts import parameter
 
 __all__ = ["check_text"]
 
+_SHOWN = 5  # examples of a kind
+
 
 def check_text(config, sample, log_posterior) -> str:
     """Return what is known of a fit as readable text.
@@ -23,7 +25,7 @@ def check_text(config, sample, log_posterior) -> str:
     if config is not None and config.title:
         lines.append(config.title)
     if sample is not None:
-        lines += _data(sample) + _terms(sample)
+        lines += _data(sample) + _terms(sample) + _covariance(sample) + _oddities(sample)
     if config is not None:
         lines.append(f"Model: {config.cosmology.name}, {'with' if config.radiation else 'no'} radiation")
     if config is not None and config.variants:
@@ -31,7 +33,7 @@ def check_text(config, sample, log_posterior) -> str:
             f"Variants, compared with {config.compare.reference or config.variants[0].name}: {', '.join(v.name for v in config.variants)}"
         )
     if log_posterior is not None:
-        lines += _parameters(log_posterior)
+        lines += _parameters(log_posterior) + _cost(config, log_posterior)
     if sample is not None and sample.warnings:
         lines += ["Warnings:", *(f"  ! {text}" for text in sample.warnings)]
     return "\n".join(lines)
@@ -55,16 +57,77 @@ def _range(redshift) -> str:
 
 
 def _terms(sample) -> list[str]:
-    lines = ["Uncertainties, median σ in mag:"]
-    width = max((len(term.label) for term in sample.terms), default=0)
-    lines += [f"  {term.label:<{width}}  {np.sqrt(np.median(term.variance)):.4f}  ({term.kind})" for term in sample.terms]
-    if len(sample.terms) > 1:
+    from fitter.sample.examination import budget
+
+    parts = budget(sample)
+    if not parts:
+        return ["Uncertainties: an inverse covariance, too large to be taken apart here"]
+    lines = ["Uncertainties, median σ in mag and share of the total variance (mean over the rows):"]
+    width = max(len("together"), *(len(part.label) for part in parts))
+    lines += [f"  {part.label:<{width}}  {part.sigma:.4f}  {100 * part.share:5.1f} %  ({part.kind})" for part in parts]
+    if len(parts) > 1:
         total = np.sqrt(np.median(sum(term.variance for term in sample.terms)))
         lines.append(f"  {'together':<{width}}  {total:.4f}")
     for name, prior in (("intrinsic scatter", sample.intrinsic_prior), ("covariance scale", sample.covariance_scale_prior)):
         if prior is not None:
             lines.append(f"  {name}: {'fitted' if isinstance(prior, dict) else prior}")
     return lines
+
+
+def _covariance(sample) -> list[str]:
+    """Condition number and correlations."""
+    from fitter.sample.examination import condition_number, correlations
+
+    lines = []
+    condition = condition_number(sample)
+    if condition is not None:
+        weak = " (above 1e12 digits are lost: check the matrix)" if condition > 1e12 else ""
+        lines.append(f"  condition number {condition:.3g}{weak}")
+    found = correlations(sample)
+    if found is None:
+        return lines if sample.noise.precision is not None else [*lines, "  rows are uncorrelated"]
+    text = f"  correlations: median {found.median:.3g}, largest {found.largest:.3g} (rows {found.pair[0]} and {found.pair[1]})"
+    if found.within is not None and found.between is not None:
+        text += f"; median within a group {found.within:.3g}, between groups {found.between:.3g}"
+    return [*lines, text + (f" [{found.n:,} rows looked at]" if found.n < sample.n else "")]
+
+
+def _oddities(sample) -> list[str]:
+    """Outliers and rows that stand twice."""
+    from fitter.sample.examination import BEYOND, outliers, repeated_rows
+
+    found = outliers(sample)
+    chance = 6.3e-5 * sample.n
+    expected = f", {chance:.2g} expected by chance" if chance > 0.1 else ""
+    lines = [f"Rows beyond {BEYOND:g} σ of a smooth curve: {len(found) or 'none'}{expected}"]
+    lines += [f"  row {o.row} {o.name}: {o.residual:+.3f} mag, {o.pull:+.1f} σ" for o in found[:_SHOWN]]
+    lines += [f"  and {len(found) - _SHOWN} more"] if len(found) > _SHOWN else []
+    twice = repeated_rows(sample)
+    if twice:
+        pairs = ", ".join(f"{a} and {b}" for a, b in twice[:_SHOWN])
+        more = f" and {len(twice) - _SHOWN} more pairs" if len(twice) > _SHOWN else ""
+        lines.append(f"Rows with the same redshift and the same data: {pairs}{more}")
+    return lines
+
+
+def _cost(config, log_posterior) -> list[str]:
+    from fitter.report.fit_cost import expected_cost
+
+    cost = expected_cost(log_posterior, config.sampling)
+    lines = [
+        f"The fit will take about {_duration(cost.seconds)} and {cost.memory / 1024**3:.1f} GB of memory "
+        f"({cost.evaluation:.3g} µs an evaluation)."
+    ]
+    excluded = log_posterior.prior_excluded_fraction(np.random.default_rng(0))
+    if excluded > 0:
+        lines.insert(0, f"  {100 * excluded:.1f} % of the prior is outside the model's range (no big bang, or an antipode among the data).")
+    return lines
+
+
+def _duration(seconds: float) -> str:
+    if seconds < 90:
+        return f"{round(seconds, -1 if seconds > 20 else 0):.0f} s"
+    return f"{seconds / 60:.0f} minutes" if seconds < 5400 else f"{seconds / 3600:.1f} hours"
 
 
 def _parameters(log_posterior) -> list[str]:

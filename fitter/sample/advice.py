@@ -8,7 +8,7 @@ import numpy as np
 
 from fitter.sample.sample import Sample
 
-__all__ = ["advice"]
+__all__ = ["advice", "scatter_about_curve", "smooth_residuals"]
 
 _FEWEST_ROWS = 15  # below which a scatter about a curve says little
 
@@ -140,11 +140,25 @@ def _systematics_only(sample: Sample):
 
 def scatter_about_curve(z, data, sigma) -> tuple[float, float]:
     """Robust scatter about a smooth Hubble diagram, in units of the errors and in mag."""
+    residual = smooth_residuals(z, data, sigma, fewest=1)
+    return 1.4826 * float(np.median(np.abs(residual / np.maximum(sigma, 1e-12)))), 1.4826 * float(np.median(np.abs(residual)))
+
+
+def smooth_residuals(z, data, sigma, fewest: int = _FEWEST_ROWS):
+    """Data less a smooth Hubble diagram, (N,) mag: a quartic in ln(1 + z) beside 5 log10 z, fitted three times without what is far off.
+
+    None where there are fewer rows than ``fewest``.
+    """
+    if len(z) < fewest:
+        return None
     u = np.log1p(z)
-    x = 2 * u / u.max() - 1
-    design = np.polynomial.chebyshev.chebvander(x, min(4, len(z) // 5))
+    design = np.polynomial.chebyshev.chebvander(2 * u / u.max() - 1, min(4, len(z) // 5))
     y = data - 5 * np.log10(z)
     sigma = np.maximum(sigma, 1e-12)
-    fitted = np.linalg.lstsq(design / sigma[:, None], y / sigma, rcond=None)[0]
-    residual = y - design @ fitted
-    return 1.4826 * float(np.median(np.abs(residual / sigma))), 1.4826 * float(np.median(np.abs(residual)))
+    weight = 1 / sigma
+    for _ in range(3):
+        fitted = np.linalg.lstsq(design * weight[:, None], y * weight, rcond=None)[0]
+        residual = y - design @ fitted
+        pull = np.abs(residual) / sigma
+        weight = np.where(pull <= 3 * max(1.0, 1.4826 * float(np.median(pull))), 1 / sigma, 0.0)
+    return residual

@@ -1,0 +1,154 @@
+"""A sample looked over before it is fitted: error budget, correlations, outliers, rows that stand twice."""
+
+from __future__ import annotations
+
+from dataclasses import dataclass
+
+import numpy as np
+
+from fitter.sample.advice import smooth_residuals
+from fitter.sample.sample import Sample
+
+__all__ = ["Budget", "Correlations", "Outlier", "budget", "condition_number", "correlations", "outliers", "repeated_rows"]
+
+BEYOND = 4.0  # σ
+_EIGENVALUES_OF = 3000  # rows up to which a dense matrix is diagonalised
+_CORRELATED_ROWS = 1500  # rows of which correlations are looked at
+_INVERTED = 6000  # rows up to which a precision is inverted for its diagonal
+
+
+@dataclass(frozen=True)
+class Budget:
+    """One uncertainty term's part.
+
+    Parameters
+    ----------
+    label, kind : str
+    sigma : float
+        Its median error, mag.
+    share : float
+        Its part of the total variance, averaged over the rows.
+    """
+
+    label: str
+    kind: str
+    sigma: float
+    share: float
+
+
+@dataclass(frozen=True)
+class Correlations:
+    """Correlation coefficients between rows, everything but a free scatter included.
+
+    Parameters
+    ----------
+    median, largest : float
+        Of the absolute values.
+    pair : tuple of int
+        The rows (in the table) with the largest.
+    within, between : float or None
+        Median correlation of rows of the same group, and of different ones.
+    n : int
+        Rows that were looked at, spread evenly over the sample.
+    """
+
+    median: float
+    largest: float
+    pair: tuple[int, int]
+    within: float | None
+    between: float | None
+    n: int
+
+
+@dataclass(frozen=True)
+class Outlier:
+    """A row far from the smooth curve: its line in the table, its name, how far in σ and in mag."""
+
+    row: int
+    name: str
+    pull: float
+    residual: float
+
+
+def budget(sample: Sample) -> list[Budget]:
+    """The part of each term; the shares add to 1. Empty where a large precision would have to be inverted."""
+    if sample.noise.precision is not None and sample.n > _INVERTED:
+        return []
+    variances = [term.variance for term in sample.terms]
+    total = np.sum(variances, axis=0)
+    return [
+        Budget(term.label, term.kind, float(np.sqrt(np.median(v))), float(np.mean(v / total)))
+        for term, v in zip(sample.terms, variances, strict=True)
+    ]
+
+
+def condition_number(sample: Sample) -> float | None:
+    """Largest over smallest eigenvalue of the covariance; None where that would take too long.
+
+    For a diagonal with modes the smallest eigenvalue lies between the smallest variance and the k + 1 smallest (interlacing): the
+    smallest is taken.
+    """
+    noise = sample.noise
+    if sample.n <= _EIGENVALUES_OF:
+        from scipy.linalg import eigvalsh
+
+        whole = noise.precision if noise.precision is not None and not noise.mode_names else noise.covariance()
+        values = eigvalsh(whole)
+        return float(values[-1] / values[0]) if values[0] > 0 else np.inf
+    if not noise.is_diagonal:
+        return None
+    vector = np.ones(noise.n)
+    largest = float(noise.variance.max())
+    for _ in range(50):  # power iteration: a few digits are plenty
+        vector = noise.variance * vector + noise.modes @ (noise.modes.T @ vector)
+        size = float(np.linalg.norm(vector))
+        if abs(size - largest) < 1e-3 * size:
+            break
+        largest, vector = size, vector / size
+    return max(size, float(noise.variance.max())) / float(noise.variance.min())
+
+
+def correlations(sample: Sample) -> Correlations | None:
+    """Correlations of rows spread over the sample; None where there are none, or a large precision would have to be inverted."""
+    noise = sample.noise
+    if sample.n < 2 or (noise.is_diagonal and not noise.mode_names) or (noise.precision is not None and sample.n > _INVERTED):
+        return None
+    index = np.unique(np.linspace(0, sample.n - 1, min(sample.n, _CORRELATED_ROWS)).round().astype(int))
+    matrix = noise.select(index).covariance()
+    scale = np.sqrt(np.diagonal(matrix))
+    matrix = matrix / scale / scale[:, None]
+    upper = np.triu_indices(len(index), 1)
+    values = matrix[upper]
+    at = int(np.argmax(np.abs(values)))
+    within = between = None
+    if sample.group is not None:
+        same = sample.group[index][upper[0]] == sample.group[index][upper[1]]
+        within, between = (float(np.median(values[s])) if s.any() else None for s in (same, ~same))
+    pair = tuple(int(sample.row[index[side[at]]]) for side in upper)
+    return Correlations(float(np.median(np.abs(values))), float(np.abs(values[at])), pair, within, between, len(index))
+
+
+def outliers(sample: Sample) -> list[Outlier]:
+    """Rows more than 4σ from a smooth curve through all (calibrators apart), the worst first.
+
+    Where the data scatter by more than their errors, as they do when an intrinsic scatter is still to be fitted, σ is what they scatter by.
+    """
+    if sample.noise.precision is not None and sample.n > _INVERTED:
+        return []
+    used = np.flatnonzero(~sample.is_calibrator)
+    sigma = np.sqrt(sample.noise.total_variance[used])
+    residual = smooth_residuals(sample.redshift[used], sample.data[used], sigma)
+    if residual is None:
+        return []
+    pull = residual / sigma
+    pull /= max(1.0, 1.4826 * float(np.median(np.abs(pull))))
+    worst = [i for i in np.argsort(-np.abs(pull)) if abs(pull[i]) > BEYOND]
+    names = [""] * sample.n if sample.name is None else sample.name
+    return [Outlier(int(sample.row[used[i]]), str(names[used[i]]), float(pull[i]), float(residual[i])) for i in worst]
+
+
+def repeated_rows(sample: Sample) -> list[tuple[int, int]]:
+    """Pairs of rows (lines of the table) with the same redshift and the same data: one supernova twice, whatever it is called."""
+    order = np.lexsort((sample.data, sample.redshift))
+    same = (np.diff(sample.redshift[order]) == 0) & (np.diff(sample.data[order]) == 0)
+    return [(int(sample.row[order[i]]), int(sample.row[order[i + 1]])) for i in np.flatnonzero(same)]

@@ -170,6 +170,7 @@ def _compare(
         list[Path],
         typer.Argument(metavar="CONFIG | RUN RUN …", help="A config with variants, or finished run folders.", show_default=False),
     ],
+    name: Annotated[list[str] | None, typer.Option(help="What a run is called, once for each in turn.", show_default="its title")] = None,
     reference: Annotated[str | None, typer.Option(help="The fit that differences are taken from.", show_default="the first")] = None,
     scale: Annotated[str | None, typer.Option(help="Whose words for odds: kass_raftery or jeffreys.", show_default="kass_raftery")] = None,
     average: Annotated[bool, typer.Option("--average", help="Add constraints averaged over the models, weighted by evidence.")] = False,
@@ -186,7 +187,14 @@ def _compare(
 
     one = what[0] if len(what) == 1 and not what[0].is_dir() else what
     tell = None if quiet else lambda text: _say(f"  {text}")
-    options = {"reference": reference, "scale": scale, "average": average or None, "run_folder": run_folder, "replace": replace}
+    options = {
+        "names": name or None,
+        "reference": reference,
+        "scale": scale,
+        "average": average or None,
+        "run_folder": run_folder,
+        "replace": replace,
+    }
     result = compare(one, **options, allow_code=allow_code, tell=tell)
     _print_comparison(result, json_, quiet)
     if not quiet:

@@ -77,6 +77,7 @@ class Comparison:
 def compare(
     what: Config | str | Path | Sequence[str | Path],
     *,
+    names: Sequence[str] | None = None,
     reference: str | None = None,
     scale: str | None = None,
     average: bool | None = None,
@@ -91,6 +92,8 @@ def compare(
     ----------
     what : config, its path, or a sequence of run folders
         A config has ``variants``; they are fitted first, in parallel.
+    names : sequence of str, optional
+        What runs are called, in their order; their titles by default.
     reference : str, optional
         The fit that differences are taken from; the first by default.
     scale : {"kass_raftery", "jeffreys"}, optional
@@ -118,9 +121,11 @@ def compare(
     options = {k: v for k, v in (("reference", reference), ("scale", scale), ("average", average)) if v is not None}
     _check_scale(options.get("scale"))
     if isinstance(what, Config | str | Path):
+        if names is not None:
+            raise InputError("the names of variants stand in the config", value=list(names), cure="Give names for finished runs only")
         return _compare_variants(what, options, run_folder, replace, allow_code, tell or (lambda _: None))
     entries = [_entry_of_run(path, allow_code) for path in what]
-    entries = _with_different_names(entries, [Path(p) for p in what])
+    entries = _with_different_names(entries, [Path(p) for p in what]) if names is None else _renamed(entries, list(names))
     report = _report(entries, options, DEFAULT_SEED)
     if run_folder is False:
         return Comparison(report, tuple(entries))
@@ -293,6 +298,12 @@ def _rebuilt(run, path, allow_code: bool):
     except InputError as error:
         _log.info("%s: cannot be evaluated anew: %s", path, error)
         return None
+
+
+def _renamed(entries: list[Entry], names: list[str]) -> list[Entry]:
+    if len(names) != len(entries) or len(set(names)) < len(names):
+        raise InputError(f"{len(entries)} runs need as many different names", column="name", value=names)
+    return [replace(e, name=n) for e, n in zip(entries, names, strict=True)]
 
 
 def _with_different_names(entries: list[Entry], paths: list[Path]) -> list[Entry]:

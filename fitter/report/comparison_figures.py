@@ -50,21 +50,24 @@ def draw_comparison(report: dict, posteriors: dict, folder: Path) -> list[Path]:
 
     shown = dict(list(posteriors.items())[:_MOST_RUNS])
     left_out = f" Not drawn, for want of colours: {', '.join(list(posteriors)[_MOST_RUNS:])}." if len(posteriors) > _MOST_RUNS else ""
-    other_data = f" Other data: {', '.join(v['name'] for v in report['variants'] if v['delta'] is None)}."
-    note = left_out + (other_data if any(v["delta"] is None for v in report["variants"]) else "")
+
+    def note(drawn):
+        other = [v["name"] for v in report["variants"] if v["delta"] is None and v["name"] in drawn]
+        return left_out + (f" Other data than {report['reference']}: {', '.join(other)}." if other else "")
+
     names, colours = overlay_names(shown), dict(zip(shown, COLOURS, strict=False))
     written = []
     with styled():
         having = {label: p for label, p in shown.items() if set(names) & set(p.kinds)}
         if names:
-            written += save_figure(corner_figure(having, names), folder / "corner", corner_caption(having, names) + note)
+            written += save_figure(corner_figure(having, names), folder / "corner", corner_caption(having, names) + note(having))
         for plane in PLANES:
             axes = {PLANES[plane].x, PLANES[plane].y}
             fits = {label: p for label, p in shown.items() if axes <= set(p.kinds)}
             # A fit whose ordinate follows from the abscissa is a line in the plane: worth it beside one that is not.
             if any(plane in planes_of(p) for p in fits.values()):
                 written += save_figure(
-                    plane_figure(fits, plane, colours=colours), folder / f"plane_{plane}", plane_caption(plane, list(fits)) + note
+                    plane_figure(fits, plane, colours=colours), folder / f"plane_{plane}", plane_caption(plane, list(fits)) + note(fits)
                 )
         written += save_figure(forest_figure(report), folder / "forest", forest_caption(report))
     return written

@@ -4,6 +4,7 @@ from types import SimpleNamespace
 
 import numpy as np
 import pytest
+from matplotlib.backends.backend_agg import FigureCanvasAgg
 
 from fitter.report.comparison_figures import draw_comparison, overlay_names
 from fitter.report.figures.corner import corner_figure
@@ -68,8 +69,9 @@ def test_forest_shows_medians_intervals_and_fixed_values(report):
 def test_labels_of_the_forest_stay_inside_the_figure(report):
     report["variants"][0]["name"] = report["reference"] = "a very long name of a fit, which no column could hold: the end counts"
     figure = forest_figure(report)
-    figure.canvas.draw()
-    renderer = figure.canvas.get_renderer()
+    canvas = FigureCanvasAgg(figure)
+    canvas.draw()
+    renderer = canvas.get_renderer()
     boxes = [t.get_window_extent(renderer) for t in figure.axes[0].get_yticklabels()]
     assert min(b.x0 for b in boxes) >= 0
     assert figure.axes[0].get_yticklabels()[0].get_text().endswith("the end counts")
@@ -102,7 +104,8 @@ def test_narrow_contours_are_not_smeared_by_a_wide_companion():
     wide = posterior(2, n=100_000, omega_m=(0.3, 0.2), w=(-1.0, 1.0))
     figure = corner_figure({"narrow": narrow, "wide": wide}, ["omega_m", "w"])
     panel = next(ax for ax in figure.axes if ax.get_xlabel() == r"$\Omega_m$" and ax.get_ylabel() == "$w$")
-    widths = [np.ptp(v[:, 0]) for c in panel.collections for p in c.get_paths() for v in p.to_polygons() if len(v) > 8]
+    lines = [c for c in panel.collections if not c.filled]
+    widths = [np.ptp(v[:, 0]) for c in lines for p in c.get_paths() for v in p.to_polygons() if len(v) > 8]
     outer = max(w for w in widths if w < 0.2)
     assert outer == pytest.approx(2 * 2.48 * 0.01, rel=0.15)
 

@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+import textwrap
 from collections.abc import Mapping, Sequence
 
 import numpy as np
@@ -9,13 +10,13 @@ import numpy as np
 from fitter.report.comparison_table import main_names
 from fitter.report.facts import axis_label
 from fitter.report.figures.corner import inner_ticks
-from fitter.report.figures.groups import short_name
 from fitter.report.figures.style import COLOURS, GREY, in_style, new_figure, width_inches
+from fitter.report.prose import listed, symbol
 
 __all__ = ["forest_caption", "forest_figure", "forest_names"]
 
 _MOST_PANELS = 5
-_ROW, _BOTTOM, _TOP, _RIGHT, _GAP = 0.24, 0.46, 0.12, 0.12, 0.1  # inches
+_ROW, _TALL_ROW, _BOTTOM, _TOP, _RIGHT, _GAP = 0.24, 0.36, 0.46, 0.12, 0.12, 0.1  # inches
 _CHARACTER = 0.068  # inches that a letter of a fit's name takes
 _LONGEST_NAME = 26
 
@@ -48,22 +49,29 @@ def forest_figure(report: dict, names: Sequence[str] | None = None, *, width: st
     matplotlib.figure.Figure
     """
     variants, names = report["variants"], list(names or forest_names(report))
-    labels = [short_name(v["name"], _LONGEST_NAME) for v in variants]
-    left = 0.15 + _CHARACTER * max(len(text) for text in labels)
+    labels = [_two_lines(v["name"]) for v in variants]
+    left = 0.15 + _CHARACTER * max(len(line) for text in labels for line in text.split("\n"))
     inches = min(width_inches(width), left + _RIGHT + 2.6 * len(names)) if isinstance(width, str) else width_inches(width)
-    panel, rows = (inches - left - _RIGHT - _GAP * (len(names) - 1)) / len(names), _ROW * len(variants) + 0.1
+    row = _TALL_ROW if any("\n" in text for text in labels) else _ROW
+    panel, rows = (inches - left - _RIGHT - _GAP * (len(names) - 1)) / len(names), row * len(variants) + 0.1
     height = _BOTTOM + rows + _TOP
     figure = new_figure(inches, height=height)
     for i, name in enumerate(names):
         box = [(left + i * (panel + _GAP)) / inches, _BOTTOM / height, panel / inches, rows / height]
         ax = figure.add_axes(box)
         _draw_panel(ax, report, name)
-        ax.set_yticks(range(len(variants)), labels if i == 0 else [""] * len(variants))
+        ax.set_yticks(range(len(variants)), labels if i == 0 else [""] * len(variants), linespacing=1.0)
         ax.tick_params(axis="y", length=0)
         ax.set_ylim(len(variants) - 0.45, -0.55)
         ax.set_xlabel(axis_label(name))
         ax.xaxis.set_label_coords(0.5, -0.29 / rows)
     return figure
+
+
+def _two_lines(name: str) -> str:
+    """A name in two lines at most; of a longer one the end is kept, which is where names of one family differ."""
+    lines = textwrap.wrap(name, _LONGEST_NAME)
+    return "\n".join(lines if len(lines) <= 2 else ["… " + lines[-2], lines[-1]])
 
 
 def _draw_panel(ax, report: dict, name: str) -> None:
@@ -91,6 +99,6 @@ def forest_caption(report: Mapping, names: Sequence[str] | None = None) -> str:
     """Return the caption of the forest plot."""
     names = names or forest_names(report)
     return (
-        f"{', '.join(names)} in each fit: median (circle), equal-tailed 68.3 % (thick) and 95 % (thin) intervals. Diamonds: held fixed. "
-        f"Grey: the 68.3 % interval of {report['reference']}."
+        f"{listed(symbol(n) for n in names)} in each fit: median (circle), equal-tailed 68.3 % (thick) and 95 % (thin) intervals. "
+        f"Diamonds: held fixed. Grey: the 68.3 % interval of {report['reference']}."
     )

@@ -160,7 +160,7 @@ def _segment(ax, x, y, colour) -> None:
     slope, offset = np.polyfit(x, y, 1)
     for level, width in zip(LEVELS[::-1], (1.4, 3.2), strict=True):
         ends = np.quantile(x, [0.5 - level / 2, 0.5 + level / 2])
-        ax.plot(ends, offset + slope * ends, color=colour, lw=width, solid_capstyle="butt", zorder=3)
+        ax.plot(ends, offset + slope * ends, color=colour, lw=width, alpha=0.75, solid_capstyle="butt", zorder=3)
 
 
 def redshift_ticks(ax) -> None:

@@ -121,9 +121,12 @@ class Fit:
 
     def corner(self) -> Figure:
         """Return the corner plot of the sampled and main derived parameters."""
+        from fitter.report.facts import relabelled
         from fitter.report.figures.corner import corner_figure
 
-        return corner_figure(self.chains)
+        hidden = self._summary.get("blinded") or ()
+        with relabelled(hidden_labels(hidden)):
+            return corner_figure(self.chains, list(self.chains.names) if hidden else None)
 
     def hubble_diagram(self) -> Figure:
         """Return the Hubble diagram with the residuals from the best fit."""
@@ -365,6 +368,8 @@ class _Job:
         proof = prove(self.log_posterior, chains, optimum, ess, seed=self._seed(_PROOF))
         _log.info("cross-check: %s; evidence: %s", proof.cross_check, proof.evidence)
         more["evidence"] = proof.evidence
+        if hasattr(self.log_posterior, "accuracy"):
+            more["capsule"] = self.log_posterior.accuracy(chains.chain)
         if declared := declared_elsewhere(chains.kinds):
             more["declared"] = declared
         extras = Extras(title=self.config.title, cross_check=proof.cross_check, evidence=proof.evidence, more=more)

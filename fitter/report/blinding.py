@@ -112,8 +112,8 @@ def blind_summary(summary: dict, hidden: Mapping[str, float], log_posterior) -> 
     parameters = {n: _moved(facts, hidden.get(n), n in log_posterior.names) for n, facts in silent.items()}
     best = {n: facts["best"] for n, facts in parameters.items() if facts.get("best") is not None}
     said = (
-        f"Blinded: {', '.join(hidden)} {'are' if len(hidden) > 1 else 'is'} shown with hidden offsets, derived and marginalised parameters as "
-        "differences from their own median. `mufitter unblind` shows the values."
+        f"Blinded: {', '.join(hidden)} {'are' if len(hidden) > 1 else 'is'} shown with hidden offsets, derived and marginalised "
+        "parameters as differences from their own median. `mufitter unblind` shows the values."
     )
     return {
         **summary,

@@ -83,7 +83,8 @@ def test_no_file_of_a_blinded_run_gives_a_value_away(blind, shown):
     assert "corner.pdf" in names and not names & {"hubble_diagram.pdf", "figures_data.h5", "methods.md"}
 
 
-def test_an_unfinished_chain_gives_nothing_away_either_and_resumes(folder, shown):
+def test_an_unfinished_chain_gives_nothing_away_either_and_resumes(folder, shown, monkeypatch):
+    monkeypatch.setattr("fitter.inference.replicas._STORE_SECONDS", 0)  # store every chunk
     short = fit(folder / "short.yaml", run_folder=folder / "short")
     assert list(short.run_folder.rglob("replica_*.npz"))
     start = fit(folder / "open.yaml", run_folder=False)

@@ -102,6 +102,9 @@ def _oddities(sample) -> list[str]:
     lines = [f"Rows beyond {BEYOND:g} σ of a smooth curve: {len(found) or 'none'}{expected}"]
     lines += [f"  row {o.row} {o.name}: {o.residual:+.3f} mag, {o.pull:+.1f} σ" for o in found[:_SHOWN]]
     lines += [f"  and {len(found) - _SHOWN} more"] if len(found) > _SHOWN else []
+    weak = [] if sample.noise.precision is not None and sample.n > 6000 else sample.noise.total_variance
+    heavy = int(np.sum(weak > 100 * np.median(weak))) if len(weak) else 0
+    lines += [f"Rows with errors above ten times the median, which say nothing: {heavy:,}"] if heavy else []
     twice = repeated_rows(sample)
     if twice:
         pairs = ", ".join(f"{a} and {b}" for a, b in twice[:_SHOWN])

@@ -10,6 +10,7 @@ from fitter.sample.sample import Sample
 
 __all__ = ["advice", "scatter_about_curve", "smooth_residuals"]
 
+_ODD = 4.0  # times larger or smaller than the scatter
 _FEWEST_ROWS = 15  # below which a scatter about a curve says little
 
 
@@ -32,6 +33,7 @@ def advice(sample: Sample, columns: dict | None = None, n_calibrators_inside: in
         *_counted_twice(sample),
         *_included_already(sample),
         _systematics_only(sample),
+        _size_of_errors(sample),
     ]
     return [text for text in found if text]
 
@@ -136,6 +138,31 @@ def _systematics_only(sample: Sample):
         f"The errors look systematic only: the data scatter by {scatter:.3g} mag about a smooth curve, {pull:.2g} times the errors given. "
         "Add the statistical errors, e.g. {sigma: COLUMN}."
     )
+
+
+def _size_of_errors(sample: Sample):
+    """Uncorrelated errors that are far from the scatter of the data: another unit, variances, or something left out."""
+    known = ("sigma", "intrinsic", "peculiar_velocity", "lensing")
+    terms = [t for t in sample.terms if t.kind in known]
+    alone = not any(t.kind in ("covariance", "precision") for t in sample.terms)
+    used = ~sample.is_calibrator & (sample.redshift < 10)
+    if not any(t.kind == "sigma" for t in terms) or not alone or used.sum() < _FEWEST_ROWS:
+        return None
+    sigma = np.sqrt(sum(t.variance for t in terms))[used]
+    pull, scatter = scatter_about_curve(sample.redshift[used], sample.data[used], sigma)
+    fitted = sample.intrinsic_prior is not None or sample.covariance_scale_prior is not None
+    if pull > _ODD and not fitted:
+        return (
+            f"The errors look too small: the data scatter by {scatter:.3g} mag about a smooth curve, {pull:.3g} times the errors given "
+            f"(median {np.median(sigma):.3g} mag). Are they variances, or of the measurement alone? Then add an intrinsic scatter: "
+            "{intrinsic: {uniform: [0, 0.5]}}."
+        )
+    if pull < 1 / _ODD:
+        return (
+            f"The errors look too large: the data scatter by {scatter:.3g} mag about a smooth curve, {pull:.3g} times the errors given "
+            f"(median {np.median(sigma):.3g} mag). Are they in percent, or of the distance instead of the magnitude?"
+        )
+    return None
 
 
 def scatter_about_curve(z, data, sigma) -> tuple[float, float]:

@@ -22,6 +22,7 @@ from fitter.sample.settings import Columns, SampleSettings
 from fitter.sample.tables import Table, bordered_table, read_table
 from fitter.sample.uncertainty.base import Rows
 from fitter.sample.uncertainty.term import Term, combine, unique_labels
+from fitter.sample.unused_errors import unused_errors
 from fitter.sample.validate import Place, check_duplicates, check_finite, check_inverse, check_redshift
 
 __all__ = ["Problems", "assemble", "finish"]
@@ -80,7 +81,9 @@ def assemble(settings: SampleSettings, folder) -> Sample:
         bordered=settings.layout == "bordered",
     )
     terms = _build(settings, rows, problems) if kept.any() else []
-    return _put_together(observed, rows, terms, cuts.removed, problems)
+    sample = _put_together(observed, rows, terms, cuts.removed, problems)
+    said = unused_errors(settings, table, path, _text_options(settings), sample) if settings.layout == "rows" else None
+    return sample if said is None else replace(sample, warnings=(*sample.warnings, said))
 
 
 def _table(settings: SampleSettings, folder: Path, path: Path) -> Table:

@@ -17,7 +17,7 @@ from fitter.sample.readers.layout import TextOptions
 from fitter.sample.readers.numbers import is_number
 from fitter.sample.tables import Table, read_table
 
-__all__ = ["Recognised", "recognise"]
+__all__ = ["Recognised", "error_column", "recognise"]
 
 _HEAD = 200  # lines that are looked at for tags
 _MOST_COLUMNS = 5000
@@ -221,21 +221,32 @@ def _goes_with_redshift(found: Recognised, rule: _Rule, position: int) -> bool:
 
 
 def _sigma(found: Recognised) -> None:
-    """The errors of the data: the shortest name that says error and belongs to the data's, else the column that follows the data."""
+    """The errors of the data, by name, else the column that follows the data."""
     data = found.table.columns.position(found.roles[found.data])
-    stem = re.split(r"[_\W]", str(found.table.columns.label(data)).lower())[0]
-    candidates = [p for p in _number_columns(found) if _is_sigma(found.table.floats[p])]
-    names = {p: str(found.table.columns.label(p)).lower() for p in candidates if isinstance(found.table.columns.label(p), str)}
-    said = [p for p in candidates if p in names and re.search(r"err|sig|unc|std|^d|^e_|_e$|^e$", names[p])]
-    own = [p for p in said if stem in names[p]] or [p for p in said if re.match(r"(sig(ma)?|err(or)?|unc\w*|std|e)($|_|\W)", names[p])]
-    own.sort(key=lambda p: (names[p].split("_")[-1] in ("all", "tot", "total"), len(names[p])))
+    own = _named_errors(found)
     if own:
         found.roles["sigma"], found.reasons["sigma"] = _label(found.table, own[0]), "by its name, and its numbers fit"
         if own[1:]:
             found.doubts.append(f"The errors might also be {' or '.join(str(_label(found.table, p)) for p in own[1:])}.")
-    elif data + 1 in candidates and found.table.columns.names is None:
+    elif found.table.columns.names is None and data + 1 in _number_columns(found) and _is_sigma(found.table.floats[data + 1]):
         found.roles["sigma"], found.reasons["sigma"] = data + 1, "small numbers in the column after the data"
         found.doubts.append(f"The errors are column {data + 1} only because it follows the data: check it.")
+
+
+def error_column(found: Recognised) -> str | int | None:
+    """The column whose name says that it holds the errors of the data; None where there is none."""
+    own = _named_errors(found)
+    return _label(found.table, own[0]) if own else None
+
+
+def _named_errors(found: Recognised) -> list[int]:
+    """Columns with a name that says error and belongs to the data's, else says nothing but error; the best first."""
+    stem = re.split(r"[_\W]", str(found.table.columns.label(found.table.columns.position(found.roles[found.data]))).lower())[0]
+    labels = {p: found.table.columns.label(p) for p in _number_columns(found) if _is_sigma(found.table.floats[p])}
+    names = {p: label.lower() for p, label in labels.items() if isinstance(label, str)}
+    said = [p for p in names if re.search(r"err|sig|unc|std|^d|^e_|_e$|^e$", names[p])]
+    own = [p for p in said if stem in names[p]] or [p for p in said if re.match(r"(sig(ma)?|err(or)?|unc\w*|std|e)($|_|\W)", names[p])]
+    return sorted(own, key=lambda p: (names[p].split("_")[-1] in ("all", "tot", "total"), len(names[p])))
 
 
 def _words(found: Recognised) -> None:

@@ -92,3 +92,61 @@ def test_heliocentric_column(load):
 def test_redshifts_of_two_frames_far_apart():
     text = only(Sample.from_arrays(Z, MU, sigma=0.15, z_helio=Z + np.where(np.arange(N) == 4, 0.02, 0)).warnings)
     assert "In 1 rows" in text and "row 5" in text
+
+
+def test_calibrators_inside_a_relative_fit():
+    host = np.full(N, np.nan)
+    host[:3] = 31.0
+    text = only(Sample.from_arrays(Z, MU, sigma=0.15, calibrator_modulus=host).warnings)
+    assert "3 calibrator rows" in text and "keep: {calibrators: drop}" in text
+
+
+def test_errors_of_another_size():
+    text = only(sample(sigma=0.15**2).warnings)
+    assert "look too small" in text and "Are they variances" in text and "{intrinsic:" in text
+    assert "look too large" in only(sample(sigma=0.9).warnings)
+    assert sample(sigma=0.15**2, intrinsic={"uniform": [0, 0.5]}).warnings == ()
+    assert sample(modes=np.full((N, 1), 0.5)).warnings == ()
+
+
+@pytest.fixture
+def with_matrix(tmp_path):
+    """A table with a column of errors (0.15 mag, called `mu_err`) that the config does not use, beside a matrix."""
+
+    def load(matrix, sigma=0.15, kind="covariance", name="mu_err"):
+        rows = zip(Z, MU, np.broadcast_to(sigma, N), strict=True)
+        (tmp_path / "t.csv").write_text(f"z,mu,{name}\n" + "".join(f"{a},{b},{c}\n" for a, b, c in rows))
+        np.save(tmp_path / "c.npy", matrix)
+        columns = {"redshift": "z", "distance_modulus": "mu"}
+        return Sample.from_config(
+            SampleSettings.model_validate({"table": "t.csv", "columns": columns, "uncertainty": [{kind: "c.npy"}]}), tmp_path
+        )
+
+    return load
+
+
+FULL = np.diag(np.full(N, 0.15**2)) + 1e-4
+
+
+def test_column_and_diagonal_that_agree(with_matrix):
+    assert with_matrix(FULL).warnings == ()
+    assert with_matrix(np.linalg.inv(FULL), kind="precision").warnings == ()
+    assert with_matrix(FULL, sigma=0.05, name="something").warnings == ()
+
+
+def test_column_far_above_the_diagonal(with_matrix):
+    text = with_matrix(np.diag(np.full(N, 0.05**2))).warnings[-1]
+    assert "median ratio of the errors is 0.333" in text and "systematics only: then add {sigma: mu_err}" in text
+    assert "The matrix alone is used" in text
+
+
+def test_column_far_below_the_diagonal(with_matrix):
+    text = only(with_matrix(FULL, sigma=0.05).warnings)
+    assert "mu_err is probably the error of the measurement alone" in text
+
+
+def test_one_row_where_they_disagree(with_matrix):
+    sigma = np.full(N, 0.15)
+    sigma[11] = 0.6
+    text = only(with_matrix(FULL, sigma=sigma).warnings)
+    assert "in 1 rows they differ otherwise, most in row 13" in text and "same table?" in text

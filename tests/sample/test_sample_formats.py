@@ -26,7 +26,7 @@ COVARIANCE = np.diag(np.full(N, 0.02)) + 0.001 * np.exp(-(np.subtract.outer(Z, Z
 
 
 def catalogue():
-    return table.Table({"name": NAMES, "survey": ["a", "b"] * 3 + ["a"], "z": Z, "mu": MU, "e": np.full(N, 0.1), "host": HOST})
+    return table.Table({"name": NAMES, "survey": ["a", "b"] * 3 + ["a"], "z": Z, "mu": MU, "e": np.full(N, 0.145), "host": HOST})
 
 
 def write_fits(path, first=()):

@@ -4,11 +4,23 @@ VENV := .venv
 BIN := $(VENV)/bin
 DEMO_RUN := runs/curved_lcdm
 
-.PHONY: demo test lint bench soak clean
+.PHONY: demo paper test lint bench soak clean
 
 demo: $(VENV)/.installed
 	$(BIN)/mufitter fit configs/curved_lcdm.yaml --replace
 	@echo "Corner plot: $(DEMO_RUN)/figures/corner.pdf and corner.png"
+
+# Three models on the invented survey, and a folder with all figures, tables and a manuscript; set where there is a LaTeX.
+paper: $(VENV)/.installed
+	for model in curved_lcdm flat_wcdm flat_w0wa; do \
+		test -f runs/$$model/figures_data.h5 || $(BIN)/mufitter fit configs/$$model.yaml --run-folder runs/$$model --replace --quiet || exit 1; \
+	done
+	$(BIN)/mufitter paper runs/curved_lcdm runs/flat_wcdm runs/flat_w0wa --to paper
+	@if command -v pdflatex >/dev/null && command -v bibtex >/dev/null; then \
+		cd paper && pdflatex -interaction=nonstopmode -halt-on-error manuscript >/dev/null && bibtex manuscript >/dev/null \
+		&& pdflatex -interaction=nonstopmode -halt-on-error manuscript >/dev/null \
+		&& pdflatex -interaction=nonstopmode -halt-on-error manuscript >/dev/null && echo "Manuscript: paper/manuscript.pdf"; \
+	else echo "No LaTeX here: paper/manuscript.tex is ready for one."; fi
 
 test: $(VENV)/.installed-test lint
 	$(BIN)/python -m pytest

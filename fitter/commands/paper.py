@@ -64,8 +64,10 @@ def figures(
     given = {"only": _words(only), "width": _width(width), "formats": _words(format_), "parameters": _words(parameters)}
     how, labels, own_style = _looks(read, given | {"mark": _numbers(mark), "models": _words(models)})
     folder = _target(to, read, "figures")
+    names = _words(only)
+    if any(run.summary.get("blinded") for run in read):
+        names, how = _while_hidden(read, names, how)
     with relabelled(labels):
-        names = _words(only)
         if len(read) == 1:
             found = drawings(read[0].drawable, names, how)
         else:
@@ -92,7 +94,7 @@ def tables(
     from fitter.report.paper import TABLE_FILES, table_files
     from fitter.report.run_folder import write_atomic, writing
 
-    read = [_read(path) for path in runs]
+    read = [_open(path) for path in runs]
     _, labels, _ = _looks(read, {})
     folder = _target(to, read, "tables")
     with relabelled(labels):
@@ -118,7 +120,7 @@ def export(
     from fitter.report.export import export as write
     from fitter.report.run_folder import writing
 
-    read = _read(run)
+    read = _open(run)
     folder = read.folder if to is None else to
     _refuse_taken(folder, [f"posterior.{format_}", f"densities.{format_}"] if to is not None and not replace else [])
     with writing(folder):
@@ -138,7 +140,7 @@ def paper(
     from fitter.report.paper import write_paper
     from fitter.report.run_folder import writing
 
-    read = [_read(path) for path in runs]
+    read = [_open(path) for path in runs]
     how, labels, own_style = _looks(read, {"width": _width(width), "parameters": _words(parameters)})
     with relabelled(labels), writing(to):
         to.mkdir(parents=True, exist_ok=True)
@@ -163,10 +165,31 @@ def _read(path: Path):
     return PaperRun(run.folder.resolve(), run.summary, settings, Drawable(run.posterior, run.folder))
 
 
+def _open(path: Path):
+    """A run folder whose values are not hidden."""
+    run = _read(path)
+    if run.summary.get("blinded"):
+        raise InputError("the values of this run are hidden", file=path, cure="Show them first with `mufitter unblind`")
+    return run
+
+
+def _while_hidden(runs, names: list[str] | None, how):
+    """Figures of runs with hidden values, and their settings: any but these would show where the values are."""
+    allowed = ("corner", "chains") if len(runs) == 1 else ("corner",)
+    for name in names or ():
+        if name not in allowed:
+            cure = "Show them first with `mufitter unblind`"
+            raise InputError(f"`{name}` would show values of this run that are hidden", file=runs[0].folder, cure=cure)
+    sampled = list(dict.fromkeys(n for run in runs for n in run.drawable.posterior.names))
+    chosen = [n for n in how.parameters or sampled if n in sampled]
+    return list(names or allowed), how.model_copy(update={"parameters": chosen or sampled, "mark": {}})
+
+
 def _looks(runs, given: dict):
     """Settings, labels and style sheet: those of the first run, with the options laid over them."""
     from pydantic import ValidationError
 
+    from fitter.report.blinding import hidden_labels
     from fitter.report.figures.settings import FigureSettings
     from fitter.report.paper import settings_of
 
@@ -174,6 +197,8 @@ def _looks(runs, given: dict):
     given = {key: value for key, value in given.items() if value is not None and key != "only"}
     for run in runs[1:]:
         labels = {**settings_of(run.settings)[1], **labels}
+    for run in runs:
+        labels |= hidden_labels(run.summary.get("blinded") or ())
     try:
         changed = FigureSettings.model_validate({**how.model_dump(), **given})
     except ValidationError as error:

@@ -102,6 +102,7 @@ def _settings_of(style: str | Path | Mapping | None) -> dict:
     if style is None:
         return {}
     import matplotlib
+    import matplotlib.style
 
     try:
         if isinstance(style, Mapping):

@@ -28,6 +28,7 @@ from fitter.report.blinding import (
     blind_optimum,
     blind_posterior,
     blind_summary,
+    data_key,
     hidden_labels,
     hidden_names,
     offsets,
@@ -44,6 +45,7 @@ if TYPE_CHECKING:
     from fitter.inference.optimum import Optimum
     from fitter.inference.posterior import Posterior
     from fitter.likelihood.posterior import LogPosterior
+    from fitter.sample.capsule import Capsule
 
 __all__ = ["Check", "Fit", "TooShort", "check", "fit", "load_config", "read_run"]
 
@@ -135,6 +137,19 @@ class Fit:
         from fitter.report.figures.hubble import hubble_figure
 
         return hubble_figure(self.log_posterior, self.optimum, self.chains)
+
+    def capsule(self, *, order: int = 48, citation: str = "") -> Capsule:
+        """Return the likelihood as a capsule; ``.text()`` of it is what to write to a file.
+
+        Raises
+        ------
+        InputError
+            The intrinsic scatter is fitted, or this is a fit of a capsule already.
+        """
+        from fitter.sharing import capsule_of_sample
+
+        scatter = float(self.log_posterior.fixed.get("intrinsic_scatter", 0.0))
+        return capsule_of_sample(self.sample, order=order, scatter=scatter, title=self.config.title, citation=citation)
 
     def __str__(self) -> str:
         from fitter.report.terminal import terminal_summary
@@ -252,6 +267,7 @@ class _Job:
         log_posterior = _likelihood(config, sample)
         config.sampling.check_dimension(len(log_posterior.names))
         raise_all(figure_problems(config, log_posterior))
+        hidden_names(config.blind, log_posterior)
         return cls(config, sample, log_posterior, folder, progress)
 
     @cached_property
@@ -297,7 +313,11 @@ class _Job:
     @cached_property
     def hidden(self) -> dict[str, float]:
         """Hidden offset of each blinded parameter."""
-        return offsets(self.sample.sha256, hidden_names(self.config.blind, self.log_posterior))
+        return offsets(self._data_key, hidden_names(self.config.blind, self.log_posterior))
+
+    @property
+    def _data_key(self) -> str:
+        return data_key(self.sample, None if self.config.sample is None else self.config.sample.table)
 
     def _blinded(self, result: Fit) -> Fit:
         """Hide what the config hides; from here on nothing knows the values."""
@@ -305,7 +325,8 @@ class _Job:
             return result
         chains = blind_posterior(result.chains, self.hidden)
         optimum = blind_optimum(result.optimum, self.log_posterior.names, self.hidden)
-        return replace(result, chains=chains, optimum=optimum, _summary=blind_summary(result.summary(), self.hidden, self.log_posterior))
+        summary = blind_summary(result.summary(), self.hidden, self.log_posterior, self._data_key)
+        return replace(result, chains=chains, optimum=optimum, _summary=summary)
 
     def unblind(self, run: Run) -> Fit:
         """Write a blinded run again with its values, and when that was."""
@@ -349,7 +370,7 @@ class _Job:
             chains = sample_posterior(
                 self.log_posterior, self.config.sampling, optimum, seed=self._seed(_SAMPLING),
                 folder=folder, progress=bar, resume=resume, fingerprint=fingerprint,
-                processes=self.processes, veil=veil_key(self.sample.sha256) if self.hidden else b"",
+                processes=self.processes, veil=veil_key(self._data_key) if self.hidden else b"",
             )  # fmt: skip
         _log.info("sampled: %s", {k: v for k, v in chains.sampling.items() if k in ("steps", "burn_in", "converged", "reason", "seconds")})
         steps = chains.log_posterior.shape[1]

@@ -22,6 +22,8 @@ from fitter.errors import InputError
 from fitter.inference.replicas import available_cores
 from fitter.inference.seeds import child_seed
 from fitter.inference.settings import DEFAULT_SEED
+from fitter.report.blinding import comparable, hidden_labels, require_same_blinding
+from fitter.report.facts import relabelled
 from fitter.report.run_folder import RunFolder, read_run, write_atomic, writing
 from fitter.sample.sample import Sample
 from fitter.study.entry import Entry
@@ -155,7 +157,12 @@ def _report(entries: list[Entry], options: dict, seed: int) -> dict:
     from fitter.report.facts import json_safe
     from fitter.study.comparison import compare_entries
 
-    return json_safe(compare_entries(entries, seed=child_seed(np.random.SeedSequence(seed), _STUDY), **options))
+    hidden = require_same_blinding([e.summary for e in entries])
+    report = json_safe(compare_entries(entries, seed=child_seed(np.random.SeedSequence(seed), _STUDY), **options))
+    if hidden:
+        said = f"Blinded: {', '.join(hidden)} carry the same hidden offset in every fit; only differences between fits mean anything."
+        report |= {"blinded": list(hidden), "warnings": [said, *report["warnings"]]}
+    return report
 
 
 # ---------------------------------------------------------------------- variants of a config
@@ -176,7 +183,7 @@ def _compare_variants(what, options: dict, run_folder, replace: bool, allow_code
     try:
         runs = _fit_all(variants, samples, folder.path / "variants", folder.target / "variants", tell)
         entries = [
-            Entry(v.name, run.summary, run.posterior, _likelihood(v.config, sample))
+            _entry(v.name, run, lambda v=v, sample=sample: _likelihood(v.config, sample))
             for v, run, sample in zip(variants, runs, samples, strict=True)
         ]
         report = _report(entries, given | options, config.sampling.seed)
@@ -274,7 +281,8 @@ def _write(report: dict, entries: list[Entry], folder: Path) -> None:
         texts = {"md": comparison_markdown, "csv": comparison_csv, "tex": comparison_latex}
         for suffix, make in texts.items():
             write_atomic(folder / f"comparison.{suffix}", make(report))
-        draw_comparison(report, {e.name: e.posterior for e in entries}, folder / "figures")
+        with relabelled(hidden_labels(report.get("blinded", ()))):
+            draw_comparison(report, {e.name: e.posterior for e in entries}, folder / "figures")
         write_atomic(folder / "comparison.json", json.dumps(report, indent=1, ensure_ascii=False, allow_nan=False) + "\n")
 
 
@@ -284,7 +292,14 @@ def _write(report: dict, entries: list[Entry], folder: Path) -> None:
 def _entry_of_run(path: str | Path, allow_code: bool) -> Entry:
     run = read_run(path)
     name = run.summary["title"] or run.summary["model"]
-    return Entry(name, run.summary, run.posterior, _rebuilt(run, path, allow_code))
+    return _entry(name, run, lambda: _rebuilt(run, path, allow_code))
+
+
+def _entry(name: str, run, likelihood: Callable) -> Entry:
+    """A fit to compare; of a blinded one the sampled parameters, shifted alike in all, and nothing that knows their place."""
+    if run.summary.get("blinded"):
+        return Entry(name, *comparable(run.summary, run.posterior))
+    return Entry(name, run.summary, run.posterior, likelihood())
 
 
 def _rebuilt(run, path, allow_code: bool):

@@ -1,7 +1,8 @@
 """Hiding central values until the analysis is frozen: what a blinded run shows and stores.
 
-Each sampled parameter is shifted by an offset from a keyed hash of the data [1]_, the same for every fit of these data, so that fits can be
-compared. Marginalised and derived parameters are shown as differences from their own median. Widths, χ² and diagnostics stay.
+Each sampled parameter is shifted by an offset from a keyed hash of the data [1]_, the same for every fit of one table, whatever its
+cuts, errors and model, so that fits can be compared. Marginalised and derived parameters are shown as differences from their own
+median. Widths, χ² and diagnostics stay.
 
 References
 ----------
@@ -21,7 +22,8 @@ from fitter.errors import InputError
 from fitter.parameters import parameter
 
 __all__ = [
-    "NOT_HIDDEN", "blind_optimum", "blind_posterior", "blind_summary", "hidden_labels", "hidden_names", "offsets", "true_chain", "veil_key",
+    "NOT_HIDDEN", "blind_optimum", "blind_posterior", "blind_summary", "comparable", "data_key", "hidden_labels", "hidden_names",
+    "offsets", "require_same_blinding", "true_chain", "veil_key",
 ]  # fmt: skip
 
 NOT_HIDDEN = ("intrinsic_scatter", "covariance_scale")
@@ -48,9 +50,14 @@ def hidden_names(blind: bool | Iterable[str], log_posterior) -> tuple[str, ...]:
     return tuple(dict.fromkeys(blind))
 
 
-def offsets(sample_sha256: str, names: Iterable[str]) -> dict[str, float]:
-    """Return the hidden offset of each parameter for these data."""
-    return {name: _offset(sample_sha256, name) for name in names}
+def data_key(sample, table: str | None) -> str:
+    """Return what the offsets depend on: the table's SHA-256, or that of the sample where its data came as arrays."""
+    return sample.sources.get(table) or sample.sha256
+
+
+def offsets(key: str, names: Iterable[str]) -> dict[str, float]:
+    """Return the hidden offset of each parameter under a key."""
+    return {name: _offset(key, name) for name in names}
 
 
 def _offset(key: str, name: str) -> float:
@@ -68,9 +75,31 @@ def _half_width(name: str) -> float:
     return 0.5 * abs(numbers[1] - numbers[0]) if len(numbers) == 2 and "normal" not in prior else 1.0
 
 
-def veil_key(sample_sha256: str) -> bytes:
+def veil_key(key: str) -> bytes:
     """Return the key under which the chain of an unfinished blinded run is kept."""
-    return hmac.new(sample_sha256.encode(), b"mufitter veil", hashlib.sha256).digest()
+    return hmac.new(key.encode(), b"mufitter veil", hashlib.sha256).digest()
+
+
+def comparable(summary: dict, posterior):
+    """Return summary and posterior of a blinded run with only what keeps its meaning beside another: the sampled parameters."""
+    names = [n for n, facts in summary["parameters"].items() if facts["kind"] == "sampled"]
+    kinds = {n: kind for n, kind in posterior.kinds.items() if kind == "sampled"}
+    return {**summary, "parameters": {n: summary["parameters"][n] for n in names}}, replace(posterior, kinds=kinds, extra={})
+
+
+def require_same_blinding(summaries: list[dict]) -> tuple[str, ...]:
+    """Return the hidden parameters of fits that are to be compared.
+
+    Raises
+    ------
+    InputError
+        Some are blinded and others are not, or otherwise: their offsets differ, so would their differences.
+    """
+    ways = {(tuple(s.get("blinded") or ()), s.get("blinded_key")) for s in summaries}
+    if len({key for _, key in ways}) > 1:
+        cure = "Unblind them all first with `mufitter unblind`, or blind them all"
+        raise InputError("these fits hide their values in different ways: they cannot be compared", cure=cure)
+    return tuple(sorted({name for names, _ in ways for name in names}))
 
 
 def hidden_labels(hidden: Iterable[str]) -> dict[str, str]:
@@ -102,8 +131,8 @@ def _row(names, hidden) -> np.ndarray:
     return np.array([hidden.get(name, 0.0) for name in names])
 
 
-def blind_summary(summary: dict, hidden: Mapping[str, float], log_posterior) -> dict:
-    """Return the summary of a fit with central values hidden."""
+def blind_summary(summary: dict, hidden: Mapping[str, float], log_posterior, key: str) -> dict:
+    """Return the summary of a fit with central values hidden; `key` is that of the offsets, of which a hash is kept."""
     from fitter.report.warnings import practitioner_warnings
 
     # What the data say of an edge stays, the value of a limit does not.
@@ -121,6 +150,7 @@ def blind_summary(summary: dict, hidden: Mapping[str, float], log_posterior) -> 
         "best_fit": {**summary["best_fit"], "values": best},
         "sampling": {**summary["sampling"], "blinded": sorted(hidden)},
         "blinded": sorted(hidden),
+        "blinded_key": hashlib.sha256(key.encode()).hexdigest()[:16],
         "warnings": [said, *warnings],
     }
 

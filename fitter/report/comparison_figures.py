@@ -61,7 +61,8 @@ def draw_comparison(report: dict, posteriors: dict, folder: Path) -> list[Path]:
         having = {label: p for label, p in shown.items() if set(names) & set(p.kinds)}
         if names:
             written += save_figure(corner_figure(having, names), folder / "corner", corner_caption(having, names) + note(having))
-        for plane in PLANES:
+        # A plane's own lines would show where a hidden value is.
+        for plane in () if report.get("blinded") else PLANES:
             axes = {PLANES[plane].x, PLANES[plane].y}
             fits = {label: p for label, p in shown.items() if axes <= set(p.kinds)}
             # A fit whose ordinate follows from the abscissa is a line in the plane: worth it beside one that is not.

@@ -8,11 +8,12 @@ import sys
 import numpy as np
 import pytest
 
-from fitter.api import fit, load_run, unblind
+from fitter.api import check, fit, load_run, unblind
+from fitter.comparing import compare
 from fitter.errors import InputError
 from fitter.inference.checkpoint import veiled
 from fitter.likelihood.posterior import LogPosterior
-from fitter.report.blinding import hidden_names, offsets
+from fitter.report.blinding import data_key, hidden_names, offsets
 from fitter.sample.sample import Sample
 
 SETTINGS = """
@@ -57,6 +58,10 @@ def values_of(summary):
     return [facts[key] for facts in summary["parameters"].values() for key in keys]
 
 
+def _key(result):
+    return data_key(result.sample, "table.csv")
+
+
 def leaks(folder, values, positions):
     """Files that hold one of the values as text, to 5 significant digits, or one of the positions as a binary number."""
     texts = {f"{v:.5g}" for v in values if abs(v) > 1e-6} | {f"{v:.6f}"[:7] for v in values if abs(v) > 1e-2}
@@ -95,7 +100,7 @@ def test_an_unfinished_chain_gives_nothing_away_either_and_resumes(folder, shown
     resumed = fit(folder / "longer.yaml", run_folder=folder / "short", resume=True)
     assert resumed.converged
     # The same seed: the resumed chain, true positions again under the veil, is the one never interrupted.
-    hidden = offsets(resumed.sample.sha256, resumed.chains.names)
+    hidden = offsets(_key(resumed), resumed.chains.names)
     moved = resumed.chains.chain - [hidden[n] for n in resumed.chains.names]
     steps = min(moved.shape[1], shown.chains.chain.shape[1])
     np.testing.assert_allclose(moved[:, :steps], shown.chains.chain[:, :steps], atol=1e-10)
@@ -148,8 +153,8 @@ def test_unblinding_needs_a_word_and_gives_everything_back(folder, shown, blind)
 
 
 def test_offsets_belong_to_the_data_and_are_never_small(blind):
-    a, b = (offsets(key, ("omega_m", "H0", "w")) for key in (blind.sample.sha256, "other"))
-    assert a != b and a == offsets(blind.sample.sha256, ("omega_m", "H0", "w"))
+    a, b = (offsets(key, ("omega_m", "H0", "w")) for key in (_key(blind), "other"))
+    assert a != b and a == offsets(_key(blind), ("omega_m", "H0", "w"))
     drawn = np.array([offsets(str(i), ("omega_m",))["omega_m"] for i in range(400)])
     assert np.abs(drawn).min() >= 0.1 and np.abs(drawn).max() <= 0.5
     assert abs((drawn > 0).mean() - 0.5) < 4 * 0.5 / 20
@@ -163,7 +168,9 @@ def test_a_list_hides_its_parameters_and_what_follows_from_them(folder, shown):
     assert some["parameters"]["q0"]["median"] == pytest.approx(0, abs=1e-12)
     (folder / "wrong.yaml").write_text(SETTINGS + "blind: [omega_k]\n")
     with pytest.raises(InputError, match="not sampled"):
-        fit(folder / "wrong.yaml", run_folder=False)
+        fit(folder / "wrong.yaml", run_folder=folder / "wrong")
+    assert not list(folder.glob("wrong*/"))
+    assert "not sampled" in check(folder / "wrong.yaml").problems[0].problem
 
 
 def test_noise_parameters_stay_open():
@@ -179,3 +186,29 @@ def test_the_veil_comes_off_bit_by_bit():
     assert covered.shape == x.shape and not np.any(covered == x)
     assert np.array_equal(veiled(covered, b"key"), x)
     assert veiled(x, b"") is x
+
+
+def test_blinded_fits_are_compared_by_their_differences(folder, blind, shown):
+    wcdm = SETTINGS.replace("flat_lcdm", "flat_wcdm")
+    (folder / "other.yaml").write_text(wcdm + "blind: true\n")
+    (folder / "other_open.yaml").write_text(wcdm)
+    (folder / "cut.yaml").write_text(
+        SETTINGS.replace("  distance_scale", "  keep: {redshift: [0.1, 2]}\n  distance_scale") + "blind: true\n"
+    )
+    for name in ("other", "other_open", "cut"):
+        fit(folder / f"{name}.yaml", run_folder=folder / name)
+    hidden = compare([folder / "blind", folder / "other", folder / "cut"], names=["a", "b", "c"], run_folder=folder / "compared")
+    open_ = compare([folder / "open", folder / "other_open"], names=["a", "b"], run_folder=False)
+    medians = {run: fit_summary(folder / run)["parameters"]["omega_m"]["median"] for run in ("blind", "other", "open", "other_open")}
+    assert medians["other"] - medians["blind"] == pytest.approx(medians["other_open"] - medians["open"], abs=1e-9)
+    assert hidden.report["warnings"][0].startswith("Blinded")
+    a, b = (next(v for v in c.report["variants"] if v["name"] == "b") for c in (hidden, open_))
+    assert a["delta"]["chi2"] == pytest.approx(b["delta"]["chi2"], abs=1e-9)
+    assert leaks(folder / "compared", values_of(shown.summary()), []) == []
+    assert not list((folder / "compared").rglob("plane_*"))
+    with pytest.raises(InputError, match="different ways"):
+        compare([folder / "blind", folder / "open"], names=["a", "b"], run_folder=False)
+
+
+def fit_summary(run):
+    return json.loads((run / "summary.json").read_text())

@@ -4,7 +4,7 @@ VENV := .venv
 BIN := $(VENV)/bin
 DEMO_RUN := runs/curved_lcdm
 
-.PHONY: demo paper test lint bench soak clean
+.PHONY: demo paper test lint bench bench-dense fuzz soak clean
 
 demo: $(VENV)/.installed
 	$(BIN)/mufitter fit configs/curved_lcdm.yaml --replace
@@ -32,6 +32,15 @@ lint: $(VENV)/.installed-test
 # Ratios of times measured in one run; run them on a quiet machine.
 bench: $(VENV)/.installed-test
 	$(BIN)/python tests/benchmarks/bench.py
+	$(BIN)/python tests/benchmarks/scale.py
+
+# A dense covariance of 20,000 supernovae: minutes, and 5 GB of memory and of disk.
+bench-dense: $(VENV)/.installed-test
+	$(BIN)/python tests/benchmarks/scale.py --dense
+
+# Damaged configs, tables and matrices by the hundred thousand: minutes.
+fuzz: $(VENV)/.installed-test
+	$(BIN)/python -m pytest --hypothesis-profile=soak tests/sample/test_sample_fuzz.py tests/test_fuzz.py
 
 # Random configs, tables and matrices by the thousand, for hours; `make test` runs the short version.
 soak: $(VENV)/.installed-test

@@ -571,6 +571,7 @@ def _check_likelihood(config: Config, sample: Sample) -> Check:
         log_posterior = _likelihood(config, sample)
         config.sampling.check_dimension(len(log_posterior.names))
         problems += figure_problems(config, log_posterior)
+        hidden_names(config.blind, log_posterior)
     except InputError as error:
         return Check((*problems, *getattr(error, "errors", [error])), config, sample)
     return Check(tuple(problems), config, sample, log_posterior)

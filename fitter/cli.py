@@ -11,7 +11,7 @@ from typing import Annotated, TextIO
 
 import typer
 
-from fitter.commands import blinding, paper, start
+from fitter.commands import blinding, paper, share, start
 from fitter.errors import InputError, InputErrors, MufitterError
 
 __all__ = ["app", "main"]
@@ -339,6 +339,7 @@ def _explain(
 blinding.register(app, _reported)
 paper.register(app, _reported)
 start.register(app, _reported)
+share.register(app, _reported)
 
 
 if __name__ == "__main__":

@@ -2,11 +2,12 @@
 
 from __future__ import annotations
 
+import os
 from collections.abc import Mapping
 from pathlib import Path
 from typing import Any
 
-from pydantic import ValidationError
+from pydantic import TypeAdapter, ValidationError
 
 from fitter.config.model_choice import chosen_model
 from fitter.config.parameters import parameter_problems
@@ -15,6 +16,7 @@ from fitter.config.settings import Config, SampleSettings
 from fitter.config.yaml_file import Document, read_yaml
 from fitter.cosmology import Model
 from fitter.errors import InputError, InputErrors
+from fitter.sample.capsule import AnySample, CapsuleSettings, read_capsule
 
 __all__ = ["config_from_mapping", "load_config", "raise_all", "validate"]
 
@@ -114,16 +116,26 @@ def validate(
         cure = "It says what was observed: `sample: {table: …, columns: {…}, uncertainty: […]}`"
         problems.insert(0, document.error("the key `sample` is missing", cure=cure))
     sample = config.sample if config is not None else _sample_settings(document)
-    problems += refused + _parameter_problems(document, model, sample if arrays is None else arrays)
+    problems += refused + _parameter_problems(document, model, _described(sample, folder) if arrays is None else arrays)
     problems.sort(key=lambda p: p.row or 0)
     return (None if problems else config), sample, problems
 
 
 def _sample_settings(document: Document) -> SampleSettings | None:
     try:
-        return SampleSettings.model_validate(document.data.get("sample"))
+        return TypeAdapter(AnySample).validate_python(document.data.get("sample"))
     except (ValidationError, InputError):
         return None
+
+
+def _described(sample, folder: Path):
+    """What says which kind of data a sample holds: its settings, or the contents of a capsule; None where that cannot be read."""
+    if not isinstance(sample, CapsuleSettings):
+        return sample
+    try:
+        return read_capsule(folder / os.path.expanduser(sample.capsule))
+    except InputError:
+        return None  # said again, with its place, when the sample is read
 
 
 def _parameter_problems(document: Document, model: Model | None, sample: SampleSettings | None) -> list[InputError]:

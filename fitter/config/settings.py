@@ -17,9 +17,10 @@ from fitter.cosmology import Model, get_model
 from fitter.inference.settings import SamplingSettings
 from fitter.parameters import PARAMETERS
 from fitter.report.figures.settings import FigureSettings, Labels
+from fitter.sample.capsule import AnySample
 from fitter.sample.settings import SampleSettings
 
-__all__ = ["Config"]
+__all__ = ["Config", "SampleSettings"]
 
 
 def _empty_is_default(value):
@@ -61,7 +62,7 @@ class Config(BaseModel):
     model_config = ConfigDict(extra="forbid", frozen=True)
 
     title: str = Field("", description="Free text, printed with the results.")
-    sample: SampleSettings | None = Field(None, description="What was observed: the table, its columns, cuts and uncertainties.")
+    sample: AnySample | None = Field(None, description="What was observed: the table, its columns, cuts and uncertainties.")
     model: ModelChoice = Field(description="The cosmological model: a name, or {file, name} of one of your own.")
     radiation: bool = Field(False, description="Count photons (2.7255 K) and 3.046 massless neutrinos in the expansion rate.")
     parameters: Parameters = Field(

@@ -17,7 +17,7 @@ from fitter.errors import InputError
 
 __all__ = ["as_run", "config_hash", "config_text", "differences", "input_problems"]
 
-_PATH_KEYS = ("table", "covariance", "precision", "modes")
+_PATH_KEYS = ("table", "capsule", "covariance", "precision", "modes")
 # What may change between an interrupted run and its continuation.
 _FREE_TO_CHANGE = ("title", "run_folder", "sampling.max_steps", "sampling.target_ess")
 

@@ -17,10 +17,10 @@ from fitter.cosmology import get_model
 from fitter.cosmology.distances import data_term, log_distance
 from fitter.cosmology.grid import Grid
 
-__all__ = ["FINEST_ORDER", "Design"]
+__all__ = ["FINEST_ORDER", "REFERENCE", "Design"]
 
 FINEST_ORDER = 256
-_REFERENCE = np.array([[0.3]])  # flat ΛCDM; χ² is then made of small numbers, whatever the true model
+REFERENCE = np.array([[0.3]])  # flat ΛCDM; χ² is then made of small numbers, whatever the true model
 
 
 @dataclass(frozen=True)
@@ -61,7 +61,7 @@ class Design:
         z_max = self.redshift[free].max() if free.any() else 1.0
         grid = Grid(z_max, FINEST_ORDER)
         object.__setattr__(self, "grid", grid)
-        object.__setattr__(self, "reference", log_distance(get_model("flat_lcdm"), _REFERENCE, grid)[0][0])
+        object.__setattr__(self, "reference", log_distance(get_model("flat_lcdm"), REFERENCE, grid)[0][0])
 
     @property
     def n(self) -> int:

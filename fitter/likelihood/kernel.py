@@ -13,7 +13,7 @@ from fitter.likelihood.compression import Compressed, compress, compress_many
 from fitter.likelihood.design import FINEST_ORDER, Design
 from fitter.likelihood.direct import Direct
 
-__all__ = ["CHI2_TOLERANCE", "ORDERS", "TAIL_TOLERANCE", "Kernel"]
+__all__ = ["CHI2_TOLERANCE", "ORDERS", "TAIL_TOLERANCE", "Kernel", "Level"]
 
 ORDERS = (32, 64, 128, FINEST_ORDER)
 # The tail of f tracks its interpolation error within a factor of about 3–8; this keeps that under 1e-8 mag …
@@ -24,7 +24,7 @@ _ROUNDING = 1e-13
 
 
 @dataclass(frozen=True)
-class _Level:
+class Level:
     """The compressed likelihood on one grid, at every node in the scatter (one node where it is fixed)."""
 
     grid: Grid
@@ -82,7 +82,7 @@ class Kernel:
     def __init__(self, design: Design, model, scatter=None, compressed: Compressed | None = None):
         self.design, self.model, self.scatter = design, model, scatter
         finest = scatter.compressed if scatter else (compressed or compress(design),)
-        self.levels = tuple(_Level.build(design, finest, order) for order in ORDERS)
+        self.levels = tuple(Level.build(design, finest, order) for order in ORDERS)
         self.log_norms = np.array([c.log_norm for c in finest])
         self.counts = {"evaluations": 0, "refined": 0, "direct": 0, "excluded": 0}
         self._direct = Direct(design, design.noise)

@@ -72,7 +72,7 @@ class LogPosterior:
             from fitter.likelihood.scatter import scatter_nodes
 
             scatter = scatter_nodes(self.design, _scatter_limit(priors[_SCATTER]))
-        self.kernel = Kernel(self.design, model, scatter)
+        self.kernel = self._make_kernel(scatter)
 
     @classmethod
     def build(cls, sample, model_name, parameters: dict | None = None, *, radiation: bool = False) -> LogPosterior:
@@ -105,6 +105,10 @@ class LogPosterior:
         _refuse_unknown(wanted, sample, model)
         if not priors:
             raise InputError("every parameter is held fixed", column="parameters", cure="Give at least one of them a prior.")
+        if not sample.has_rows:
+            from fitter.likelihood.capsule import CapsulePosterior
+
+            cls = CapsulePosterior
         return cls(sample, model, priors, fixed, radiation=radiation)
 
     # ------------------------------------------------------------------ set-up
@@ -112,7 +116,7 @@ class LogPosterior:
     def _set_up_linear(self, priors):
         """Decide what becomes of the zero point: a flat template, a Gaussian one, a sampled column, or a constant."""
         s = self.sample
-        ones, none = np.ones((s.n, 1)), np.zeros((s.n, 0))
+        ones, none = np.ones((len(s.redshift), 1)), np.zeros((len(s.redshift), 0))
         noise = s.noise if _SCATTER not in self.fixed else s.noise.plus_variance(self.fixed[_SCATTER] ** 2)
         flat, gaussian, linear, shift = none, noise.modes, none, 0.0
         names = list(s.noise.mode_names)
@@ -142,9 +146,14 @@ class LogPosterior:
         self._n_flat = flat.shape[1]
         self.n_data = s.n
         self.n_parameters = len(self.names) + (self._n_flat or self._magnitude_template is not None)
-        self.design = Design(
-            s.redshift, s.redshift_helio, s.data, s.calibrator_modulus, noise, flat, gaussian, linear, shift
-        )  # fmt: skip
+        self.design = self._make_design(noise, flat, gaussian, linear, shift)
+
+    def _make_design(self, noise, flat, gaussian, linear, shift):
+        s = self.sample
+        return Design(s.redshift, s.redshift_helio, s.data, s.calibrator_modulus, noise, flat, gaussian, linear, shift)
+
+    def _make_kernel(self, scatter):
+        return Kernel(self.design, self.model, scatter)
 
     def _require_calibrators(self):
         if self.sample.distance_scale == "absolute":

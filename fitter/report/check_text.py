@@ -25,7 +25,7 @@ def check_text(config, sample, log_posterior) -> str:
     if config is not None and config.title:
         lines.append(config.title)
     if sample is not None:
-        lines += _data(sample) + _terms(sample) + _covariance(sample) + _oddities(sample)
+        lines += _data(sample) + (_terms(sample) + _covariance(sample) + _oddities(sample) if sample.has_rows else _capsule(sample))
     if config is not None:
         lines.append(f"Model: {config.cosmology.name}, {'with' if config.radiation else 'no'} radiation")
     if config is not None and config.variants:
@@ -39,12 +39,18 @@ def check_text(config, sample, log_posterior) -> str:
     return "\n".join(lines)
 
 
+def _capsule(sample) -> list[str]:
+    c = sample.capsule
+    title = f", {c.title}" if c.title else ""
+    return [f"A capsule of order {c.order}: the likelihood of {c.n:,} supernovae{title}, no single rows"]
+
+
 def _data(sample) -> list[str]:
     kind = sample.data_kind.replace("_", " ")
     lines = [f"Data: {sample.n:,} rows, {kind}, distance scale {sample.distance_scale}, {_range(sample.redshift)}"]
     if sample.n_calibrators:
         lines.append(f"  calibrators: {sample.n_calibrators}")
-    if sample.group is not None:
+    if sample.group is not None and sample.has_rows:
         groups, first, counts = np.unique(sample.group, return_index=True, return_counts=True)
         for i in np.argsort(first):
             lines.append(f"  {groups[i]}: {counts[i]:,} rows, {_range(sample.redshift[sample.group == groups[i]])}")

@@ -108,11 +108,11 @@ def _sample_facts(sample) -> dict:
         "data_kind": sample.data_kind,
         "removed": dict(sample.removed),
         "terms": [{"label": t.label, "kind": t.kind, "median_sigma": float(np.sqrt(np.median(t.variance)))} for t in sample.terms],
-        "groups": _group_counts(sample),
+        "groups": group_counts(sample),
     }
 
 
-def _group_counts(sample) -> dict[str, int]:
+def group_counts(sample) -> dict[str, int]:
     """Data of each survey, the largest first; empty where there are too many to list."""
     if sample.group is None:
         return {}

@@ -15,6 +15,7 @@ _FEW, _RHAT = 400, 1.01
 _MOSTLY = 0.5
 _FEW_CALIBRATORS = 5
 _MANY = 100
+_BEYOND = 1e-3  # share of draws beyond a capsule's order
 _NOISE_PARAMETERS = ("intrinsic_scatter", "covariance_scale")
 _CANNOT_BE_NEGATIVE = ("omega_m", "intrinsic_scatter", "covariance_scale")
 
@@ -35,7 +36,8 @@ def practitioner_warnings(summary: dict, log_posterior) -> list[str]:
     """
     texts = _cross_check(summary) + _convergence(summary) + _chi2(summary)
     texts += _prior_edges(summary, log_posterior) + _prior_share(summary)
-    texts += _scale(summary) + _covariance(log_posterior.sample) + _model(summary, log_posterior.model) + _evidence(summary)
+    texts += _capsule(summary) + _scale(summary)
+    texts += _covariance(log_posterior.sample) + _model(summary, log_posterior.model) + _evidence(summary)
     return texts + [str(text) for text in log_posterior.sample.warnings]
 
 
@@ -178,6 +180,18 @@ def _scale(summary: dict) -> list[str]:
 def _model(summary: dict, model) -> list[str]:
     """What the model itself says of data that reach this far."""
     return list(model.advice(summary["sample"]["redshift_max"])) if hasattr(model, "advice") else []
+
+
+def _capsule(summary: dict) -> list[str]:
+    """Whether the nodes of a capsule suffice; unlike a fit of the data themselves it has no finer ones."""
+    found = summary.get("capsule") or {}
+    if found.get("beyond", 0.0) <= _BEYOND:
+        return []
+    return [
+        f"The capsule's order {found['order']} is too low for {100 * found['beyond']:.2g} % of this posterior: χ² may be off there by "
+        f"up to {plain_number(found['worst'], 2)}. Fit the data themselves, or a capsule of higher order "
+        "(`mufitter capsule RUN --order 96`)."
+    ]
 
 
 def _covariance(sample) -> list[str]:

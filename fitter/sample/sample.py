@@ -88,6 +88,11 @@ class Sample:
         """Number of rows, calibrators included."""
         return len(self.redshift)
 
+    @property
+    def has_rows(self) -> bool:
+        """Whether the supernovae themselves are known, not their compressed likelihood alone."""
+        return True
+
     @cached_property
     def is_calibrator(self):
         """(N,) bool."""
@@ -133,6 +138,10 @@ class Sample:
         """
         from fitter.sample.assembly import assemble
 
+        if hasattr(settings, "capsule"):
+            from fitter.sample.capsule import sample_from_capsule
+
+            return sample_from_capsule(settings, folder)
         return assemble(settings, folder)
 
     @classmethod

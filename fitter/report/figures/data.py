@@ -30,7 +30,7 @@ class FigureData:
     """What each figure of the data shows: at most some 20,000 single points, whatever N; None where there is nothing to show."""
 
     hubble: HubbleData | None
-    residuals: ResidualData
+    residuals: ResidualData | None
     history: HistoryData | None
     correlation: CorrelationData | None
     budget: BudgetData | None
@@ -45,6 +45,8 @@ def collect(log_posterior, optimum, posterior) -> FigureData:
     optimum : Optimum
     posterior : Posterior
     """
+    if not log_posterior.sample.has_rows:
+        return FigureData(None, None, history_data(log_posterior, posterior), None, None)
     residuals = residual_data(log_posterior, optimum)
     if np.asarray(log_posterior.sample.is_calibrator).all():
         return FigureData(None, residuals, None, None, None)

@@ -13,6 +13,7 @@ from fitter.study.stress import FLAG
 __all__ = ["stress_csv", "stress_markdown", "stress_text"]
 
 _COLUMNS = ("median", "low68", "high68", "low95", "high95", "sigma", "shift", "shift_in_sigma", "expected", "significance", "flagged")
+_LISTED = 3
 _LEAST_SHARE = 0.001  # of the variance: below it a term of the error budget is not printed
 
 
@@ -26,7 +27,7 @@ def stress_text(result: dict) -> str:
         widths = [max(len(row[i]) for row in table) for i in range(len(head))]
         lines += ["", *("  ".join(_padded(cell, width, i) for i, (cell, width) in enumerate(zip(row, widths, strict=True))).rstrip()
                         for row in table)]  # fmt: skip
-    return "\n".join([*lines, *_budget_lines(result), *_goodness_lines(result["goodness"])]) + "\n"
+    return "\n".join([*lines, *_budget_lines(result), *_influence_lines(result), *_goodness_lines(result["goodness"])]) + "\n"
 
 
 def stress_markdown(result: dict) -> str:
@@ -41,7 +42,8 @@ def stress_markdown(result: dict) -> str:
             lines += [f"| **{heading}** | | | | | |"] if rows else []
             lines += ["| " + " | ".join(cell.strip() for cell in _cells(row, name)) + " |" for row in rows]
     lines += ["", "## Error budget and residuals", "", *(f"- {line.strip()}" for line in _budget_lines(result) if line.strip())]
-    return "\n".join([*lines, *(f"- {line.strip()}" for line in _goodness_lines(result["goodness"]) if line.strip())]) + "\n"
+    more = [*_influence_lines(result), *_goodness_lines(result["goodness"])]
+    return "\n".join([*lines, *(f"- {line.strip()}" for line in more if line.strip())]) + "\n"
 
 
 def stress_csv(result: dict) -> str:
@@ -100,6 +102,21 @@ def _budget_lines(result: dict) -> list[str]:
             f"  {parameter(name).plain}, {label}: σ² {100 * abs(facts['share']):.1f} % {way}, √|Δσ²| = {size}, median moves by {moves}"
         )
     return ["", "Error budget: the fit without each term", *lines] if lines else []
+
+
+def _influence_lines(result: dict) -> list[str]:
+    """The supernovae that move each parameter most."""
+    if not result["influence"]:
+        return []
+    lines = []
+    for name, rows in result["influence"]["largest"].items():
+        listed = ", ".join(f"{_called(row)} at z = {row['redshift']:.3g} ({_signed(row['shift'])}σ)" for row in rows[:_LISTED])
+        lines.append(f"  {parameter(name).plain}: {listed}")
+    return ["", "Single supernovae left out, the largest shifts", *lines]
+
+
+def _called(who: dict) -> str:
+    return who["name"] or f"row {who['row']}"
 
 
 def _goodness_lines(facts: dict) -> list[str]:

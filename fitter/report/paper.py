@@ -185,7 +185,7 @@ def paper_files(runs: Sequence[PaperRun], figures: Sequence[tuple[str, str, floa
 _COLUMN = 3.55  # inches that fit one column of the skeleton
 _SKELETON = r"""%% A skeleton that includes every figure and table; set it with pdflatex, bibtex, pdflatex, pdflatex.
 \documentclass[10pt,twocolumn]{article}
-\usepackage[margin=0.7in,columnsep=0.1in]{geometry}
+\usepackage[margin=0.62in,columnsep=0.22in]{geometry}
 \usepackage{amsmath,booktabs,graphicx}
 \setcounter{totalnumber}{20}
 \setcounter{topnumber}{20}

@@ -249,6 +249,7 @@ def latex_float(tabular: str, text: str, label: str, *, wide: bool = False) -> s
         r"\centering",
         rf"\caption{{{latex(text)}}}",
         rf"\label{{tab:{label}}}",
+        r"\smallskip",
         r"\small\setlength{\tabcolsep}{4pt}",  # powers of ten and units in one column of a page
         r"\renewcommand{\arraystretch}{1.25}",  # room for errors above and below the line
         tabular.rstrip(),

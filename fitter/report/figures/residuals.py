@@ -30,12 +30,16 @@ def decorrelated(noise, residual: np.ndarray, scale: float = 1.0) -> np.ndarray:
 
     Notes
     -----
-    z = (1 + V Vᵀ)^(−1/2) L⁻¹ r with V = L⁻¹U: no N × N array for a diagonal L.
+    z = (1 + V Vᵀ)^(−1/2) L⁻¹ r with V = L⁻¹U. With VᵀV = Q Λ Qᵀ that is L⁻¹r − V Q f(Λ) Qᵀ Vᵀ L⁻¹r, where
+    f(λ) = [1 − (1+λ)^(−1/2)] / λ: no N × N array for a diagonal L, and no decomposition of a tall one.
     """
     white = noise.whiten(residual[:, None])[:, 0]
     if noise.modes.shape[1]:
-        basis, size, _ = np.linalg.svd(noise.whiten(noise.modes), full_matrices=False)
-        white = white + basis @ ((1 / np.sqrt(1 + size**2) - 1) * (basis.T @ white))
+        shifts = noise.whiten(noise.modes)
+        size, basis = np.linalg.eigh(shifts.T @ shifts)
+        root = np.sqrt(1 + np.maximum(size, 0))
+        # f without cancellation as λ → 0
+        white = white - shifts @ (basis @ ((basis.T @ (shifts.T @ white)) / (root * (1 + root))))
     return white / scale
 
 

@@ -26,6 +26,8 @@ _EXAMPLES = {
     "parameters": "parameters: {omega_m: {uniform: [0, 1]}, H0: 70}",
     "sampling": "sampling: {target_ess: 10000, seed: 20261201}",
     "run_folder": "run_folder: runs/flat_lcdm",
+    "figures": "figures: {only: [corner, history], width: single, formats: [pdf], style: journal.mplstyle}",
+    "labels": r"labels: {omega_m: '\Omega_{\mathrm{m},0}'}",
 }
 
 

@@ -45,6 +45,7 @@ if TYPE_CHECKING:
     from fitter.inference.optimum import Optimum
     from fitter.inference.posterior import Posterior
     from fitter.likelihood.posterior import LogPosterior
+    from fitter.report.page import Picture
     from fitter.sample.capsule import Capsule
 
 __all__ = ["Check", "Fit", "TooShort", "check", "fit", "load_config", "read_run"]
@@ -418,6 +419,7 @@ class _Job:
         from fitter.report.chain_file import write_chain
         from fitter.report.facts import relabelled
         from fitter.report.methods import methods_files
+        from fitter.report.page import PAGE, page_text
         from fitter.report.summary import summary_csv, summary_json, summary_markdown
 
         path, summary = self.folder.path, result.summary()
@@ -430,7 +432,9 @@ class _Job:
                 texts |= methods_files(summary, self.settings)
         for name, text in texts.items():
             write_atomic(path / name, text)
-        _draw_blinded(result, path) if summary.get("blinded") else _draw(result, path)
+        pictures = _draw_blinded(result, path) if summary.get("blinded") else _draw(result, path)
+        with relabelled({**result.config.labels, **hidden_labels(summary.get("blinded") or ())}):
+            write_atomic(path / PAGE, page_text(summary, (path / "config.yaml").read_text(encoding="utf-8"), pictures))
         # Last: a folder with this file is complete.
         write_atomic(path / "summary.json", summary_json(summary))
         for text in result.warnings:
@@ -444,7 +448,7 @@ def _likelihood(config: Config, sample: Sample) -> LogPosterior:
     return LogPosterior.build(sample, config.cosmology, given, radiation=config.radiation)
 
 
-def _draw(result: Fit, folder: Path) -> None:
+def _draw(result: Fit, folder: Path) -> dict[str, Picture]:
     """Keep what the figures of a fit show, and draw those that were asked for."""
     from fitter.report.facts import relabelled
     from fitter.report.figures.data import DATA_FILE, collect, write_figure_data
@@ -453,11 +457,14 @@ def _draw(result: Fit, folder: Path) -> None:
     data = collect(result.log_posterior, result.optimum, result.chains)
     write_figure_data(folder / DATA_FILE, data)
     how, run = result.config.figures, Drawable(result.chains, data)
+    pictures: dict[str, Picture] = {}
     with relabelled(result.config.labels):
-        save_drawings(drawings(run, how.only, how, strict=False), folder / "figures", how, style=result.config.style_file)
+        found = drawings(run, how.only, how, strict=False)
+        save_drawings(found, folder / "figures", how, style=result.config.style_file, pictures=pictures)
+    return pictures
 
 
-def _draw_blinded(result: Fit, folder: Path) -> None:
+def _draw_blinded(result: Fit, folder: Path) -> dict[str, Picture]:
     """Draw the chains and the corner plot of shifted parameters: any other figure would show where they are."""
     from fitter.report.facts import relabelled
     from fitter.report.figures.draw import Drawable, drawings, save_drawings
@@ -468,8 +475,10 @@ def _draw_blinded(result: Fit, folder: Path) -> None:
         {**result.config.figures.model_dump(), "only": ["corner", "chains"], "parameters": list(names), "mark": {}}
     )
     with relabelled({**result.config.labels, **hidden_labels(result.summary()["blinded"])}):
-        run = Drawable(result.chains, folder)
-        save_drawings(drawings(run, how.only, how, strict=False), folder / "figures", how, style=result.config.style_file)
+        found = drawings(Drawable(result.chains, folder), how.only, how, strict=False)
+        pictures: dict[str, Picture] = {}
+        save_drawings(found, folder / "figures", how, style=result.config.style_file, pictures=pictures)
+    return pictures
 
 
 class _RunLog(AbstractContextManager):

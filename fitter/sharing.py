@@ -1,4 +1,4 @@
-"""A finished run handed on: its likelihood as a capsule, made again from the run's data."""
+"""A finished run handed on: its likelihood as a capsule, its report as a page."""
 
 from __future__ import annotations
 
@@ -9,14 +9,17 @@ import numpy as np
 
 from fitter import __version__
 from fitter.api import load_run
+from fitter.config.load import raise_all
 from fitter.config.write import input_problems
+from fitter.config.yaml_file import read_yaml
 from fitter.errors import InputError
 from fitter.likelihood.capsule import DEFAULT_ORDER, encapsulate
+from fitter.report.run_folder import read_run, write_atomic, writing
 from fitter.report.summary import group_counts
 from fitter.sample.capsule import Capsule
 from fitter.sample.sample import Sample
 
-__all__ = ["capsule_of_sample", "capsules_of_run"]
+__all__ = ["capsule_of_sample", "capsules_of_run", "write_page"]
 
 
 def capsules_of_run(
@@ -54,8 +57,6 @@ def capsules_of_run(
         cure = "In Python, `result.capsule()` of that fit makes one"
         raise InputError("the data of this run came as arrays, the run folder does not have them", file=run.folder, cure=cure)
     sample = Sample.from_config(config.sample, config.folder)
-    from fitter.config.load import raise_all
-
     raise_all(input_problems(config, sample))
     facts = {"title": config.title, "citation": citation}
     scatter = float(run.summary["fixed"].get("intrinsic_scatter", 0.0))
@@ -98,3 +99,34 @@ def _removable(sample: Sample) -> list[str]:
 
 def _file_name(label: str) -> str:
     return "".join(c if c.isalnum() or c in "-_" else "_" for c in label)
+
+
+def write_page(run_folder: str | Path) -> Path:
+    """Write report.html of a finished run again, from its folder alone.
+
+    Returns
+    -------
+    Path
+
+    Raises
+    ------
+    InputError
+        No run, or its files are damaged.
+    """
+    from fitter.report.facts import relabelled
+    from fitter.report.figures.draw import Drawable, drawings
+    from fitter.report.figures.style import styled
+    from fitter.report.page import PAGE, page_text, picture_of
+    from fitter.report.paper import settings_of
+
+    run = read_run(run_folder)
+    if run.summary.get("blinded"):
+        raise InputError("the central values of this run are hidden; its page is the one that the fit wrote", file=run.folder)
+    how, labels = settings_of(read_yaml(run.config_file).data)
+    with relabelled(labels), styled(None):
+        found = drawings(Drawable(run.posterior, run.folder), how.only, how, strict=False)
+        pictures = {one.name: picture_of(one.make(how.width), one.caption) for one in found}
+        text = page_text(run.summary, run.config_file.read_text(encoding="utf-8"), pictures)
+    with writing(run.folder):
+        write_atomic(run.folder / PAGE, text)
+    return run.folder / PAGE

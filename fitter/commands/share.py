@@ -54,6 +54,6 @@ def capsule(
 
 def page(run: Run) -> None:
     """Write report.html again from a run folder."""
-    from fitter.report.page import write_page
+    from fitter.sharing import write_page
 
     print(write_page(run))

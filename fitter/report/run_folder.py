@@ -252,7 +252,7 @@ _NOT_COPIED = (
 )
 _REGULAR = (
     *("config.yaml", "summary.json", "summary.md", "summary.csv", "chain.h5", "run.log"),
-    *("figures_data.h5", "methods.md", "methods.tex", "references.bib"),
+    *("figures_data.h5", "report.html", "methods.md", "methods.tex", "references.bib"),
 )
 
 

@@ -34,7 +34,7 @@ def terminal_summary(summary: dict, *, stream=None, width: int = _WIDTH) -> str:
         Columns at most.
     """
     colour = stream is not None and wants_colour(stream)
-    lines = [_paint(summary["title"] or summary["model"], _BOLD, colour), *_wrap(_data_line(summary), width), ""]
+    lines = [_paint(summary["title"] or summary["model"], _BOLD, colour), *_wrap(data_line(summary), width), ""]
     lines += _table(summary, colour)
     lines.append("")
     for line in facts_lines(summary):
@@ -49,7 +49,7 @@ def terminal_summary(summary: dict, *, stream=None, width: int = _WIDTH) -> str:
 def facts_lines(summary: dict) -> list[str]:
     """Return one line each for goodness of fit, convergence, cross-check, criteria and evidence."""
     lines = [_chi2_line(summary["best_fit"]), _convergence_line(summary), _cross_check_line(summary.get("cross_check"))]
-    return [line for line in (*lines, *_information_lines(summary["information"])) if line]
+    return [line for line in (*lines, *information_lines(summary["information"])) if line]
 
 
 def _paint(text: str, code: str, colour: bool) -> str:
@@ -60,7 +60,7 @@ def _wrap(text: str, width: int, mark: str = "  ") -> list[str]:
     return textwrap.wrap(text, width, initial_indent=mark, subsequent_indent=" " * len(mark), break_long_words=False)
 
 
-def _data_line(summary: dict) -> str:
+def data_line(summary: dict) -> str:
     sample = summary["sample"]
     parts = [f"{sample['n']:,} supernovae, {sample['redshift_min']:.3g} ≤ z ≤ {sample['redshift_max']:.3g}"]
     if sample["n_calibrators"]:
@@ -142,7 +142,7 @@ def _cross_check_line(check: dict | None) -> str:
     )
 
 
-def _information_lines(information: dict) -> list[str]:
+def information_lines(information: dict) -> list[str]:
     named = [(label, information.get(key)) for label, key in (("AIC", "aic"), ("AICc", "aicc"), ("BIC", "bic"), ("DIC", "dic"))]
     said = [f"{label} {value:.2f}" for label, value in named if value is not None]
     lines = [f"{', '.join(said)} ({information['k']} parameters counted: {', '.join(information['k_names'])})"] if said else []

@@ -19,6 +19,7 @@ from fitter.report.figures.planes import PLANES, plane_caption, plane_figure, pl
 from fitter.report.figures.residuals import draw_residuals, residuals_caption
 from fitter.report.figures.settings import FIGURES, FigureSettings
 from fitter.report.figures.style import save_figure, styled
+from fitter.report.page import Picture, picture_of
 
 __all__ = ["OVERLAID", "Drawable", "drawings", "overlays", "save_drawings"]
 
@@ -171,7 +172,9 @@ _WHY_NONE = dict.fromkeys(("hubble", "history", "correlation", "budget"), _NO_FL
 }
 
 
-def save_drawings(found: Sequence[Drawing], folder: Path, how: FigureSettings, *, style: Path | None = None) -> list[Path]:
+def save_drawings(
+    found: Sequence[Drawing], folder: Path, how: FigureSettings, *, style: Path | None = None, pictures: dict[str, Picture] | None = None
+) -> list[Path]:
     """Draw and write figures, each with its caption beside it.
 
     Parameters
@@ -183,6 +186,8 @@ def save_drawings(found: Sequence[Drawing], folder: Path, how: FigureSettings, *
         Width and formats.
     style : Path, optional
         A style sheet; ``how.style`` is a path relative to the config, this one is as it is.
+    pictures : dict, optional
+        Takes up each figure as SVG with its caption, for the report page.
 
     Returns
     -------
@@ -192,5 +197,8 @@ def save_drawings(found: Sequence[Drawing], folder: Path, how: FigureSettings, *
     written = []
     with styled(style):
         for one in found:
-            written += save_figure(one.make(how.width), folder / one.name, one.caption, formats=how.formats)
+            figure = one.make(how.width)
+            written += save_figure(figure, folder / one.name, one.caption, formats=how.formats)
+            if pictures is not None:
+                pictures[one.name] = picture_of(figure, one.caption)
     return written

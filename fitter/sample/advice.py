@@ -26,7 +26,6 @@ def advice(sample: Sample, columns: dict | None = None, n_calibrators_inside: in
         Rows with a known host modulus in a fit whose scale is not calibrated.
     """
     found = [
-        _velocities(sample),
         _data_range(sample),
         _heliocentric(sample, columns or {}),
         _calibrators(sample, n_calibrators_inside),
@@ -36,15 +35,6 @@ def advice(sample: Sample, columns: dict | None = None, n_calibrators_inside: in
         _size_of_errors(sample),
     ]
     return [text for text in found if text]
-
-
-def _velocities(sample: Sample):
-    if np.median(sample.redshift) > 10:
-        return (
-            f"The redshifts look like velocities: their median is {np.median(sample.redshift):.4g}. Divide the column by 299792.458 km/s, "
-            "or map another one."
-        )
-    return None
 
 
 def _data_range(sample: Sample):

@@ -9,6 +9,7 @@ from fitter.sample.assembly import Problems, finish
 from fitter.sample.matrices import make_symmetric
 from fitter.sample.noise import Noise
 from fitter.sample.sample import DATA_KINDS, DISTANCE_SCALES, Sample
+from fitter.sample.uncertainty.sigma import LARGEST_ERROR
 from fitter.sample.uncertainty.term import Term
 from fitter.sample.validate import Place
 
@@ -84,7 +85,7 @@ def _terms(n: int, given: dict, intrinsic, problems: Problems) -> list[Term]:
         )
     if sigma is not None:
         errors = np.full(n, float(sigma)) if np.ndim(sigma) == 0 else _numbers(sigma, "sigma", n, problems)
-        bad = ~((errors >= 0) & np.isfinite(errors))
+        bad = ~((errors >= 0) & (errors <= LARGEST_ERROR))
         if bad.any():
             worst = int(np.argmax(bad))
             problems.found.append(

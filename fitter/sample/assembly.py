@@ -23,7 +23,7 @@ from fitter.sample.tables import Table, bordered_table, read_table
 from fitter.sample.uncertainty.base import Rows
 from fitter.sample.uncertainty.term import Term, combine, unique_labels
 from fitter.sample.unused_errors import unused_errors
-from fitter.sample.validate import Place, check_duplicates, check_finite, check_inverse, check_redshift
+from fitter.sample.validate import Place, check_data, check_duplicates, check_inverse, check_redshift
 
 __all__ = ["Problems", "assemble", "finish"]
 
@@ -317,7 +317,7 @@ def _check(take: dict, place: Place, skip, distance_scale: str, allow_duplicates
         if role not in skip and given and not (role == "redshift_helio" and role not in place.columns):
             problems += check_redshift(role, take[role], place)
     if "data" not in skip:
-        problems += check_finite("data", take["data"], place)
+        problems += check_data(take["data"], place)
     if distance_scale == "calibrated" and "calibrator_modulus" not in skip and not np.isfinite(take["calibrator_modulus"]).any():
         problems.append(
             InputError(

@@ -23,6 +23,7 @@ __all__ = ["compact", "make_symmetric", "read_array", "read_matrix"]
 # Beside √(c_ii c_jj). Rounding to float32 or to six digits in text stays below; what is accepted is averaged away.
 ASYMMETRY = 1e-5
 _BLOCK = 1024
+_LARGEST = 1e30  # nobody's variance in mag², nor its inverse
 # What the readers of numpy and zipfile raise for damaged files, beside what `reading` turns into messages.
 _BAD_HEADER = (ValueError, SyntaxError, TypeError, KeyError, MemoryError, RecursionError, struct.error, tokenize.TokenError)
 _BAD_ZIP = (zipfile.BadZipFile, NotImplementedError, RuntimeError, ValueError, struct.error, lzma.LZMAError)
@@ -90,11 +91,12 @@ def make_symmetric(matrix, what: str, shown: str | None = None) -> None:
     """
     n = len(matrix)
     for i in range(0, n, _BLOCK):
-        bad = ~np.isfinite(matrix[i : i + _BLOCK])
+        bad = ~(np.abs(matrix[i : i + _BLOCK]) < _LARGEST)
         if bad.any():
             row, column = np.argwhere(bad)[0] + (i, 0)
             raise InputError(
-                f"{what} holds a value that is not a finite number", file=shown, row=int(row) + 1, column=int(column) + 1,
+                f"{what} holds a value that is not a finite number, or absurdly large", file=shown, row=int(row) + 1,
+                column=int(column) + 1,
                 value=float(matrix[row, column]), cure="Correct it, or cut that supernova from table and matrix",
             )  # fmt: skip
     scale = np.sqrt(np.abs(np.diagonal(matrix)))

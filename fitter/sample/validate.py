@@ -9,8 +9,10 @@ import numpy as np
 from fitter.errors import InputError
 from fitter.sample.uncertainty.term import Term
 
-__all__ = ["Place", "check_duplicates", "check_finite", "check_inverse", "check_redshift", "looks_inverse"]
+__all__ = ["Place", "check_data", "check_duplicates", "check_finite", "check_inverse", "check_redshift", "looks_inverse"]
 
+_LARGEST_REDSHIFT = 1100.0  # nothing is seen from beyond the last scattering
+_LARGEST_DATUM = 1000.0  # mag
 _WILD_REDSHIFT = 0.01  # two redshifts of one supernova cannot differ by so much
 _LARGEST_VARIANCE = 4.0  # mag²: nobody's median distance error is above 2 mag
 _SAID = 3  # how many examples a message gives
@@ -55,6 +57,17 @@ def check_finite(role: str, values, place: Place) -> list[InputError]:
     ]  # fmt: skip
 
 
+def check_data(values, place: Place) -> list[InputError]:
+    """NaN, infinite, or nothing that a magnitude or a modulus can be."""
+    problems = check_finite("data", values, place)
+    bad = np.isfinite(values) & (np.abs(values) > _LARGEST_DATUM)
+    if bad.any():
+        index = int(np.argmax(bad))
+        what = f"this is no magnitude or distance modulus{_more(bad)}"
+        problems.append(place.error(what, "data", index, float(values[index]), "Check the column, or cut the row with `keep:`"))
+    return problems
+
+
 def check_redshift(role: str, values, place: Place) -> list[InputError]:
     """NaN, infinite, or not above 0: a distance modulus diverges there."""
     problems = check_finite(role, values, place)
@@ -63,6 +76,11 @@ def check_redshift(role: str, values, place: Place) -> list[InputError]:
         index = int(np.argmax(bad))
         cure = "Cut such rows with `keep: {redshift: [0.01, null]}` (a calibrator's redshift is not used: write any above 0 there)"
         problems.append(place.error(f"{role} must be above 0{_more(bad)}", role, index, float(values[index]), cure))
+    bad = np.isfinite(values) & (values > _LARGEST_REDSHIFT)
+    if bad.any():
+        index = int(np.argmax(bad))
+        cure = "Redshifts look like velocities? Divide them by 299792.458 km/s; otherwise correct the row or cut it with `keep:`"
+        problems.append(place.error(f"this is no redshift{_more(bad)}", role, index, float(values[index]), cure))
     return problems
 
 

@@ -20,7 +20,11 @@ ROWS = [[f"sn{i}", "ab"[i % 2], z, round(43 + 5 * np.log10(z), 3), 0.1, ""] for 
 COLUMNS = {"redshift": "z", "distance_modulus": "mu", "name": "name", "group": "survey", "calibrator_modulus": "host"}
 MATRIX = np.diag(np.full(N, 0.01)) + 0.001
 
-quick = settings(deadline=None, suppress_health_check=[HealthCheck.function_scoped_fixture])
+quick = settings(
+    deadline=None,
+    suppress_health_check=[HealthCheck.function_scoped_fixture],
+    max_examples=4 * settings.default.max_examples,  # they are cheap
+)
 
 
 def as_text(delimiter):

@@ -10,7 +10,9 @@ from fitter.errors import InputError
 from fitter.sample.uncertainty.base import ColumnRef, Rows, TermSettings
 from fitter.sample.uncertainty.term import Term
 
-__all__ = ["Sigma"]
+__all__ = ["LARGEST_ERROR", "Sigma"]
+
+LARGEST_ERROR = 1e6  # mag; some releases write large errors for rows that are not to count, none as large as this
 
 
 class Sigma(TermSettings):
@@ -25,11 +27,11 @@ class Sigma(TermSettings):
 
     def build(self, rows: Rows) -> Term:
         sigma = rows.numbers(self.sigma)
-        bad = rows.keep & ~((sigma >= 0) & (sigma < float("inf")))
+        bad = rows.keep & ~((sigma >= 0) & (sigma <= LARGEST_ERROR))
         if bad.any():
             row = int(bad.argmax())
             raise InputError(
-                f"an error must be a finite number, 0 or more{_others(bad)}",
+                f"an error must be a finite number, 0 or more, and not above {LARGEST_ERROR:g} mag{_others(bad)}",
                 file=rows.table,
                 row=int(rows.lines[row]),
                 column=self.sigma,

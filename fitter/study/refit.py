@@ -25,7 +25,8 @@ LEVELS = {"low95": 0.025, "low68": 0.1587, "median": 0.5, "high68": 0.8413, "hig
 _ON_GRID = 3  # sampled parameters up to which a grid is the faster way
 _TOLERANCE = 0.01  # relative error of the whole mass
 _USABLE = 0.03
-_ROUNDS, _DRAWS, _LAST = 5, 12_000, 60_000
+_ROUNDS, _DRAWS, _LAST, _COMPONENTS = 6, 12_000, 60_000, 8
+_ENOUGH, _REPEATS = 8_000, 4  # effective draws wanted, and the most sets to get them
 _BATCH = 16_384
 
 
@@ -138,16 +139,21 @@ def resample(marginals, size: int, seed: np.random.SeedSequence) -> np.ndarray:
 
 
 def _adaptive(log_posterior, optimum, rng) -> WeightedDraws:
+    """Draw, fit a mixture to what the weights leave, draw again; the last and largest set again where too few of it count."""
     factor = np.linalg.cholesky(1.5 * optimum.covariance)
     mixture = StudentMixture(np.ones(1), optimum.theta[None], factor[None], np.linalg.inv(factor)[None], 4.0)
-    for turn in range(_ROUNDS + 1):
+    best = None
+    for turn in range(_ROUNDS + _REPEATS):
         theta = mixture.draw(rng, _DRAWS if turn < _ROUNDS else _LAST)
         draws = WeightedDraws(log_posterior.names, theta, _weights(log_posterior, theta, mixture))
-        if turn < _ROUNDS:
-            at = (np.arange(_DRAWS // 2) + rng.random()) / (_DRAWS // 2)
-            chosen = np.minimum(np.searchsorted(np.cumsum(draws.weight), at), len(theta) - 1)
-            mixture = fit_mixture(theta[chosen], 1 if turn == 0 else 6, iterations=10)
-    return draws
+        if turn >= _ROUNDS:
+            best = draws if best is None or draws.effective > best.effective else best
+            if best.effective > _ENOUGH:
+                break
+        at = (np.arange(_DRAWS) + rng.random()) / _DRAWS
+        chosen = np.minimum(np.searchsorted(np.cumsum(draws.weight), at), len(theta) - 1)
+        mixture = fit_mixture(theta[chosen], 1 if turn == 0 else _COMPONENTS, iterations=10)
+    return best
 
 
 def _weights(log_posterior, theta, mixture):

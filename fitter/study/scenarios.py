@@ -221,7 +221,8 @@ def _assumptions(setup) -> Iterator[Scenario]:
 def _free_scatter(setup, prior):
     sample = setup.sample
     fixed = [t.label for t in sample.terms if t.kind == "intrinsic"]
-    if fixed and len(fixed) < len(sample.terms):
+    # Without another term that scatters every supernova there would be no covariance left at a scatter of zero.
+    if fixed and any(t.kind in ("sigma", "precision") for t in sample.terms):
         sample = sample.without(fixed)
     return setup.with_sample(replace(sample, intrinsic_prior=prior))
 

@@ -16,7 +16,7 @@ from dataclasses import replace
 
 import numpy as np
 
-from fitter.errors import InputError
+from fitter.errors import MufitterError
 from fitter.inference.seeds import child_seed
 from fitter.study.goodness import goodness
 from fitter.study.influence import influence
@@ -33,6 +33,8 @@ FLAG = 2.5
 
 # Beside so small a scatter, in units of the parameter's own error, a shift measures the skewness of the posterior.
 _LEAST_SCATTER = 0.05
+# An interval wider than this share of the prior's own is the prior's: √(σ_sub² − σ_all²) is no scatter then.
+_MOST_PRIOR = 0.7
 _BASELINE, _REFITS = 0, 1
 _TOGETHER = 20  # shifted data vectors in one task, on one factorisation
 
@@ -63,7 +65,8 @@ def stress(setup: FitSetup, *, seed: np.random.SeedSequence, blind=(), **running
     tasks = Tasks(_refit_batch, replace(setup, hidden=hidden), _batches(changes), child_seed(seed, _REFITS))
     found = {key: result for batch in run_tasks(tasks, **running).values() for key, result in batch.items()}
     baseline = base.facts(hidden)
-    variants = [_variant(baseline, change, found[change.key]) for change in changes]
+    limits = {name: _MOST_PRIOR * _width(prior) for name, prior in zip(log_posterior.names, log_posterior.priors, strict=True)}
+    variants = [_variant(baseline, change, found[change.key], limits) for change in changes]
     result = {
         "schema": SCHEMA,
         "model": log_posterior.model.name,
@@ -107,32 +110,40 @@ def _refit_one(setup, change, log_posterior, seed) -> dict:
     try:
         log_posterior = log_posterior or changed(setup, change).posterior()
         fitted = refit(log_posterior, seed)
-    except InputError as error:
-        return {"problem": error.problem}
+    except MufitterError as error:
+        return {"problem": getattr(error, "problem", str(error))}
     values = {k: v for k, v in fitted.optimum.values.items() if k.startswith("zero_point:") and change.kind == "offset"}
     return {"n": log_posterior.n_data, "offsets": values, **fitted.facts(setup.hidden)}
+
+
+def _width(prior) -> float:
+    """Half the width of the central 68 % of a prior."""
+    return 0.5 * float(prior.quantile(0.8413) - prior.quantile(0.1587))
 
 
 def _sigma(facts: dict) -> float:
     return 0.5 * (facts["high68"] - facts["low68"])
 
 
-def _variant(baseline: dict, change: Scenario, found: dict) -> dict:
+def _variant(baseline: dict, change: Scenario, found: dict, limits: dict[str, float]) -> dict:
     row = {"key": change.key, "kind": change.kind, "label": change.label, "nested": change.nested, "problem": found.get("problem")}
     if row["problem"]:
         return row | {"n": None, "chi2": None, "parameters": {}}
-    compared = {name: _compare(baseline["parameters"][name], facts, change.nested) for name, facts in found["parameters"].items()
-                if name in baseline["parameters"]}  # fmt: skip
+    compared = {}
+    for name, before in baseline["parameters"].items():
+        if name in found["parameters"]:
+            after = found["parameters"][name]
+            compared[name] = _compare(before, after, change.nested and _sigma(after) < limits[name])
     return row | {"n": found["n"], "chi2": found["chi2"], "parameters": compared}
 
 
-def _compare(before: dict, after: dict, nested: bool) -> dict:
+def _compare(before: dict, after: dict, judged: bool) -> dict:
     """Shift of one parameter, and how much of it chance explains."""
     sigma, all_ = _sigma(after), _sigma(before)
     shift = after["median"] - before["median"]
     facts = {key: after[key] for key in ("median", "low68", "high68", "low95", "high95")}
     facts |= {"sigma": sigma, "shift": shift, "shift_in_sigma": shift / all_, "expected": None, "significance": None, "flagged": False}
-    if nested:
+    if judged:
         expected = max(math.sqrt(abs(sigma**2 - all_**2)), _LEAST_SCATTER * all_)
         facts |= {"expected": expected, "significance": shift / expected, "flagged": abs(shift / expected) > FLAG}
     return facts

@@ -247,3 +247,10 @@ def test_the_forest_plot_shows_the_table():
         not low < row["parameters"]["omega_m"]["median"] < high for row in found["variants"]
     )
     assert "68.3 %" in stress_caption(found, "omega_m")
+
+
+def test_what_the_prior_decides_is_not_judged():
+    narrow = a_setup(n=60).with_prior("omega_m", {"uniform": [0.28, 0.32]})
+    found = run_stress(narrow, seed=SEED, processes=1)
+    assert all(row["parameters"]["omega_m"]["significance"] is None for row in found["variants"])
+    assert found["tests"]["n"] == len(found["goodness"]["trends"])

@@ -202,3 +202,21 @@ def test_the_pictures_are_as_they_were(run):
 def test_settings_that_cannot_be(given, said):
     with pytest.raises(ValueError, match=said):
         FigureSettings(**given)
+
+
+@pytest.mark.parametrize("width", ["single", "double"])
+def test_labels_of_a_corner_plot_do_not_meet(build, width):
+    fit = build.real("curved_lcdm", build.sample())
+    names = ["omega_m", "omega_lambda", "H0", "omega_k", "q0", "lambda_si"]
+    (one,) = drawings(Drawable(fit.posterior, None), ["corner"], FigureSettings(parameters=names))
+    figure = one.make(width)
+    looks.assert_inside_canvas(figure)
+    canvas = figure.canvas
+    canvas.draw()
+    for side in ("xaxis", "yaxis"):
+        boxes = [getattr(ax, side).label.get_window_extent() for ax in figure.axes if getattr(ax, side).label.get_text()]
+        assert not any(a.overlaps(b) for i, a in enumerate(boxes) for b in boxes[i + 1 :])
+    # What a small panel has no room for stands in the caption.
+    from fitter.report.prose import plain
+
+    assert "H0 is in km/s/Mpc and Λ is in m⁻²." in plain(one.caption)

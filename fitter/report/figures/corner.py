@@ -12,13 +12,14 @@ from fitter.report.digits import figures_for
 from fitter.report.facts import axis_label, parameter
 from fitter.report.figures.panels import LINE, common_exponent, contours, draw_density, plot_range, runs_of, thinned
 from fitter.report.figures.style import COLOURS, LEVELS, in_style, new_figure, width_inches
-from fitter.report.prose import listed, symbol
+from fitter.report.prose import listed, symbol, with_unit
 
 __all__ = ["corner_caption", "corner_figure", "main_parameters"]
 
 # Of the derived parameters, those that say something beside the sampled ones; the rest follow from them.
 _MAIN_DERIVED = ("omega_k", "omega_lambda", "q0")
 _MOST_PANELS = 7
+_SMALL_PANEL = 0.95  # inches
 _LEFT, _BOTTOM, _TOP, _RIGHT, _GAP = 0.62, 0.62, 0.3, 0.1, 0.05  # inches
 
 
@@ -109,6 +110,8 @@ def corner_caption(posteriors, names: Sequence[str] | None = None) -> str:
         f"{first} % and {second} % "
         "of the probability of each pair (not the 39.3 % and 86.5 % inside one and two standard deviations of a two-dimensional Gaussian)."
     )
+    units = [f"{symbol(name)} is in {with_unit(name).strip()}" for name in names if parameter(name).unit]
+    text += f" {listed(units)}." if units else ""
     if len(runs) == 1:
         return f"{text} Titles and dashed lines: median and equal-tailed 68.3 % interval of each parameter."
     return f"{text} Overlaid: {', '.join(runs)}; each density is scaled to its own peak."
@@ -164,35 +167,45 @@ def _draw_run(axes, names, table, limits, scale, colour, *, alone: bool) -> None
 def _dress(axes, names, limits, scale, labels) -> None:
     """Limits, ticks and labels; numbers only along the left and the bottom."""
     k = len(names)
+    small = axes[0, 0].get_position().width * axes[0, 0].figure.get_figwidth() < _SMALL_PANEL
     for row in range(k):
         for column in range(row + 1):
             ax = axes[row, column]
             x, y = names[column], names[row]
             ax.set_xlim(*(v * scale[x] for v in limits[x]))
-            ax.set_xticks(inner_ticks(limits[x], scale[x]))
+            ax.set_xticks(inner_ticks(limits[x], scale[x], 2 if small else 4))
             ax.tick_params(axis="x", labelrotation=45, labelbottom=row == k - 1)
             if row == column:
                 ax.set_ylim(0, 1.12)
                 ax.set_yticks([])
             else:
                 ax.set_ylim(*(v * scale[y] for v in limits[y]))
-                ax.set_yticks(inner_ticks(limits[y], scale[y]))
+                ax.set_yticks(inner_ticks(limits[y], scale[y], 2 if small else 4))
                 ax.tick_params(axis="y", labelrotation=45, labelleft=column == 0)
             if row == k - 1:
-                ax.set_xlabel(labels.get(x, axis_label(x, common_exponent(limits[x]))))
+                ax.set_xlabel(labels.get(x, _label(x, limits[x], small)))
             if column == 0 and row > 0:
-                ax.set_ylabel(labels.get(y, axis_label(y, common_exponent(limits[y]))))
+                ax.set_ylabel(labels.get(y, _label(y, limits[y], small)))
     _align(axes, k)
 
 
-def inner_ticks(limits: tuple[float, float], scale: float = 1.0) -> list[float]:
+def _label(name: str, limits: tuple[float, float], small: bool) -> str:
+    """Label of an axis; beside a small panel there is no room for a unit, which the caption gives."""
+    exponent = common_exponent(limits)
+    if not small:
+        return axis_label(name, exponent)
+    power = rf"10^{{{-exponent}}}\," if exponent else ""
+    return f"${power}{parameter(name).latex}$"
+
+
+def inner_ticks(limits: tuple[float, float], scale: float = 1.0, wanted: int = 4) -> list[float]:
     """Return round values well inside the limits: one at a corner would run into the next panel's."""
     from matplotlib.ticker import MaxNLocator
 
     low, high = (v * scale for v in limits)
     margin = 0.08 * (high - low)
-    for wanted in (4, 5, 6):
-        ticks = [t for t in MaxNLocator(wanted, steps=[1, 2, 2.5, 5, 10]).tick_values(low, high) if low + margin < t < high - margin]
+    for intervals in range(wanted, 7):
+        ticks = [t for t in MaxNLocator(intervals, steps=[1, 2, 2.5, 5, 10]).tick_values(low, high) if low + margin < t < high - margin]
         if len(ticks) >= 2:
             break
     return ticks
@@ -222,7 +235,7 @@ def _titles(axes, names, posterior, labels) -> None:
         power = f"10^{{{-figures.exponent}}}\\," if figures.exponent else ""
         value = replace(figures, exponent=0).latex()
         text = f"${power}{parameter(name).latex} = {value}$" if name not in labels else f"{labels[name]} $= {value}$"
-        size = 9 if panel_inches > 1.25 else 7.5 if panel_inches > 0.85 else 6
+        size = 9 if panel_inches > 1.25 else 7.5 if panel_inches > 0.85 else 6 if panel_inches > 0.5 else 5
         axes[i, i].set_title(text, fontsize=size, pad=4)
 
 

@@ -179,12 +179,15 @@ def _draw_lines(ax, plane: Plane, limits) -> None:
 
 def _label_along(ax, line: Line, x, y, limits) -> None:
     """Write the label along the visible part of its line, turned with it."""
+    from matplotlib.patheffects import withStroke
+
     visible = np.flatnonzero((y >= limits[1][0]) & (y <= limits[1][1]))
     if not line.label or len(visible) < 20:
         return
     i = visible[int(line.where * (len(visible) - 1))]
     j = min(i + 5, len(x) - 1)
     (x0, y0), (x1, y1) = ax.transData.transform([(x[i], y[i]), (x[j], y[j])])
+    halo = [withStroke(linewidth=1.6, foreground="white")]  # legible where contours run beneath
     ax.annotate(
         line.label,
         (x[i], y[i]),
@@ -196,6 +199,7 @@ def _label_along(ax, line: Line, x, y, limits) -> None:
         va="top" if line.below else "bottom",
         fontsize=8,
         zorder=5,
+        path_effects=halo,
     )
 
 

@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+import gzip
 import io
 import lzma
 import math
@@ -14,7 +15,7 @@ from pathlib import Path
 import numpy as np
 
 from fitter.errors import InputError
-from fitter.sample.cholesky import mirror_lower
+from fitter.sample.cholesky import LARGEST, mirror_lower
 from fitter.sample.files import open_binary, reading
 from fitter.sample.readers.numbers import plain_number
 
@@ -66,6 +67,11 @@ def read_matrix(
     """
     path, shown = Path(path), shown or str(path)
     sizes = list(dict.fromkeys(sizes))
+    if min(sizes) > LARGEST:
+        raise InputError(
+            f"a dense {what} of {sizes[0]} rows is beyond the {LARGEST} that can be factored", file=shown,
+            cure="Give the systematics as modes (N × k one-sigma shifts) instead",
+        )  # fmt: skip
     with reading(path, shown):
         with open_binary(path) as stream:
             magic = stream.peek(6)[:6]
@@ -359,7 +365,8 @@ def _from_text(path: Path, sizes, table: str, shown: str, on_labels=None):
 
 def _numbers(path: Path, capacity: int, shown: str):
     """All numbers of a text file in order (the first ``capacity`` kept), how many, and whether the first has a line of its own."""
-    values, total, alone, line = np.empty(capacity), 0, False, 0
+    values, total, alone, line = np.empty(min(capacity, _most_numbers(path))), 0, False, 0
+    capacity = len(values)
     with open_binary(path) as binary, io.TextIOWrapper(binary, encoding="utf-8-sig", errors="replace") as text:
         while lines := text.readlines(_CHUNK):
             rows = [row for row in lines if not row.lstrip().startswith(("#", "%", "!"))]
@@ -376,6 +383,13 @@ def _numbers(path: Path, capacity: int, shown: str):
             total += len(found)
             line += len(lines)
     return values, total, alone
+
+
+def _most_numbers(path: Path) -> int:
+    """More numbers than a file can hold: each takes two bytes, and gzip packs at most 1032 into one."""
+    with open_binary(path) as stream:
+        packed = isinstance(stream, gzip.GzipFile)
+    return path.stat().st_size * (516 if packed else 1) + 1
 
 
 def _slowly(lines, before: int, shown: str):

@@ -61,7 +61,8 @@ class Columns:
         if self.names is None:
             raise InputError(
                 f"the table has no header, so no column is called {ref!r}", file=self.file, column=ref,
-                cure=f"Map columns by position, 0 to {self.n - 1}, or set `header_tag`",
+                cure="Its rows have one column only: is `delimiter` right?" if self.n == 1
+                else f"Map columns by position, 0 to {self.n - 1}, or set `header_tag`",
             )  # fmt: skip
         raise InputError("there is no such column", file=self.file, column=ref, cure=self._available(ref))
 

@@ -50,6 +50,7 @@ FORMS = {
     "one line": lambda m: text(m, N * N),
     "broken lines": lambda m: text(m, 4),
     "upper triangle in text, N first": lambda m: text(m[UPPER], 1, [N]),
+    "lower triangle in text, row by row": lambda m: "\n".join(" ".join(f"{v:.17g}" for v in m[i, : i + 1]) for i in range(N)).encode(),
     "npy": npy,
     "npy float32": lambda m: npy(m.astype("f4")),
     "npy big-endian": lambda m: npy(m.astype(">f8")),
@@ -218,6 +219,21 @@ def test_a_header_that_promises_too_much_allocates_nothing(tmp_path):
     raw = bytearray(npy(np.ones((6, 6))))
     huge = raw.replace(b"(6, 6), }    ", b"(999999, 9), }")[: len(raw)]
     assert "not square" in str(failure(bytes(huge), tmp_path))
+
+
+def test_a_matrix_beyond_what_can_be_factored_is_not_read(tmp_path, monkeypatch):
+    monkeypatch.setattr("fitter.sample.matrices.LARGEST", N - 1)
+    assert f"beyond the {N - 1} that can be factored" in str(failure(b"not even looked at", tmp_path))
+
+
+def test_a_small_file_asks_for_little_memory(tmp_path, monkeypatch):
+    asked = []
+    empty = np.empty
+    monkeypatch.setattr("fitter.sample.matrices.np.empty", lambda shape, *a, **k: asked.append(np.prod(shape)) or empty(shape, *a, **k))
+    (tmp_path / "c.txt").write_text("1 2 3\n")
+    with pytest.raises(InputError, match="40000"):
+        read_matrix(tmp_path / "c.txt", sizes=[40_000], what="covariance")
+    assert max(asked) < 1000
 
 
 @given(n=st.integers(1, 25), seed=st.integers(0, 1000))

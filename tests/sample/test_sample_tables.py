@@ -213,6 +213,18 @@ def test_rows_of_another_length(write):
     assert error.row == 1 and "2 names" in str(error) and "3 columns" in str(error)
 
 
+def test_wrong_delimiter(write):
+    """Said, or found out: a delimiter that the config sets and the table does not have names the one column there is."""
+    found = read(write("z,mu\n0.1,38\n0.2,40\n"), delimiter=";")
+    with pytest.raises(InputError, match="one column only: is `delimiter` right"):
+        found.numbers("z")
+    assert read(write("z;mu\n0.1;38\n0.2;40\n"), numbers=["z"]).numbers("z").tolist() == [0.1, 0.2]
+
+
+def test_integer_columns_are_numbers(write):
+    assert read(write("z,mu\n1,38\n2,40\n"), numbers=["z"]).numbers("z").dtype == np.float64
+
+
 def test_nothing_to_read(write):
     assert "no rows" in str(failure(write("")))
     assert "no rows" in str(failure(write("# only\n# comments\n")))

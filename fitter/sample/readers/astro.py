@@ -19,7 +19,7 @@ from fitter.sample.tables import Table
 __all__ = ["read_astro", "read_bordered", "read_image"]
 
 _READERS = {"VOTable": "votable", "ECSV": "ascii.ecsv", "CDS": "ascii.cds"}
-_LARGEST_FILE = 1 << 34
+_LARGEST_FILE = 1 << 32
 _CHUNK = 1 << 26
 # What astropy raises for damaged files of these formats.
 _DAMAGED = (

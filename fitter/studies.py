@@ -229,6 +229,8 @@ class StudyJob:
             raise config.document.error(problem, ("variants",), cure="Give each variant a config of its own")
         sample = Sample.from_config(config.sample, config.folder)
         raise_all(input_problems(config, sample))
+        if not sample.has_rows:
+            raise InputError("a capsule has no single supernovae to leave out or to draw", cure="This needs the original data")
         return cls(config, setup_of(config, sample), blinded_names(config, sample), without_data is not None)
 
     @property

@@ -7,7 +7,9 @@ TEXT = set("\\ & % $ # _ { } ' ` \" ^ ~ r v c u = . H".split(" ")) | {" "}
 TEXT |= set("textasciitilde textasciicircum textbackslash dots ss o O ae AE aa AA l L i".split())
 TEXT |= set("begin end caption label centering input includegraphics cite ref bibliography bibliographystyle".split())
 TEXT |= set("documentclass usepackage title author maketitle section setcounter renewcommand arraystretch textfraction topfraction".split())
-TEXT |= set("small smallskip setlength tabcolsep dbltopfraction hline toprule midrule bottomrule dbltopnumber topnumber totalnumber".split())
+TEXT |= set(
+    "small smallskip setlength tabcolsep dbltopfraction hline toprule midrule bottomrule dbltopnumber topnumber totalnumber".split()
+)
 MATH = set("mathrm pm times le ge to infty cdot approx hat ln , Omega Lambda Delta Sigma sigma chi rho mu alpha beta gamma ".split())
 MATH |= set("lambda widehat % & # _".split()) | {" "}
 ENVIRONMENTS = {"document", "table", "table*", "figure", "figure*", "tabular"}

@@ -2,12 +2,12 @@
 
 from __future__ import annotations
 
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
 from math import ceil, isfinite, nan
 
 import numpy as np
 
-from fitter.inference.diagnostics import autocorrelation_time, ess_bulk, ess_tail, split_rhat
+from fitter.inference.diagnostics import autocorrelation_time, ess_bulk, ess_sd, ess_tail, split_rhat
 
 __all__ = ["FIRST_STEPS", "Status", "assess", "next_length"]
 
@@ -26,8 +26,8 @@ class Status:
     ----------
     steps, burn_in : int
         Steps in all, and those to drop at the beginning.
-    tau, rhat, bulk, tail : dict of float
-        Autocorrelation time in steps, R-hat, effective sample sizes.
+    tau, rhat, bulk, tail, spread : dict of float
+        Autocorrelation time in steps, R-hat, effective sample sizes for the middle, the tails and the standard deviation.
     lacking : tuple of str
         What keeps the chain from being converged; empty if it is.
     """
@@ -38,6 +38,7 @@ class Status:
     rhat: dict[str, float]
     bulk: dict[str, float]
     tail: dict[str, float]
+    spread: dict[str, float]
     lacking: tuple[str, ...]
 
     @property
@@ -48,7 +49,7 @@ class Status:
     @property
     def ess(self) -> float:
         """The smallest effective sample size, NaN if one is unknown."""
-        return float(np.min([*self.bulk.values(), *self.tail.values()]))
+        return float(np.min([*self.bulk.values(), *self.tail.values(), *self.spread.values()]))
 
 
 def assess(chain, names, target_ess: float) -> Status:
@@ -80,18 +81,20 @@ def assess(chain, names, target_ess: float) -> Status:
     rhat = {name: split_rhat(x) for name, x in columns.items()}
     bulk = {name: ess_bulk(x) for name, x in columns.items()}
     tail = {name: ess_tail(x) for name, x in columns.items()}
-    lacking = _lacking(kept.shape[1], tau, rhat, bulk, tail, target_ess)
-    return Status(steps, burn_in, tau, rhat, bulk, tail, lacking)
+    spread = {name: ess_sd(x) for name, x in columns.items()}
+    status = Status(steps, burn_in, tau, rhat, bulk, tail, spread, ())
+    return replace(status, lacking=_lacking(status, target_ess))
 
 
-def _lacking(length, tau, rhat, bulk, tail, target_ess):
+def _lacking(status, target_ess):
     out = []
-    for name, t in tau.items():
-        if not length > LENGTH_IN_TAU * t:
-            out.append(f"{name}: the chain is {length} steps, {length / t if t > 0 else nan:.0f} autocorrelation times; 50 are needed")
-        if not rhat[name] < RHAT_LIMIT:
-            out.append(f"{name}: the replicas disagree, R-hat = {rhat[name]:.3f}; below 1.01 is needed")
-        ess = min(bulk[name], tail[name])
+    length = status.steps - status.burn_in
+    for name, tau in status.tau.items():
+        if not length > LENGTH_IN_TAU * tau:
+            out.append(f"{name}: the chain is {length} steps, {length / tau if tau > 0 else nan:.0f} autocorrelation times; 50 are needed")
+        if not status.rhat[name] < RHAT_LIMIT:
+            out.append(f"{name}: the replicas disagree, R-hat = {status.rhat[name]:.3f}; below 1.01 is needed")
+        ess = min(status.bulk[name], status.tail[name], status.spread[name])
         if not ess >= target_ess:
             out.append(f"{name}: effective sample size {ess:.0f}; {target_ess:.0f} is asked for")
     return tuple(out)

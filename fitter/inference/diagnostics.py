@@ -23,6 +23,7 @@ __all__ = [
     "ess_bulk",
     "ess_mean",
     "ess_quantile",
+    "ess_sd",
     "ess_tail",
     "mcse_mean",
     "mcse_quantile",
@@ -94,6 +95,17 @@ def ess_quantile(x, p: float) -> float:
 def ess_tail(x) -> float:
     """The smaller of the effective sample sizes for the 5 % and 95 % quantiles of the draws, (R, S, W)."""
     return min(ess_quantile(x, 0.05), ess_quantile(x, 0.95))
+
+
+def ess_sd(x) -> float:
+    """Effective sample size for the standard deviation of the draws, (R, S, W).
+
+    The number of independent Gaussian draws that would tell it as well: N with relative error 1/√(2N). It falls where a
+    rarely visited tail carries much of the variance, which quantiles do not see.
+    """
+    square = (np.asarray(x, dtype=float) - np.mean(x)) ** 2
+    spread = square.var()
+    return float(2 * square.mean() ** 2 * _ess(square) / spread) if spread > 0 else float("nan")
 
 
 def mcse_mean(x) -> float:

@@ -9,10 +9,6 @@ import numpy as np
 
 __all__ = ["StudentMixture", "fit_mixture"]
 
-# Keeps a component from collapsing on few points: this share of the whole cloud's covariance is added. More of it
-# makes the proposal too thick for posteriors that are thin curved sheets (curved_wcdm: τ 6.7 at 0.003, 11 at 0.02).
-_RIDGE = 0.003
-
 
 @dataclass(frozen=True)
 class StudentMixture:
@@ -66,17 +62,21 @@ class StudentMixture:
         return height[:, None] - (self.nu + d) / 2 * np.log1p(distance / self.nu), distance
 
 
-def fit_mixture(points, components: int, *, nu: float = 5.0, iterations: int = 3, broad: float = 0.0) -> StudentMixture:
+def fit_mixture(
+    points, components: int, *, nu: float = 5.0, iterations: int = 3, broad: float = 0.0, ridge: float = 0.003, bisect: bool = False
+) -> StudentMixture:
     """Fit a mixture by expectation–maximisation from a fixed start.
 
-    The start cuts the cloud into equal parts along its longest axis (of the correlation matrix), so the result is a function of
-    the points alone. For a proposal the start itself will do (``iterations=0``): it need not be the best fit.
+    The start cuts the cloud into equal parts, so the result is a function of the points alone: into slices along
+    its longest axis (of the correlation matrix), or by halving every part along its own longest axis, which follows curved sheets
+    but needs more points. For a proposal the start itself will do (``iterations=0``): it need not be the best fit.
 
     Parameters
     ----------
     points : (M, d) ndarray
         May be degenerate, even M copies of one point.
     components : int
+        A power of two if `bisect`.
     nu : float
         Degrees of freedom of every component.
     iterations : int
@@ -84,6 +84,11 @@ def fit_mixture(points, components: int, *, nu: float = 5.0, iterations: int = 3
     broad : float
         Weight of one more component, with the mean and covariance of the whole cloud. It keeps the density from being
         far too low in the tails.
+    ridge : float
+        Share of the whole cloud's covariance added to every component, which keeps one from collapsing on few points. More of it makes
+        the components too thick for posteriors that are thin curved sheets.
+    bisect : bool
+        The second kind of start.
 
     Returns
     -------
@@ -100,12 +105,11 @@ def fit_mixture(points, components: int, *, nu: float = 5.0, iterations: int = 3
     scale = np.where(scale > 0, scale, 1e-9 * (np.abs(centre) + 1.0))
     y = (points - centre) / scale
     whole = y.T @ y / m + 1e-9 * np.eye(d)
-    axis = np.linalg.eigh(whole)[1][:, -1]
-    part = np.argsort(np.argsort(y @ axis, kind="stable"), kind="stable") * components // m
+    part = _bisections(y, components) if bisect else _slices(y, components, whole)
     share = (part == np.arange(components)[:, None]).astype(float)
     pull = np.ones_like(share)
     for step in range(iterations + 1):
-        fitted = _maximisation(y, share, pull, whole, nu)
+        fitted = _maximisation(y, share, pull, ridge * whole, nu)
         if step < iterations:
             joint, distance = fitted._joint(y)
             share = np.exp(joint - joint.max(axis=0))
@@ -115,6 +119,27 @@ def fit_mixture(points, components: int, *, nu: float = 5.0, iterations: int = 3
         fitted = _with_broad(fitted, whole, broad)
     grow = scale[:, None]
     return StudentMixture(fitted.weights, centre + fitted.means * scale, fitted.factors * grow, fitted.inverses / grow.T, nu)
+
+
+def _slices(y, components, whole):
+    """Part of every point: slices of equal count along the longest axis."""
+    axis = np.linalg.eigh(whole)[1][:, -1]
+    rank = np.argsort(np.argsort(y @ axis, kind="stable"), kind="stable")
+    return rank * components // len(y)
+
+
+def _bisections(y, components):
+    """Part of every point: halves of halves, each cut across its own longest axis."""
+    part = np.zeros(len(y), dtype=int)
+    for _ in range(int(components).bit_length() - 1):
+        finer = 2 * part
+        for k in np.unique(part):
+            rows = np.flatnonzero(part == k)
+            off = y[rows] - y[rows].mean(axis=0)
+            axis = np.linalg.eigh(off.T @ off)[1][:, -1]
+            finer[rows[np.argsort(off @ axis, kind="stable")[len(rows) // 2 :]]] += 1
+        part = finer
+    return part
 
 
 def _with_broad(fitted, whole, weight):
@@ -128,7 +153,7 @@ def _with_broad(fitted, whole, weight):
     )
 
 
-def _maximisation(y, share, pull, whole, nu):
+def _maximisation(y, share, pull, floor, nu):
     """Weights, means and scale matrices from responsibilities, (K, M), and Student-t weights, (K, M)."""
     m, d = y.shape
     count = share.sum(axis=1) + 1e-6
@@ -137,6 +162,6 @@ def _maximisation(y, share, pull, whole, nu):
     means = heavy @ y / total[:, None]
     from_mean = y - means[:, None, :]
     scatter = (heavy[:, :, None] * from_mean).transpose(0, 2, 1) @ from_mean / count[:, None, None]
-    factors = np.linalg.cholesky(scatter + _RIDGE * whole)
+    factors = np.linalg.cholesky(scatter + floor)
     weights = (count + 0.01 * m) / (count + 0.01 * m).sum()
     return StudentMixture(weights, means, factors, np.linalg.inv(factors), nu)

@@ -1,14 +1,14 @@
-"""A move for curved, cut and two-peaked posteriors: propose from a mixture fitted to half of the ensemble."""
+"""Moves for curved, cut and two-peaked posteriors: propose from mixtures that look like them."""
 
 from __future__ import annotations
 
 import numpy as np
-from emcee.moves import RedBlueMove, StretchMove
+from emcee.moves import MHMove, RedBlueMove, StretchMove
 from emcee.state import State
 
 from fitter.inference.mixture import fit_mixture
 
-__all__ = ["MixtureMove", "ensemble_moves"]
+__all__ = ["MixtureMove", "PilotMove", "ensemble_moves"]
 
 
 class MixtureMove(RedBlueMove):
@@ -67,14 +67,40 @@ def _components(points: int, ndim: int) -> int:
     return int(np.clip(2 * points // (5 * (ndim + 1)), 1, 8))
 
 
-def ensemble_moves(name: str):
+class PilotMove(MHMove):
+    """Independent proposals from a mixture that was fitted before the chain began and never changes.
+
+    Half of one ensemble is too few points to know a tail that holds half a per cent of the posterior: a walker that gets
+    there stays for hundreds of steps. The pilot (`fitter.inference.pilot`) has seen the tails.
+
+    Parameters
+    ----------
+    mixture : StudentMixture
+    """
+
+    def __init__(self, mixture):
+        super().__init__(self._propose)
+        self.mixture = mixture
+
+    def _propose(self, positions, random):
+        """Return proposals, (W, d), and ln[q(old) / q(new)], (W,)."""
+        proposal = self.mixture.draw(random, len(positions))
+        density = self.mixture.log_density(np.concatenate([positions, proposal]))
+        return proposal, density[: len(positions)] - density[len(positions) :]
+
+
+def ensemble_moves(name: str, pilot=None):
     """Return the moves of one step, in the form that emcee's sampler takes.
 
     Parameters
     ----------
     name : {"mixture", "stretch"}
-        ``mixture`` keeps a small share of emcee's stretch moves, which free walkers where the mixture is a bad fit.
+        ``mixture`` keeps a share of emcee's stretch moves, which free walkers where the mixtures are a bad fit.
+    pilot : StudentMixture, optional
+        For ``mixture``: a density fitted to the posterior beforehand.
     """
     if name == "stretch":
         return [(StretchMove(), 1.0)]
-    return [(MixtureMove(), 0.8), (StretchMove(), 0.2)]
+    if pilot is None:
+        return [(MixtureMove(), 0.8), (StretchMove(), 0.2)]
+    return [(PilotMove(pilot), 0.6), (MixtureMove(), 0.2), (StretchMove(), 0.2)]

@@ -64,6 +64,7 @@ class _Task:
     start: int
     steps: int
     move: str
+    pilot: object
 
 
 class Replicas:
@@ -76,6 +77,8 @@ class Replicas:
         At their starting points.
     move : str
         As in the settings.
+    pilot : StudentMixture or None
+        For the moves.
     processes : int
         1 works in this process.
     checkpoint : Checkpoint or None
@@ -86,8 +89,9 @@ class Replicas:
     replica finish its step and sets `interrupted`; a second one acts at once.
     """
 
-    def __init__(self, log_posterior, replicas: list[Replica], move: str, processes: int, checkpoint: Checkpoint | None):
-        self.log_posterior, self.replicas, self.move, self.checkpoint = log_posterior, replicas, move, checkpoint
+    def __init__(self, log_posterior, replicas: list[Replica], move: str, pilot, processes: int, checkpoint: Checkpoint | None):
+        self.log_posterior, self.replicas, self.checkpoint = log_posterior, replicas, checkpoint
+        self.move, self.pilot = move, pilot
         self.processes = min(processes, len(replicas))
         self.interrupted = False
         self._pool = None
@@ -177,7 +181,7 @@ class Replicas:
 
     def _task(self, i, target):
         r = self.replicas[i]
-        return _Task(i, r.positions, r.log_prob, r.random_state, r.steps, target - r.steps, self.move)
+        return _Task(i, r.positions, r.log_prob, r.random_state, r.steps, target - r.steps, self.move, self.pilot)
 
     def _submit(self, i, target):
         return self._pool.submit(_advance_in_worker, self._task(i, target))
@@ -267,7 +271,7 @@ def _advance(log_posterior, task, board) -> Chunk:
     from fitter.inference.moves import ensemble_moves
 
     before = dict(log_posterior.counts)
-    sampler = EnsembleSampler(*task.positions.shape, log_posterior, vectorize=True, moves=ensemble_moves(task.move))
+    sampler = EnsembleSampler(*task.positions.shape, log_posterior, vectorize=True, moves=ensemble_moves(task.move, task.pilot))
     # emcee wraps the function to print a traceback of its own at every exception.
     sampler.log_prob_fn = log_posterior
     state = State(task.positions, log_prob=task.log_prob, random_state=task.random_state, copy=True)

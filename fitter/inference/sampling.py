@@ -41,7 +41,7 @@ def sample_posterior(
     """Draw from the posterior with R independent ensembles.
 
     Runs in rounds, each followed by a look at the whole chain, until for every sampled parameter R-hat < 1.01, the chain is longer
-    than 50 autocorrelation times and bulk and tail ESS reach the target; or until ``settings.max_steps``.
+    than 50 autocorrelation times and the ESS of bulk, tails and standard deviation reach the target; or until ``settings.max_steps``.
 
     Parameters
     ----------
@@ -199,6 +199,7 @@ def _facts(ensembles, status, settings, seconds):
         "rhat": status.rhat,
         "ess_bulk": status.bulk,
         "ess_tail": status.tail,
+        "ess_sd": status.spread,
         "acceptance": ensembles.accepted,
         "converged": reason == "converged",
         "reason": reason,

@@ -264,7 +264,7 @@ def test_removing_a_checkpoint_spares_other_files(doubles, monkeypatch, tmp_path
 def test_next_length_aims_at_what_is_missing():
     def status(steps, burn_in, tau, ess, rhat=1.0):
         one = {"x": tau}
-        return convergence.Status(steps, burn_in, one, {"x": rhat}, {"x": ess}, {"x": ess}, ("x",))
+        return convergence.Status(steps, burn_in, one, {"x": rhat}, {"x": ess}, {"x": 2 * ess}, {"x": 3 * ess}, ("x",))
 
     # 150 steps gave 1000: ten times that, with the margin, but at most four times the length.
     assert convergence.next_length(status(200, 50, 1.0, 1000.0), 3000, 10**6) == 490

@@ -1,0 +1,91 @@
+"""A mixture that looks like the posterior, tails included, found before any chain begins."""
+
+from __future__ import annotations
+
+import numpy as np
+
+from fitter.inference.mixture import StudentMixture, fit_mixture
+from fitter.inference.optimum import prior_draws
+
+__all__ = ["pilot_mixture"]
+
+# Draws of the last rounds, at most; the first ones, which only find the place, take a quarter of them.
+_DRAWS = 16384
+_ROUNDS = 8
+_FULL_ROUNDS = 3
+# The target is the posterior density to this power: wider than the posterior, so that no place is proposed far too rarely.
+_FLATTENED = 0.6
+# Fewer effective draws than this, and a round aims at a flatter target still.
+_FEWEST = 300
+
+
+def pilot_mixture(log_posterior, optimum, seed: np.random.SeedSequence) -> StudentMixture:
+    """Fit a Student-t mixture to a flattened posterior by repeated importance sampling.
+
+    The first draws come from the prior and from a wide Student-t around the optimum; each round weights its draws by
+    density^β / q, fits a mixture to a resample of them, and draws the next ones from it.
+
+    Parameters
+    ----------
+    log_posterior : LogPosterior
+    optimum : Optimum
+    seed : SeedSequence
+
+    Returns
+    -------
+    StudentMixture
+        Used as a proposal, whose errors cost acceptance and never bias the chain.
+
+    Notes
+    -----
+    Population Monte Carlo: Cappé, Guillin, Marin & Robert 2004, J. Comput. Graph. Stat. 13, 907.
+    """
+    rng = np.random.default_rng(seed)
+    n = len(optimum.theta)
+    draws = min(2048 * 2**n, _DRAWS)
+    points, log_q = _first_draws(log_posterior, optimum, draws // 2, rng)
+    components = 2 ** min(2 + n, 6)
+    mixture = None
+    for turn in range(_ROUNDS):
+        values = np.asarray(log_posterior(points))
+        if np.isfinite(values).sum() < 4 * components:
+            break
+        chosen = _resample(points, _weights(values, log_q), len(points) // 2, rng)
+        mixture = fit_mixture(chosen, components, iterations=5, broad=0.05, ridge=1e-4, bisect=True)
+        points = mixture.draw(rng, draws if turn >= _ROUNDS - 1 - _FULL_ROUNDS else draws // 4)
+        log_q = mixture.log_density(points)
+    return _around(optimum) if mixture is None else mixture
+
+
+def _around(optimum):
+    factor = 2 * np.linalg.cholesky(optimum.covariance)[None]
+    return StudentMixture(np.ones(1), optimum.theta[None], factor, np.linalg.inv(factor), 5.0)
+
+
+def _first_draws(log_posterior, optimum, size, rng):
+    """Possible points of the prior and draws around the optimum, with the ln density of the two together."""
+    spread, _ = prior_draws(log_posterior, rng, size)
+    local = _around(optimum)
+    points = np.concatenate([spread, local.draw(rng, size // 2)])
+    share = len(spread) / len(points)
+    with np.errstate(divide="ignore"):
+        log_q = np.logaddexp(np.log(share) + log_posterior.log_prior(points), np.log(1 - share) + local.log_density(points))
+    return points, log_q
+
+
+def _weights(values, log_q):
+    """density^β / q, normalised, with the largest β up to the wanted one that leaves enough effective draws."""
+    power = _FLATTENED
+    while True:
+        log_w = power * values - log_q
+        w = np.exp(log_w - log_w.max())
+        w /= w.sum()
+        if 1 / (w**2).sum() >= _FEWEST or power < 1e-3:
+            return w
+        power *= 0.7
+
+
+def _resample(points, weights, size, rng):
+    """Systematic resampling to `size` points of equal weight."""
+    ladder = (np.arange(size) + rng.random()) / size
+    return points[np.minimum(np.searchsorted(np.cumsum(weights), ladder), len(points) - 1)]

@@ -126,18 +126,22 @@ class Fit:
         """Return the corner plot of the sampled and main derived parameters."""
         from fitter.report.facts import relabelled
         from fitter.report.figures.corner import corner_figure
+        from fitter.report.figures.style import shown_in_notebooks
 
         hidden = self._summary.get("blinded") or ()
         with relabelled(hidden_labels(hidden)):
-            return corner_figure(self.chains, list(self.chains.names) if hidden else None)
+            return shown_in_notebooks(corner_figure(self.chains, list(self.chains.names) if hidden else None))
 
     def hubble_diagram(self) -> Figure:
         """Return the Hubble diagram with the residuals from the best fit."""
         if self._summary.get("blinded"):
             raise InputError("the Hubble diagram would show the best fit, which is hidden", cure="Unblind the run first")
+        if not self.sample.has_rows:
+            raise InputError("a capsule has no single supernovae, and so no Hubble diagram", cure="This needs the original data")
         from fitter.report.figures.hubble import hubble_figure
+        from fitter.report.figures.style import shown_in_notebooks
 
-        return hubble_figure(self.log_posterior, self.optimum, self.chains)
+        return shown_in_notebooks(hubble_figure(self.log_posterior, self.optimum, self.chains))
 
     def capsule(self, *, order: int = 48, citation: str = "") -> Capsule:
         """Return the likelihood as a capsule; ``.text()`` of it is what to write to a file.
@@ -157,10 +161,36 @@ class Fit:
 
         return terminal_summary(self._summary)
 
-    def _repr_html_(self) -> str:
-        import html
+    def to_arviz(self) -> Any:
+        """Return the draws for ArviZ: each walker is a chain, its steps are the draws.
 
-        return f"<pre>{html.escape(str(self))}</pre>"
+        The walkers of an ensemble move together; convergence is judged by ensemble in `summary`.
+
+        Raises
+        ------
+        InputError
+            ArviZ is not installed.
+        """
+        try:
+            import arviz
+        except ModuleNotFoundError:
+            raise InputError("ArviZ is not installed", cure="pip install 'mufitter[arviz]'") from None
+        chains = self.chains
+        by_walker = lambda a: np.asarray(a).transpose(0, 2, 1).reshape(-1, a.shape[1])  # noqa: E731 - (R, S, W) to (R W, S)
+        groups = {
+            "posterior": {name: by_walker(chains.draws(name)) for name in chains.kinds},
+            "sample_stats": {"lp": by_walker(chains.log_posterior)},
+        }
+        if int(arviz.__version__.split(".")[0]) < 1:
+            return arviz.from_dict(**groups)
+        return arviz.from_dict(groups)
+
+    def _repr_html_(self) -> str:
+        from fitter.report.facts import relabelled
+        from fitter.report.page import fit_html
+
+        with relabelled(self.config.labels):
+            return fit_html(self._summary)
 
 
 def fit(

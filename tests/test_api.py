@@ -1,7 +1,9 @@
 """Fits from Python: the objects, the run folder, and continuing a run."""
 
+import html
 import json
 import logging
+import sys
 
 import numpy as np
 import pytest
@@ -48,7 +50,25 @@ def test_a_fit_is_an_object(result, sample):
     assert table["omega_m"].mean() == pytest.approx(result.summary()["parameters"]["omega_m"]["mean"], rel=1e-12)
     assert result.best_fit["omega_m"] == pytest.approx(result.optimum.theta[0])
     assert "sixty" in str(result)
-    assert result._repr_html_().startswith("<pre>sixty")
+    shown = result._repr_html_()
+    assert "sixty" in shown and "Sound." in shown and "Ω<sub>m</sub>" in shown and shown.count("<div>") == shown.count("</div>")
+    assert all(html.escape(text) in shown for text in result.warnings)
+
+
+def test_draws_for_arviz(result, monkeypatch):
+    arviz = pytest.importorskip("arviz", reason="ArviZ is an extra: pip install 'mufitter[arviz]'")
+    data = result.to_arviz()
+    draws = np.asarray(data["posterior"]["omega_m"])
+    replicas, steps, walkers = result.chains.log_posterior.shape
+    assert draws.shape == (replicas * walkers, steps)
+    np.testing.assert_array_equal(draws[walkers + 2], result.chains.draws("omega_m")[1, :, 2])
+    assert "mean" in arviz.summary(data).columns
+
+
+def test_without_arviz(result, monkeypatch):
+    monkeypatch.setitem(sys.modules, "arviz", None)
+    with pytest.raises(InputError, match=r"mufitter\[arviz\]"):
+        result.to_arviz()
 
 
 def test_figures_can_be_had(result):

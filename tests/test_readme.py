@@ -1,30 +1,119 @@
-"""The README's config works as printed, and every file it points to exists."""
+"""Every command and config of the README works as printed, from a folder with a blank and non-ASCII letters in its name."""
 
+import os
 import re
+import shlex
+import shutil
+import subprocess
+import sys
 from pathlib import Path
 
 import numpy as np
+import pytest
+import yaml
+from typer.testing import CliRunner
 
-from fitter import check
+from fitter import check, fit
+from fitter.cli import app
 
 ROOT = Path(__file__).resolve().parents[1]
 README = (ROOT / "README.md").read_text(encoding="utf-8")
+CONFIGS = re.findall(r"```yaml\n(.*?)```", README, flags=re.S)
+QUICK = {"replicas": 2, "walkers": 32, "target_ess": 400, "seed": 1}
 
 
-def test_example_config_passes_check(tmp_path):
-    (config,) = re.findall(r"```yaml\n(.*?)```", README, flags=re.S)
-    (tmp_path / "mine.yaml").write_text(config, encoding="utf-8")
+def commands() -> list[list[str]]:
+    """The README's own command lines, without comments."""
+    lines = re.findall(r"^    (?:\.venv/bin/)?mufitter (.*)$", README, flags=re.M)
+    return [shlex.split(line, comments=True) for line in lines]
+
+
+@pytest.fixture(scope="module")
+def place(tmp_path_factory):
+    """A folder as the README assumes it: a table and its covariance, configs, and a second fit to compare with."""
+    folder = tmp_path_factory.mktemp("read me") / "Überschuß ω"
+    folder.mkdir()
     z = np.linspace(0.02, 1.0, 40)
-    mu = 43.2 + 5 * np.log10(z * (1 + 0.6 * z))
+    mu = 43.2 + 5 * np.log10(z * (1 + 0.6 * z)) + 0.1 * np.random.default_rng(3).standard_normal(40)
     rows = [f"{a:.4f},{a:.4f},{m:.4f},0.15" for a, m in zip(z, mu, strict=True)]
-    (tmp_path / "my_table.csv").write_text("\n".join(["zcmb,zhel,mu,mu_error", *rows]) + "\n")
-    (tmp_path / "systematics.txt").write_text("\n".join(["40", *(["1e-4"] * 1600)]) + "\n")
-    found = check(tmp_path / "mine.yaml")
-    assert found.problems == ()
+    (folder / "my_table.csv").write_text("\n".join(["zcmb,zhel,mu,mu_error", *rows]) + "\n")
+    matrix = 1e-4 * np.ones((40, 40)) + 1e-6 * np.eye(40)
+    (folder / "systematics.txt").write_text("\n".join(["40", *map(str, matrix.ravel())]) + "\n")
+    shutil.copytree(ROOT / "configs", folder / "configs")
+    shutil.copytree(ROOT / "data_demo", folder / "data_demo")
+    variants = folder / "configs/compare_variants.yaml"
+    content = yaml.safe_load(variants.read_text(encoding="utf-8"))
+    content["sampling"], content["variants"] = QUICK, content["variants"][:3]
+    variants.write_text(yaml.safe_dump(content, allow_unicode=True, sort_keys=False), encoding="utf-8")
+    return folder
+
+
+def test_every_command(place, monkeypatch):
+    monkeypatch.chdir(place)
+    monkeypatch.setenv("NO_COLOR", "1")
+    done = []
+    for words in commands():
+        result = CliRunner().invoke(app, words, prog_name="mufitter")
+        assert result.exit_code == 0, f"mufitter {' '.join(words)}\n{result.output}\n{result.exception!r}"
+        assert "\x1b[" not in result.output
+        done.append(words[0])
+        if words[0] == "start":
+            # Then the reader writes a config; ours is short of breath.
+            (place / "mine.yaml").write_text(CONFIGS[0] + f"sampling: {QUICK}\n", encoding="utf-8")
+        if words[0] == "fit":
+            fit("mine.yaml", model="flat_lcdm", parameters={}, title="flat ΛCDM", run_folder="runs/flat_lcdm")
+            for name, run in (("a", "mine"), ("b", "flat_lcdm"), ("flat_wcdm", "mine")):
+                shutil.copytree(place / "runs" / run, place / "runs" / name)
+    assert {"start", "check", "fit", "compare", "figures", "tables", "export", "paper", "capsule"} <= set(done)
+    (place / "again.yaml").write_text(CONFIGS[1])
+    assert check("again.yaml").problems == ()
+    assert len(CONFIGS) == 2
+    files = [
+        name for cell in re.findall(r"^\| ([\w./, ]+) \|", README, flags=re.M) for name in cell.split(", ") if re.search(r"\.\w+$|/$", name)
+    ]
+    assert len(files) > 8 and [name for name in files if not (place / "runs/mine" / name).exists()] == []
+
+
+def test_the_python_block(place):
+    (block,) = re.findall(r"```python\n(.*?)```", README, flags=re.S)
+    table = np.loadtxt(place / "my_table.csv", delimiter=",", skiprows=1)
+    known = {"z": table[:, 0], "mu": table[:, 2], "covariance": 0.0225 * np.eye(40)}
+    exec(block, known)  # noqa: S102 - our own text
+    assert known["result"].converged
+
+
+def test_streams_and_exit_codes(place):
+    """Data to stdout, messages to stderr, no colour, no display; what the README says of exit codes."""
+    environment = {k: v for k, v in os.environ.items() if k not in ("DISPLAY", "MPLBACKEND")} | {"OPENBLAS_NUM_THREADS": "1"}
+
+    def run(*words):
+        command = [sys.executable, "-m", "fitter.cli", *words]
+        return subprocess.run(command, cwd=place, env=environment, capture_output=True, text=True, encoding="utf-8")
+
+    (place / "kurz ö.yaml").write_text(CONFIGS[0] + f"sampling: {QUICK}\n", encoding="utf-8")
+    done = run("fit", "kurz ö.yaml", "--json", "--run-folder", "läufe/eins zwei")
+    assert done.returncode == 0, done.stderr
+    assert yaml.safe_load(done.stdout)["schema"] == "mufitter summary 1" and "Written to" in done.stderr
+    short = CONFIGS[0] + "sampling: {replicas: 2, walkers: 32, target_ess: 100000, max_steps: 60}\n"
+    (place / "short.yaml").write_text(short, encoding="utf-8")
+    done = run("fit", "short.yaml", "-q")
+    assert done.returncode == 1 and done.stdout == "" and "Not converged" in done.stderr
+    (place / "wrong.yaml").write_text(CONFIGS[0].replace("mu_error", "mu_eror"), encoding="utf-8")
+    done = run("check", "wrong.yaml")
+    assert done.returncode == 2 and "mu_eror" in done.stderr and "Traceback" not in done.stderr and "\x1b[" not in done.stderr
+    done = run("--version")
+    assert re.fullmatch(r"mufitter \d+\.\d+\.\d+\n", done.stdout)
+
+
+def test_shell_completion():
+    """Completion offers the commands (the protocol of bash, spoken by hand)."""
+    environment = {**os.environ, "_MUFITTER_COMPLETE": "complete_bash", "COMP_WORDS": "mufitter ca", "COMP_CWORD": "1"}
+    done = subprocess.run([Path(sys.executable).parent / "mufitter"], env=environment, capture_output=True, text=True)
+    assert "capsule" in done.stdout.split()
 
 
 def test_links_point_to_files():
-    for text in (README, (ROOT / "DEVELOPERS.md").read_text(encoding="utf-8")):
+    for text in (README, (ROOT / "DEVELOPERS.md").read_text(encoding="utf-8"), (ROOT / "docs/capsule.md").read_text(encoding="utf-8")):
         for target in re.findall(r"\]\(([^)#:]+)\)", text):
             assert (ROOT / target).exists(), target
 
@@ -33,3 +122,13 @@ def test_make_targets_exist():
     targets = set(re.findall(r"^(\w+):", (ROOT / "Makefile").read_text(), flags=re.M))
     for text in (README, (ROOT / "DEVELOPERS.md").read_text(encoding="utf-8")):
         assert set(re.findall(r"^    make (\w+)", text, flags=re.M)) <= targets
+
+
+def test_the_schema_beside_the_configs_is_the_present_one():
+    from fitter.config.schema import config_schema
+
+    written = yaml.safe_load((ROOT / "configs/mufitter.schema.json").read_text(encoding="utf-8"))
+    assert written == config_schema(), "write it again: mufitter schema > configs/mufitter.schema.json"
+    for config in (ROOT / "configs").glob("*.yaml"):
+        first = config.read_text(encoding="utf-8").splitlines()[0]
+        assert first == "# yaml-language-server: $schema=mufitter.schema.json", config.name

@@ -8,7 +8,7 @@ from dataclasses import dataclass, replace
 
 import numpy as np
 
-from fitter.config.load import raise_all, validate
+from fitter.config.load import described, raise_all, validate
 from fitter.config.model_choice import chosen_model
 from fitter.config.parameters import free_parameters
 from fitter.config.settings import Config
@@ -158,7 +158,7 @@ def _known(config: Config, document: Document) -> set[str] | None:
     model, _ = chosen_model(document, config.folder, config._allow_code)
     if model is None:
         return None
-    sample = config.sample
+    sample = described(config.sample, config.folder)
     scale, kind = (sample.distance_scale, sample.data_kind) if sample is not None else ("calibrated", "magnitude")
     return set(free_parameters(model, scale, kind))
 

@@ -116,7 +116,7 @@ def validate(
         cure = "It says what was observed: `sample: {table: …, columns: {…}, uncertainty: […]}`"
         problems.insert(0, document.error("the key `sample` is missing", cure=cure))
     sample = config.sample if config is not None else _sample_settings(document)
-    problems += refused + _parameter_problems(document, model, _described(sample, folder) if arrays is None else arrays)
+    problems += refused + _parameter_problems(document, model, described(sample, folder) if arrays is None else arrays)
     problems.sort(key=lambda p: p.row or 0)
     return (None if problems else config), sample, problems
 
@@ -128,7 +128,7 @@ def _sample_settings(document: Document) -> SampleSettings | None:
         return None
 
 
-def _described(sample, folder: Path):
+def described(sample, folder: Path):
     """What says which kind of data a sample holds: its settings, or the contents of a capsule; None where that cannot be read."""
     if not isinstance(sample, CapsuleSettings):
         return sample

@@ -21,7 +21,7 @@ from fitter.report.summary import summary_csv
 from fitter.report.tables import parameter_table
 from fitter.report.terminal import best_text, cell_text, data_line, information_lines
 
-__all__ = ["PAGE", "Picture", "page_text", "picture_of", "verdict"]
+__all__ = ["PAGE", "Picture", "fit_html", "page_text", "picture_of", "verdict"]
 
 PAGE = "report.html"
 _MISFIT = 1e-3
@@ -116,6 +116,29 @@ def page_text(summary: dict, config: str, pictures: Mapping[str, Picture]) -> st
             for key, (name, body) in shown.items()
         ),
         footer=_e(f"Made by mufitter {version}, {made.get('finished', '')}. This page needs no network and no other file."),
+    )
+
+
+def fit_html(summary: dict) -> str:
+    """Return what a notebook shows of a fit: verdict, parameters, warnings."""
+    kind, headline, reasons = verdict(summary)
+    colour = {"good": "#14692f", "mind": "#7a4b00", "bad": "#9b1c1c"}[kind]
+    cells = [
+        (
+            f"{_symbol(name)}{_e(unit_text(name))}",
+            _e(cell_text(facts)) if facts.get("median") is not None else "undefined",
+            _e(facts["kind"]),
+        )
+        for name, facts in summary["parameters"].items()
+    ]
+    rows = "".join("<tr>" + "".join(f'<td style="text-align:left">{cell}</td>' for cell in row) + "</tr>" for row in cells)
+    warnings = "".join(f"<li>{_e(text)}</li>" for text in summary["warnings"])
+    return (
+        f"<div><strong>{_e(summary['title'] or summary['model'])}</strong>, {_e(data_line(summary).strip())}"
+        f'<p><strong style="border-left:.3em solid {colour};padding-left:.5em">{_e(headline)}.</strong> {_e(reasons)}</p>'
+        f"<table><thead><tr><th></th><th>median, 68 %</th><th></th></tr></thead><tbody>{rows}</tbody></table>"
+        + (f"<details><summary>Warnings ({len(summary['warnings'])})</summary><ul>{warnings}</ul></details>" if warnings else "")
+        + "</div>"
     )
 
 

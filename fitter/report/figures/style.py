@@ -2,19 +2,33 @@
 
 from __future__ import annotations
 
+import io
 import os
 import tempfile
 from collections.abc import Mapping, Sequence
 from contextlib import contextmanager, nullcontext
 from contextvars import ContextVar
-from functools import wraps
+from functools import partial, wraps
 from pathlib import Path
 
 from fitter.errors import InputError
 from fitter.report.citations import SHORT
 from fitter.report.prose import plain
 
-__all__ = ["COLOURS", "DOUBLE", "GREY", "LEVELS", "SINGLE", "STYLE", "in_style", "new_figure", "save_figure", "styled", "width_inches"]
+__all__ = [
+    "COLOURS",
+    "DOUBLE",
+    "GREY",
+    "LEVELS",
+    "SINGLE",
+    "STYLE",
+    "in_style",
+    "new_figure",
+    "save_figure",
+    "shown_in_notebooks",
+    "styled",
+    "width_inches",
+]
 
 SINGLE, DOUBLE = 3.5, 7.1  # inches: one and two journal columns
 LEVELS = (0.683, 0.954)  # probability inside the contours
@@ -211,3 +225,15 @@ def _umask() -> int:
     mask = os.umask(0)
     os.umask(mask)
     return mask
+
+
+def shown_in_notebooks(figure):
+    """Let a notebook show a figure that pyplot does not know of; returns the figure."""
+    figure._repr_png_ = partial(_png, figure)
+    return figure
+
+
+def _png(figure) -> bytes:
+    stream = io.BytesIO()
+    figure.savefig(stream, format="png", dpi=110)
+    return stream.getvalue()

@@ -46,7 +46,8 @@ def expected_cost(log_posterior, sampling) -> Cost:
     steps = min(steps, sampling.max_steps)
     processes = max(1, min(os.cpu_count() or 1, sampling.replicas))
     rounds = -(-sampling.replicas // processes)
-    seconds = _REST + rounds * steps * (sampling.walkers * per_walker + _STEP_OVERHEAD)
+    # What this process has done so far, reading and compressing, the fit has to do again.
+    seconds = _REST + time.process_time() + rounds * steps * (sampling.walkers * per_walker + _STEP_OVERHEAD)
     numbers = len(log_posterior.names) + len(log_posterior.marginalised) + len(log_posterior.derived_names) + 1
     chains = 8 * 3 * steps * sampling.walkers * sampling.replicas * numbers  # written, read and summarised: three copies
     return Cost(seconds, _peak() + processes * _PROCESS + chains, 1e6 * per_walker)

@@ -4,7 +4,7 @@ VENV := .venv
 BIN := $(VENV)/bin
 DEMO_RUN := runs/curved_lcdm
 
-.PHONY: demo paper test lint bench bench-dense fuzz soak clean
+.PHONY: demo paper test lint bench bench-dense fuzz soak dist oldest clean
 
 demo: $(VENV)/.installed
 	$(BIN)/mufitter fit configs/curved_lcdm.yaml --replace
@@ -28,6 +28,7 @@ test: $(VENV)/.installed-test lint
 lint: $(VENV)/.installed-test
 	$(BIN)/ruff check .
 	$(BIN)/ruff format --check .
+	$(BIN)/mypy
 
 # Ratios of times measured in one run; run them on a quiet machine.
 bench: $(VENV)/.installed-test
@@ -45,6 +46,18 @@ fuzz: $(VENV)/.installed-test
 # Random configs, tables and matrices by the thousand, for hours; `make test` runs the short version.
 soak: $(VENV)/.installed-test
 	$(BIN)/python -m pytest --hypothesis-profile=soak tests
+
+# Source distribution and wheel, in dist/.
+dist: $(VENV)/.installed-test
+	$(BIN)/python -m pip install --quiet build
+	rm -rf dist && $(BIN)/python -m build
+
+# The oldest versions that pyproject.toml admits, in an environment of their own.
+oldest:
+	$(PYTHON) -m venv .venv-oldest
+	.venv-oldest/bin/python -m pip install --quiet --constraint .ci/oldest.txt . pytest hypothesis
+	.venv-oldest/bin/python -m pytest --override-ini addopts="-q --import-mode=importlib" \
+		tests/test_api.py tests/test_cli.py tests/config tests/sample/test_sample_tables.py tests/report/test_page.py
 
 clean:
 	rm -rf build dist .pytest_cache .ruff_cache .hypothesis .benchmarks *.egg-info

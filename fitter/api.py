@@ -16,7 +16,7 @@ from typing import TYPE_CHECKING, Any, Literal
 import numpy as np
 
 from fitter.config.figures import figure_problems
-from fitter.config.load import config_from_mapping, load_config, raise_all, validate
+from fitter.config.load import config_from_mapping, load_config, raise_all, valid, validate
 from fitter.config.parameters import FLAT
 from fitter.config.settings import Config
 from fitter.config.write import as_run, config_hash, config_text, differences, input_problems
@@ -301,10 +301,17 @@ class _Job:
         hidden_names(config.blind, log_posterior)
         return cls(config, sample, log_posterior, folder, progress)
 
+    @property
+    def _place(self) -> RunFolder:
+        """The run folder of a fit that writes."""
+        if self.folder is None:
+            raise RuntimeError("this fit writes nothing")
+        return self.folder
+
     @cached_property
     def settings(self) -> dict[str, Any]:
         """The settings as run."""
-        return as_run(self.config, self.sample, self.folder.target if self.folder is not None else Path.cwd())
+        return as_run(self.config, self.sample, self._place.target if self.folder is not None else Path.cwd())
 
     def require_same_run(self, earlier: Path) -> None:
         """Refuse to continue a run of other settings or data, naming what differs."""
@@ -319,27 +326,27 @@ class _Job:
 
     def finished_run(self) -> Fit | None:
         """Return the run that is already in its place and converged, or None if it can be continued."""
-        run = read_run(self.folder.target)
+        run = read_run(self._place.target)
         sampling = run.summary["sampling"]
         if not sampling["converged"]:
             return None
         if self.config.sampling.target_ess > sampling.get("target_ess", np.inf):
             problem = f"the run there has ended with a target_ess of {sampling['target_ess']}, it cannot be continued"
-            raise InputError(problem, file=self.folder.target, cure="Make a longer one with --replace")
+            raise InputError(problem, file=self._place.target, cure="Make a longer one with --replace")
         optimum = self._optimum()
         if self.hidden and run.summary.get("blinded"):
             optimum = blind_optimum(optimum, self.log_posterior.names, self.hidden)
-        return Fit(self.config, self.sample, self.log_posterior, optimum, run.posterior, self.folder.target, run.summary)
+        return Fit(self.config, self.sample, self.log_posterior, optimum, run.posterior, self._place.target, run.summary)
 
     def run(self, *, resume: bool = False) -> Fit:
         """Find the optimum, sample, summarise, draw and write."""
         if self.folder is None:
             return self._blinded(self._compute(None, resume=False))
-        with writing(self.folder.path), _RunLog(self.folder.path / "run.log"):
+        with writing(self._place.path), _RunLog(self._place.path / "run.log"):
             self._write_config()
-            result = self._blinded(self._compute(self.folder.path, resume=resume))
+            result = self._blinded(self._compute(self._place.path, resume=resume))
             self._write_results(result)
-        return replace(result, run_folder=self.folder.finish())
+        return replace(result, run_folder=self._place.finish())
 
     @cached_property
     def hidden(self) -> dict[str, float]:
@@ -361,14 +368,14 @@ class _Job:
 
     def unblind(self, run: Run) -> Fit:
         """Write a blinded run again with its values, and when that was."""
-        shutil.copytree(run.folder, self.folder.path, dirs_exist_ok=True, ignore=shutil.ignore_patterns("figures", "summary.*", ".*"))
-        with writing(self.folder.path), _RunLog(self.folder.path / "run.log"):
+        shutil.copytree(run.folder, self._place.path, dirs_exist_ok=True, ignore=shutil.ignore_patterns("figures", "summary.*", ".*"))
+        with writing(self._place.path), _RunLog(self._place.path / "run.log"):
             record = {"when": datetime.now(UTC).isoformat(timespec="seconds"), "config_sha256": config_hash(self.settings)}
             _log.info("unblinded, config SHA-256 %s", record["config_sha256"])
             result = self._summarised(self._optimum(), self._opened(run.posterior))
             result._summary.update(unblinded=record)
             self._write_results(result)
-        return replace(result, run_folder=self.folder.finish())
+        return replace(result, run_folder=self._place.finish())
 
     def _opened(self, chains: Posterior) -> Posterior:
         from fitter.inference.sampling import derive_and_draw
@@ -442,7 +449,7 @@ class _Job:
         ]
         if self.config.sample is None:
             header.append(f"The data came as arrays from Python (SHA-256 {self.sample.sha256}): this file alone cannot repeat the fit.")
-        write_atomic(self.folder.path / "config.yaml", config_text(self.settings, header))
+        write_atomic(self._place.path / "config.yaml", config_text(self.settings, header))
 
     def _write_results(self, result: Fit) -> None:
         from fitter.inference.checkpoint import remove_checkpoint
@@ -452,7 +459,7 @@ class _Job:
         from fitter.report.page import PAGE, page_text
         from fitter.report.summary import summary_csv, summary_json, summary_markdown
 
-        path, summary = self.folder.path, result.summary()
+        path, summary = self._place.path, result.summary()
         write_chain(path / "chain.h5", result.chains, {"config_sha256": config_hash(self.settings)})
         if result.converged:
             remove_checkpoint(path)
@@ -623,8 +630,7 @@ def load_run(path: str | Path, *, allow_code: bool = False) -> tuple[Run, Config
     # A fit of arrays has no sample section; what the parameters depend on stands in the summary.
     arrays = None if "sample" in document.data else SimpleNamespace(**run.summary["sample"])
     config, _, problems = validate(document, run.folder, arrays, allow_code=allow_code)
-    raise_all(problems)
-    return run, config
+    return run, valid(config, problems)
 
 
 def unblind(path: str | Path, *, allow_code: bool = False) -> Fit:

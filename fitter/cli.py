@@ -7,7 +7,7 @@ import os
 import sys
 from collections.abc import Callable
 from pathlib import Path
-from typing import Annotated, TextIO
+from typing import Annotated, Any, TextIO
 
 import typer
 
@@ -35,7 +35,8 @@ def main() -> None:
     """Run the command line; the entry point of `mufitter`."""
     for stream in (sys.stdout, sys.stderr):
         # A terminal that cannot show Ω must not end a fit.
-        stream.reconfigure(errors="replace")
+        if hasattr(stream, "reconfigure"):
+            stream.reconfigure(errors="replace")
     app(prog_name="mufitter")
 
 
@@ -187,7 +188,7 @@ def _compare(
 
     one = what[0] if len(what) == 1 and not what[0].is_dir() else what
     tell = None if quiet else lambda text: _say(f"  {text}")
-    options = {
+    options: dict[str, Any] = {
         "names": name or None,
         "reference": reference,
         "scale": scale,
@@ -236,7 +237,7 @@ def _stress(
     """Does the answer survive? Refit without each group, cut, systematic and prior; single supernovae; residuals."""
     from fitter.studies import Place, stress
 
-    running = {"processes": processes, "scheduler": scheduler, "progress": _counting(quiet)}
+    running: dict[str, Any] = {"processes": processes, "scheduler": scheduler, "progress": _counting(quiet)}
     study = stress(config, Place(run_folder, replace, resume), **running, allow_code=allow_code)
     _print_study(study, json_, quiet)
 
@@ -266,7 +267,7 @@ def _rehearse(
     from fitter.studies import MockOptions, Place, parse_truth, rehearse
 
     options = MockOptions(mocks, parse_truth(truth), draw_from, "sampler" if sampler else "quick")
-    running = {"processes": processes, "scheduler": scheduler, "progress": _counting(quiet)}
+    running: dict[str, Any] = {"processes": processes, "scheduler": scheduler, "progress": _counting(quiet)}
     study = rehearse(config, options, Place(run_folder, replace, resume), **running, allow_code=allow_code)
     _print_study(study, json_, quiet)
 

@@ -120,7 +120,7 @@ def compare(
     InputError, InputErrors
         Anything wrong with the config, the runs or the folder, before anything is fitted.
     """
-    options = {k: v for k, v in (("reference", reference), ("scale", scale), ("average", average)) if v is not None}
+    options: dict[str, Any] = {k: v for k, v in (("reference", reference), ("scale", scale), ("average", average)) if v is not None}
     _check_scale(options.get("scale"))
     if isinstance(what, Config | str | Path):
         if names is not None:
@@ -210,7 +210,7 @@ def _reduced(sample: Sample, variant: Variant) -> Sample:
     """The sample without some of its uncertainty terms, and without the record of files that only these read."""
     if not variant.without:
         return sample
-    settings = variant.config.sample
+    settings: Any = variant.config.sample
     files = {settings.table, *(f for term in settings.uncertainty for f in term.files())}
     return replace(sample.without(variant.without), sources={k: v for k, v in sample.sources.items() if k in files})
 

@@ -4,6 +4,7 @@ from __future__ import annotations
 
 from collections.abc import Sequence
 from pathlib import Path
+from typing import Any
 
 import numpy as np
 
@@ -58,7 +59,7 @@ def capsules_of_run(
         raise InputError("the data of this run came as arrays, the run folder does not have them", file=run.folder, cure=cure)
     sample = Sample.from_config(config.sample, config.folder)
     raise_all(input_problems(config, sample))
-    facts = {"title": config.title, "citation": citation}
+    facts: dict[str, Any] = {"title": config.title, "citation": citation}
     scatter = float(run.summary["fixed"].get("intrinsic_scatter", 0.0))
     found = {"capsule.json": capsule_of_sample(sample, order=order, scatter=scatter, **facts)}
     for label in dict.fromkeys([*without, *(_removable(sample) if each else ())]):

@@ -204,7 +204,7 @@ def _rehearsal(job: StudyJob, source: StudyJob, options: MockOptions):
         raise InputError("this says no truth", column="truth", value=truth, cure="Give `best`, `prior` or values such as omega_m=0.3")
     if truth == "best":
         truth = best_truth(source.setup, source.seed(_REHEARSAL))
-    values = None if truth == "prior" else dict(truth)
+    values = dict(truth) if isinstance(truth, dict) else None
     return Rehearsal(job.setup, source.setup, values, options.mocks, options.method, job.config.sampling)
 
 
@@ -289,7 +289,7 @@ def _planned_config(path: Path, allow_code: bool) -> Config | None:
     document = read_yaml(path)
     sample = document.data.get("sample")
     columns = sample.get("columns") if isinstance(sample, dict) else None
-    if not isinstance(columns, dict) or "redshift" not in columns or {"distance_modulus", "magnitude"} & set(columns):
+    if sample is None or not isinstance(columns, dict) or "redshift" not in columns or {"distance_modulus", "magnitude"} & set(columns):
         return None
     role = "magnitude" if "calibrator_modulus" in columns else "distance_modulus"
     data = {**document.data, "sample": {**sample, "columns": {**columns, role: columns["redshift"]}}}

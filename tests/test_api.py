@@ -127,7 +127,7 @@ def test_resuming_a_finished_run_returns_it(result, sample):
 
 
 def test_a_run_that_stopped_at_its_limit_continues_to_the_same_chain(sample, tmp_path, monkeypatch):
-    monkeypatch.setattr("fitter.api._draw", lambda *_: None)
+    monkeypatch.setattr("fitter.api._draw", lambda *_: {})
     long = {**SAMPLING, "target_ess": 3_000}
     settings = {"sample": sample, "model": "flat_lcdm"}
     stopped = fit(**settings, sampling={**long, "max_steps": 40}, run_folder=tmp_path / "a")

@@ -203,7 +203,8 @@ def _looks(runs, given: dict):
         changed = FigureSettings.model_validate({**how.model_dump(), **given})
     except ValidationError as error:
         first = error.errors(include_url=False)[0]
-        option = {"formats": "format"}.get(first["loc"][0], first["loc"][0])
+        key = str(first["loc"][0])
+        option = {"formats": "format"}.get(key, key)
         raise InputError(f"--{option}: {str(first['msg']).removeprefix('Value error, ')}", value=first["input"]) from None
     style = None if how.style is None else runs[0].folder / Path(how.style).expanduser()
     return changed, labels, style

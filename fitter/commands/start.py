@@ -50,7 +50,7 @@ def _say_checked(target: Path) -> None:
     print(f"Written to {target}", file=sys.stderr)
     if not found.ok:
         raise InputErrors(found.problems)
-    for text in found.sample.warnings:
+    for text in found.sample.warnings if found.sample is not None else ():
         print(f"Warning: {text}", file=sys.stderr)
     print(f"Next: mufitter check {target}", file=sys.stderr)
 

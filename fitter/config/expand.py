@@ -16,6 +16,7 @@ from fitter.config.variants import folder_name
 from fitter.config.yaml_file import Document
 from fitter.errors import InputError
 from fitter.inference.seeds import child_seed
+from fitter.sample.capsule import CapsuleSettings
 from fitter.sample.settings import SampleSettings
 from fitter.sample.uncertainty.base import is_free
 
@@ -46,7 +47,7 @@ class Variant:
     folder: str
     config: Config
     without: tuple[str, ...]
-    complete_sample: SampleSettings
+    complete_sample: SampleSettings | CapsuleSettings
 
     @property
     def data_key(self) -> str:
@@ -74,12 +75,12 @@ def expand(config: Config) -> list[Variant]:
         used |= known
         found, complete, wrong = validate(document, config.folder, allow_code=config._allow_code)
         without = config.variants[i].without
-        if found is not None and without:
+        if found is not None and without and complete is not None:
             document, wrong = _without(document, complete, without, config, i)
             found, _, more = validate(document, config.folder, allow_code=config._allow_code)
             wrong += more
         problems += wrong
-        if found is not None:
+        if found is not None and complete is not None:
             name = config.variants[i].name
             variants.append(Variant(name, folder_name(i, name), found, tuple(without), complete))
     unused = [n for n in config.document.data.get("parameters") or {} if n not in used]
@@ -119,7 +120,7 @@ def _document(config: Config, i: int) -> tuple[Document, set[str]]:
         data["sample"]["uncertainty"] = variant["uncertainty"]
     seed = child_seed(np.random.SeedSequence(config.sampling.seed), _VARIANT_SEED, i).generate_state(1)[0]
     data["sampling"] = {**(data.get("sampling") or {}), "seed": int(seed), **(variant.get("sampling") or {})}
-    lines = {_place(path, i): row for path, row in config.document.lines.items() if _place(path, i) is not None}
+    lines = {place: row for path, row in config.document.lines.items() if (place := _place(path, i)) is not None}
     document = Document(data, lines, config.document.path)
     given, known = base.get("parameters") or {}, _known(config, document)
     kept = {n: v for n, v in given.items() if known is None or n in known}
@@ -127,7 +128,9 @@ def _document(config: Config, i: int) -> tuple[Document, set[str]]:
     return document, set(kept)
 
 
-def _without(document: Document, complete: SampleSettings, labels: list[str], config: Config, i: int) -> tuple[Document, list[InputError]]:
+def _without(
+    document: Document, complete: SampleSettings | CapsuleSettings, labels: list[str], config: Config, i: int
+) -> tuple[Document, list[InputError]]:
     """The document with some uncertainty terms removed from its list."""
     names = term_labels(complete)
     keys = ("variants", i, "without")
@@ -140,11 +143,12 @@ def _without(document: Document, complete: SampleSettings, labels: list[str], co
     return replace(document, data={**document.data, "sample": {**sample, "uncertainty": kept or sample["uncertainty"]}}), wrong
 
 
-def term_labels(sample: SampleSettings) -> list[str | None]:
+def term_labels(sample: SampleSettings | CapsuleSettings) -> list[str | None]:
     """Label of each uncertainty term, numbered where several have the same; None for a free parameter, which is no term."""
-    labels, seen = [], Counter()
+    labels: list[str | None] = []
+    seen: Counter[str] = Counter()
     for item in sample.uncertainty:
-        if item.kind == "covariance_scale" or (item.kind == "intrinsic" and is_free(item.intrinsic)):
+        if item.kind == "covariance_scale" or (item.kind == "intrinsic" and is_free(getattr(item, "intrinsic", None))):
             labels.append(None)
             continue
         label = item.label or item.default_label()

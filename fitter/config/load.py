@@ -18,7 +18,7 @@ from fitter.cosmology import Model
 from fitter.errors import InputError, InputErrors
 from fitter.sample.capsule import AnySample, CapsuleSettings, read_capsule
 
-__all__ = ["config_from_mapping", "load_config", "raise_all", "validate"]
+__all__ = ["config_from_mapping", "load_config", "described", "raise_all", "valid", "validate"]
 
 
 def load_config(path: str | Path, *, allow_code: bool = False) -> Config:
@@ -44,8 +44,7 @@ def load_config(path: str | Path, *, allow_code: bool = False) -> Config:
     """
     document = read_yaml(path)
     config, _, problems = validate(document, Path(path).parent, allow_code=allow_code)
-    raise_all(problems)
-    return config
+    return valid(config, problems)
 
 
 def config_from_mapping(data: Mapping[str, Any], *, folder: str | Path = ".", sample=None, allow_code: bool = False) -> Config:
@@ -67,7 +66,14 @@ def config_from_mapping(data: Mapping[str, Any], *, folder: str | Path = ".", sa
     Config
     """
     config, _, problems = validate(Document(dict(data)), Path(folder), sample, allow_code=allow_code)
+    return valid(config, problems)
+
+
+def valid(config: Config | None, problems: list[InputError]) -> Config:
+    """Return a config that has no problems; raise them if it has."""
     raise_all(problems)
+    if config is None:
+        raise InputError("this config cannot be read")
     return config
 
 
@@ -81,7 +87,7 @@ def raise_all(problems: list[InputError]) -> None:
 
 def validate(
     document: Document, folder: Path, arrays=None, *, allow_code: bool = False
-) -> tuple[Config | None, SampleSettings | None, list[InputError]]:
+) -> tuple[Config | None, SampleSettings | CapsuleSettings | None, list[InputError]]:
     """Validate a document.
 
     Parameters
@@ -121,9 +127,10 @@ def validate(
     return (None if problems else config), sample, problems
 
 
-def _sample_settings(document: Document) -> SampleSettings | None:
+def _sample_settings(document: Document) -> SampleSettings | CapsuleSettings | None:
     try:
-        return TypeAdapter(AnySample).validate_python(document.data.get("sample"))
+        adapter: TypeAdapter[SampleSettings | CapsuleSettings] = TypeAdapter(AnySample)
+        return adapter.validate_python(document.data.get("sample"))
     except (ValidationError, InputError):
         return None
 

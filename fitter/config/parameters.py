@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 import math
+from typing import Any
 
 from fitter.config.problems import nearest
 from fitter.config.yaml_file import Document
@@ -12,7 +13,7 @@ from fitter.parameters import PARAMETERS, Parameter
 
 __all__ = ["FLAT", "complete_parameters", "free_parameters", "parameter_problems"]
 
-FLAT = {"flat": []}
+FLAT: dict[str, list[float]] = {"flat": []}
 """How a config writes the improper flat prior of the absolute magnitude."""
 
 _DARK_ENERGY = ("omega_lambda", "omega_de", "omega_k")
@@ -43,7 +44,10 @@ def complete_parameters(
     given: dict, model: str | Model, distance_scale: str, data_kind: str = "distance_modulus"
 ) -> dict[str, dict | float]:
     """Return every parameter with its prior or fixed value, the defaults filled in, in reporting order."""
-    return {name: given.get(name, p.default_prior) for name, p in free_parameters(model, distance_scale, data_kind).items()}
+    complete: dict[str, Any] = {
+        name: given.get(name, p.default_prior) for name, p in free_parameters(model, distance_scale, data_kind).items()
+    }
+    return complete
 
 
 def parameter_problems(
@@ -110,9 +114,9 @@ def _why_no_density(name: str, model: str, known: list[str]) -> tuple[str, str]:
     return f"the dark-energy density of {model} is called {other}", f"Write `{other}` instead"
 
 
-def _value_problem(name: str, value, default: dict, document: Document) -> InputError | None:
+def _value_problem(name: str, value, default: dict | None, document: Document) -> InputError | None:
     keys = ("parameters", name)
-    example = default if default != FLAT else {"normal": [-19.25, 0.03]}
+    example = default if default and default != FLAT else {"normal": [-19.25, 0.03]}
     ((kind, numbers),) = example.items()
     cure = f"Write a prior, e.g. `{name}: {{{kind}: {numbers}}}`, or a number to hold it fixed"
     if isinstance(value, bool) or not isinstance(value, dict | int | float):

@@ -181,7 +181,7 @@ def _unknown_key(entry: dict, keys: tuple[Key, ...], model: type[BaseModel], doc
         cure = "A colon after a key must be followed by a space. "
     else:
         cure = f"Did you mean `{near}`? " if near else ""
-    return document.error(f"there is no key `{key}` here", keys, cure=cure + _known(known))
+    return document.error(f"there is no key `{key}` here", keys, cure=cure + (_known(known) or ""))
 
 
 def _known(keys: list[str]) -> str | None:

@@ -120,7 +120,7 @@ class Config(BaseModel):
     @property
     def cosmology(self) -> Model:
         """The model itself, built in or from a file."""
-        return get_model(self.model) if self._cosmology is None else self._cosmology
+        return get_model(str(self.model)) if self._cosmology is None else self._cosmology
 
     @property
     def model_sources(self) -> dict[str, str]:
@@ -139,12 +139,11 @@ class Config(BaseModel):
 
     def changed(self, changes: Mapping[str, Any]) -> Config:
         """Return the same settings with sections, or single keys such as ``sampling.seed``, replaced; validated again."""
-        from fitter.config.load import raise_all, validate
+        from fitter.config.load import valid, validate
 
         data = dict(self.document.data)
         for key, value in changes.items():
             section, _, name = key.partition(".")
             data[section] = {**(data.get(section) or {}), name: value} if name else value
         config, _, problems = validate(Document(data, self.document.lines, self.path), self.folder, allow_code=self._allow_code)
-        raise_all(problems)
-        return config
+        return valid(config, problems)

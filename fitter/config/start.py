@@ -189,7 +189,7 @@ class _Draft:
             self.guesses.append(f"{path.name}: an inverse covariance, since its median diagonal element is {np.median(diagonal):.3g}")
             return "precision", True
         errors = f"its median error is {np.sqrt(abs(np.median(diagonal))):.3g} mag"
-        if sigma is not None and np.mean(diagonal >= 0.98 * variance) > 0.95:
+        if variance is not None and np.mean(diagonal >= 0.98 * variance) > 0.95:
             self.guesses.append(f"{path.name}: a covariance that holds the sigma column already, since {errors}; that is not added")
             return "covariance", True
         beside = "" if sigma is None else f", below the {np.nanmedian(sigma):.3g} of the sigma column, which is added"

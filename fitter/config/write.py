@@ -99,10 +99,8 @@ class _Line(dict):
     """A section on one line, in braces."""
 
 
-for _kind, _flow in ((_Block, False), (_Line, True)):
-    _Dumper.add_representer(
-        _kind, lambda dumper, data, flow=_flow: dumper.represent_mapping("tag:yaml.org,2002:map", data, flow_style=flow)
-    )
+_Dumper.add_representer(_Block, lambda dumper, data: dumper.represent_mapping("tag:yaml.org,2002:map", data, flow_style=False))
+_Dumper.add_representer(_Line, lambda dumper, data: dumper.represent_mapping("tag:yaml.org,2002:map", data, flow_style=True))
 
 
 def config_text(settings: dict[str, Any], header: list[str]) -> str:

@@ -157,7 +157,8 @@ class _Walk:
             raise InputError(problem, file=self.path, row=node.start_mark.line + 1, value=_shorten(node.value)) from None
 
     def _mapping(self, node: yaml.MappingNode, keys: tuple[Key, ...]) -> dict:
-        result, first_line = {}, {}
+        result: dict = {}
+        first_line: dict = {}
         for key_node, value_node in node.value:
             line = key_node.start_mark.line + 1
             key = self.value(key_node, keys) if isinstance(key_node, yaml.ScalarNode) else None

@@ -183,7 +183,7 @@ class CapsuleKernel(Kernel):
 
     def with_data(self, data) -> NoReturn:
         """Refuse: there are no rows to put other data in."""
-        raise InputError("a capsule has no rows, so mock data cannot be put in their place", cure="This needs the original data")
+        raise _no_rows()
 
 
 class CapsulePosterior(LogPosterior):
@@ -229,12 +229,16 @@ class CapsulePosterior(LogPosterior):
 
     def with_data(self, data) -> NoReturn:
         """Refuse: there are no rows."""
-        self.kernel.with_data(data)
+        raise _no_rows()
 
     def expected(self, theta) -> NoReturn:
         """Refuse: there are no rows."""
-        self.kernel.with_data(theta)
+        raise _no_rows()
 
     def simulate(self, theta, rng) -> NoReturn:
         """Refuse: there are no rows."""
-        self.kernel.with_data(theta)
+        raise _no_rows()
+
+
+def _no_rows() -> InputError:
+    return InputError("a capsule has no rows, so mock data cannot be put in their place", cure="This needs the original data")

@@ -94,7 +94,8 @@ class LogPosterior:
         """
         model = get_model(model_name) if isinstance(model_name, str) else model_name
         wanted = dict(parameters or {})
-        priors, fixed = {}, {}
+        priors: dict[str, Prior] = {}
+        fixed: dict[str, float] = {}
         for parameter in _free_parameters(sample, model):
             _assign(parameter.name, wanted.pop(parameter.name, parameter.default_prior), priors, fixed)
         if _MAGNITUDE in wanted and _takes_magnitude(sample):

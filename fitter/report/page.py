@@ -58,9 +58,9 @@ def verdict(summary: dict) -> tuple[str, str, str]:
     """
     sampling, check, fit = summary["sampling"], summary.get("cross_check") or {}, summary["best_fit"]
     agrees, p = check.get("agrees"), fit.get("p_value")
-    crossed = {True: "a second method finds the same posterior", False: "a second method DISAGREES"}.get(
-        agrees, "no second method was applied"
-    )
+    crossed = "no second method was applied"
+    if agrees is not None:
+        crossed = "a second method finds the same posterior" if agrees else "a second method DISAGREES"
     state = "the chains have converged" if sampling.get("converged") else "the chains have NOT converged"
     quality = f"χ²/dof = {fit['chi2'] / fit['dof']:.3f}" if fit["dof"] > 0 else "there are no degrees of freedom to judge the fit by"
     reasons = f"{state}; {crossed}; {quality}" + (f" (p = {plain_number(p, 2)})." if p is not None else ".")

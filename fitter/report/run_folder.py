@@ -12,6 +12,7 @@ from contextlib import contextmanager
 from dataclasses import dataclass
 from functools import cached_property
 from pathlib import Path
+from typing import TextIO
 
 from fitter.errors import InputError
 from fitter.parameters import declare_again
@@ -108,7 +109,7 @@ class RunFolder:
         self.path = self.target.with_name(self.target.name + ".unfinished")
         self._old = self.target.with_name(f".{self.target.name}.replaced-by-mufitter")
         self.replace = replace
-        self._lock = None
+        self._lock: TextIO | None = None
 
     def check_target(self, *, resume: bool = False) -> None:
         """Refuse a target that holds something else, or an earlier run without leave to replace it.

@@ -71,7 +71,7 @@ class Capsule(BaseModel):
 
     model_config = ConfigDict(frozen=True)
 
-    format: Literal["mufitter capsule 1"] = Field(CAPSULE_SCHEMA, alias="schema")
+    format: Literal["mufitter capsule 1"] = Field("mufitter capsule 1", alias="schema")
     title: str = ""
     citation: str = ""
     made_by: str = ""
@@ -112,7 +112,7 @@ class Capsule(BaseModel):
 
     def digest(self) -> str:
         """SHA-256 of the numbers, in the order factor, y, reference, rho2, log_norm, as little-endian doubles."""
-        numbers = [unpack(self.factor), unpack(self.y), unpack(self.reference), [self.rho2, self.log_norm]]
+        numbers = [unpack(self.factor), unpack(self.y), unpack(self.reference), np.array([self.rho2, self.log_norm])]
         return hashlib.sha256(np.concatenate(numbers).astype("<f8").tobytes()).hexdigest()
 
     def text(self) -> str:
@@ -189,7 +189,7 @@ class CapsuleSample(Sample):
     def of(cls, capsule: Capsule, sources: dict[str, str] | None = None) -> CapsuleSample:
         """Return the sample that a capsule stands for."""
         z = np.array([capsule.redshift_min, capsule.redshift_max])
-        terms = tuple(SimpleNamespace(**t, variance=np.array([t["median_sigma"] ** 2])) for t in capsule.terms)
+        terms: Any = tuple(SimpleNamespace(**t, variance=np.array([t["median_sigma"] ** 2])) for t in capsule.terms)
         modes = np.tile([a.sigma for a in capsule.amplitudes], (2, 1)).reshape(2, -1)
         dense = np.zeros((2, 2)) if capsule.correlated else None
         noise = Noise(np.ones(2), dense, None, modes, tuple(a.name for a in capsule.amplitudes))

@@ -9,6 +9,8 @@ from pydantic import BaseModel, BeforeValidator, ConfigDict, Field, model_valida
 
 from fitter.sample.uncertainty import AnyTerm
 from fitter.sample.uncertainty.base import ColumnRef, PathText, is_free
+from fitter.sample.uncertainty.covariance_scale import CovarianceScale
+from fitter.sample.uncertainty.intrinsic import Intrinsic
 
 __all__ = ["Columns", "Keep", "Rule", "RuleSettings", "SampleSettings"]
 
@@ -125,12 +127,13 @@ class SampleSettings(_Section):
     @property
     def intrinsic_prior(self) -> dict | None:
         """Prior of a fitted intrinsic scatter."""
-        return next((t.intrinsic for t in self.uncertainty if t.kind == "intrinsic" and is_free(t.intrinsic)), None)
+        found = [t.intrinsic for t in self.uncertainty if isinstance(t, Intrinsic) and isinstance(t.intrinsic, dict)]
+        return found[0] if found else None
 
     @property
     def covariance_scale_prior(self) -> dict | float | None:
         """Prior, or held value, of the factor on all errors."""
-        return next((t.covariance_scale for t in self.uncertainty if t.kind == "covariance_scale"), None)
+        return next((t.covariance_scale for t in self.uncertainty if isinstance(t, CovarianceScale)), None)
 
     @model_validator(mode="before")
     @classmethod

@@ -10,12 +10,15 @@ import subprocess
 import numpy as np
 import pytest
 
-from fitter import Sample, fit
+from fitter import InputError, Sample, fit
 from fitter.report.page import page_text, verdict
+from fitter.report.terminal import cell_text
 from fitter.sharing import write_page
 
 BROWSER = next((path for name in ("chromium", "chromium-browser", "google-chrome") if (path := shutil.which(name))), None)
 in_browser = pytest.mark.skipif(BROWSER is None, reason="no Chromium here (Debian: apt-get install chromium)")
+
+SAMPLING = {"replicas": 2, "walkers": 32, "target_ess": 400}
 
 # Runs in the page: what a reader would do, and what would annoy.
 PROBE = """<script>
@@ -51,9 +54,8 @@ def run(tmp_path_factory):
     z = np.linspace(0.02, 0.9, 60)
     mu = 5 * np.log10(z * (1 + 0.775 * z)) + 43.16 + 0.1 * rng.standard_normal(60)
     sample = Sample.from_arrays(z, mu, sigma=0.1, distance_scale="absolute")
-    sampling = {"replicas": 2, "walkers": 32, "target_ess": 400}
     folder = tmp_path_factory.mktemp("page") / "rün folder"
-    return fit(title="Sixty <b> & “more”", sample=sample, model="flat_lcdm", sampling=sampling, run_folder=folder)
+    return fit(title="Sixty <b> & “more”", sample=sample, model="flat_lcdm", sampling=SAMPLING, run_folder=folder)
 
 
 @pytest.fixture(scope="module")
@@ -104,6 +106,17 @@ def test_verdicts(run):
         assert words in page_text(summary, "", {})
     bare = {**copy.deepcopy(good), "cross_check": None, "provenance": {}, "sample": {**good["sample"], "terms": []}, "warnings": []}
     assert "nothing to warn of" in page_text(bare, "", {})
+
+
+def test_a_blinded_page_shows_no_value(run, tmp_path):
+    """Neither in a table nor in a figure, of which only those of shifted parameters are there; and it is not made again from outside."""
+    blind = fit(sample=run.sample, model="flat_lcdm", sampling=SAMPLING, blind=True, run_folder=tmp_path / "blind")
+    page = (blind.run_folder / "report.html").read_text(encoding="utf-8")
+    assert "Central values are hidden" in page and "Hubble diagram" not in page
+    for name in ("omega_m", "H0", "age_gyr"):
+        assert cell_text(run.summary()["parameters"][name]) not in html.unescape(page)
+    with pytest.raises(InputError, match="hidden"):
+        write_page(blind.run_folder)
 
 
 @in_browser

@@ -265,6 +265,7 @@ def test_the_schema_describes_the_config():
         "compare",
         "figures",
         "labels",
+        "blind",
     }
     assert "flat_w0wa" in schema["properties"]["model"]["anyOf"][0]["enum"]
     assert "uniform" in json.dumps(schema["properties"]["parameters"]["properties"]["H0"])

@@ -270,7 +270,8 @@ def test_the_schema_describes_the_config():
     assert "flat_w0wa" in schema["properties"]["model"]["anyOf"][0]["enum"]
     assert "uniform" in json.dumps(schema["properties"]["parameters"]["properties"]["H0"])
     assert schema["properties"]["sample"] == {
-        "$ref": "#/$defs/SampleSettings",
+        "oneOf": [{"$ref": "#/$defs/SampleSettings"}, {"$ref": "#/$defs/CapsuleSettings"}],
+        "title": "Sample",
         "description": schema["properties"]["sample"]["description"],
     }
     assert schema["additionalProperties"] is False

@@ -16,6 +16,8 @@ FIRST_STEPS = 200
 RHAT_LIMIT = 1.01
 LENGTH_IN_TAU = 50
 BURN_IN_IN_TAU = 10
+# The standard deviation may be known from half the target: to 1 % at 10,000 / 2.
+SPREAD_SHARE = 0.5
 
 
 @dataclass(frozen=True)
@@ -48,8 +50,8 @@ class Status:
 
     @property
     def ess(self) -> float:
-        """The smallest effective sample size, NaN if one is unknown."""
-        return float(np.min([*self.bulk.values(), *self.tail.values(), *self.spread.values()]))
+        """The smallest effective sample size, that of the standard deviation counted double; NaN if one is unknown."""
+        return float(np.min([*self.bulk.values(), *self.tail.values(), *(v / SPREAD_SHARE for v in self.spread.values())]))
 
 
 def assess(chain, names, target_ess: float) -> Status:
@@ -94,9 +96,12 @@ def _lacking(status, target_ess):
             out.append(f"{name}: the chain is {length} steps, {length / tau if tau > 0 else nan:.0f} autocorrelation times; 50 are needed")
         if not status.rhat[name] < RHAT_LIMIT:
             out.append(f"{name}: the replicas disagree, R-hat = {status.rhat[name]:.3f}; below 1.01 is needed")
-        ess = min(status.bulk[name], status.tail[name], status.spread[name])
+        ess = min(status.bulk[name], status.tail[name])
         if not ess >= target_ess:
             out.append(f"{name}: effective sample size {ess:.0f}; {target_ess:.0f} is asked for")
+        if not status.spread[name] >= SPREAD_SHARE * target_ess:
+            wanted = SPREAD_SHARE * target_ess
+            out.append(f"{name}: effective sample size {status.spread[name]:.0f} for the standard deviation; {wanted:.0f} is asked for")
     return tuple(out)
 
 

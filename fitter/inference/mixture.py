@@ -7,7 +7,7 @@ from math import lgamma, log, pi
 
 import numpy as np
 
-__all__ = ["StudentMixture", "fit_mixture"]
+__all__ = ["StudentMixture", "blend", "fit_mixture"]
 
 
 @dataclass(frozen=True)
@@ -60,6 +60,17 @@ class StudentMixture:
         constant = lgamma((self.nu + d) / 2) - lgamma(self.nu / 2) - d / 2 * log(self.nu * pi)
         height = np.log(self.weights) + log_det + constant
         return height[:, None] - (self.nu + d) / 2 * np.log1p(distance / self.nu), distance
+
+
+def blend(first: StudentMixture, second: StudentMixture, share: float) -> StudentMixture:
+    """Return the mixture of two mixtures (of the same ν), the second with the weight `share`."""
+    return StudentMixture(
+        np.concatenate([(1 - share) * first.weights, share * second.weights]),
+        np.concatenate([first.means, second.means]),
+        np.concatenate([first.factors, second.factors]),
+        np.concatenate([first.inverses, second.inverses]),
+        first.nu,
+    )
 
 
 def fit_mixture(
@@ -144,13 +155,8 @@ def _bisections(y, components):
 
 def _with_broad(fitted, whole, weight):
     factor = np.linalg.cholesky(whole)[None]
-    return StudentMixture(
-        np.append((1 - weight) * fitted.weights, weight),
-        np.vstack([fitted.means, np.zeros(len(whole))]),
-        np.concatenate([fitted.factors, factor]),
-        np.concatenate([fitted.inverses, np.linalg.inv(factor)]),
-        fitted.nu,
-    )
+    broad = StudentMixture(np.ones(1), np.zeros((1, len(whole))), factor, np.linalg.inv(factor), fitted.nu)
+    return blend(fitted, broad, weight)
 
 
 def _maximisation(y, share, pull, floor, nu):

@@ -4,7 +4,7 @@ from __future__ import annotations
 
 import numpy as np
 
-from fitter.inference.mixture import StudentMixture, fit_mixture
+from fitter.inference.mixture import StudentMixture, blend, fit_mixture
 from fitter.inference.optimum import prior_draws
 
 __all__ = ["pilot_mixture"]
@@ -13,8 +13,10 @@ __all__ = ["pilot_mixture"]
 _DRAWS = 16384
 _ROUNDS = 8
 _FULL_ROUNDS = 3
-# The target is the posterior density to this power: wider than the posterior, so that no place is proposed far too rarely.
-_FLATTENED = 0.6
+# One half of the mixture is fitted to the posterior density to the first of these powers, which is a little wider than the
+# posterior, the other to the second one, for tails that are thin and long; then the share of the other in the proposals.
+_FLATTENED = (0.6, 0.25)
+_TAIL_SHARE = 0.3
 # Fewer effective draws than this, and a round aims at a flatter target still.
 _FEWEST = 300
 
@@ -23,7 +25,7 @@ def pilot_mixture(log_posterior, optimum, seed: np.random.SeedSequence) -> Stude
     """Fit a Student-t mixture to a flattened posterior by repeated importance sampling.
 
     The first draws come from the prior and from a wide Student-t around the optimum; each round weights its draws by
-    density^β / q, fits a mixture to a resample of them, and draws the next ones from it.
+    density^β / q, fits mixtures to resamples of them for two powers β, and draws the next ones from these.
 
     Parameters
     ----------
@@ -45,13 +47,17 @@ def pilot_mixture(log_posterior, optimum, seed: np.random.SeedSequence) -> Stude
     draws = min(2048 * 2**n, _DRAWS)
     points, log_q = _first_draws(log_posterior, optimum, draws // 2, rng)
     components = 2 ** min(2 + n, 6)
+    more = {"iterations": 5, "broad": 0.05, "ridge": 1e-4, "bisect": True}
     mixture = None
     for turn in range(_ROUNDS):
         values = np.asarray(log_posterior(points))
         if np.isfinite(values).sum() < 4 * components:
             break
-        chosen = _resample(points, _weights(values, log_q), len(points) // 2, rng)
-        mixture = fit_mixture(chosen, components, iterations=5, broad=0.05, ridge=1e-4, bisect=True)
+        body, tails = (
+            fit_mixture(_resample(points, _weights(values, log_q, power), len(points) // 2, rng), components, **more)
+            for power in _FLATTENED
+        )
+        mixture = blend(body, tails, _TAIL_SHARE)
         points = mixture.draw(rng, draws if turn >= _ROUNDS - 1 - _FULL_ROUNDS else draws // 4)
         log_q = mixture.log_density(points)
     return _around(optimum) if mixture is None else mixture
@@ -73,9 +79,8 @@ def _first_draws(log_posterior, optimum, size, rng):
     return points, log_q
 
 
-def _weights(values, log_q):
-    """density^β / q, normalised, with the largest β up to the wanted one that leaves enough effective draws."""
-    power = _FLATTENED
+def _weights(values, log_q, power):
+    """density^β / q, normalised, with the largest β up to `power` that leaves enough effective draws."""
     while True:
         log_w = power * values - log_q
         w = np.exp(log_w - log_w.max())

@@ -23,7 +23,7 @@ paper: $(VENV)/.installed
 	else echo "No LaTeX here: paper/manuscript.tex is ready for one."; fi
 
 test: $(VENV)/.installed-test lint
-	$(BIN)/python -m pytest
+	$(BIN)/python -m pytest -n 2 --dist loadfile
 
 lint: $(VENV)/.installed-test
 	$(BIN)/ruff check .

@@ -23,7 +23,9 @@ class Transition(Model):
     name = "transition"
     parameters = (
         PARAMETERS["omega_m"],
-        Parameter("step", r"\Delta_\mathrm{DE}", "Δ_DE", "", "relative excess of the dark-energy density before the step", {"uniform": [-1, 1]}),
+        Parameter(
+            "step", r"\Delta_\mathrm{DE}", "Δ_DE", "", "relative excess of the dark-energy density before the step", {"uniform": [-1, 1]}
+        ),
         Parameter("z_step", r"z_\mathrm{step}", "z_step", "", "redshift of the step", {"uniform": [0.1, 1]}),
     )
 

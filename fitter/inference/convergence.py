@@ -108,7 +108,8 @@ def _lacking(status, target_ess):
 def next_length(status: Status, target_ess: float, max_steps: int) -> int:
     """Steps at which to look again: what the rates measured so far say is needed, with a small margin.
 
-    Early estimates of τ are too small, so a chain at most quadruples; one whose replicas disagree at least doubles.
+    Early estimates of τ are too small, and those of the ESS scatter, so a chain grows at most
+    2.5 times; one whose replicas disagree at least doubles.
     """
     kept = status.steps - status.burn_in
     tau = max(status.tau.values())
@@ -117,5 +118,5 @@ def next_length(status: Status, target_ess: float, max_steps: int) -> int:
     wanted = max(1.08 * LENGTH_IN_TAU * tau, 1.05 * kept * target_ess / status.ess) + BURN_IN_IN_TAU * tau
     if not max(status.rhat.values()) < RHAT_LIMIT:
         wanted = max(wanted, 2 * status.steps)
-    wanted = min(max(wanted, 1.1 * status.steps), 4 * status.steps)
+    wanted = min(max(wanted, 1.1 * status.steps), 2.5 * status.steps)
     return min(ceil(wanted / 10) * 10, max_steps)

@@ -11,11 +11,13 @@ __all__ = ["pilot_mixture"]
 
 # Draws of the last rounds, at most; the first ones, which only find the place, take a quarter of them.
 _DRAWS = 16384
-_ROUNDS = 8
-_FULL_ROUNDS = 3
+_FEWEST_ROUNDS, _MOST_ROUNDS = 7, 14
+_SMALL_ROUNDS = 4
+# Efficiency as an importance density for the posterior that makes further rounds pointless.
+_GOOD = 0.45
 # One half of the mixture is fitted to the posterior density to the first of these powers, which is a little wider than the
 # posterior, the other to the second one, for tails that are thin and long; then the share of the other in the proposals.
-_FLATTENED = (0.6, 0.25)
+_FLATTENED = (0.6, 0.15)
 _TAIL_SHARE = 0.3
 # Fewer effective draws than this, and a round aims at a flatter target still.
 _FEWEST = 300
@@ -49,16 +51,18 @@ def pilot_mixture(log_posterior, optimum, seed: np.random.SeedSequence) -> Stude
     components = 2 ** min(2 + n, 6)
     more = {"iterations": 5, "broad": 0.05, "ridge": 1e-4, "bisect": True}
     mixture = None
-    for turn in range(_ROUNDS):
+    for turn in range(_MOST_ROUNDS):
         values = np.asarray(log_posterior(points))
         if np.isfinite(values).sum() < 4 * components:
+            break
+        if turn >= _FEWEST_ROUNDS and _efficiency(values - log_q) > _GOOD:
             break
         body, tails = (
             fit_mixture(_resample(points, _weights(values, log_q, power), len(points) // 2, rng), components, **more)
             for power in _FLATTENED
         )
         mixture = blend(body, tails, _TAIL_SHARE)
-        points = mixture.draw(rng, draws if turn >= _ROUNDS - 1 - _FULL_ROUNDS else draws // 4)
+        points = mixture.draw(rng, draws // 4 if turn < _SMALL_ROUNDS else draws)
         log_q = mixture.log_density(points)
     return _around(optimum) if mixture is None else mixture
 
@@ -77,6 +81,11 @@ def _first_draws(log_posterior, optimum, size, rng):
     with np.errstate(divide="ignore"):
         log_q = np.logaddexp(np.log(share) + log_posterior.log_prior(points), np.log(1 - share) + local.log_density(points))
     return points, log_q
+
+
+def _efficiency(log_w):
+    w = np.exp(log_w - log_w.max())
+    return w.sum() ** 2 / (w**2).sum() / len(w)
 
 
 def _weights(values, log_q, power):

@@ -32,7 +32,7 @@ class SamplingSettings(BaseModel):
     seed : int
         The one number that all randomness of a fit comes from.
     move : {"mixture", "stretch"}
-        ``mixture`` proposes from a Student-t mixture fitted to half of the ensemble (`fitter.inference.moves`);
+        ``mixture`` proposes from Student-t mixtures fitted beforehand and to half of the ensemble (`fitter.inference.moves`);
         ``stretch`` is emcee's default, ten times slower or more on curved posteriors.
     """
 

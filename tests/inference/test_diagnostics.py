@@ -55,6 +55,14 @@ def test_walkers_that_move_together_are_not_independent():
     assert d.ess_tail(x) < 3 * exact
 
 
+def test_ess_of_the_standard_deviation_counts_gaussian_draws():
+    x = ar1(0.0, s=4000)
+    assert 0.6 * x.size < d.ess_sd(x) < 1.15 * x.size
+    # Kurtosis κ: relative variance of the variance (κ − 1) / n, for the Laplace distribution (κ = 6) 5 / n.
+    laplace = RNG.laplace(size=(4, 4000, 16))
+    assert 0.55 * laplace.size * 2 / 5 < d.ess_sd(laplace) < 1.25 * laplace.size * 2 / 5
+
+
 def test_mcse_of_the_mean_is_the_scatter_of_means():
     runs = [ar1(0.7, r=2, s=400, w=8, seed=k) for k in range(60)]
     scatter = np.std([x.mean() for x in runs])

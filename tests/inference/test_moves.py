@@ -6,7 +6,8 @@ from emcee import EnsembleSampler
 from emcee.state import State
 
 from fitter.inference.diagnostics import mcse_mean
-from fitter.inference.moves import MixtureMove, ensemble_moves
+from fitter.inference.mixture import fit_mixture
+from fitter.inference.moves import DifferenceMove, MixtureMove, PilotMove, ensemble_moves
 
 
 def exact_draws(name, n, rng):
@@ -82,9 +83,28 @@ def test_em_iterations_keep_the_target(doubles, iterations):
     assert np.abs(pulls(chain, "banana")).max() < 4.5
 
 
-def test_default_moves_keep_the_target(doubles):
-    chain, _ = chain_of(doubles, "banana", ensemble_moves("mixture"), walkers=64, steps=2000)
-    assert np.abs(pulls(chain, "banana")).max() < 4.5
+def rough_pilot(name):
+    """A mixture fitted to few draws: not the target, nor far from it."""
+    return fit_mixture(exact_draws(name, 60, np.random.default_rng(3)), 2, iterations=2, broad=0.3)
+
+
+@pytest.mark.parametrize("name", EXACT)
+def test_pilot_move_keeps_the_target(doubles, name):
+    chain, sampler = chain_of(doubles, name, PilotMove(rough_pilot(name)))
+    assert 0.1 < sampler.acceptance_fraction.mean() < 0.95
+    assert np.abs(pulls(chain, name)).max() < 4.5
+
+
+@pytest.mark.parametrize("name", ["gaussian", "hard_edges"])
+def test_difference_move_keeps_the_target(doubles, name):
+    chain, _ = chain_of(doubles, name, DifferenceMove(), steps=6000)
+    assert np.abs(pulls(chain, name)).max() < 4.5
+
+
+@pytest.mark.parametrize("name", EXACT)
+def test_default_moves_keep_the_target(doubles, name):
+    chain, _ = chain_of(doubles, name, ensemble_moves("mixture", rough_pilot(name)), walkers=64, steps=2000)
+    assert np.abs(pulls(chain, name)).max() < 4.5
 
 
 class NoHastings(MixtureMove):
@@ -102,7 +122,19 @@ class OwnHalf(MixtureMove):
         return super().get_proposal(sample, [sample], random)
 
 
-@pytest.mark.parametrize("wrong", [NoHastings, OwnHalf])
+class PilotWithoutHastings(PilotMove):
+    """Forgets the factor."""
+
+    def __init__(self):
+        super().__init__(rough_pilot("gaussian"))
+        self.get_proposal = self._proposal_only
+
+    def _proposal_only(self, positions, random):
+        proposal, factors = self._propose(positions, random)
+        return proposal, 0 * factors
+
+
+@pytest.mark.parametrize("wrong", [NoHastings, OwnHalf, PilotWithoutHastings])
 def test_wrong_moves_are_caught(doubles, wrong):
     # The spread suffers most: a proposal of too heavy tails is taken as it is.
     chain, _ = chain_of(doubles, "gaussian", wrong(), walkers=16)
@@ -117,8 +149,6 @@ def test_right_move_passes_the_same_check(doubles):
 
 
 def test_hastings_factor_is_the_ratio_of_densities(doubles):
-    from fitter.inference.mixture import fit_mixture
-
     rng = np.random.default_rng(0)
     moving, frozen = rng.standard_normal((2, 20, 2))
     proposal, factors = MixtureMove(components=2).get_proposal(moving, [frozen], np.random.RandomState(1))

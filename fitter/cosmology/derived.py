@@ -56,8 +56,9 @@ def derived(model, theta, omega_r=0.0, h0=None) -> dict[str, np.ndarray]:
     omega_m, omega_de, omega_k = model.densities(theta, omega_r)
     has = {"omega_k": omega_k, "omega_lambda": omega_de, "omega_de": omega_de}
     has["q0"] = deceleration(model, np.zeros(1), theta, omega_r)[:, 0]
-    has["z_acceleration"] = _z_acceleration(model, theta, omega_r)
-    has["z_equality"] = _z_equality(model, theta, omega_r)
+    for name, epoch in (("z_acceleration", _z_acceleration), ("z_equality", _z_equality)):
+        z = epoch(model, theta, omega_r)
+        has[name] = z if model.is_flat else np.where(_expands_since(model, theta, omega_r, z), z, np.nan)
     if h0 is not None:
         has["age_gyr"] = age_gyr(model, theta, h0, omega_r)
         has["lambda_si"], has["vacuum_energy_density"] = vacuum(omega_de, h0)
@@ -128,6 +129,18 @@ def _z_equality(model, theta, omega_r):
             z = np.cbrt(omega_de / omega_m) - 1.0
         return np.where((z > 0) & np.isfinite(z), z, np.nan)
     return _first_crossing(excess, len(theta))
+
+
+def _expands_since(model, theta, omega_r, z):
+    """Whether E² stays positive from z to today, (W,): beyond a bounce there was no such epoch."""
+    # A little beyond z too: where E² passes zero q changes sign, and that is no epoch.
+    share = np.append(np.linspace(0.0, 1.0, 33), 1.0 + 1e-6)
+    out = np.zeros(len(theta), dtype=bool)
+    for start in range(0, len(theta), _CHUNK):
+        rows = slice(start, start + _CHUNK)
+        with np.errstate(invalid="ignore"):
+            out[rows] = model.e_squared(share * z[rows, None], theta[rows], omega_r[rows]).min(axis=1) > 0
+    return out
 
 
 def _first_crossing(function, n):

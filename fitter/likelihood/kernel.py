@@ -144,26 +144,31 @@ class Kernel:
     def nuisance(self, theta, omega_r, offset, linear, sigma=None, noise=None):
         """Nuisance amplitudes given the rest, (W, m): the conditional mean, plus `noise` (W, m) of unit Gaussians where given.
 
-        With a free scatter the conditional of the nearest node in σ is used.
+        With a free scatter, mean and spread at the nodes in σ are interpolated like χ². NaN where the model is outside its range.
         """
-        from scipy.linalg import solve_triangular
-
-        level = self.levels[1]
+        level, finest = self.levels[1], self.levels[-1]
         f, tail, _ = log_distance(self.model, theta, level.grid, omega_r)
         x = level.point(f, offset, linear)
         rough = tail > TAIL_TOLERANCE
         if rough.any():
-            finest = self.levels[-1]
             f, _, _ = log_distance(self.model, theta[rough], finest.grid, omega_r[rough])
             on_finest = finest.point(f, offset[rough], linear[rough])
-        nearest = np.zeros(len(theta), int) if sigma is None else self.scatter.weights(sigma).argmax(axis=1)
-        out = np.empty((len(theta), self.design.n_nuisance))
-        for node in np.unique(nearest):
-            here = nearest == node
-            c = level.nodes[node]
-            rhs = c.nuisance_y - x @ c.nuisance_x.T
+        out = np.zeros((len(theta), self.design.n_nuisance))
+        weights = self.scatter.weights(sigma) if self.scatter else np.ones((len(theta), 1))
+        for node, weight in enumerate(weights.T):
+            mean = _amplitudes(level.nodes[node], x, noise)
             if rough.any():
-                rhs[rough] = c.nuisance_y - on_finest @ self.levels[-1].nodes[node].nuisance_x.T
-            rhs = rhs[here] if noise is None else rhs[here] + noise[here]
-            out[here] = solve_triangular(c.nuisance_r, rhs.T).T
+                mean[rough] = _amplitudes(finest.nodes[node], on_finest, None if noise is None else noise[rough])
+            out += weight[:, None] * mean
         return out
+
+
+def _amplitudes(node: Compressed, x, noise):
+    """Solve for the nuisance amplitudes of one compressed likelihood, (W, m)."""
+    from scipy.linalg import solve_triangular
+
+    # The signs of R's rows are arbitrary: with a positive diagonal the spread is a smooth function of σ.
+    sign = np.sign(np.diag(node.nuisance_r))
+    right = sign * (node.nuisance_y - x @ node.nuisance_x.T)
+    right = right if noise is None else right + noise
+    return solve_triangular(sign[:, None] * node.nuisance_r, right.T, check_finite=False).T

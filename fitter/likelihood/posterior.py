@@ -15,7 +15,7 @@ from fitter.cosmology.grid import Grid
 from fitter.errors import InputError
 from fitter.likelihood.design import Design
 from fitter.likelihood.kernel import Kernel
-from fitter.likelihood.priors import Normal, Prior, Uniform, parse_prior
+from fitter.likelihood.priors import Normal, Prior, TruncatedNormal, Uniform, parse_prior
 from fitter.parameters import PARAMETERS, ZERO_POINT
 
 __all__ = ["LogPosterior", "REFERENCE_H0"]
@@ -24,6 +24,8 @@ __all__ = ["LogPosterior", "REFERENCE_H0"]
 REFERENCE_H0 = 70.0
 _MAGNITUDE = "absolute_magnitude"
 _SCATTER = "intrinsic_scatter"
+_POSITIVE = ("H0", "covariance_scale")
+_NOT_NEGATIVE = (*_POSITIVE, _SCATTER)
 _BLOCK = 16_384
 
 
@@ -146,7 +148,8 @@ class LogPosterior:
         )
         self._n_flat = flat.shape[1]
         self.n_data = s.n
-        self.n_parameters = len(self.names) + (self._n_flat or self._magnitude_template is not None)
+        # A parameter with a Gaussian prior brings a datum of its own, its prior's: it changes no number of degrees of freedom.
+        self.n_parameters = len(self.names) + self._n_flat
         self.design = self._make_design(noise, flat, gaussian, linear, shift)
 
     def _make_design(self, noise, flat, gaussian, linear, shift):
@@ -172,12 +175,9 @@ class LogPosterior:
         uniform = [isinstance(p, Uniform) for p in self.priors]
         self._log_box = -sum(np.log(p.width) for p, u in zip(self.priors, uniform, strict=True) if u)
         self._shaped = [i for i, u in enumerate(uniform) if not u]
-        # Whatever a Gaussian prior says, these cannot be negative.
         for i, name in enumerate(self.names):
-            if name in ("H0", "covariance_scale"):
+            if name in _POSITIVE:
                 self._low[i] = max(self._low[i], np.nextafter(0, 1))
-            elif name == _SCATTER:
-                self._low[i] = max(self._low[i], 0.0)
 
     # ------------------------------------------------------------------ densities
 
@@ -398,7 +398,18 @@ def _assign(name, spec, priors, fixed):
     if isinstance(spec, (int, float)) and not isinstance(spec, bool):
         fixed[name] = float(spec)
     else:
-        priors[name] = parse_prior(spec, key=f"parameters.{name}")
+        priors[name] = _physical(name, parse_prior(spec, key=f"parameters.{name}"))
+
+
+def _physical(name, prior):
+    """Cut a prior at zero, and normalise it again, where the parameter cannot be negative."""
+    if name not in _NOT_NEGATIVE or prior.low >= 0:
+        return prior
+    if prior.high <= 0:
+        raise InputError(f"{name} cannot be negative", column=f"parameters.{name}", value=prior.describe(), cure="Give it room above 0.")
+    if isinstance(prior, Uniform):
+        return Uniform(0.0, prior.high)
+    return TruncatedNormal(prior.mean, prior.sd, 0.0, prior.high)
 
 
 def _refuse_unknown(wanted, sample, model):

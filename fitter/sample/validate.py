@@ -96,7 +96,8 @@ def check_duplicates(name, group, redshift, data, place: Place, allowed: bool) -
     problems : list of InputError
     notes : list of str
     """
-    order = np.argsort(name, kind="stable")
+    # Rows of one name and group stand next to each other, so that comparing neighbours misses none.
+    order = np.argsort(name, kind="stable") if group is None else np.lexsort((group, name))
     same = (name[order][1:] == name[order][:-1]) & (name[order][1:] != "")
     first, second = order[:-1][same], order[1:][same]
     if not len(first):

@@ -40,6 +40,13 @@ def test_what_does_not_exist_is_nan():
     assert np.isnan(one("flat_wcdm", 0.3, -0.2)["z_acceleration"])  # w above −1/3 does not accelerate
 
 
+def test_epochs_before_a_bounce_are_nan():
+    # E² < 0 between z = 0.63 and the past: both families say so, with radiation and without.
+    assert np.isnan(one("curved_lcdm", 0.1, 1.7)["z_acceleration"])
+    assert np.isnan(one("curved_lcdm", 0.1, 1.7)["z_equality"])
+    assert np.isnan(one("curved_wcdm", 0.1, 1.7, -1.0001)["z_acceleration"])
+
+
 def test_no_scale_gives_nothing_that_needs_one():
     assert "age_gyr" not in one("flat_lcdm", 0.3)
     assert set(one("curved_lcdm", 0.3, 0.7, h0=70.0)) == set(derived_names(get_model("curved_lcdm"), True))

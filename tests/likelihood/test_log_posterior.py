@@ -189,6 +189,45 @@ def test_a_scatter_held_at_a_number_is_in_the_covariance(survey):
     np.testing.assert_allclose(held.log_likelihood([[0.3]]), free.log_likelihood([[0.3, 0.2]]), atol=5e-7)
 
 
+def test_a_prior_that_reaches_below_zero_is_cut_and_normalised_again(survey):
+    z, mu, covariance = survey
+    lp = LogPosterior.build(Sample.from_arrays(z, mu, covariance=covariance, intrinsic={"normal": [0, 0.1]}), "flat_lcdm")
+    assert lp.priors[1].low == 0.0
+    total, _ = quad(lambda s: np.exp(lp.log_prior([[0.3, s]])[0]), 0, 1, epsabs=1e-10)
+    assert total == pytest.approx(1.0, abs=1e-8)
+
+
+def test_degrees_of_freedom_count_what_the_data_alone_decide(calibrated):
+    sample, _, _ = calibrated
+    assert LogPosterior.build(sample, "flat_lcdm").n_parameters == 3  # Ω_m, H0, and M with a flat prior
+    gaussian = LogPosterior.build(sample, "flat_lcdm", {"absolute_magnitude": {"normal": [-19.3, 0.1]}})
+    assert gaussian.n_parameters == 2  # the prior on M is a datum that M uses up
+
+
+@pytest.mark.parametrize("sigma", [0.003, 0.11, 0.37])
+def test_amplitudes_under_a_free_scatter_are_those_of_the_scatter_held(survey, sigma):
+    z, mu, _ = survey
+    errors = np.where(np.arange(N) % 2, 0.05, 0.15)
+    noise = Noise(errors**2, modes=0.2 * (np.arange(N) < 20)[:, None], mode_names=("zero_point:low",))
+    base = Sample.from_arrays(z, mu + 0.3 * (np.arange(N) < 20), sigma=errors, intrinsic={"uniform": [0, 0.5]})
+    sample = Sample(**{k: getattr(base, k) for k in base.__dataclass_fields__} | {"noise": noise})
+    free = LogPosterior.build(sample, "flat_lcdm")
+    held = LogPosterior.build(sample, "flat_lcdm", {"intrinsic_scatter": sigma})
+    name, theta = "zero_point:low", np.full((20000, 1), 0.3)
+    assert free.best_marginalised([[0.3, sigma]])[name][0] == pytest.approx(held.best_marginalised([[0.3]])[name][0], abs=1e-7)
+    both = np.column_stack([theta, np.full(20000, sigma)])
+    draws = [lp.draw_marginalised(t, np.random.default_rng(1))[name] for lp, t in ((free, both), (held, theta))]
+    assert draws[0].std() == pytest.approx(draws[1].std(), rel=5 / np.sqrt(2 * 20000))
+    assert draws[0].mean() == pytest.approx(draws[1].mean(), abs=5 * draws[1].std() / np.sqrt(20000))
+
+
+def test_amplitudes_outside_the_model_are_nan(survey):
+    z, mu, covariance = survey
+    sample = Sample.from_arrays(z, mu - 19.3, covariance=covariance, data_kind="magnitude", distance_scale="absolute")
+    lp = LogPosterior.build(sample, "curved_lcdm", {"absolute_magnitude": {"normal": [-19.3, 0.1]}})
+    assert np.isnan(lp.best_marginalised([[0.05, 1.9, 70.0]])["absolute_magnitude"][0])
+
+
 def test_zero_points_get_a_posterior(survey):
     z, mu, _ = survey
     noise = Noise(np.full(N, 0.1**2), modes=0.05 * (np.arange(N) < 20)[:, None], mode_names=("zero_point:low",))

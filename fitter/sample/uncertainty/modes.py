@@ -53,6 +53,11 @@ class Modes(TermSettings):
                 file=place,
                 cure="Give one row per row of the table, in the same order",
             )
+        if len(shifts) == kept != rows.n:
+            rows.notes.append(
+                f"{place} has {kept} rows, the number that the cuts leave of {rows.n} in the table: they are taken to follow the rows "
+                "that are kept."
+            )
         if len(shifts) == rows.n and not rows.keep.all():
             shifts, lines = shifts[rows.keep], lines[rows.keep]
         bad = ~np.isfinite(shifts)

@@ -90,9 +90,9 @@ def density(draws: np.ndarray, limits: tuple[float, float], bins: int = 120) -> 
     from scipy.ndimage import gaussian_filter1d
 
     counts, edges = np.histogram(draws, bins=bins, range=limits)
-    # Scott's rule, in bins: wide enough to calm the noise, narrow beside the posterior's own width.
+    # Scott's rule, widened since draws of a chain are not independent: still narrow beside the posterior's own width.
     inside = draws[(draws >= limits[0]) & (draws <= limits[1])]
-    bandwidth = inside.std() * max(inside.size, 2) ** -0.2 if inside.size else 0.0
+    bandwidth = 1.6 * inside.std() * max(inside.size, 2) ** -0.2 if inside.size else 0.0
     smooth = gaussian_filter1d(counts.astype(float), max(bandwidth / (edges[1] - edges[0]), 1.0), mode="reflect")
     return 0.5 * (edges[1:] + edges[:-1]), smooth / max(smooth.max(), 1e-300)
 

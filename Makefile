@@ -23,7 +23,7 @@ paper: $(VENV)/.installed
 	else echo "No LaTeX here: paper/manuscript.tex is ready for one."; fi
 
 test: $(VENV)/.installed-test lint
-	$(BIN)/python -m pytest -n 2 --dist loadfile
+	OPENBLAS_NUM_THREADS=1 $(BIN)/python -m pytest -n 2 --dist loadfile
 
 lint: $(VENV)/.installed-test
 	$(BIN)/ruff check .
@@ -45,7 +45,7 @@ fuzz: $(VENV)/.installed-test
 
 # Random configs, tables and matrices by the thousand, for hours; `make test` runs the short version.
 soak: $(VENV)/.installed-test
-	$(BIN)/python -m pytest --hypothesis-profile=soak tests
+	MUFITTER_SOAK=200 $(BIN)/python -m pytest --hypothesis-profile=soak tests
 
 # Source distribution and wheel, in dist/.
 dist: $(VENV)/.installed-test

@@ -21,6 +21,32 @@ _WORKS: dict[str, tuple[str, str, dict[str, str]]] = {
             "doi": "10.1086/670067",
         },
     ),
+    "Cappe2004": (
+        "Cappé et al. 2004",
+        "article",
+        {
+            "author": "Capp{\\'e}, Olivier and Guillin, Arnaud and Marin, Jean-Michel and Robert, Christian P.",
+            "title": "Population {M}onte {C}arlo",
+            "journal": "Journal of Computational and Graphical Statistics",
+            "volume": "13",
+            "pages": "907--929",
+            "year": "2004",
+            "doi": "10.1198/106186004X12803",
+        },
+    ),
+    "TerBraak2006": (
+        "ter Braak 2006",
+        "article",
+        {
+            "author": "ter Braak, Cajo J. F.",
+            "title": "A {M}arkov chain {M}onte {C}arlo version of the genetic algorithm differential evolution",
+            "journal": "Statistics and Computing",
+            "volume": "16",
+            "pages": "239--249",
+            "year": "2006",
+            "doi": "10.1007/s11222-006-8769-1",
+        },
+    ),
     "Goodman2010": (
         "Goodman & Weare 2010",
         "article",

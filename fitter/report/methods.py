@@ -259,8 +259,12 @@ def _computation(summary: dict, settings: dict) -> list[str]:
 
 
 _MOVES = {
-    "mixture": "most steps propose from Student-t mixtures fitted to the other half of the ensemble, the rest are stretch moves {}",
-    "stretch": "all steps are stretch moves {}",
+    "mixture": (
+        "three steps in five propose from a Student-t mixture fitted to the posterior beforehand by population Monte Carlo {}, one in five "
+        "from Student-t mixtures fitted to the other half of the ensemble, one in five is a differential-evolution move {}",
+        ("Cappe2004", "TerBraak2006"),
+    ),
+    "stretch": ("all steps are stretch moves {}", ("Goodman2010",)),
 }
 
 
@@ -269,7 +273,7 @@ def _sampler(summary: dict) -> list[str]:
     replicas = _count(facts["replicas"], "independent ensemble", "independent ensembles")
     text = f"We sampled the posterior with {replicas} of {facts['walkers']} walkers {cite('Foreman-Mackey2013')}"
     move = _MOVES.get(facts.get("move"))
-    text += ": " + move.format(cite("Goodman2010")) if move else ""
+    text += ": " + move[0].format(*map(cite, move[1])) if move else ""
     text += f". Each took {facts['steps']} steps, of which the first {facts['burn_in']} were discarded"
     return [text + f" (seed {facts['seed']})." if facts.get("seed") is not None else text + "."]
 

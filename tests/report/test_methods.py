@@ -74,9 +74,11 @@ def test_the_steps_kept_are_those_of_the_chain(real, summary):
 
 def test_the_moves_are_those_of_the_sampler(summary):
     """If the mixture of moves changes, the sentence must."""
-    moves = {type(move).__name__: weight for move, weight in ensemble_moves("mixture")}
-    assert set(moves) == {"MixtureMove", "StretchMove"} and moves["MixtureMove"] > 0.5
-    assert "most steps propose from Student-t mixtures fitted to the other half" in text_of(summary)
+    moves = {type(move).__name__: weight for move, weight in ensemble_moves("mixture", pilot=object())}
+    assert moves == {"PilotMove": 0.6, "MixtureMove": 0.2, "DifferenceMove": 0.2}
+    assert "three steps in five propose from a Student-t mixture fitted to the posterior beforehand" in text_of(summary)
+    assert "one in five from Student-t mixtures fitted to the other half of the ensemble" in text_of(summary)
+    assert "one in five is a differential-evolution move" in text_of(summary)
     assert [type(move).__name__ for move, _ in ensemble_moves("stretch")] == ["StretchMove"]
     assert "all steps are stretch moves (Goodman & Weare 2010)" in text_of(changed(summary, sampling={"move": "stretch"}))
     assert "move" not in text_of(changed(summary, sampling={"move": None})).split("Each took")[0].split("We sampled")[1]

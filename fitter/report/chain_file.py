@@ -3,13 +3,13 @@
 from __future__ import annotations
 
 import json
-import os
 from pathlib import Path
 
 from fitter.errors import InputError
 from fitter.inference.posterior import Posterior
 from fitter.parameters import declare_again, declared_elsewhere
 from fitter.report.facts import json_safe
+from fitter.report.hdf5 import writing_hdf5
 
 __all__ = ["CHAIN_FORMAT", "read_chain", "write_chain"]
 
@@ -33,29 +33,18 @@ def write_chain(path: str | Path, posterior: Posterior, attributes: dict[str, st
     attributes ``format``, ``names``, ``kinds``, ``sampling`` and ``declared`` (symbols of parameters from a model of one's
     own), the last four as JSON.
     """
-    import h5py
-
-    path = Path(path)
-    temporary = path.with_name(f".{path.name}.{os.getpid()}")
-    try:
-        with h5py.File(temporary, "w") as file:
-            file.attrs["format"] = CHAIN_FORMAT
-            file.attrs["names"] = json.dumps(list(posterior.names))
-            file.attrs["kinds"] = json.dumps(posterior.kinds)
-            file.attrs["sampling"] = json.dumps(json_safe(posterior.sampling))
-            file.attrs["declared"] = json.dumps(declared_elsewhere(posterior.kinds))
-            for name, value in (attributes or {}).items():
-                file.attrs[name] = value
-            axes = "replica, step, walker"
-            file.create_dataset("chain", data=posterior.chain).attrs["axes"] = f"{axes}, parameter"
-            file.create_dataset("log_posterior", data=posterior.log_posterior).attrs["axes"] = axes
-            for name, values in posterior.extra.items():
-                file.create_dataset(f"extra/{name}", data=values).attrs["axes"] = axes
-        with temporary.open("rb+") as stream:
-            os.fsync(stream.fileno())
-        os.replace(temporary, path)
-    finally:
-        temporary.unlink(missing_ok=True)
+    with writing_hdf5(path, CHAIN_FORMAT) as file:
+        file.attrs["names"] = json.dumps(list(posterior.names))
+        file.attrs["kinds"] = json.dumps(posterior.kinds)
+        file.attrs["sampling"] = json.dumps(json_safe(posterior.sampling))
+        file.attrs["declared"] = json.dumps(declared_elsewhere(posterior.kinds))
+        for name, value in (attributes or {}).items():
+            file.attrs[name] = value
+        axes = "replica, step, walker"
+        file.create_dataset("chain", data=posterior.chain).attrs["axes"] = f"{axes}, parameter"
+        file.create_dataset("log_posterior", data=posterior.log_posterior).attrs["axes"] = axes
+        for name, values in posterior.extra.items():
+            file.create_dataset(f"extra/{name}", data=values).attrs["axes"] = axes
 
 
 def read_chain(path: str | Path) -> Posterior:

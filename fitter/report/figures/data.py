@@ -3,7 +3,6 @@
 from __future__ import annotations
 
 import json
-import os
 import types
 import typing
 from dataclasses import dataclass, fields, is_dataclass
@@ -16,6 +15,7 @@ from fitter.report.figures.covariance import BudgetData, CorrelationData, budget
 from fitter.report.figures.history import HistoryData, history_data
 from fitter.report.figures.hubble import HubbleData, hubble_data
 from fitter.report.figures.residuals import ResidualData, residual_data
+from fitter.report.hdf5 import writing_hdf5
 from fitter.report.information import fitted_noise
 
 __all__ = ["DATA_FILE", "FigureData", "collect", "read_figure_data", "write_figure_data"]
@@ -62,19 +62,8 @@ def collect(log_posterior, optimum, posterior) -> FigureData:
 
 def write_figure_data(path: str | Path, data: FigureData) -> None:
     """Write the file, under a temporary name first."""
-    import h5py
-
-    path = Path(path)
-    temporary = path.with_name(f".{path.name}.{os.getpid()}")
-    try:
-        with h5py.File(temporary, "w") as file:
-            file.attrs["format"] = _FORMAT
-            _store(file, data)
-        with temporary.open("rb+") as stream:
-            os.fsync(stream.fileno())
-        os.replace(temporary, path)
-    finally:
-        temporary.unlink(missing_ok=True)
+    with writing_hdf5(path, _FORMAT) as file:
+        _store(file, data)
 
 
 def read_figure_data(path: str | Path) -> FigureData:

@@ -9,7 +9,7 @@ import warnings
 import numpy as np
 import pytest
 import yaml
-from hypothesis import HealthCheck, Phase, given, settings
+from hypothesis import HealthCheck, Phase, example, given, settings
 from hypothesis import strategies as st
 
 from fitter.api import check
@@ -186,6 +186,7 @@ numbers = st.floats(width=64)
     kind=st.sampled_from(["covariance", "precision"]),
     dtype=st.sampled_from(["<f8", ">f8", "<f4", ">i2"]),
 )
+@example(cells=[(3, "e", 2.2250738585e-313)], elements=[], kind="covariance", dtype="<f8")
 @cases(200)
 def test_any_number_anywhere(cells, elements, kind, dtype, folder):
     columns = {"z": Z.copy(), "mu": 43 + 5 * np.log10(Z), "e": np.full(N, 0.1)}

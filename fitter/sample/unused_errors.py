@@ -16,6 +16,7 @@ __all__ = ["unused_errors"]
 _MOST_ROWS = 100_000
 _CLOSE = (0.8, 1.25)  # median ratio of errors that is no news
 _FAR = 2.0  # and a row is news beyond that
+_AN_ERROR = (1e-6, 1e3)  # mag: what lies outside is no error of a measurement, and is not compared
 
 
 def unused_errors(settings: SampleSettings, table: Table, path: Path, options, sample: Sample) -> str | None:
@@ -32,7 +33,7 @@ def unused_errors(settings: SampleSettings, table: Table, path: Path, options, s
         return None
     name, sigma = found
     sigma = sigma[np.searchsorted(table.lines, sample.row)]
-    usable = np.isfinite(sigma) & (sigma > 0)
+    usable = (sigma > _AN_ERROR[0]) & (sigma < _AN_ERROR[1])
     if usable.sum() < 0.5 * sample.n:
         return None
     ratio = np.where(usable, np.sqrt(np.abs(matrices[0].variance)) / np.where(usable, sigma, 1.0), np.nan)

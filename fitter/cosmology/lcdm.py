@@ -1,9 +1,11 @@
 """Matter and a cosmological constant."""
 
+from typing import ClassVar
+
 import numpy as np
 
 from fitter.cosmology.base import FluidModel, Within, flatness
-from fitter.parameters import PARAMETERS
+from fitter.parameters import PARAMETERS, Parameter
 
 __all__ = ["CurvedLCDM", "FlatLCDM"]
 
@@ -12,7 +14,7 @@ class FlatLCDM(FluidModel):
     """Flat space, cosmological constant: theta = (Ω_m,)."""
 
     name = "flat_lcdm"
-    parameters = (PARAMETERS["omega_m"],)
+    parameters: ClassVar[tuple[Parameter, ...]] = (PARAMETERS["omega_m"],)
     curved = False
 
     def dark_energy_growth(self, z, theta):

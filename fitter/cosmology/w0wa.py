@@ -1,9 +1,11 @@
 """Matter and dark energy whose equation of state changes linearly with the scale factor."""
 
+from typing import ClassVar
+
 import numpy as np
 
 from fitter.cosmology.base import FluidModel, Within, flatness
-from fitter.parameters import PARAMETERS
+from fitter.parameters import PARAMETERS, Parameter
 
 __all__ = ["CurvedW0WA", "FlatW0WA"]
 
@@ -20,9 +22,9 @@ class FlatW0WA(FluidModel):
     """
 
     name = "flat_w0wa"
-    parameters = (PARAMETERS["omega_m"], PARAMETERS["w0"], PARAMETERS["wa"])
+    parameters: ClassVar[tuple[Parameter, ...]] = (PARAMETERS["omega_m"], PARAMETERS["w0"], PARAMETERS["wa"])
     curved = False
-    contains = (Within("flat_wcdm", {"w0": "w", "wa": 0.0}),)
+    contains: ClassVar[tuple[Within, ...]] = (Within("flat_wcdm", {"w0": "w", "wa": 0.0}),)
 
     def dark_energy_growth(self, z, theta):
         z = np.asarray(z, float)

@@ -1,9 +1,11 @@
 """Matter and dark energy with a constant equation of state."""
 
+from typing import ClassVar
+
 import numpy as np
 
 from fitter.cosmology.base import FluidModel, Within, flatness
-from fitter.parameters import PARAMETERS
+from fitter.parameters import PARAMETERS, Parameter
 
 __all__ = ["CurvedWCDM", "FlatWCDM"]
 
@@ -12,9 +14,9 @@ class FlatWCDM(FluidModel):
     """Flat space, constant w: theta = (Ω_m, w). X = (1+z)^{3(1+w)}."""
 
     name = "flat_wcdm"
-    parameters = (PARAMETERS["omega_m"], PARAMETERS["w"])
+    parameters: ClassVar[tuple[Parameter, ...]] = (PARAMETERS["omega_m"], PARAMETERS["w"])
     curved = False
-    contains = (Within("flat_lcdm", {"w": -1.0}),)
+    contains: ClassVar[tuple[Within, ...]] = (Within("flat_lcdm", {"w": -1.0}),)
 
     def dark_energy_growth(self, z, theta):
         return np.exp(3.0 * (1.0 + theta[:, -1:]) * np.log1p(z))

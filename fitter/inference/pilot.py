@@ -2,6 +2,8 @@
 
 from __future__ import annotations
 
+from functools import partial
+
 import numpy as np
 
 from fitter.inference.mixture import StudentMixture, blend, fit_mixture
@@ -49,7 +51,7 @@ def pilot_mixture(log_posterior, optimum, seed: np.random.SeedSequence) -> Stude
     draws = min(2048 * 2**n, _DRAWS)
     points, log_q = _first_draws(log_posterior, optimum, draws // 2, rng)
     components = 2 ** min(2 + n, 6)
-    more = {"iterations": 5, "broad": 0.05, "ridge": 1e-4, "bisect": True}
+    fitted = partial(fit_mixture, iterations=5, broad=0.05, ridge=1e-4, bisect=True)
     mixture = None
     for turn in range(_MOST_ROUNDS):
         values = np.asarray(log_posterior(points))
@@ -57,10 +59,7 @@ def pilot_mixture(log_posterior, optimum, seed: np.random.SeedSequence) -> Stude
             break
         if turn >= _FEWEST_ROUNDS and _efficiency(values - log_q) > _GOOD:
             break
-        body, tails = (
-            fit_mixture(_resample(points, _weights(values, log_q, power), len(points) // 2, rng), components, **more)
-            for power in _FLATTENED
-        )
+        body, tails = (fitted(_resample(points, _weights(values, log_q, power), len(points) // 2, rng), components) for power in _FLATTENED)
         mixture = blend(body, tails, _TAIL_SHARE)
         points = mixture.draw(rng, draws // 4 if turn < _SMALL_ROUNDS else draws)
         log_q = mixture.log_density(points)

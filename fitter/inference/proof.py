@@ -55,16 +55,22 @@ def prove(log_posterior, posterior, optimum, ess: dict[str, float], *, seed: np.
     """
     grid = integrate(log_posterior, optimum)
     weighted = importance(log_posterior, posterior, seed=seed)
-    usable = grid is not None and grid.log_evidence_error <= _USABLE_ERROR
-    best = grid if usable else weighted
-    both = {"quadrature": [grid.log_evidence, grid.log_evidence_error] if usable else None}
-    both["importance"] = [weighted.log_evidence, weighted.log_evidence_error]
+    if grid is not None and grid.log_evidence_error > _USABLE_ERROR:
+        grid = None
+    best = weighted if grid is None else grid
     agree = None
-    if usable:
+    if grid is not None:
         allowed = grid.log_evidence_error + _SIGMAS * weighted.log_evidence_error
         agree = bool(abs(grid.log_evidence - weighted.log_evidence) <= allowed)
-    evidence = {"log_evidence": best.log_evidence, "log_evidence_error": best.log_evidence_error, "method": best.method}
-    return Proof(cross_check(best, posterior, ess), evidence | both | {"methods_agree": agree}, grid if usable else None, weighted)
+    evidence = {
+        "log_evidence": best.log_evidence,
+        "log_evidence_error": best.log_evidence_error,
+        "method": best.method,
+        "quadrature": None if grid is None else [grid.log_evidence, grid.log_evidence_error],
+        "importance": [weighted.log_evidence, weighted.log_evidence_error],
+        "methods_agree": agree,
+    }
+    return Proof(cross_check(best, posterior, ess), evidence, grid, weighted)
 
 
 def cross_check(other: GridPosterior | WeightedPosterior, posterior, ess: dict[str, float]) -> dict:
@@ -83,17 +89,18 @@ def cross_check(other: GridPosterior | WeightedPosterior, posterior, ess: dict[s
     dict
         The parameter that is worst against its tolerance, under the keys of summary.json.
     """
-    worst = {"ratio": -np.inf}
-    for name in other.names:
-        for difference, allowed in _differences(other, posterior.draws(name), name, max(ess[name], 1.0)):
-            if difference / allowed > worst["ratio"]:
-                worst = {"ratio": difference / allowed, "difference": difference, "allowed": allowed, "name": name}
+    differences = (
+        (difference, allowed, name)
+        for name in other.names
+        for difference, allowed in _differences(other, posterior.draws(name), name, max(ess[name], 1.0))
+    )
+    difference, allowed, worst = max(differences, key=lambda one: one[0] / one[1])
     return {
         "method": other.method,
-        "max_cdf_difference": worst["difference"],
-        "tolerance": worst["allowed"],
-        "agrees": bool(worst["ratio"] <= 1),
-        "worst": worst["name"],
+        "max_cdf_difference": difference,
+        "tolerance": allowed,
+        "agrees": bool(difference <= allowed),
+        "worst": worst,
     }
 
 

@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 import numpy as np
+from numpy.typing import NDArray
 
 __all__ = ["child_seed", "random_state"]
 
@@ -16,6 +17,8 @@ def child_seed(seed: np.random.SeedSequence, *key: int) -> np.random.SeedSequenc
     return np.random.SeedSequence(entropy=seed.entropy, spawn_key=(*seed.spawn_key, *key))
 
 
-def random_state(seed: np.random.SeedSequence) -> tuple:
+def random_state(seed: np.random.SeedSequence) -> tuple[str, NDArray[np.uint32], int, int, float]:
     """Return the state tuple of a Mersenne Twister seeded by `seed`, the form that emcee's State takes."""
-    return np.random.RandomState(np.random.MT19937(seed)).get_state()
+    generator = np.random.MT19937(seed).state
+    twister = generator["state"]
+    return generator["bit_generator"], twister["key"], twister["pos"], 0, 0.0  # no Gaussian draw is kept for later

@@ -85,6 +85,8 @@ def stacked_qr(blocks) -> np.ndarray:
             continue
         block = block if r is None else np.vstack([r, block])
         r = np.asfortranarray(qr(block, mode="r", overwrite_a=True, check_finite=False)[0][: block.shape[1]])
+    if r is None:
+        raise ValueError("no blocks to factor")
     return r
 
 

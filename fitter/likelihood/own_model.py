@@ -75,6 +75,8 @@ def _run(file: Path):
     if label in sys.modules:
         return sys.modules[label]
     spec = importlib.util.spec_from_file_location(label, file, loader=importlib.machinery.SourceFileLoader(label, str(file)))
+    if spec is None:
+        raise InputError("the model's file cannot be loaded as Python code", file=file)
     module = importlib.util.module_from_spec(spec)
     sys.modules[label] = module
     try:

@@ -1,0 +1,12 @@
+"""Names for the arrays that signatures speak of; shapes stand in the docstrings."""
+
+from __future__ import annotations
+
+import numpy as np
+from numpy.typing import NDArray
+
+__all__ = ["BoolArray", "FloatArray", "IntArray"]
+
+FloatArray = NDArray[np.float64]
+IntArray = NDArray[np.int64]
+BoolArray = NDArray[np.bool_]

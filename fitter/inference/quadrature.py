@@ -15,6 +15,8 @@ from dataclasses import dataclass
 import numpy as np
 from numpy.polynomial import legendre
 
+from fitter.inference.target import Place, Target
+
 __all__ = ["MAX_DIMENSIONS", "GridPosterior", "integrate"]
 
 MAX_DIMENSIONS = 4
@@ -186,7 +188,9 @@ class GridPosterior:
         return np.interp(np.atleast_1d(p), self.cdf(name, x), x)
 
 
-def integrate(log_posterior, optimum, *, tolerance: float = 3e-3, max_evaluations: int | None = None) -> GridPosterior | None:
+def integrate(
+    log_posterior: Target, optimum: Place, *, tolerance: float = 3e-3, max_evaluations: int | None = None
+) -> GridPosterior | None:
     """Integrate the posterior over its prior.
 
     Parameters

@@ -2,8 +2,11 @@
 
 from __future__ import annotations
 
+from typing import Any
+
 import numpy as np
 
+from fitter.array_types import FloatArray
 from fitter.study.entry import Entry
 
 __all__ = ["averaged", "model_weights"]
@@ -13,12 +16,12 @@ _QUANTILES = {"low95": 0.025, "low68": 0.1587, "median": 0.5, "high68": 0.8413, 
 
 def model_weights(entries: list[Entry]) -> dict[str, float]:
     """Posterior probability of each fit's model among them, all equally likely before the data."""
-    heights = np.array([entry.log_evidence[0] for entry in entries])
+    heights = np.array([-np.inf if entry.log_evidence is None else entry.log_evidence[0] for entry in entries])
     weights = np.exp(heights - heights.max())
     return dict(zip((e.name for e in entries), (weights / weights.sum()).tolist(), strict=True))
 
 
-def averaged(entries: list[Entry]) -> dict:
+def averaged(entries: list[Entry]) -> dict[str, Any]:
     """Average over fits of the same data.
 
     Parameters
@@ -32,8 +35,8 @@ def averaged(entries: list[Entry]) -> dict:
         ``weights`` by fit, and ``parameters``: mean, sd and quantiles of every parameter that all of them have.
     """
     weights = model_weights(entries)
+    parameters: dict[str, dict[str, float]] = {}
     shared = [name for name in entries[0].posterior.kinds if all(name in e.posterior.kinds for e in entries)]
-    parameters = {}
     for name in shared:
         draws = [e.posterior.draws(name).ravel() for e in entries]
         draws = [d[np.isfinite(d)] for d in draws]
@@ -44,7 +47,7 @@ def averaged(entries: list[Entry]) -> dict:
     return {"weights": weights, "parameters": parameters}
 
 
-def _facts(values: np.ndarray, weight: np.ndarray) -> dict:
+def _facts(values: FloatArray, weight: FloatArray) -> dict[str, float]:
     mean = float(values @ weight)
     order = np.argsort(values)
     cumulative = np.cumsum(weight[order]) - 0.5 * weight[order]

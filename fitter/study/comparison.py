@@ -5,18 +5,20 @@ from __future__ import annotations
 import math
 from dataclasses import dataclass, field
 from itertools import combinations, permutations
+from typing import Any
 
 import numpy as np
 
 from fitter.errors import InputError
 from fitter.inference.seeds import child_seed
+from fitter.likelihood.posterior import LogPosterior
 from fitter.parameters import PARAMETERS, parameter
 from fitter.study.averaging import averaged
 from fitter.study.consistency import consistency, overlap
 from fitter.study.density_ratio import density_ratio, ratio_along
 from fitter.study.entry import Entry
 from fitter.study.likelihood_ratio import likelihood_ratio
-from fitter.study.nested import nesting
+from fitter.study.nested import Nesting, nesting
 from fitter.study.odds import odds_sentence, scale_name, strength, verdict
 from fitter.study.prior_widths import anchors, evidence_shifts
 
@@ -135,9 +137,9 @@ def _delta(study: _Study, entry: Entry) -> dict:
         delta[key] = None if ours.get(key) is None or theirs.get(key) is None else ours[key] - theirs[key]
     evidence = _log_odds(entry, study.reference)
     delta["log_evidence"], delta["log_evidence_error"] = evidence if evidence else (None, None)
-    told = evidence is not None and entry is not study.reference
-    delta["odds"] = odds_sentence(evidence[0], entry.name, study.reference.name, study.scale) if told else None
-    delta["strength"] = strength(evidence[0], study.scale) if told else None
+    told = None if evidence is None or entry is study.reference else evidence[0]
+    delta["odds"] = None if told is None else odds_sentence(told, entry.name, study.reference.name, study.scale)
+    delta["strength"] = None if told is None else strength(told, study.scale)
     return delta
 
 
@@ -151,15 +153,16 @@ def _log_odds(entry: Entry, other: Entry) -> tuple[float, float] | None:
 
 def _nested_pairs(study: _Study) -> list[dict]:
     found = []
-    usable = [e for e in study.entries if e.log_posterior is not None]
-    for small, large in permutations(usable, 2):
+    for small, large in permutations(study.entries, 2):
+        if small.log_posterior is None or large.log_posterior is None:
+            continue
         nest = nesting(small.log_posterior, large.log_posterior)
         if nest is not None:
             found.append(_pair(study, small, large, nest))
     return found
 
 
-def _pair(study: _Study, small: Entry, large: Entry, nest) -> dict:
+def _pair(study: _Study, small: Entry, large: Entry, nest: Nesting) -> dict[str, Any]:
     edge = nest.at_edge()
     test = likelihood_ratio(small.deviance - large.deviance, len(nest.extra), len(edge))
     ratio, odds = density_ratio(large.posterior, nest), _log_odds(small, large)
@@ -179,16 +182,16 @@ def _pair(study: _Study, small: Entry, large: Entry, nest) -> dict:
         "larger": large.name,
         "extra": nest.describe(),
         "likelihood_ratio": test,
-        "flat_priors": _flat(large) and _flat(small),
+        "flat_priors": _flat(nest.large) and _flat(nest.small),
         "savage_dickey": ratio,
         "delta_log_evidence": None if odds is None else list(odds),
         "agrees": agrees,
     }
 
 
-def _flat(entry: Entry) -> bool:
+def _flat(log_posterior: LogPosterior) -> bool:
     """Whether the best fit is the likelihood's own."""
-    return all(prior.keyword == "uniform" for prior in entry.log_posterior.priors)
+    return all(prior.keyword == "uniform" for prior in log_posterior.priors)
 
 
 def _prior_widths(study: _Study) -> list[dict]:
@@ -201,17 +204,18 @@ def _prior_widths(study: _Study) -> list[dict]:
     rows = []
     for entry in usable:
         if entry is not study.reference:
-            names = dict.fromkeys([*entry.log_posterior.names, *study.reference.log_posterior.names])
+            names = dict.fromkeys([*entry.posterior.names, *study.reference.posterior.names])
             rows += [row for n in names for f in (0.5, 2.0) if (row := _width_row(study, entry, shifts, n, f))]
     return rows
 
 
 def _width_row(study: _Study, entry: Entry, shifts: dict, name: str, factor: float) -> dict | None:
     ours, theirs = (shifts[e.name].get((name, factor)) for e in (entry, study.reference))
-    sampled = [name in e.log_posterior.names for e in (entry, study.reference)]
-    if (ours is None and sampled[0]) or (theirs is None and sampled[1]):
+    sampled = [name in e.posterior.names for e in (entry, study.reference)]
+    odds = _log_odds(entry, study.reference)
+    if odds is None or (ours is None and sampled[0]) or (theirs is None and sampled[1]):
         return None
-    before, error = _log_odds(entry, study.reference)
+    before, error = odds
     after = before + (ours.change if ours else 0.0) - (theirs.change if theirs else 0.0)
     total = math.sqrt(error**2 + sum(s.error**2 for s in (ours, theirs) if s))
     was, now = verdict(before, study.scale), verdict(after, study.scale)

@@ -9,12 +9,18 @@ References
 from __future__ import annotations
 
 import math
-from types import SimpleNamespace
+from typing import TYPE_CHECKING, Any
 
 import numpy as np
 
+from fitter.array_types import FloatArray
+from fitter.inference.target import Peak
 from fitter.study.entry import Entry
 from fitter.study.likelihood_ratio import sigma_of
+
+if TYPE_CHECKING:
+    from fitter.likelihood.posterior import LogPosterior
+    from fitter.sample.sample import Sample
 
 __all__ = ["consistency", "overlap"]
 
@@ -33,12 +39,12 @@ def overlap(first: Entry, second: Entry) -> int | None:
     return len(_rows(a) & _rows(b))
 
 
-def _rows(sample) -> set:
+def _rows(sample: Sample) -> set[tuple[float, float]]:
     """What tells a supernova of one table from any other."""
     return set(zip(sample.redshift.tolist(), sample.data.tolist(), strict=True))
 
 
-def consistency(first: Entry, second: Entry, rng: np.random.Generator) -> dict | None:
+def consistency(first: Entry, second: Entry, rng: np.random.Generator) -> dict[str, Any] | None:
     """Compare what two independent data sets say of the parameters that both fits sample.
 
     Parameters
@@ -61,19 +67,26 @@ def consistency(first: Entry, second: Entry, rng: np.random.Generator) -> dict |
     mean, covariance = difference.mean(axis=0), np.atleast_2d(np.cov(difference, rowvar=False))
     gaussian = _chi2_sigma(float(mean @ np.linalg.solve(covariance, mean)), len(shared))
     ratio = _evidence_ratio(first, second, shared)
-    facts = {"between": [first.name, second.name], "parameters": shared, "p_value": p_value, "sigma": sigma, "sigma_is_limit": limit}
-    facts |= {"sigma_gaussian": gaussian, "log_r": ratio}
+    facts = {
+        "between": [first.name, second.name],
+        "parameters": shared,
+        "p_value": p_value,
+        "sigma": sigma,
+        "sigma_is_limit": limit,
+        "sigma_gaussian": gaussian,
+        "log_r": ratio,
+    }
     return facts | {"sentence": _sentence(facts)}
 
 
-def _differences(first: Entry, second: Entry, shared: list[str], rng) -> np.ndarray:
+def _differences(first: Entry, second: Entry, shared: list[str], rng: np.random.Generator) -> FloatArray:
     """(M, d) differences of draws paired at random."""
     columns = [e.samples[:, [e.posterior.names.index(n) for n in shared]] for e in (first, second)]
     a, b = (c[rng.integers(len(c), size=_PAIRS)] for c in columns)
     return a - b
 
 
-def _shift_significance(difference: np.ndarray, rng) -> tuple[float, float, bool]:
+def _shift_significance(difference: FloatArray, rng: np.random.Generator) -> tuple[float, float, bool]:
     """p-value and σ of a difference of zero, and whether the draws only bound them."""
     m, d = difference.shape
     if d == 1:
@@ -100,20 +113,21 @@ def _chi2_sigma(value: float, dof: int) -> float:
 class _Joint:
     """Both likelihoods at the same parameters, under the first fit's priors."""
 
-    def __init__(self, first, second):
+    def __init__(self, first: LogPosterior, second: LogPosterior) -> None:
         self.names, self.priors, self._fits = first.names, first.priors, (first, second)
-        self._order = [second.names.index(n) for n in self.names], [self.names.index(n) for n in second.names]
+        self.order_in_second = [second.names.index(n) for n in self.names]
+        self._order_for_second = [self.names.index(n) for n in second.names]
 
     @property
     def ndim(self) -> int:
         return len(self.names)
 
-    def __call__(self, theta):
+    def __call__(self, theta: FloatArray) -> FloatArray:
         theta = np.atleast_2d(np.asarray(theta, float))
         first, second = self._fits
         value = first(theta)
         inside = value > -np.inf
-        value[inside] += second.log_likelihood(theta[inside][:, self._order[1]])
+        value[inside] += second.log_likelihood(theta[inside][:, self._order_for_second])
         return value
 
 
@@ -129,22 +143,21 @@ def _evidence_ratio(first: Entry, second: Entry, shared: list[str]) -> list[floa
         return None
     joint = _Joint(a, b)
     grid = integrate(joint, _joint_start(first, second, joint))
+    if grid is None:
+        return None
     error = math.sqrt(grid.log_evidence_error**2 + first.log_evidence[1] ** 2 + second.log_evidence[1] ** 2)
     return [grid.log_evidence - first.log_evidence[0] - second.log_evidence[0], error]
 
 
-def _joint_start(first: Entry, second: Entry, joint: _Joint):
+def _joint_start(first: Entry, second: Entry, joint: _Joint) -> Peak:
     """The best of both chains' draws under both likelihoods, and the covariance of the product of two Gaussians."""
-    draws = np.concatenate([first.samples[::37], second.samples[::37][:, joint._order[0]]])
-    covariances = [
-        np.atleast_2d(np.cov(first.samples, rowvar=False)),
-        np.atleast_2d(np.cov(second.samples[:, joint._order[0]], rowvar=False)),
-    ]
-    both = np.linalg.inv(sum(np.linalg.inv(c) for c in covariances))
-    return SimpleNamespace(theta=draws[joint(draws).argmax()], covariance=both)
+    samples = (first.samples, second.samples[:, joint.order_in_second])
+    draws = np.concatenate([s[::37] for s in samples])
+    one, other = (np.linalg.inv(np.atleast_2d(np.cov(s, rowvar=False))) for s in samples)
+    return Peak(draws[joint(draws).argmax()], np.asarray(np.linalg.inv(one + other), np.float64))
 
 
-def _sentence(facts: dict) -> str:
+def _sentence(facts: dict[str, Any]) -> str:
     from fitter.parameters import parameter
 
     first, second = facts["between"]

@@ -9,12 +9,20 @@ References
 
 from __future__ import annotations
 
+from collections.abc import Sequence
+from typing import TYPE_CHECKING, Any
+
 import numpy as np
 
+from fitter.array_types import BoolArray, FloatArray
 from fitter.inference.importance import importance
 from fitter.inference.seeds import child_seed
 from fitter.study.entry import batch_error
 from fitter.study.nested import Nesting
+
+if TYPE_CHECKING:
+    from fitter.inference.posterior import Posterior
+    from fitter.likelihood.priors import Prior
 
 __all__ = ["density_ratio", "ratio_along"]
 
@@ -25,7 +33,7 @@ _TOO_FEW = 100
 _TRUSTED = 0.12
 
 
-def density_ratio(posterior, nest: Nesting) -> dict | None:
+def density_ratio(posterior: Posterior, nest: Nesting) -> dict[str, Any] | None:
     """Evidence of the simpler fit over that of the larger one.
 
     Parameters
@@ -83,17 +91,17 @@ def density_ratio(posterior, nest: Nesting) -> dict | None:
 class _Along:
     """The larger fit's likelihood along the nested values, under the simpler fit's priors."""
 
-    def __init__(self, nest: Nesting):
+    def __init__(self, nest: Nesting) -> None:
         self.names, self.priors, self.ndim, self._nest = nest.small.names, nest.small.priors, len(nest.small.names), nest
 
-    def __call__(self, theta):
+    def __call__(self, theta: FloatArray) -> FloatArray:
         value = self._nest.small.log_prior(theta)
         inside = value > -np.inf
         value[inside] += self._nest.large.log_likelihood(self._nest.points(theta[inside]))
         return value
 
 
-def ratio_along(small_posterior, large_posterior, nest: Nesting, seed: np.random.SeedSequence) -> dict:
+def ratio_along(small_posterior: Posterior, large_posterior: Posterior, nest: Nesting, seed: np.random.SeedSequence) -> dict[str, Any]:
     """The same ratio where the posterior of the larger fit hardly reaches the nested values.
 
     Its density is integrated along them, and over everything, by importance sampling: weighted draws instead of the chain's.
@@ -124,13 +132,15 @@ def _column(nest: Nesting, small_name: str) -> int:
     return next(i for i, name in enumerate(nest.large.names) if nest.shared.get(name) == small_name)
 
 
-def _conditional_spread(theta, extra: list[int]) -> np.ndarray:
+def _conditional_spread(theta: FloatArray, extra: list[int]) -> FloatArray:
     """Standard deviation of each extra parameter given all others, from the covariance of the draws."""
     covariance = np.atleast_2d(np.cov(theta, rowvar=False))
     return 1.0 / np.sqrt(np.diag(np.linalg.pinv(covariance, hermitian=True))[extra])
 
 
-def _window(theta, nested, extra: list[int], half, priors) -> tuple[np.ndarray, np.ndarray]:
+def _window(
+    theta: FloatArray, nested: FloatArray, extra: list[int], half: FloatArray, priors: Sequence[Prior]
+) -> tuple[FloatArray, BoolArray]:
     """Volume of the window around each nested point, within the prior, and which draws are in theirs."""
     volume, near = np.ones(len(theta)), np.ones(len(theta), dtype=bool)
     for h, i in zip(half, extra, strict=True):

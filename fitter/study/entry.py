@@ -3,8 +3,18 @@
 from __future__ import annotations
 
 from dataclasses import dataclass
+from typing import TYPE_CHECKING
 
 import numpy as np
+
+from fitter.array_types import FloatArray
+
+if TYPE_CHECKING:
+    from collections.abc import Iterable
+
+    from fitter.inference.posterior import Posterior
+    from fitter.likelihood.posterior import LogPosterior
+    from fitter.likelihood.priors import Prior
 
 __all__ = ["Density", "Entry", "batch_error"]
 
@@ -27,8 +37,8 @@ class Entry:
 
     name: str
     summary: dict
-    posterior: object
-    log_posterior: object | None = None
+    posterior: Posterior
+    log_posterior: LogPosterior | None = None
 
     @property
     def data(self) -> str:
@@ -49,7 +59,7 @@ class Entry:
         return self.summary["information"]["aic"] - 2 * self.summary["information"]["k"]
 
     @property
-    def samples(self) -> np.ndarray:
+    def samples(self) -> FloatArray:
         """(R·S·W, n) draws of the sampled parameters."""
         return self.posterior.chain.reshape(-1, self.posterior.chain.shape[-1])
 
@@ -64,7 +74,7 @@ class Density:
         In the order of its names.
     """
 
-    def __init__(self, log_posterior, priors):
+    def __init__(self, log_posterior: LogPosterior, priors: Iterable[Prior]) -> None:
         self.names, self.priors, self._of = log_posterior.names, tuple(priors), log_posterior
 
     @property
@@ -72,11 +82,11 @@ class Density:
         """Number of parameters."""
         return len(self.names)
 
-    def log_prior(self, theta) -> np.ndarray:
+    def log_prior(self, theta: FloatArray) -> FloatArray:
         """ln prior density, (W,)."""
-        return sum(prior.log_density(theta[:, i]) for i, prior in enumerate(self.priors))
+        return np.sum([prior.log_density(theta[:, i]) for i, prior in enumerate(self.priors)], axis=0)
 
-    def __call__(self, theta) -> np.ndarray:
+    def __call__(self, theta: FloatArray) -> FloatArray:
         """ln of prior times likelihood, (W,)."""
         theta = np.atleast_2d(np.asarray(theta, float))
         value = self.log_prior(theta)
@@ -85,7 +95,7 @@ class Density:
         return value
 
 
-def batch_error(values: np.ndarray) -> tuple[float, float]:
+def batch_error(values: FloatArray) -> tuple[float, float]:
     """Mean of correlated values and its standard error, from batches of steps.
 
     Parameters

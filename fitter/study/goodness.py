@@ -137,4 +137,4 @@ def _outliers(sample, frame, white, scale) -> dict:
     deviation = frame.back(white[:, None])[:, 0] / np.sqrt(frame.diagonal)
     beyond = np.flatnonzero(np.abs(deviation) > limit)
     beyond = beyond[np.argsort(-np.abs(deviation[beyond]), kind="stable")]
-    return {"outlier_limit": limit, "outliers": [{**identity(sample, i), "deviation": float(deviation[i])} for i in beyond]}
+    return {"outlier_limit": limit, "outliers": [{**identity(sample, i), "deviation": float(deviation[i])} for i in beyond.tolist()]}

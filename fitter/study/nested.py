@@ -2,19 +2,21 @@
 
 from __future__ import annotations
 
-from collections.abc import Callable
+from collections.abc import Callable, Mapping
 from dataclasses import dataclass
 
 import numpy as np
 
+from fitter.array_types import FloatArray
 from fitter.cosmology import MODELS, Model, get_model, radiation_density
-from fitter.likelihood.posterior import REFERENCE_H0
+from fitter.likelihood.posterior import REFERENCE_H0, LogPosterior
 
 __all__ = ["Nesting", "expressions", "nesting"]
 
-Expression = float | str | Callable
+Given = Mapping[str, float | FloatArray]
+Expression = float | str | Callable[[Given], float | FloatArray]
 # Parameters beside the model's, and what their absence means.
-_OTHERS = {"H0": None, "absolute_magnitude": None, "intrinsic_scatter": 0.0, "covariance_scale": 1.0}
+_OTHERS: dict[str, float | None] = {"H0": None, "absolute_magnitude": None, "intrinsic_scatter": 0.0, "covariance_scale": 1.0}
 
 
 @dataclass(frozen=True)
@@ -33,15 +35,15 @@ class Nesting:
 
     extra: tuple[str, ...]
     values: dict[str, Expression]
-    small: object
-    large: object
+    small: LogPosterior
+    large: LogPosterior
 
     @property
     def shared(self) -> dict[str, str]:
         """Larger fit's name → simpler fit's name, of the sampled parameters they share."""
         return {name: value for name, value in self.values.items() if isinstance(value, str)}
 
-    def points(self, theta) -> np.ndarray:
+    def points(self, theta: FloatArray) -> FloatArray:
         """Points of the simpler fit, (W, n), as points of the larger one, (W, m)."""
         given = _named(self.small, theta)
         return np.column_stack([np.broadcast_to(_evaluate(self.values[name], given), len(theta)) for name in self.large.names])
@@ -53,7 +55,7 @@ class Nesting:
 
     def describe(self) -> dict[str, float | str]:
         """Nested value of each extra parameter: a number, or ``"flat"`` where flatness decides it."""
-        return {n: self.values[n] if isinstance(self.values[n], float) else "flat" for n in self.extra}
+        return {n: value if isinstance(value := self.values[n], float) else "flat" for n in self.extra}
 
 
 def expressions(model: Model, simpler: str) -> dict[str, Expression] | None:
@@ -78,13 +80,13 @@ def _through(value: Expression, deeper: dict[str, Expression]) -> Expression:
     return value
 
 
-def _evaluate(value: Expression, given: dict):
+def _evaluate(value: Expression, given: Given) -> float | FloatArray:
     if isinstance(value, str):
         return given[value]
     return value(given) if callable(value) else value
 
 
-def _named(log_posterior, theta) -> dict[str, np.ndarray]:
+def _named(log_posterior: LogPosterior, theta: FloatArray) -> dict[str, FloatArray]:
     """Every parameter of a fit, sampled or fixed, by name, and the radiation density."""
     given = {n: np.full(len(theta), v) for n, v in log_posterior.fixed.items()}
     given |= {n: theta[:, i] for i, n in enumerate(log_posterior.names)}
@@ -93,7 +95,7 @@ def _named(log_posterior, theta) -> dict[str, np.ndarray]:
     return given
 
 
-def nesting(small, large) -> Nesting | None:
+def nesting(small: LogPosterior, large: LogPosterior) -> Nesting | None:
     """Return how one fit is nested in another, or None.
 
     Parameters
@@ -103,13 +105,13 @@ def nesting(small, large) -> Nesting | None:
     """
     if small.sample.sha256 != large.sample.sha256 or small.radiation != large.radiation or small.marginalised != large.marginalised:
         return None
-    inside = expressions(large.model, small.model.name)
-    if inside is None:
+    found = expressions(large.model, small.model.name)
+    if found is None:
         return None
-    inside = dict(inside)
+    inside: dict[str, Expression | None] = dict(found)
     for name, absent in _OTHERS.items():
         inside[name] = name if name in small.names else small.fixed.get(name, absent)
-    values = {}
+    values: dict[str, Expression] = {}
     for name, value in inside.items():
         resolved = small.fixed.get(value, value) if isinstance(value, str) else value
         if name in large.names:

@@ -4,10 +4,10 @@ from __future__ import annotations
 
 import math
 from dataclasses import dataclass
-from types import SimpleNamespace
 
 import numpy as np
 
+from fitter.inference.target import Peak
 from fitter.likelihood.priors import LogUniform, Normal, Prior, TruncatedNormal, Uniform
 from fitter.study.entry import Density, Entry, batch_error
 
@@ -93,7 +93,9 @@ def evidence_shifts(entry: Entry, around: dict[str, float]) -> list[EvidenceShif
     priors' ratio over the draws. Where a wider prior opens what the old one had cut off, the quadrature is made anew;
     beyond its dimensions that width is left out.
     """
-    shifts = []
+    shifts: list[EvidenceShift] = []
+    if entry.log_posterior is None:
+        return shifts
     for i, (name, prior) in enumerate(zip(entry.log_posterior.names, entry.log_posterior.priors, strict=True)):
         for factor in FACTORS:
             new = rescaled(prior, factor, around[name], 0.0 if name in _NOT_NEGATIVE else -math.inf)
@@ -127,14 +129,16 @@ def _integrated(entry: Entry, i: int, new: Prior) -> tuple[float, float] | None:
     from fitter.inference.quadrature import MAX_DIMENSIONS, integrate
 
     log_posterior, before = entry.log_posterior, entry.log_evidence
-    if len(log_posterior.names) > MAX_DIMENSIONS or before is None:
+    if log_posterior is None or before is None or len(log_posterior.names) > MAX_DIMENSIONS:
         return None
     priors = list(log_posterior.priors)
     priors[i] = new
     best = entry.samples[entry.posterior.log_posterior.argmax()]
-    start = SimpleNamespace(theta=best, covariance=np.atleast_2d(np.cov(entry.samples, rowvar=False)))
+    start = Peak(best, np.atleast_2d(np.cov(entry.samples, rowvar=False)))
     density = Density(log_posterior, priors)
     if not np.isfinite(density(best[None])[0]):
         return None
     grid = integrate(density, start)
+    if grid is None:
+        return None
     return grid.log_evidence - before[0], math.hypot(grid.log_evidence_error, before[1])

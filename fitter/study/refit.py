@@ -125,7 +125,7 @@ def refit(log_posterior, seed: np.random.SeedSequence) -> Refit:
     optimum = find_optimum(log_posterior, child_seed(seed, 0))
     if log_posterior.ndim <= _ON_GRID:
         grid = integrate(log_posterior, optimum, tolerance=_TOLERANCE)
-        if grid.log_evidence_error <= _USABLE:
+        if grid is not None and grid.log_evidence_error <= _USABLE:
             return Refit(optimum, grid, grid.log_evidence_error)
     draws = _adaptive(log_posterior, optimum, np.random.default_rng(child_seed(seed, 1)))
     return Refit(optimum, draws, float(1.0 / np.sqrt(draws.effective)))
@@ -142,17 +142,25 @@ def _adaptive(log_posterior, optimum, rng) -> WeightedDraws:
     """Draw, fit a mixture to what the weights leave, draw again; the last and largest set again where too few of it count."""
     factor = np.linalg.cholesky(1.5 * optimum.covariance)
     mixture = StudentMixture(np.ones(1), optimum.theta[None], factor[None], np.linalg.inv(factor)[None], 4.0)
-    best = None
-    for turn in range(_ROUNDS + _REPEATS):
-        theta = mixture.draw(rng, _DRAWS if turn < _ROUNDS else _LAST)
-        draws = WeightedDraws(log_posterior.names, theta, _weights(log_posterior, theta, mixture))
-        if turn >= _ROUNDS:
-            best = draws if best is None or draws.effective > best.effective else best
-            if best.effective > _ENOUGH:
-                break
+
+    def draw(size: int) -> WeightedDraws:
+        theta = mixture.draw(rng, size)
+        return WeightedDraws(log_posterior.names, theta, _weights(log_posterior, theta, mixture))
+
+    def refitted(draws: WeightedDraws, components: int) -> StudentMixture:
         at = (np.arange(_DRAWS) + rng.random()) / _DRAWS
-        chosen = np.minimum(np.searchsorted(np.cumsum(draws.weight), at), len(theta) - 1)
-        mixture = fit_mixture(theta[chosen], 1 if turn == 0 else _COMPONENTS, iterations=10)
+        chosen = np.minimum(np.searchsorted(np.cumsum(draws.weight), at), len(draws.theta) - 1)
+        return fit_mixture(draws.theta[chosen], components, iterations=10)
+
+    for turn in range(_ROUNDS):
+        mixture = refitted(draw(_DRAWS), 1 if turn == 0 else _COMPONENTS)
+    best = draws = draw(_LAST)
+    for _ in range(_REPEATS - 1):
+        if best.effective > _ENOUGH:
+            break
+        mixture = refitted(draws, _COMPONENTS)
+        draws = draw(_LAST)
+        best = draws if draws.effective > best.effective else best
     return best
 
 

@@ -12,12 +12,14 @@ References
 from __future__ import annotations
 
 import math
+from collections.abc import Iterable
 from dataclasses import replace
 
 import numpy as np
 
 from fitter.errors import MufitterError
 from fitter.inference.seeds import child_seed
+from fitter.likelihood.posterior import LogPosterior
 from fitter.study.goodness import goodness
 from fitter.study.influence import influence
 from fitter.study.refit import Refit, refit
@@ -90,7 +92,7 @@ def _residual_tests(log_posterior, base: Refit, seed) -> dict:
 def _batches(changes: list[Scenario]) -> dict[str, tuple[Scenario, ...]]:
     """Tasks: one a change, but for shifted data, which share a factorisation."""
     shifted = [c for c in changes if c.change == "shift_mode"]
-    batches = {c.key: (c,) for c in changes if c.change != "shift_mode"}
+    batches: dict[str, tuple[Scenario, ...]] = {c.key: (c,) for c in changes if c.change != "shift_mode"}
     for start in range(0, len(shifted), _TOGETHER):
         batches[f"modes from {start}"] = tuple(shifted[start : start + _TOGETHER])
     return batches
@@ -98,11 +100,12 @@ def _batches(changes: list[Scenario]) -> dict[str, tuple[Scenario, ...]]:
 
 def _refit_batch(setup: FitSetup, batch: tuple[Scenario, ...], seed) -> dict:
     """Fit the changes of one task; what cannot be fitted says why."""
+    posteriors: Iterable[LogPosterior | None]
     if batch[0].change == "shift_mode":
         data = np.array([changed(setup, change).sample.data for change in batch])
         posteriors = setup.posterior().with_data(data)
     else:
-        posteriors = iter([None])
+        posteriors = [None]
     return {c.key: _refit_one(setup, c, p, child_seed(seed, i)) for i, (c, p) in enumerate(zip(batch, posteriors, strict=True))}
 
 

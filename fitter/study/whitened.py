@@ -8,8 +8,15 @@ from __future__ import annotations
 
 from dataclasses import dataclass
 from functools import cached_property
+from typing import TYPE_CHECKING
 
 import numpy as np
+
+from fitter.array_types import FloatArray
+
+if TYPE_CHECKING:
+    from fitter.likelihood.design import Design
+    from fitter.sample.noise import Noise
 
 __all__ = ["Whitened"]
 
@@ -29,12 +36,12 @@ class Whitened:
         Further templates to project out, e.g. the derivatives by the fitted parameters.
     """
 
-    design: object
-    noise: object
-    extra: np.ndarray
+    design: Design
+    noise: Noise
+    extra: FloatArray
 
     @cached_property
-    def basis(self) -> np.ndarray:
+    def basis(self) -> FloatArray:
         """Q, whitened rows only, (N, m)."""
         k = self.design.gaussian.shape[1]
         whitened = self.noise.whiten(np.column_stack([self.design.gaussian, self.design.flat, self.extra]))
@@ -45,19 +52,19 @@ class Whitened:
         u, s, _ = np.linalg.svd(stacked / np.linalg.norm(stacked, axis=0), full_matrices=False)
         return u[k:, s > 1e-10 * s[0]]
 
-    def residuals(self, r) -> np.ndarray:
+    def residuals(self, r: FloatArray) -> FloatArray:
         """(1 − Q Qᵀ) L⁻¹ r for (N,) or (N, W) residuals in mag: unit normal but for what was fitted."""
         white = self.noise.whiten(r)
         return white - self.basis @ (self.basis.T @ white)
 
-    def back(self, white) -> np.ndarray:
+    def back(self, white: FloatArray) -> FloatArray:
         """L⁻ᵀ of (N, W) whitened columns."""
         if self.noise.is_diagonal:
             return white / np.sqrt(self.noise.variance)[:, None]
         return self._inverse_factor.T @ white
 
     @cached_property
-    def diagonal(self) -> np.ndarray:
+    def diagonal(self) -> FloatArray:
         """Diagonal of P, (N,), mag⁻²: one over the variance of each datum given all others."""
         if self.noise.is_diagonal:
             return (1.0 - np.einsum("ij,ij->i", self.basis, self.basis)) / self.noise.variance
@@ -71,5 +78,5 @@ class Whitened:
         return self.noise.is_diagonal or self.design.n <= _LARGEST
 
     @cached_property
-    def _inverse_factor(self):
+    def _inverse_factor(self) -> FloatArray:
         return self.noise.whiten(np.eye(self.design.n))

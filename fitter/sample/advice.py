@@ -83,7 +83,9 @@ def _counted_twice(sample: Sample) -> list[str]:
     if not sigma or not np.all(sum(sigma) > 0):
         return []
     found = []
-    for term in (t for t in sample.terms if t.kind == "covariance"):
+    for term in sample.terms:
+        if term.kind != "covariance" or term.noise.dense is None:
+            continue
         ratio = np.sqrt(np.abs(np.diagonal(term.noise.dense)) / sum(sigma))
         share = np.mean(ratio >= 0.99)
         if share > 0.95:

@@ -206,7 +206,7 @@ class _Observed:
                 f"keep cuts on {ref}, but `columns` does not map it", column=f"sample.keep.{ref}", cure=f"Add `{ref}: COLUMN` to `columns`"
             )
         if ref in self.values:
-            read = self.numbers if ref in self.unreadable else self.values.get  # the former says again what is wrong
+            read = self.numbers if ref in self.unreadable else self.values.__getitem__  # the former says again what is wrong
             return CutColumn(ref, None, lambda: read(ref), is_redshift=ref in _REDSHIFTS)
         position = self.table.columns.position(mapped)
         redshifts = self.table.columns.known(r for r in (self.columns.redshift, self.columns.redshift_helio) if r is not None)
@@ -300,12 +300,12 @@ def finish(
     found, duplicates = _check(take, place, skip, rest["distance_scale"], allow_duplicates)
     problems.found += found + check_inverse(terms)
     problems.stop_if_any()
-    terms = unique_labels(terms)
+    labelled = unique_labels(terms)
     with problems.collect():
-        noise = combine(terms, place.file)
+        noise = combine(labelled, place.file)
         _ = noise.log_det  # a covariance that is not positive definite is told now, and the factor kept
     problems.stop_if_any()
-    sample = Sample(**take, terms=terms, noise=noise, **rest)
+    sample = Sample(**take, terms=labelled, noise=noise, **rest)
     said = (*notes, *duplicates, *advice(sample, place.columns, calibrators_inside))
     return replace(sample, warnings=said)
 

@@ -15,6 +15,8 @@ from functools import cached_property
 
 import numpy as np
 
+from fitter.array_types import FloatArray, IntArray
+
 __all__ = ["LARGEST", "Cholesky", "NotPositiveDefinite"]
 
 LARGEST = 46_340  # n² must fit LAPACK's 32-bit integers
@@ -24,7 +26,7 @@ _BLOCK = 512
 class NotPositiveDefinite(ArithmeticError):
     """The matrix has an eigenvalue that is not positive; ``order`` is the first leading minor that fails."""
 
-    def __init__(self, order: int):
+    def __init__(self, order: int) -> None:
         self.order = order
         super().__init__(f"the leading minor of order {order} is not positive")
 
@@ -45,7 +47,7 @@ class Cholesky:
         Where A has no such factor.
     """
 
-    def __init__(self, matrix, extra=None):
+    def __init__(self, matrix: FloatArray, extra: FloatArray | None = None) -> None:
         from scipy.linalg import lapack
 
         self.n = len(matrix)
@@ -59,21 +61,21 @@ class Cholesky:
             raise NotPositiveDefinite(max(int(order), 1))
 
     @property
-    def _columns(self):
+    def _columns(self) -> FloatArray:
         """The packed numbers as the rectangle they are laid out in (a view)."""
         even = self.n % 2 == 0
         return self._packed.reshape((self.n + even, -1), order="F")
 
-    def _diagonal_indices(self):
+    def _diagonal_indices(self) -> tuple[IntArray, IntArray]:
         """Rows and columns, in the rectangle, of the N diagonal elements."""
         n2, even = self.n // 2, int(self.n % 2 == 0)
         first, second = np.arange(self.n - n2), np.arange(n2)
         return np.concatenate([first + even, second]), np.concatenate([first, second + 1 - even])
 
-    def _add_to_diagonal(self, extra):
+    def _add_to_diagonal(self, extra: FloatArray) -> None:
         self._columns[self._diagonal_indices()] += extra
 
-    def _blocks(self):
+    def _blocks(self) -> tuple[FloatArray, FloatArray, FloatArray]:
         """L11, L21 and the transpose of L22, as views; only their own triangles hold numbers of L."""
         n2, even = self.n // 2, int(self.n % 2 == 0)
         n1, rectangle = self.n - n2, self._columns
@@ -85,7 +87,7 @@ class Cholesky:
         with np.errstate(invalid="ignore", divide="ignore"):
             return 2.0 * float(np.log(self._columns[self._diagonal_indices()]).sum())
 
-    def solve(self, x):
+    def solve(self, x: FloatArray) -> FloatArray:
         """L⁻¹ x for x of shape (N,) or (N, m)."""
         from scipy.linalg import lapack
 
@@ -94,7 +96,7 @@ class Cholesky:
         out = lapack.dtfsm(1.0, self._packed, flat, transr="N", side="L", uplo="L", trans="N", diag="N")
         return out.reshape(x.shape)
 
-    def transpose_product(self, x):
+    def transpose_product(self, x: FloatArray) -> FloatArray:
         """Lᵀ x for x of shape (N,) or (N, m)."""
         x = np.asarray(x, dtype=float)
         flat, n1 = x.reshape(self.n, -1), self.n - self.n // 2
@@ -102,7 +104,7 @@ class Cholesky:
         top = _upper_product(l11.T, flat[:n1]) + l21.T @ flat[n1:]
         return np.concatenate([top, _upper_product(u22, flat[n1:])]).reshape(x.shape)
 
-    def product(self, x):
+    def product(self, x: FloatArray) -> FloatArray:
         """L x for x of shape (N,) or (N, m)."""
         x = np.asarray(x, dtype=float)
         flat, n1 = x.reshape(self.n, -1), self.n - self.n // 2
@@ -110,7 +112,7 @@ class Cholesky:
         bottom = l21 @ flat[:n1] + _lower_product(u22.T, flat[n1:])
         return np.concatenate([_lower_product(l11, flat[:n1]), bottom]).reshape(x.shape)
 
-    def inverse(self, out=None):
+    def inverse(self, out: FloatArray | None = None) -> FloatArray:
         """A⁻¹, (N, N), symmetric; the factor is spent and must not be used afterwards.
 
         ``out`` is a C-ordered (N, N) array to write it to.
@@ -124,11 +126,11 @@ class Cholesky:
         n1 = len(l11)
         out[:n1, :n1], out[n1:, :n1], out[n1:, n1:] = l11, l21, u22.T
         mirror_lower(out)
-        self._packed = None
+        del self._packed
         return out
 
 
-def mirror_lower(matrix) -> None:
+def mirror_lower(matrix: FloatArray) -> None:
     """Copy the lower triangle of a square array onto the upper one, in place, block by block."""
     n = len(matrix)
     for i in range(0, n, _BLOCK):
@@ -138,7 +140,7 @@ def mirror_lower(matrix) -> None:
         block[...] = np.tril(block) + np.tril(block, -1).T
 
 
-def _upper_product(upper, x):
+def _upper_product(upper: FloatArray, x: FloatArray) -> FloatArray:
     """U x where U is the upper triangle of an array whose other half holds something else."""
     out = np.empty_like(x, order="C")
     for i in range(0, len(x), _BLOCK):
@@ -147,7 +149,7 @@ def _upper_product(upper, x):
     return out
 
 
-def _lower_product(lower, x):
+def _lower_product(lower: FloatArray, x: FloatArray) -> FloatArray:
     """L x where L is the lower triangle of an array whose other half holds something else."""
     out = np.empty_like(x, order="C")
     for i in range(0, len(x), _BLOCK):

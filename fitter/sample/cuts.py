@@ -133,7 +133,7 @@ class Cuts:
             )  # fmt: skip
         known = np.unique(self.groups)
         others = np.ones(len(self.groups), dtype=bool) if rule.others is None else self._passes(rule.others, column)
-        for name, inner in rule.group.items():
+        for name, inner in (rule.group or {}).items():
             members = self.groups == name
             if not members.any():
                 near = difflib.get_close_matches(name, known.tolist(), n=1)

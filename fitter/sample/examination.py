@@ -124,8 +124,8 @@ def correlations(sample: Sample) -> Correlations | None:
     if sample.group is not None:
         same = sample.group[index][upper[0]] == sample.group[index][upper[1]]
         within, between = (float(np.median(values[s])) if s.any() else None for s in (same, ~same))
-    pair = tuple(int(sample.row[index[side[at]]]) for side in upper)
-    return Correlations(float(np.median(np.abs(values))), float(np.abs(values[at])), pair, within, between, len(index))
+    one, other = (int(sample.row[index[side[at]]]) for side in upper)
+    return Correlations(float(np.median(np.abs(values))), float(np.abs(values[at])), (one, other), within, between, len(index))
 
 
 def outliers(sample: Sample) -> list[Outlier]:

@@ -47,9 +47,9 @@ def _instead(path: Path) -> str:
     return f"{hint}It was looked for in {os.path.abspath(folder)}; paths are relative to the config file"
 
 
-def open_binary(path: Path) -> io.BufferedIOBase:
+def open_binary(path: Path) -> io.BufferedReader[io.FileIO] | gzip.GzipFile:
     """Open a file, unpacking it on the way where it is gzipped, whatever its name says."""
-    stream = open(path, "rb", buffering=_BUFFER)
+    stream = io.BufferedReader(io.FileIO(path), _BUFFER)
     packed = stream.peek(2)[:2] == b"\x1f\x8b"
     return gzip.GzipFile(fileobj=stream) if packed else stream
 

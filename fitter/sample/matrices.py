@@ -263,10 +263,11 @@ def _size_of(shape, counts, sizes, table: str, shown: str) -> tuple[int, bool]:
     if fits:
         return fits[0]
     said = [p for p in possible if p[0] in (counts or ())]
-    raise _wrong_size((said or possible or [(None, False)])[0][0], total, sizes, table, shown)
+    nearest = said or possible
+    raise _wrong_size(nearest[0][0] if nearest else None, total, sizes, table, shown)
 
 
-def _wrong_size(n, total: int, sizes, table: str, shown: str) -> InputError:
+def _wrong_size(n: int | None, total: int, sizes, table: str, shown: str) -> InputError:
     if n is None:
         return InputError(
             f"the file holds {total} numbers, but {sizes[0]} rows in {table} call for {sizes[0]}² = {sizes[0] ** 2}", file=shown,

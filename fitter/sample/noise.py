@@ -2,11 +2,14 @@
 
 from __future__ import annotations
 
-from dataclasses import dataclass
+from dataclasses import dataclass, field
 from functools import cached_property
+from typing import Any
 
 import numpy as np
+from numpy.typing import ArrayLike, DTypeLike, NDArray
 
+from fitter.array_types import BoolArray, FloatArray, IntArray
 from fitter.errors import InputError
 from fitter.sample.cholesky import LARGEST, Cholesky, NotPositiveDefinite
 
@@ -15,7 +18,15 @@ __all__ = ["Noise", "read_only"]
 _EXACT_EIGENVALUES = 3000  # rows up to which the smallest eigenvalue is found directly
 
 
-def read_only(values, dtype=float):
+def _no_modes() -> FloatArray:
+    return np.empty((0, 0))
+
+
+def _no_rows() -> IntArray:
+    return np.empty(0, dtype=int)
+
+
+def read_only(values: ArrayLike, dtype: DTypeLike | None = float) -> NDArray[Any]:
     """Return a C-ordered view that cannot be written to (the array behind it is left alone)."""
     view = np.ascontiguousarray(values, dtype=dtype).view()
     view.setflags(write=False)
@@ -34,28 +45,28 @@ class Noise:
         Symmetric, without ``variance``, mag².
     precision : (N, N) array or None
         An inverse covariance as it was given, mag⁻²; then ``variance`` is 0 and ``dense`` None.
-    modes : (N, k) array or None
-        One-sigma shifts, mag, each with an amplitude drawn from a unit Gaussian.
+    modes : (N, k) array
+        One-sigma shifts, mag, each with an amplitude drawn from a unit Gaussian; none by default.
     mode_names : sequence of str
         k names.
     source : str or None
         The file or files that a message about this covariance should name.
-    source_rows : (N,) array of int or None
+    source_rows : (N,) array of int
         The row of that file, from 1, that each datum stands in (1 … N by default).
     """
 
-    variance: np.ndarray
-    dense: np.ndarray | None = None
-    precision: np.ndarray | None = None
-    modes: np.ndarray | None = None
+    variance: FloatArray
+    dense: FloatArray | None = None
+    precision: FloatArray | None = None
+    modes: FloatArray = field(default_factory=_no_modes)
     mode_names: tuple[str, ...] = ()
     source: str | None = None
-    source_rows: np.ndarray | None = None
+    source_rows: IntArray = field(default_factory=_no_rows)
 
-    def __post_init__(self):
+    def __post_init__(self) -> None:
         n = len(self.variance)
-        modes = np.empty((n, 0)) if self.modes is None else self.modes
-        rows = np.arange(1, n + 1) if self.source_rows is None else self.source_rows
+        modes = self.modes if np.size(self.modes) else np.empty((n, 0))
+        rows = self.source_rows if np.size(self.source_rows) else np.arange(1, n + 1)
         arrays = {"variance": read_only(self.variance), "modes": read_only(modes), "source_rows": read_only(rows, int)}
         arrays |= {k: read_only(getattr(self, k)) for k in ("dense", "precision") if getattr(self, k) is not None}
         for key, value in arrays.items():
@@ -68,11 +79,11 @@ class Noise:
                 cure="Give the systematics as modes (N × k one-sigma shifts) instead",
             )
 
-    def __getstate__(self):
+    def __getstate__(self) -> dict[str, Any]:
         # The factor is quicker to make again than to send between processes.
         return {k: v for k, v in self.__dict__.items() if k in self.__dataclass_fields__}
 
-    def __setstate__(self, state):
+    def __setstate__(self, state: dict[str, Any]) -> None:
         self.__dict__.update(state)
 
     @property
@@ -86,20 +97,29 @@ class Noise:
         return self.dense is None and self.precision is None
 
     @cached_property
-    def _factor(self):
-        """Standard deviations (N,), or the Cholesky factor of the covariance or of the precision."""
-        if self.is_diagonal:
-            if not np.all(self.variance > 0):
-                raise self._no_error()
-            return read_only(np.sqrt(self.variance))
+    def _sigma(self) -> FloatArray:
+        """Standard deviations (N,) of a diagonal covariance."""
+        if not np.all(self.variance > 0):
+            raise self._no_error()
+        return read_only(np.sqrt(self.variance))
+
+    @property
+    def _matrix(self) -> FloatArray:
+        """The covariance, without the variance apart, or the precision; of a noise that is not diagonal."""
+        matrix = self.dense if self.precision is None else self.precision
+        if matrix is None:
+            raise ValueError("a diagonal covariance has no matrix")
+        return matrix
+
+    @cached_property
+    def _factor(self) -> Cholesky:
+        """Cholesky factor of the covariance or of the precision."""
         try:
-            if self.precision is not None:
-                return Cholesky(self.precision)
-            return Cholesky(self.dense, self.variance)
+            return Cholesky(self._matrix, self.variance if self.precision is None else None)
         except NotPositiveDefinite as failure:
             raise self._not_positive_definite(failure) from None
 
-    def whiten(self, x, rows=slice(None)):
+    def whiten(self, x: ArrayLike, rows: slice = slice(None)) -> FloatArray:
         """L⁻¹ x, with C = L Lᵀ (for a precision P = G Gᵀ, Gᵀ x); modes are left out.
 
         Parameters
@@ -116,7 +136,7 @@ class Noise:
         """
         x = np.asarray(x, dtype=float)
         if self.is_diagonal:
-            sigma = self._factor[rows]
+            sigma = self._sigma[rows]
             return x / (sigma if x.ndim == 1 else sigma[:, None])
         if rows != slice(None):
             raise ValueError("a correlated covariance whitens all rows together")
@@ -126,20 +146,18 @@ class Noise:
     def log_det(self) -> float:
         """ln det C, modes left out; C in mag²."""
         if self.is_diagonal:
-            return 2.0 * float(np.log(self._factor).sum())
+            return 2.0 * float(np.log(self._sigma).sum())
         return -self._factor.log_det if self.precision is not None else self._factor.log_det
 
     @cached_property
-    def total_variance(self):
+    def total_variance(self) -> FloatArray:
         """(N,) diagonal of C with everything in it, modes too, mag²."""
         diagonal = np.array(self.variance)
-        if self.precision is not None:
-            diagonal += np.diagonal(self.inverted().dense)
-        elif self.dense is not None:
-            diagonal += np.diagonal(self.dense)
+        if not self.is_diagonal:
+            diagonal += np.diagonal(self.inverted()._matrix)
         return read_only(diagonal + np.einsum("ij,ij->i", self.modes, self.modes))
 
-    def covariance(self):
+    def covariance(self) -> FloatArray:
         """The whole C as one (N, N) array, modes included, mag²."""
         if self.precision is not None:
             return self.inverted().covariance()
@@ -149,11 +167,11 @@ class Noise:
         full[np.diag_indices(self.n)] += self.variance
         return full
 
-    def draw(self, rng, size: int):
+    def draw(self, rng: np.random.Generator, size: int) -> FloatArray:
         """Return (size, N) draws of the scatter from the whole C, mag."""
         white = rng.standard_normal((self.n, size))
         if self.is_diagonal:
-            scatter = white * self._factor[:, None]
+            scatter = white * self._sigma[:, None]
         elif self.precision is not None:
             scatter = self.inverted()._factor.product(white)
         else:
@@ -169,24 +187,24 @@ class Noise:
     @cached_property
     def _inverse(self) -> Noise:
         try:
-            dense = Cholesky(self.precision).inverse()
+            dense = Cholesky(self._matrix).inverse()
         except NotPositiveDefinite as failure:
             raise self._not_positive_definite(failure) from None
         return self._like(dense=dense, precision=None)
 
-    def plus_variance(self, variance) -> Noise:
+    def plus_variance(self, variance: float | FloatArray) -> Noise:
         """Return the noise with ``variance`` (number or (N,), mag²) added to the diagonal of C."""
         noise = self.inverted()
         return noise._like(variance=noise.variance + variance)
 
-    def select(self, mask) -> Noise:
+    def select(self, mask: BoolArray | IntArray) -> Noise:
         """Return the noise of some of the rows (mask or indices): what is left out is marginalised, not held."""
         noise = self.inverted()
         index = np.arange(self.n)[mask]
         dense = None if noise.dense is None else noise.dense[np.ix_(index, index)]
         return noise._like(variance=noise.variance[index], dense=dense, modes=noise.modes[index], source_rows=noise.source_rows[index])
 
-    def _like(self, **changed) -> Noise:
+    def _like(self, **changed: Any) -> Noise:
         return Noise(**{k: changed.get(k, getattr(self, k)) for k in self.__dataclass_fields__})
 
     def _no_error(self) -> InputError:
@@ -201,7 +219,7 @@ class Noise:
 
     def _not_positive_definite(self, failure: NotPositiveDefinite) -> InputError:
         what = "inverse covariance" if self.precision is not None else "covariance"
-        matrix = self.precision if self.precision is not None else self.dense
+        matrix = self._matrix
         smallest, vector = _smallest_eigenpair(matrix, self.variance)
         worst = failure.order - 1 if vector is None else int(np.argmax(np.abs(vector)))
         largest = float(np.max(np.abs(np.diagonal(matrix))))
@@ -216,7 +234,7 @@ class Noise:
         )
 
 
-def _smallest_eigenpair(matrix, variance):
+def _smallest_eigenpair(matrix: FloatArray, variance: FloatArray) -> tuple[float, FloatArray | None]:
     """Smallest eigenvalue of matrix + diag(variance) and its vector; (nan, None) where it cannot be had."""
     n = len(matrix)
     if n <= _EXACT_EIGENVALUES:

@@ -60,6 +60,20 @@ class Recognised:
             return "magnitude"
         return next((role for role in ("distance_modulus", "magnitude") if role in self.roles), None)
 
+    @property
+    def data_column(self) -> str | int:
+        """Column of the data.
+
+        Raises
+        ------
+        KeyError
+            No column holds data.
+        """
+        role = self.data
+        if role is None:
+            raise KeyError("no column of this table holds distances")
+        return self.roles[role]
+
 
 @dataclass(frozen=True)
 class _Rule:
@@ -216,13 +230,14 @@ def _goes_with_redshift(found: Recognised, rule: _Rule, position: int) -> bool:
     both = np.isfinite(z) & np.isfinite(values)
     if both.sum() < 5:
         return True
-    ranks = [np.argsort(np.argsort(v[both])) for v in (z, values)]
-    return bool(np.corrcoef(ranks)[0, 1] > 0.5)
+    ranks = np.array([np.argsort(np.argsort(v[both])) for v in (z, values)], dtype=float)
+    ranks -= ranks.mean(axis=1, keepdims=True)
+    return bool(ranks[0] @ ranks[1] > 0.5 * np.sqrt((ranks[0] @ ranks[0]) * (ranks[1] @ ranks[1])))
 
 
 def _sigma(found: Recognised) -> None:
     """The errors of the data, by name, else the column that follows the data."""
-    data = found.table.columns.position(found.roles[found.data])
+    data = found.table.columns.position(found.data_column)
     own = _named_errors(found)
     if own:
         found.roles["sigma"], found.reasons["sigma"] = _label(found.table, own[0]), "by its name, and its numbers fit"
@@ -241,7 +256,7 @@ def error_column(found: Recognised) -> str | int | None:
 
 def _named_errors(found: Recognised) -> list[int]:
     """Columns with a name that says error and belongs to the data's, else says nothing but error; the best first."""
-    stem = re.split(r"[_\W]", str(found.table.columns.label(found.table.columns.position(found.roles[found.data]))).lower())[0]
+    stem = re.split(r"[_\W]", str(found.table.columns.label(found.table.columns.position(found.data_column))).lower())[0]
     labels = {p: found.table.columns.label(p) for p in _number_columns(found) if _is_sigma(found.table.floats[p])}
     names = {p: label.lower() for p, label in labels.items() if isinstance(label, str)}
     said = [p for p in names if re.search(r"err|sig|unc|std|^d|^e_|_e$|^e$", names[p])]

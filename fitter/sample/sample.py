@@ -9,6 +9,7 @@ from functools import cached_property
 
 import numpy as np
 
+from fitter.array_types import IntArray
 from fitter.errors import InputError, InputErrors
 from fitter.sample.noise import Noise, read_only
 from fitter.sample.uncertainty.term import Term, combine
@@ -70,7 +71,7 @@ class Sample:
     intrinsic_prior: dict | None = None
     covariance_scale_prior: dict | float | None = None
     removed: dict[str, int] = field(default_factory=dict)
-    row: np.ndarray | None = None
+    row: IntArray = field(default_factory=lambda: np.empty(0, dtype=int))
     sources: dict[str, str] = field(default_factory=dict)
     warnings: tuple[str, ...] = ()
 
@@ -80,7 +81,7 @@ class Sample:
         for key in ("group", "name"):
             if getattr(self, key) is not None:
                 object.__setattr__(self, key, read_only(getattr(self, key), None))
-        row = np.arange(1, self.n + 1) if self.row is None else self.row
+        row = self.row if np.size(self.row) else np.arange(1, self.n + 1)
         object.__setattr__(self, "row", read_only(row, int))
 
     @property
@@ -117,7 +118,7 @@ class Sample:
         for values in (*parts, noise.variance, noise.dense, noise.precision, noise.modes):
             digest.update(b"|")
             if values is not None:
-                digest.update(memoryview(values.astype("<f8", copy=False)).cast("B") if values.size else b"")
+                digest.update(values.astype("<f8", copy=False).data.cast("B") if values.size else b"")
         return digest.hexdigest()
 
     @classmethod

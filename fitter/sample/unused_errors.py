@@ -41,7 +41,7 @@ def unused_errors(settings: SampleSettings, table: Table, path: Path, options, s
 
 
 def _error_column(settings: SampleSettings, table: Table, path: Path, options):
-    names = table.columns.names
+    names = table.columns.names or []
     data = getattr(settings.columns, settings.data_kind)
     everything = [p for p in range(len(names)) if names[p]]
     again = read_table(path, options, numbers=[data, *everything], shown=settings.table)

@@ -132,6 +132,8 @@ def check_inverse(terms: list[Term]) -> list[InputError]:
     problems = []
     for term in terms:
         matrix = term.noise.precision if term.kind == "precision" else term.noise.dense
+        if matrix is None:
+            continue
         if term.kind == "covariance" and looks_inverse(np.diagonal(matrix), sum(sigma) if sigma else None):
             problems.append(
                 InputError(
@@ -140,7 +142,7 @@ def check_inverse(terms: list[Term]) -> list[InputError]:
                     file=term.noise.source, column="covariance", cure="Use it as uncertainty: [{precision: FILE}], without a sigma term",
                 )
             )  # fmt: skip
-        elif term.kind == "precision" and matrix is not None and np.median(np.diagonal(matrix)) < 1 / _LARGEST_VARIANCE:
+        elif term.kind == "precision" and np.median(np.diagonal(matrix)) < 1 / _LARGEST_VARIANCE:
             median = np.median(np.diagonal(matrix))
             problems.append(
                 InputError(

@@ -84,7 +84,8 @@ def _read(path: Path, n: int, header: list[str] | None, beside: bool, shown: str
         count += 1
     if count < n:
         raise InputError(f"the labelled matrix has {count} rows, not {n}", file=shown, cure="Check that the file is whole")
-    labels = labels if beside else header
+    if not beside and header is not None:
+        labels = header
     if header is not None and labels != header:
         at = next(i for i in range(n) if labels[i] != header[i])
         raise InputError(

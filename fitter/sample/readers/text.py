@@ -5,6 +5,7 @@ from __future__ import annotations
 import io
 from collections.abc import Sequence
 from pathlib import Path
+from typing import Literal
 
 import numpy as np
 
@@ -106,7 +107,7 @@ def _parse(path: Path, layout: Layout, options: TextOptions, as_numbers, needed)
     names = ["tag"] * layout.tagged + [f"column {p}" for p in range(layout.n_columns)]  # words: pandas takes whole numbers for positions
     chosen = {p: f"column {p}" for p in needed}
     # Correctly rounded numbers are the default of newer releases of pandas, which warn when they are asked for.
-    exact = {"float_precision": "round_trip"} if tuple(map(int, pd.__version__.split(".")[:2])) < (3, 1) else {}
+    exact: Literal["round_trip"] | None = "round_trip" if tuple(map(int, pd.__version__.split(".")[:2])) < (3, 1) else None
     missing = sorted({form for token in MISSING for form in (token, token.upper(), token.capitalize())} | {"NaN"})
     with io.TextIOWrapper(open_binary(path), encoding=layout.encoding) as source:
         frame = pd.read_csv(
@@ -116,11 +117,11 @@ def _parse(path: Path, layout: Layout, options: TextOptions, as_numbers, needed)
             names=names,
             usecols=list(chosen.values()),
             dtype={name: (np.float64 if p in as_numbers else object) for p, name in chosen.items()},
-            skiprows=layout.skip,
+            skiprows=layout.skip.tolist(),
             keep_default_na=False,
             na_values={chosen[p]: missing for p in as_numbers},
             skipinitialspace=layout.delimiter != WHITESPACE,
-            **exact,
+            float_precision=exact,
             index_col=False,
             engine="c",
         )
@@ -131,7 +132,7 @@ def _parse(path: Path, layout: Layout, options: TextOptions, as_numbers, needed)
 
 def _split(path: Path, layout: Layout, options: TextOptions, needed) -> dict[int, np.ndarray]:
     """Read the columns as words, line by line."""
-    found = {p: [] for p in needed}
+    found: dict[int, list[str]] = {p: [] for p in needed}
     for text in _rows(path, layout, options):
         fields = split_fields(text, layout.delimiter)
         for position, words in found.items():

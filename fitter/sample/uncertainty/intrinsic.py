@@ -7,7 +7,7 @@ from typing import ClassVar
 import numpy as np
 from pydantic import Field
 
-from fitter.sample.uncertainty.base import FreeOrFixed, Rows, TermSettings, is_free
+from fitter.sample.uncertainty.base import FreeOrFixed, Rows, TermSettings
 from fitter.sample.uncertainty.term import Term
 
 __all__ = ["Intrinsic"]
@@ -21,4 +21,6 @@ class Intrinsic(TermSettings):
     intrinsic: FreeOrFixed = Field(description="Intrinsic scatter, mag; or a prior, and it is fitted.")
 
     def build(self, rows: Rows) -> Term | None:
-        return None if is_free(self.intrinsic) else self.term(rows.noise(np.full(rows.n, self.intrinsic**2)))
+        if isinstance(self.intrinsic, dict):
+            return None
+        return self.term(rows.noise(np.full(rows.n, self.intrinsic**2)))

@@ -7,6 +7,7 @@ from dataclasses import dataclass, replace
 
 import numpy as np
 
+from fitter.array_types import BoolArray, FloatArray, IntArray
 from fitter.errors import InputError
 from fitter.sample.noise import Noise
 
@@ -32,11 +33,11 @@ class Term:
     noise: Noise
 
     @property
-    def variance(self):
+    def variance(self) -> FloatArray:
         """(N,) its share of the total variance, mag²."""
         return self.noise.total_variance
 
-    def select(self, mask) -> Term:
+    def select(self, mask: BoolArray | IntArray) -> Term:
         """Return the term for some of the rows."""
         return replace(self, noise=self.noise.select(mask))
 
@@ -79,20 +80,20 @@ def combine(terms: Sequence[Term], source: str | None = None) -> Noise:
     if precise and (np.any(variance) or len(precise) > 1 or any(p.dense is not None for p in parts)):
         parts, precise = [p.inverted() for p in parts], []
     matrices = [p for p in parts if not p.is_diagonal]
-    shifts = [p.modes for p in parts if p.mode_names]
+    shifts = [p.modes for p in parts if p.mode_names] or [parts[0].modes[:, :0]]
     files = dict.fromkeys(p.source for p in matrices or parts if p.source)
     return Noise(
         variance,
-        dense=None if precise else _total([p.dense for p in matrices]),
+        dense=None if precise else _total([p.dense for p in matrices if p.dense is not None]),
         precision=precise[0].precision if precise else None,
-        modes=np.hstack(shifts) if len(shifts) > 1 else (shifts[0] if shifts else None),
+        modes=np.hstack(shifts) if len(shifts) > 1 else shifts[0],
         mode_names=tuple(name for p in parts for name in p.mode_names),
         source=" + ".join(files) or source,
         source_rows=(matrices or parts)[0].source_rows,
     )
 
 
-def _total(matrices):
+def _total(matrices: list[FloatArray]) -> FloatArray | None:
     """Sum of dense matrices; a single one is passed on without a copy."""
     if len(matrices) < 2:
         return matrices[0] if matrices else None

@@ -16,7 +16,7 @@ from typing import TYPE_CHECKING, Any, Literal
 import numpy as np
 
 from fitter.config.figures import figure_problems
-from fitter.config.load import config_from_mapping, load_config, raise_all, valid, validate
+from fitter.config.load import config_from_mapping, files_at_a_glance, load_config, placing, raise_all, valid, validate
 from fitter.config.parameters import FLAT
 from fitter.config.settings import Config
 from fitter.config.write import as_run, config_hash, config_text, differences, input_problems
@@ -292,13 +292,14 @@ class _Job:
     @classmethod
     def prepare(cls, config: Config, sample: Sample | None, folder: RunFolder | None, progress: bool) -> _Job:
         """Read the data and build the likelihood; nothing is written."""
-        if sample is None:
-            sample = Sample.from_config(config.sample, config.folder)
-            raise_all(input_problems(config, sample))
-        log_posterior = _likelihood(config, sample)
-        config.sampling.check_dimension(len(log_posterior.names))
-        raise_all(figure_problems(config, log_posterior))
-        hidden_names(config.blind, log_posterior)
+        with placing(config.document):
+            if sample is None:
+                sample = Sample.from_config(config.sample, config.folder)
+                raise_all(input_problems(config, sample))
+            log_posterior = _likelihood(config, sample)
+            config.sampling.check_dimension(len(log_posterior.names))
+            raise_all(figure_problems(config, log_posterior))
+            hidden_names(config.blind, log_posterior)
         return cls(config, sample, log_posterior, folder, progress)
 
     @property
@@ -587,9 +588,12 @@ def check(path: str | Path, *, allow_code: bool = False) -> Check:
     folder = Path(path).parent
     config, sample_settings, problems = validate(document, folder, allow_code=allow_code)
     sample = None
-    if sample_settings is not None:
+    if sample_settings is None:
+        problems += files_at_a_glance(document, folder)
+    else:
         try:
-            sample = Sample.from_config(sample_settings, folder)
+            with placing(document):
+                sample = Sample.from_config(sample_settings, folder)
         except InputError as error:
             problems += getattr(error, "errors", [error])
     problems += _variant_problems(config)
@@ -614,10 +618,11 @@ def _variant_problems(config: Config | None) -> list[InputError]:
 def _check_likelihood(config: Config, sample: Sample) -> Check:
     problems = input_problems(config, sample)
     try:
-        log_posterior = _likelihood(config, sample)
-        config.sampling.check_dimension(len(log_posterior.names))
-        problems += figure_problems(config, log_posterior)
-        hidden_names(config.blind, log_posterior)
+        with placing(config.document):
+            log_posterior = _likelihood(config, sample)
+            config.sampling.check_dimension(len(log_posterior.names))
+            problems += figure_problems(config, log_posterior)
+            hidden_names(config.blind, log_posterior)
     except InputError as error:
         return Check((*problems, *getattr(error, "errors", [error])), config, sample)
     return Check(tuple(problems), config, sample, log_posterior)

@@ -150,7 +150,7 @@ def _check_scale(scale: str | None) -> None:
     from fitter.study.odds import SCALES
 
     if scale is not None and scale not in SCALES:
-        raise InputError("there is no such scale of odds", column="scale", value=scale, cure=f"Choose one of {', '.join(SCALES)}")
+        raise InputError("there is no such scale of odds", value=scale, cure=f"Choose one of {', '.join(SCALES)}")
 
 
 def _report(entries: list[Entry], options: dict, seed: int) -> dict:
@@ -317,7 +317,7 @@ def _rebuilt(run, path, allow_code: bool):
 
 def _renamed(entries: list[Entry], names: list[str]) -> list[Entry]:
     if len(names) != len(entries) or len(set(names)) < len(names):
-        raise InputError(f"{len(entries)} runs need as many different names", column="name", value=names)
+        raise InputError(f"{len(entries)} runs need as many different names", value=names)
     return [replace(e, name=n) for e, n in zip(entries, names, strict=True)]
 
 

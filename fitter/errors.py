@@ -25,7 +25,9 @@ class InputError(MufitterError):
     row : int, optional
         Line number in that file (1 is the first line), or 1-based matrix row.
     column : str or int, optional
-        Column name (tables) or dotted key (configs).
+        Column of a table or of a matrix.
+    key : str, optional
+        Dotted key of a config.
     value : object, optional
         The offending value, as it was read.
     cure : str, optional
@@ -34,21 +36,22 @@ class InputError(MufitterError):
 
     exit_code = 2
 
-    def __init__(self, problem: str, *, file=None, row=None, column=None, value=None, cure=None):
+    def __init__(self, problem: str, *, file=None, row=None, column=None, key=None, value=None, cure=None):
         self.problem, self.file, self.row = problem, file, row
-        self.column, self.value, self.cure = column, value, cure
+        self.column, self.key, self.value, self.cure = column, key, value, cure
         super().__init__(str(self))
 
     def __reduce__(self):
         # Keyword-only arguments do not survive the default pickling of exceptions,
         # and these errors cross process borders.
-        where = {k: getattr(self, k) for k in ("file", "row", "column", "value", "cure")}
+        where = {k: getattr(self, k) for k in ("file", "row", "column", "key", "value", "cure")}
         return _rebuild, (type(self), self.problem, where)
 
     def __str__(self) -> str:
         place = [str(self.file)] if self.file is not None else []
         place += [f"row {self.row}"] if self.row is not None else []
         place += [f"column {self.column}"] if self.column is not None else []
+        place += [f"key {self.key}"] if self.key is not None else []
         text = f"{', '.join(place)}: {self.problem}" if place else self.problem
         if self.value is not None:
             text += f" (found {self.value!r})"

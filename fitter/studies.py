@@ -187,7 +187,9 @@ def parse_truth(text: str | None) -> str | dict[str, float] | None:
         try:
             found[name.strip()] = float(value)
         except ValueError:
-            raise InputError("this says no truth", column="truth", value=item, cure="Write NAME=NUMBER, separated by commas") from None
+            raise InputError(
+                "the truth of the mocks cannot be read from this", value=item, cure="Write NAME=NUMBER, separated by commas"
+            ) from None
     return found
 
 
@@ -199,9 +201,11 @@ def _rehearsal(job: StudyJob, source: StudyJob, options: MockOptions):
         truth = "prior" if source.planned or hidden else "best"
     if truth == "best" and (source.planned or hidden):
         why = "a survey without data has no best fit" if source.planned else "the best fit of a blinded config is hidden"
-        raise InputError(why, column="truth", cure="Draw from the prior, or give the true values")
+        raise InputError(why, cure="Draw from the prior, or give the true values")
     if isinstance(truth, str) and truth not in ("best", "prior"):
-        raise InputError("this says no truth", column="truth", value=truth, cure="Give `best`, `prior` or values such as omega_m=0.3")
+        raise InputError(
+            "the truth of the mocks cannot be read from this", value=truth, cure="Give `best`, `prior` or values such as omega_m=0.3"
+        )
     if truth == "best":
         truth = best_truth(source.setup, source.seed(_REHEARSAL))
     values = dict(truth) if isinstance(truth, dict) else None

@@ -161,7 +161,7 @@ def test_a_check_of_changed_inputs(scratch):
         file.write(f"inputs: {{survey.csv: {'a' * 64}}}\n")
     found = run("check", "config.yaml", cwd=scratch)
     assert found.returncode == 2
-    assert "row 13, column inputs.survey.csv: the file has changed" in found.stderr
+    assert "row 13, key inputs.survey.csv: the file has changed" in found.stderr
 
 
 @pytest.mark.parametrize(

@@ -125,7 +125,7 @@ def judged(path):
         str(found)
     for problem in found.problems:
         assert isinstance(problem, InputError) and len(problem.problem) > 10
-        assert problem.file is not None or problem.column is not None
+        assert problem.file is not None or problem.key is not None
     if found.ok and found.log_posterior is not None:
         posterior = found.log_posterior
         theta = np.column_stack([prior.sample(np.random.default_rng(0), 4) for prior in posterior.priors])

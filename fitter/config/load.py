@@ -3,22 +3,34 @@
 from __future__ import annotations
 
 import os
-from collections.abc import Mapping
+from collections.abc import Iterator, Mapping
+from contextlib import contextmanager
 from pathlib import Path
+from types import SimpleNamespace
 from typing import Any
 
 from pydantic import TypeAdapter, ValidationError
 
 from fitter.config.model_choice import chosen_model
-from fitter.config.parameters import parameter_problems
-from fitter.config.problems import problems_of
+from fitter.config.parameters import loose_problems, parameter_problems, term_prior_problems
+from fitter.config.repair import Reading, read_through
 from fitter.config.settings import Config, SampleSettings
 from fitter.config.yaml_file import Document, read_yaml
 from fitter.cosmology import Model
 from fitter.errors import InputError, InputErrors
 from fitter.sample.capsule import AnySample, CapsuleSettings, read_capsule
+from fitter.sample.glance import glance
 
-__all__ = ["config_from_mapping", "load_config", "described", "raise_all", "valid", "validate"]
+__all__ = [
+    "config_from_mapping",
+    "load_config",
+    "described",
+    "files_at_a_glance",
+    "placing",
+    "raise_all",
+    "valid",
+    "validate",
+]
 
 
 def load_config(path: str | Path, *, allow_code: bool = False) -> Config:
@@ -109,30 +121,46 @@ def validate(
     problems : list of InputError
         In the order of the file.
     """
-    config, problems = None, []
     model, refused = chosen_model(document, folder, allow_code)
-    try:
-        config = Config.model_validate(document.data)
+    reading = read_through(document)
+    config, problems = reading.config, reading.problems
+    if config is not None:
         config._document, config._folder, config._cosmology, config._allow_code = document, folder, model, allow_code
-    except ValidationError as error:
-        problems = problems_of(error, Config, document)
-    except InputError as error:
-        problems = [_placed(error, document)]
     if arrays is None and document.data.get("sample") is None:
         cure = "It says what was observed: `sample: {table: …, columns: {…}, uncertainty: […]}`"
         problems.insert(0, document.error("the key `sample` is missing", cure=cure))
-    sample = config.sample if config is not None else _sample_settings(document)
-    problems += refused + _parameter_problems(document, model, described(sample, folder) if arrays is None else arrays)
+    sample = config.sample if config is not None else _sample_settings(reading)
+    known = arrays if arrays is not None else described(sample, folder) or _said_of_data(reading)
+    problems += refused + term_prior_problems(document.data.get("sample"), document) + _parameter_problems(reading.document, model, known)
     problems.sort(key=lambda p: p.row or 0)
     return (None if problems else config), sample, problems
 
 
-def _sample_settings(document: Document) -> SampleSettings | CapsuleSettings | None:
+def files_at_a_glance(document: Document, folder: Path) -> list[InputError]:
+    """Return which files and columns are missing, for a config whose ``sample`` is not right as a whole."""
+    return glance(read_through(document).document.data.get("sample"), folder)
+
+
+def _sample_settings(reading: Reading) -> SampleSettings | CapsuleSettings | None:
+    """The settings of the sample, misspelt keys read as what they most likely stand for; None where something had to be left out."""
+    if not reading.is_whole("sample"):
+        return None
     try:
         adapter: TypeAdapter[SampleSettings | CapsuleSettings] = TypeAdapter(AnySample)
-        return adapter.validate_python(document.data.get("sample"))
-    except (ValidationError, InputError):
+        return adapter.validate_python(reading.document.data.get("sample"))
+    except ValidationError:
         return None
+
+
+def _said_of_data(reading: Reading) -> SimpleNamespace | None:
+    """Distance scale and kind of data of a sample that is not right as a whole; None where these are in doubt themselves."""
+    sample = reading.document.data.get("sample")
+    if not isinstance(sample, dict) or not isinstance(sample.get("columns"), dict) or "capsule" in sample:
+        return None
+    if not (reading.is_whole("sample", "distance_scale") and reading.is_whole("sample", "columns")):
+        return None
+    kind = "magnitude" if "magnitude" in sample["columns"] else "distance_modulus"
+    return SimpleNamespace(distance_scale=sample.get("distance_scale", "relative"), data_kind=kind)
 
 
 def described(sample, folder: Path):
@@ -145,11 +173,14 @@ def described(sample, folder: Path):
         return None  # said again, with its place, when the sample is read
 
 
-def _parameter_problems(document: Document, model: Model | None, sample: SampleSettings | None) -> list[InputError]:
-    given = document.data.get("parameters") or {}
-    # The parameters of a base are checked with each variant, whose model may be another.
-    if not isinstance(given, dict) or model is None or sample is None or document.data.get("variants"):
+def _parameter_problems(document: Document, model: Model | None, sample) -> list[InputError]:
+    given, variants = document.data.get("parameters") or {}, document.data.get("variants")
+    if not isinstance(given, dict):
         return []
+    models = [document.data.get("model"), *(v.get("model") for v in variants or () if isinstance(v, dict))]
+    # The parameters of a base are checked with each variant, whose model may be another.
+    if model is None or sample is None or variants:
+        return [] if any(isinstance(m, dict) for m in models) else loose_problems(given, document)
     return parameter_problems(given, model, sample.distance_scale, document, _data_kind(sample))
 
 
@@ -159,9 +190,22 @@ def _data_kind(sample) -> str:
     return "magnitude" if getattr(sample.columns, "magnitude", None) is not None else "distance_modulus"
 
 
+@contextmanager
+def placing(document: Document) -> Iterator[None]:
+    """Give errors that name a key, and no file, the file and the row of that key."""
+    try:
+        yield
+    except InputErrors as several:
+        raise InputErrors([_placed(error, document) for error in several.errors]) from None
+    except InputError as error:
+        placed = _placed(error, document)
+        if placed is error:
+            raise
+        raise placed from None
+
+
 def _placed(error: InputError, document: Document) -> InputError:
-    """Give an error from inside a section the file and row of the key that it names."""
-    if error.file is not None:
+    if error.file is not None or error.key is None:
         return error
-    keys = tuple(int(k) if k.isdigit() else k for k in str(error.column).split(".")) if error.column else ()
+    keys = tuple(int(k) if k.isdigit() else k for k in error.key.split("."))
     return document.error(error.problem, keys, value=error.value, cure=error.cure)

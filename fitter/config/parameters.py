@@ -11,7 +11,7 @@ from fitter.cosmology import MODELS, Model, get_model
 from fitter.errors import InputError
 from fitter.parameters import PARAMETERS, Parameter
 
-__all__ = ["FLAT", "complete_parameters", "free_parameters", "parameter_problems"]
+__all__ = ["FLAT", "complete_parameters", "free_parameters", "loose_problems", "parameter_problems", "term_prior_problems"]
 
 FLAT: dict[str, list[float]] = {"flat": []}
 """How a config writes the improper flat prior of the absolute magnitude."""
@@ -75,6 +75,34 @@ def parameter_problems(
     return problems
 
 
+def loose_problems(given: dict, document: Document) -> list[InputError]:
+    """Return what is wrong with a `parameters:` section whatever model and data it is for: names that none has, values that are none."""
+    problems = []
+    for name, value in given.items():
+        if name in PARAMETERS:
+            problem = _value_problem(name, value, PARAMETERS[name].default_prior, document)
+        else:
+            near = nearest(name, PARAMETERS)
+            cure = f"Did you mean `{near}`?" if near else f"Parameters are {', '.join(n for n, p in PARAMETERS.items() if p.default_prior)}"
+            problem = document.error("there is no such parameter", ("parameters", name), value=value, cure=cure)
+        if problem is not None:
+            problems.append(problem)
+    return problems
+
+
+def term_prior_problems(sample: Any, document: Document) -> list[InputError]:
+    """Return what is wrong with the priors of uncertainty terms that are fitted."""
+    terms = sample.get("uncertainty") if isinstance(sample, dict) else None
+    problems = []
+    for i, item in enumerate(terms if isinstance(terms, list) else ()):
+        for name, term in _SET_IN_UNCERTAINTY.items():
+            given = item.get(term) if isinstance(item, dict) else None
+            if isinstance(given, dict) and len(given) == 1:
+                problem = _prior_problem(name, given, ("sample", "uncertainty", i, term), document)
+                problems += [problem] if problem is not None else []
+    return problems
+
+
 def _why_not(name: str, model: str, distance_scale: str, known: list[str]) -> tuple[str, str]:
     """Why a name is no parameter of this fit, and what to do."""
     if name == "H0" and distance_scale == "relative":
@@ -97,8 +125,12 @@ def _why_not(name: str, model: str, distance_scale: str, known: list[str]) -> tu
         return f"{model} has no parameter {name}", f"Remove it, or choose a model that has it: {', '.join(having)}"
     if name in PARAMETERS:
         return f"{name} is derived from the others, it cannot be set", f"Remove it. Parameters of this fit: {', '.join(known)}"
-    near = nearest(name, known) or nearest(name, PARAMETERS)
+    near = nearest(name, [*known, *PARAMETERS])
     suggestion = f"Did you mean `{near}`? " if near else ""
+    if near and near not in known:
+        # The nearest name is one that this fit does not have: say so, instead of pointing to another quantity.
+        why, cure = _why_not(near, model, distance_scale, known)
+        suggestion += f"That is no parameter of {model} on this distance scale: {why}. {cure}. "
     return "there is no such parameter", f"{suggestion}Parameters of this fit: {', '.join(known)}"
 
 

@@ -10,10 +10,11 @@ from collections.abc import Iterable
 
 from pydantic import BaseModel, ValidationError
 
+from fitter.config.examples import EXAMPLES
 from fitter.config.yaml_file import Document, Key
 from fitter.errors import InputError
 
-__all__ = ["allowed_keys", "nearest", "problems_of"]
+__all__ = ["allowed_keys", "by_place", "nearest", "problems_of"]
 
 _EXPECTED = {
     "float": "a number",
@@ -72,15 +73,20 @@ def problems_of(error: ValidationError, model: type[BaseModel], document: Docume
     list of InputError
         One per problem, in the order of the file.
     """
-    data = _at(document.data, prefix)
+    grouped = by_place(error, _at(document.data, prefix))
+    problems = [_message(entries, prefix + path, model, document) for path, entries in grouped.items()]
+    return sorted(problems, key=lambda p: p.row or 0)
+
+
+def by_place(error: ValidationError, data) -> dict[tuple[Key, ...], list[dict]]:
+    """Return pydantic's entries by the path, in the data that were validated, of what they complain of."""
     found = _one_branch_each([(e, *_place(tuple(e["loc"]), data, e["type"])) for e in error.errors(include_url=False)])
     grouped: dict[tuple[Key, ...], list] = {}
     for entry, path, _ in found:
         grouped.setdefault(path, []).append(entry)
     for path in [p for p, entries in grouped.items() if entries[0]["type"] == "missing" and _is_misspelt(p, grouped)]:
         del grouped[path]
-    problems = [_message(entries, prefix + path, model, document) for path, entries in grouped.items()]
-    return sorted(problems, key=lambda p: p.row or 0)
+    return grouped
 
 
 def _is_misspelt(missing: tuple[Key, ...], grouped: dict) -> bool:
@@ -93,10 +99,20 @@ def allowed_keys(model: type[BaseModel], loc: tuple[Key, ...] = ()) -> list[str]
     """Return the keys that a section may have; ``loc`` leads to it from ``model``."""
     models = [model]
     for step in loc:
-        named = [m for m in models if m.__name__ == step]
-        inside = [c for m in models for f in _fields(m).items() if f[0] == step for c in _models_in(f[1].annotation)]
-        models = named or inside or models
+        models = _after(models, step)
     return list(dict.fromkeys(key for m in models for key in _fields(m)))
+
+
+def _after(models: list[type[BaseModel]], step: Key) -> list[type[BaseModel]]:
+    """The models that a value can be of, one step of a location further: a key, or the name of one branch of a union."""
+    named = [m for m in models if m.__name__ == step]
+    inside = [c for m in models if step in _fields(m) for c in _models_in(_fields(m)[step].annotation)]
+    free = [c for m in models if m.model_config.get("extra") == "allow" and step not in _fields(m) for c in _models_of_any_key(m)]
+    return named or inside or free or models
+
+
+def _models_of_any_key(model: type[BaseModel]) -> list[type[BaseModel]]:
+    return _models_in(typing.get_type_hints(model)["__pydantic_extra__"])
 
 
 def _fields(model: type[BaseModel]) -> dict:
@@ -139,16 +155,18 @@ def _one_branch_each(found: list) -> list:
     for entry, path, branches in found:
         for place, name in branches:
             score = scores.setdefault(place, {})
-            score[name] = score.get(name, 0) + _distance(entry["type"], path == place)
+            score[name] = score.get(name, 0) + _distance(entry, path == place)
     return [f for f in found if all(scores[place][name] == min(scores[place].values()) for place, name in f[2])]
 
 
-def _distance(kind: str, whole: bool) -> int:
+def _distance(entry: dict, whole: bool) -> int:
     """How far a value is from a form: wrong keys say more than wrong values inside, and a value out of bounds says least."""
+    kind = entry["type"]
     if kind in ("missing", "extra_forbidden"):
         return 10
     if whole and kind.endswith(("_type", "_parsing", "_from_float")):
-        return 20 if kind in ("model_type", "dict_type") else 5
+        # A section is not meant to be a number, nor a number a section.
+        return 20 if kind in ("model_type", "dict_type") or isinstance(entry.get("input"), dict) else 5
     return 1
 
 
@@ -157,6 +175,8 @@ def _message(entries: list[dict], keys: tuple[Key, ...], model: type[BaseModel],
     kind, value = entry["type"], entry.get("input")
     if kind == "extra_forbidden":
         return _unknown_key(entry, keys, model, document)
+    if kind == "missing" and isinstance(keys[-1], int):
+        return document.error(f"the list is too short, number {keys[-1] + 1} is missing", keys[:-1], cure=_help(entry, keys[:-1], model))
     if kind == "missing":
         return document.error(f"the key `{keys[-1]}` is missing", keys[:-1], cure=_known(allowed_keys(model, entry["loc"][:-1])))
     if kind in ("value_error", "assertion_error"):
@@ -167,10 +187,33 @@ def _message(entries: list[dict], keys: tuple[Key, ...], model: type[BaseModel],
     if kind in ("literal_error", "enum"):
         words = re.findall(r"'([^']*)'", entry["ctx"]["expected"])
         near = nearest(value, words) if isinstance(value, str) else None
-        cure = f"Did you mean `{near}`?" if near else None
+        cure = f"Did you mean `{near}`?" if near else _help(entry, keys, model)
         return document.error(f"expected one of: {', '.join(words)}", keys, value=value, cure=cure)
     expected = list(dict.fromkeys(_expected(e) for e in entries))
-    return document.error(f"expected {' or '.join(expected)}", keys, value=_brief(value), cure=_cure(kind, value))
+    return document.error(
+        f"expected {' or '.join(expected)}", keys, value=_brief(value), cure=_cure(kind, value) or _help(entry, keys, model)
+    )
+
+
+def _help(entry: dict, keys: tuple[Key, ...], model: type[BaseModel]) -> str | None:
+    """What the key is for that a wrong value stands under, and an example."""
+    named = [k for k in keys if isinstance(k, str)]
+    described = [d for d in _fields_on_the_way(model, entry["loc"]) if d[0] in named and d[1].description]
+    if not described:
+        return None
+    key, field, owner = described[-1]
+    example = getattr(owner, "example", None) or EXAMPLES.get(".".join(named[: named.index(key) + 1]))
+    return f"`{key}`: {field.description.rstrip('.')}" + (f". Write e.g. {example}" if example else "")
+
+
+def _fields_on_the_way(model: type[BaseModel], loc: tuple[Key, ...]) -> list[tuple]:
+    """(key, field, model that has it) for each key that a location leads through."""
+    models, found = [model], []
+    for step in loc:
+        holders = [m for m in models if step in _fields(m)]
+        found += [(step, _fields(m)[step], m) for m in holders[:1]]
+        models = _after(models, step)
+    return found
 
 
 def _unknown_key(entry: dict, keys: tuple[Key, ...], model: type[BaseModel], document: Document) -> InputError:

@@ -8,6 +8,7 @@ import typing
 from pydantic import BaseModel
 from pydantic.fields import FieldInfo
 
+from fitter.config.examples import EXAMPLES
 from fitter.config.problems import nearest
 from fitter.config.settings import Config
 from fitter.cosmology import MODELS
@@ -16,19 +17,6 @@ from fitter.likelihood.priors import PRIORS
 from fitter.parameters import PARAMETERS
 
 __all__ = ["config_schema", "explain"]
-
-_EXAMPLES = {
-    "sample.table": "table: survey.csv",
-    "sample.columns": "columns: {redshift: zHD, redshift_helio: zHEL, distance_modulus: MU, group: survey}",
-    "sample.keep": "keep: {redshift: [0.01, 2.3]}",
-    "sample.uncertainty": "uncertainty: [{sigma: MUERR}, {covariance: systematics.txt, label: calibration}]",
-    "model": "model: flat_lcdm",
-    "parameters": "parameters: {omega_m: {uniform: [0, 1]}, H0: 70}",
-    "sampling": "sampling: {target_ess: 10000, seed: 20261201}",
-    "run_folder": "run_folder: runs/flat_lcdm",
-    "figures": "figures: {only: [corner, history], width: single, formats: [pdf], style: journal.mplstyle}",
-    "labels": r"labels: {omega_m: '\Omega_{\mathrm{m},0}'}",
-}
 
 
 def config_schema() -> dict:
@@ -105,8 +93,8 @@ def _field_text(path: str, field: FieldInfo) -> str:
     choices = _choices(field)
     if choices:
         lines.append(f"  one of: {', '.join(choices)}")
-    if path in _EXAMPLES:
-        lines.append(f"  example: {_EXAMPLES[path]}")
+    if path in EXAMPLES:
+        lines.append(f"  example: {EXAMPLES[path]}")
     return "\n".join(lines)
 
 

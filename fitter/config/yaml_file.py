@@ -47,8 +47,8 @@ class Document:
 
     def error(self, problem: str, keys: tuple[Key, ...] = (), *, value=None, cure: str | None = None) -> InputError:
         """Return an InputError that names the file, the row and the dotted key."""
-        column = ".".join(str(k) for k in keys) or None
-        return InputError(problem, file=self.path, row=self.line(keys), column=column, value=value, cure=cure)
+        key = ".".join(str(k) for k in keys) or None
+        return InputError(problem, file=self.path, row=self.line(keys), key=key, value=value, cure=cure)
 
 
 class _Loader(yaml.SafeLoader):
@@ -167,9 +167,9 @@ class _Walk:
             # Numbers as keys are words here: no key of a config is a number.
             key = key_node.value
             if key in result:
-                column = ".".join(str(k) for k in (*keys, key))
+                dotted = ".".join(str(k) for k in (*keys, key))
                 problem = f"the key is given twice, on lines {first_line[key]} and {line}"
-                self.problems.append(InputError(problem, file=self.path, row=line, column=column, cure="Keep one of them"))
+                self.problems.append(InputError(problem, file=self.path, row=line, key=dotted, cure="Keep one of them"))
                 continue
             first_line[key] = self.lines[(*keys, key)] = line
             result[key] = self.value(value_node, (*keys, key))

@@ -24,4 +24,4 @@ def get_model(name: str) -> Model:
         return MODELS[name]()
     except (KeyError, TypeError):
         known = ", ".join(MODELS)
-        raise InputError("there is no such model", column="model", value=name, cure=f"Choose one of {known}.") from None
+        raise InputError("there is no such model", key="model", value=name, cure=f"Choose one of {known}.") from None

@@ -138,7 +138,7 @@ def prior_draws(log_posterior, rng, size):
     if n == 0:
         raise InputError(
             f"not one of {32 * size} draws from the priors is a possible model",
-            column="parameters",
+            key="parameters",
             cure="Widen the priors of " + ", ".join(log_posterior.names),
         )
     return np.concatenate(kept), np.concatenate(heights)

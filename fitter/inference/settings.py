@@ -63,11 +63,11 @@ class SamplingSettings(BaseModel):
             If there is nothing to sample, or not more than ``2 * ndim`` walkers.
         """
         if ndim < 1:
-            raise InputError("no parameter is left to sample: all are fixed", column="parameters", cure="Give at least one of them a prior")
+            raise InputError("no parameter is left to sample: all are fixed", key="parameters", cure="Give at least one of them a prior")
         if self.walkers <= 2 * ndim:
             raise InputError(
                 f"{ndim} sampled parameters need more than {2 * ndim} walkers",
-                column="sampling.walkers",
+                key="sampling.walkers",
                 value=self.walkers,
                 cure=f"Use at least {max(32, 4 * ndim)}; 128 is the default",
             )

@@ -44,7 +44,7 @@ def starting_walkers(log_posterior, optimum, walkers: int, seed: np.random.SeedS
     if len(spread) + len(near) < walkers:
         raise InputError(
             f"only {len(spread) + len(near)} possible starting points were found for {walkers} walkers",
-            column="parameters",
+            key="parameters",
             cure="Almost all of the prior is excluded: narrow the priors to the possible models, or use fewer walkers",
         )
     n_near = min(len(near), max(walkers // 2, walkers - len(spread)))

@@ -107,7 +107,7 @@ class LogPosterior:
                 _assign(name, wanted.pop(name, spec), priors, fixed)
         _refuse_unknown(wanted, sample, model)
         if not priors:
-            raise InputError("every parameter is held fixed", column="parameters", cure="Give at least one of them a prior.")
+            raise InputError("every parameter is held fixed", key="parameters", cure="Give at least one of them a prior.")
         if not sample.has_rows:
             from fitter.likelihood.capsule import CapsulePosterior
 
@@ -162,7 +162,7 @@ class LogPosterior:
     def _require_calibrators(self):
         if self.sample.distance_scale == "absolute":
             cure = "Give absolute_magnitude a number or a normal prior, or use distance_scale: relative."
-            raise InputError("magnitudes on an absolute scale need the absolute magnitude", column="parameters", cure=cure)
+            raise InputError("magnitudes on an absolute scale need the absolute magnitude", key="parameters", cure=cure)
 
     def _drop(self, name):
         keep = [i for i, n in enumerate(self.names) if n != name]
@@ -406,7 +406,7 @@ def _physical(name, prior):
     if name not in _NOT_NEGATIVE or prior.low >= 0:
         return prior
     if prior.high <= 0:
-        raise InputError(f"{name} cannot be negative", column=f"parameters.{name}", value=prior.describe(), cure="Give it room above 0.")
+        raise InputError(f"{name} cannot be negative", key=f"parameters.{name}", value=prior.describe(), cure="Give it room above 0.")
     if isinstance(prior, Uniform):
         return Uniform(0.0, prior.high)
     return TruncatedNormal(prior.mean, prior.sd, 0.0, prior.high)
@@ -414,8 +414,7 @@ def _physical(name, prior):
 
 def _refuse_unknown(wanted, sample, model):
     problems = [
-        InputError(*_why_not(name, sample, model)[:1], column=f"parameters.{name}", cure=_why_not(name, sample, model)[1])
-        for name in wanted
+        InputError(*_why_not(name, sample, model)[:1], key=f"parameters.{name}", cure=_why_not(name, sample, model)[1]) for name in wanted
     ]
     if len(problems) == 1:
         raise problems[0]

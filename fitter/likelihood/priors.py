@@ -182,14 +182,14 @@ def parse_prior(spec, *, key: str | None = None) -> Prior:
         return spec
     grammar = "; ".join(f"{k}: [{', '.join(p.fields)}]" for k, p in PRIORS.items())
     if not isinstance(spec, dict) or len(spec) != 1 or next(iter(spec)) not in PRIORS:
-        raise InputError("this is no prior", column=key, value=spec, cure=f"Write one of {grammar}; or a number to hold it fixed.")
+        raise InputError("this is no prior", key=key, value=spec, cure=f"Write one of {grammar}; or a number to hold it fixed.")
     ((keyword, numbers),) = spec.items()
     kind = PRIORS[keyword]
     numeric = isinstance(numbers, (list, tuple)) and all(isinstance(n, (int, float)) and not isinstance(n, bool) for n in numbers)
     if not numeric or len(numbers) != len(kind.fields) or not all(map(math.isfinite, numbers)):
         cure = f"Write {keyword}: [{', '.join(kind.fields)}] with finite numbers."
-        raise InputError(f"{keyword} takes {len(kind.fields)} numbers", column=key, value=numbers, cure=cure)
+        raise InputError(f"{keyword} takes {len(kind.fields)} numbers", key=key, value=numbers, cure=cure)
     try:
         return kind(*map(float, numbers))
     except InputError as error:
-        raise InputError(error.problem, column=key, value=numbers, cure="Correct the numbers.") from None
+        raise InputError(error.problem, key=key, value=numbers, cure="Correct the numbers.") from None

@@ -46,7 +46,7 @@ def hidden_names(blind: bool | Iterable[str], log_posterior) -> tuple[str, ...]:
     unknown = [name for name in blind if name not in log_posterior.names]
     if unknown:
         cure = f"Name any of {', '.join(log_posterior.names)}; what is derived from a hidden parameter is hidden with it"
-        raise InputError("this parameter is not sampled, it cannot be hidden", column="blind", value=unknown[0], cure=cure)
+        raise InputError("this parameter is not sampled, it cannot be hidden", key="blind", value=unknown[0], cure=cure)
     return tuple(dict.fromkeys(blind))
 
 

@@ -21,7 +21,7 @@ def assemble_arrays(z, mu, *, distance_scale, data_kind, intrinsic, covariance_s
     problems = Problems()
     for key, value, known in (("data_kind", data_kind, DATA_KINDS), ("distance_scale", distance_scale, DISTANCE_SCALES)):
         if value not in known:
-            problems.found.append(InputError(f"{key} must be one of {', '.join(known)}", column=key, value=value))
+            problems.found.append(InputError(f"{key} must be one of {', '.join(known)}", value=value))
     take = _rows(z, mu, given, problems)
     problems.stop_if_any()
     n = len(take["data"])
@@ -44,7 +44,7 @@ def _rows(z, mu, given: dict, problems: Problems) -> dict:
     data = _numbers(mu, "mu", None, problems)
     n = len(data)
     if not n:
-        problems.found.append(InputError("there are no supernovae", column="mu", cure="Give at least one"))
+        problems.found.append(InputError("there are no supernovae", cure="Give at least one"))
     redshift = _numbers(z, "z", n, problems)
     helio = redshift if given["z_helio"] is None else _numbers(given["z_helio"], "z_helio", n, problems)
     calibrators = np.full(n, np.nan)
@@ -56,7 +56,7 @@ def _rows(z, mu, given: dict, problems: Problems) -> dict:
         values = given[key]
         take[key] = None if values is None else np.array([str(v) for v in values], dtype=str)
         if values is not None and len(take[key]) != n:
-            problems.found.append(InputError(f"{key} must have one value per supernova, {n}", column=key, value=len(take[key])))
+            problems.found.append(InputError(f"{key} must have one value per supernova, {n}", value=len(take[key])))
     return take
 
 
@@ -65,11 +65,11 @@ def _numbers(values, key: str, n: int | None, problems: Problems):
     try:
         numbers = np.array(values, dtype=float)
     except (TypeError, ValueError) as problem:
-        problems.found.append(InputError(f"{key} must be an array of numbers: {problem}", column=key))
+        problems.found.append(InputError(f"{key} must be an array of numbers: {problem}"))
         return np.full(n or 1, np.nan)
     if numbers.ndim != 1 or (n is not None and len(numbers) != n):
         expected = "one number per supernova" + (f", {n}" if n is not None else "")
-        problems.found.append(InputError(f"{key} must have {expected}", column=key, value=numbers.shape))
+        problems.found.append(InputError(f"{key} must have {expected}", value=numbers.shape))
         return np.full(n or 1, np.nan)
     return numbers
 
@@ -79,9 +79,7 @@ def _terms(n: int, given: dict, intrinsic, problems: Problems) -> list[Term]:
     sigma, precision = given["sigma"], given["precision"]
     if precision is not None and (sigma is not None or given["covariance"] is not None):
         problems.found.append(
-            InputError(
-                "a precision stands alone: it is the inverse of the whole covariance", column="precision", cure="Leave the others out"
-            )
+            InputError("a precision stands alone: it is the inverse of the whole covariance", cure="Leave the others out")
         )
     if sigma is not None:
         errors = np.full(n, float(sigma)) if np.ndim(sigma) == 0 else _numbers(sigma, "sigma", n, problems)
@@ -110,7 +108,7 @@ def _matrix(values, n: int, kind: str):
     matrix = np.array(values, dtype=float, order="C")
     if matrix.shape != (n, n):
         shape = " × ".join(map(str, matrix.shape))
-        raise InputError(f"the {kind} is {shape}, but there are {n} supernovae", column=kind, cure="Give one row and column per supernova")
+        raise InputError(f"the {kind} is {shape}, but there are {n} supernovae", cure="Give one row and column per supernova")
     make_symmetric(matrix, f"the {kind}")
     return matrix
 
@@ -119,8 +117,6 @@ def _modes(values, n: int) -> Term:
     modes = np.array(values, dtype=float)
     modes = modes[:, None] if modes.ndim == 1 else modes
     if modes.ndim != 2 or len(modes) != n or not np.all(np.isfinite(modes)):
-        raise InputError(
-            f"modes must be finite numbers, one row per supernova ({n}) and a column per systematic", column="modes", value=modes.shape
-        )
+        raise InputError(f"modes must be finite numbers, one row per supernova ({n}) and a column per systematic", value=modes.shape)
     names = tuple(f"mode {i + 1}" for i in range(modes.shape[1]))
     return Term("modes", "modes", Noise(np.zeros(n), modes=modes, mode_names=names))

@@ -194,7 +194,7 @@ class _Observed:
             self.problems.found.append(
                 InputError(
                     f"the cuts leave none of the {self.table.n} supernovae (removed by {counts})", file=self.settings.table,
-                    column="sample.keep", cure="Widen the cuts",
+                    key="sample.keep", cure="Widen the cuts",
                 )
             )  # fmt: skip
         return kept, cuts
@@ -203,7 +203,7 @@ class _Observed:
         mapped = _mapped(self.columns, ref)
         if ref in Columns.model_fields and mapped is ref and (self.table.columns.names is None or ref not in self.table.columns.names):
             raise InputError(
-                f"keep cuts on {ref}, but `columns` does not map it", column=f"sample.keep.{ref}", cure=f"Add `{ref}: COLUMN` to `columns`"
+                f"keep cuts on {ref}, but `columns` does not map it", key=f"sample.keep.{ref}", cure=f"Add `{ref}: COLUMN` to `columns`"
             )
         if ref in self.values:
             read = self.numbers if ref in self.unreadable else self.values.__getitem__  # the former says again what is wrong

@@ -162,7 +162,7 @@ def read_capsule(path: str | Path, shown: str | None = None) -> Capsule:
     except ValidationError as error:
         first = error.errors()[0]
         key = ".".join(str(step) for step in first["loc"])
-        raise InputError(f"the capsule is damaged: {first['msg']}", file=shown, column=key, cure=_CURE) from None
+        raise InputError(f"the capsule is damaged: {first['msg']}", file=shown, key=key, cure=_CURE) from None
     except (ValueError, binascii.Error) as error:
         raise InputError(f"the capsule is damaged: {error}", file=shown, cure=_CURE) from None
     if not sound:

@@ -105,7 +105,7 @@ class Cuts:
         high = np.inf if bounds[1] is None else bounds[1]
         if low > high:
             raise InputError(
-                "the lower end of the range is above the upper one", column=f"sample.keep.{column.label}", value=list(bounds),
+                "the lower end of the range is above the upper one", key=f"sample.keep.{column.label}", value=list(bounds),
                 cure="Write [low, high]",
             )  # fmt: skip
         values = column.numbers()
@@ -114,7 +114,7 @@ class Cuts:
     def _is_one_of(self, wanted, column: CutColumn) -> np.ndarray:
         if None in wanted:
             raise InputError(
-                "a list of values cannot hold null", column=f"sample.keep.{column.label}", value=wanted,
+                "a list of values cannot hold null", key=f"sample.keep.{column.label}", value=wanted,
                 cure="Write a range as [low, high], where null leaves an end open",
             )  # fmt: skip
         passes = np.zeros(len(self.is_calibrator), dtype=bool)
@@ -128,7 +128,7 @@ class Cuts:
     def _per_group(self, rule: RuleSettings, column: CutColumn) -> np.ndarray:
         if self.groups is None:
             raise InputError(
-                "a rule per group needs to know the groups", column=f"sample.keep.{column.label}",
+                "a rule per group needs to know the groups", key=f"sample.keep.{column.label}",
                 cure="Map `group` among the columns, e.g. group: SURVEY",
             )  # fmt: skip
         known = np.unique(self.groups)
@@ -139,7 +139,7 @@ class Cuts:
                 near = difflib.get_close_matches(name, known.tolist(), n=1)
                 hint = f"Did you mean {near[0]}? " if near else ""
                 raise InputError(
-                    "no row has this group", file=self.table, column=f"sample.keep.{column.label}", value=name,
+                    "no row has this group", file=self.table, key=f"sample.keep.{column.label}", value=name,
                     cure=f"{hint}The groups are: {', '.join(known[:20].tolist())}",
                 )  # fmt: skip
             others = np.where(members, self._passes(inner, column), others)

@@ -139,7 +139,7 @@ def check_inverse(terms: list[Term]) -> list[InputError]:
                 InputError(
                     f"this looks like an inverse covariance: its median diagonal element is {np.median(np.diagonal(matrix)):.3g}, "
                     f"{_beside(np.diagonal(matrix), sum(sigma) if sigma else None)}",
-                    file=term.noise.source, column="covariance", cure="Use it as uncertainty: [{precision: FILE}], without a sigma term",
+                    file=term.noise.source, cure="Use it as uncertainty: [{precision: FILE}], without a sigma term",
                 )
             )  # fmt: skip
         elif term.kind == "precision" and np.median(np.diagonal(matrix)) < 1 / _LARGEST_VARIANCE:
@@ -148,7 +148,7 @@ def check_inverse(terms: list[Term]) -> list[InputError]:
                 InputError(
                     f"this looks like a covariance, not its inverse: its median diagonal element is {median:.3g}; as an inverse covariance "
                     f"that would mean errors of {abs(median) ** -0.5 if median else np.inf:.3g} mag",
-                    file=term.noise.source, column="precision", cure="Use it as uncertainty: [{covariance: FILE}]",
+                    file=term.noise.source, cure="Use it as uncertainty: [{covariance: FILE}]",
                 )
             )  # fmt: skip
     return problems

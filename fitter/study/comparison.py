@@ -95,9 +95,7 @@ def _reference(entries: list[Entry], name: str | None) -> Entry:
     if len(entries) < 2:
         raise InputError("a comparison needs two fits or more", value=names)
     if name is not None and name not in names:
-        raise InputError(
-            "there is no such fit in this comparison", column="reference", value=name, cure=f"Choose one of {', '.join(names)}"
-        )
+        raise InputError("there is no such fit in this comparison", value=name, cure=f"Choose one of {', '.join(names)}")
     return entries[0 if name is None else names.index(name)]
 
 

@@ -2,6 +2,7 @@
 
 import pytest
 
+from fitter.api import check
 from fitter.config.load import config_from_mapping, load_config
 from fitter.errors import InputError, InputErrors
 
@@ -71,7 +72,7 @@ def test_empty_sections_have_their_defaults(project):
 )  # fmt: skip
 def test_wrong_keys_and_values(project, old, new, row, column, words):
     found = problems(project, (old, new))
-    near = [p for p in found if str(p.column).startswith(column)]
+    near = [p for p in found if str(p.key).startswith(column)]
     assert near, [str(p) for p in found]
     assert near[0].row == row
     for word in words:
@@ -105,6 +106,10 @@ def test_a_missing_sample(project):
         ("intrinsic_scatter", "0.1", [], ["belongs to the uncertainties", "{intrinsic: {uniform: [low, high]}}"]),
         ("covariance_scale", "1", [], ["belongs to the uncertainties", "{covariance_scale: {uniform: [low, high]}}"]),
         ("age_gyr", "13.8", [], ["derived", "Parameters of this fit: omega_m, H0"]),
+        ("omga_lambda", "0.7", [], ["Did you mean `omega_lambda`? That is no parameter of flat_lcdm", "the curved model curved_lcdm"]),
+        ("omga_lambda", "0.7", [("flat_lcdm", "curved_lcdm")], ["Did you mean `omega_lambda`? Parameters of this fit"]),
+        ("w_0", "-1", [], ["Did you mean `w0`? That is no parameter of flat_lcdm", "choose a model that has it: flat_w0wa, curved_w0wa"]),
+        ("h0", "70", [RELATIVE], ["Did you mean `H0`?", "only enter as one offset"]),
         ("h0", "70", [], ["there is no such parameter", "Did you mean `H0`?"]),
         ("nonsense", "1", [], ["there is no such parameter", "Parameters of this fit: omega_m, H0"]),
         ("H0", "[60, 80]", [], ["expected a prior or a number", "H0: {uniform: [60, 80]}"]),
@@ -124,7 +129,7 @@ def test_a_missing_sample(project):
 )  # fmt: skip
 def test_parameters_that_cannot_be(project, name, value, changes, words):
     problem = only(project, ("parameters:\n", f"parameters:\n  {name}: {value}\n"), *changes)
-    assert str(problem.column).startswith(f"parameters.{name}")
+    assert str(problem.key).startswith(f"parameters.{name}")
     assert problem.row == (11 if RELATIVE not in changes else 10)
     for word in words:
         assert word in str(problem)
@@ -159,3 +164,76 @@ def test_changed_settings_are_validated(project):
     assert config.sampling.seed != 7
     with pytest.raises(InputError, match="at least 0"):
         config.changed({"sampling.seed": -7})
+
+
+MANY = """\
+titel: x
+sample:
+  tabel: survey.csv
+  columns: {redshift: zz, distance_modulus: mu, nmae: name}
+  foo: 1
+  uncertainty:
+    - {sigma: error}
+    - {covariance: nofile.txt}
+    - {intrinsic: {unifrm: [0, 1]}}
+    - {lensing: high}
+  duplicates: alow
+model: flat_lcmd
+parameters:
+  omga_lambda: 0.7
+  omega_m: 2 to 3
+sampling: {walkers: 31, sed: 5}
+"""
+
+
+def test_an_unknown_key_hides_nothing(project):
+    """Unknown keys, bad values, and what can still be seen of the files."""
+    (project / "config.yaml").write_text(MANY)
+    found = {p.key or f"{p.file}, {p.column}": str(p) for p in check(project / "config.yaml").problems}
+    assert set(found) == {
+        *("titel", "sample.tabel", "sample.columns.nmae", "sample.foo", "sample.uncertainty.2.intrinsic.unifrm"),
+        *("sample.uncertainty.3.lensing", "sample.duplicates", "model", "parameters.omga_lambda", "parameters.omega_m"),
+        *("sampling.walkers", "sampling.sed", "survey.csv, zz", "survey.csv, error", "survey.csv, name", "nofile.txt, None"),
+    }
+    assert "Did you mean z?" in found["survey.csv, zz"]
+
+
+def test_what_was_left_out_makes_no_problems_of_its_own(project):
+    # With the only term that says how far the data scatter gone, its absence is no second problem; nor the walkers' for the misspelt seed.
+    found = problems(project, ("    - {sigma: sigma}\n    - {covariance: systematics.npy, label: calibration}", "    - {sgma: sigma}"))
+    assert [p.key for p in found] == ["sample.uncertainty.0"]
+    assert [p.key for p in check(project / "config.yaml").problems] == ["sample.uncertainty.0"]
+
+
+def test_a_misspelt_key_is_read_as_what_it_stands_for(project):
+    """So that the rows of the table are looked at as well, under the right settings."""
+    table = (project / "survey.csv").read_text().replace("0.02000,", ",", 1)
+    (project / "survey.csv").write_text(table)
+    problems(project, ("distance_scale:", "distance_scal:"), ("omega_m:", "H0: 70\n  omega_m:"))
+    found = check(project / "config.yaml").problems
+    assert [p.key or p.file for p in found] == ["sample.distance_scal", "survey.csv"]
+    assert "there is no value" in str(found[1])
+
+
+@pytest.mark.parametrize(
+    ("old", "new", "key", "words"),
+    [
+        ("- {sigma: sigma}", "- {sigma: 3.5}", "sample.uncertainty.0.sigma", "one-sigma errors, mag. Write e.g. {sigma: MUERR}"),
+        ("- {sigma: sigma}", "- {lensing: high}", "sample.uncertainty.0.lensing", "mag per unit redshift. Write e.g. {lensing: 0.055}"),
+        ("- {sigma: sigma}", "- {intrinsic: x}", "sample.uncertainty.0.intrinsic", "{intrinsic: {uniform: [0, 0.5]}}"),
+        ("- {sigma: sigma}", "- {zero_point: group, sigma: -1}", "sample.uncertainty.0.sigma", "{zero_point: group, sigma: 0.02}"),
+        ("- {sigma: sigma}", "- {covariance: [1]}", "sample.uncertainty.0.covariance", "Write e.g. {covariance: systematics.txt"),
+        ("  uncertainty:", "  keep: {mu: {inn: [1]}}\n  uncertainty:", "sample.keep.mu.inn", "Did you mean `in`? Known keys: range, in"),
+        ("  uncertainty:", "  keep: {mu: {range: [1]}}\n  uncertainty:", "sample.keep.mu.range", "[low, high], both ends kept"),
+        ("  uncertainty:", "  keep: 3\n  uncertainty:", "sample.keep", "Write e.g. keep: {redshift: [0.01, 2.3]}"),
+        ("model:", "variants: [{name: a, without: x}]\nmodel:", "variants.0.without", "Labels of uncertainty terms to leave out"),
+        ("model:", "figures: {only: [pie]}\nmodel:", "figures.only.0", "`only`:"),
+    ],
+)  # fmt: skip
+def test_inner_mistakes_come_with_a_cure(project, old, new, key, words):
+    found = {p.key: p for p in problems(project, (old, new))}
+    assert words in str(found[key].cure)
+
+
+def test_keys_are_called_keys(project):
+    assert "row 9, key model: expected one of" in str(only(project, ("flat_lcdm", "flat_lcmd")))

@@ -39,8 +39,8 @@ def test_a_key_given_twice_is_refused_with_both_lines():
         parse_yaml("a: 1\nb: {c: 1, c: 2}\nd: 0\na: 3\n")
     inner, outer = caught.value.errors
     assert "on lines 2 and 2" in inner.problem
-    assert inner.column == "b.c"
-    assert (outer.row, outer.column) == (4, "a")
+    assert inner.key == "b.c"
+    assert (outer.row, outer.key) == (4, "a")
     assert "on lines 1 and 4" in outer.problem
 
 

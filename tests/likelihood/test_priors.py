@@ -50,7 +50,7 @@ def test_spec_round_trips(spec):
 def test_what_is_no_prior_is_refused_with_a_cure(spec):
     with pytest.raises(InputError) as caught:
         parse_prior(spec, key="parameters.w")
-    assert caught.value.column == "parameters.w"
+    assert caught.value.key == "parameters.w"
     assert caught.value.cure
 
 

@@ -295,8 +295,8 @@ def test_covariance_given_as_an_inverse(load, tmp_path):
 @pytest.mark.parametrize(
     ("changes", "words"),
     [
-        ({"z": Z[:-1]}, r"column z: z must have one number per supernova, 20 \(found \(19,\)\)"),
-        ({"z": np.ones((N, 2))}, "column z"),
+        ({"z": Z[:-1]}, r"z must have one number per supernova, 20 \(found \(19,\)\)"),
+        ({"z": np.ones((N, 2))}, "z must have one number per supernova"),
         ({"mu": ["x"] * N}, "mu must be an array of numbers"),
         ({"mu": []}, "there are no supernovae"),
         ({"z": np.where(Z > 0.5, np.nan, Z)}, "row 11, column z: there is no value.*in 9 more rows"),

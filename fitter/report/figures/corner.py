@@ -121,7 +121,7 @@ def _check(names: Sequence[str], runs: Mapping) -> None:
     known = list(dict.fromkeys(n for p in runs.values() for n in p.kinds))
     for name in names:
         if name not in known:
-            raise InputError("no such parameter in this fit", column="figures", value=name, cure=f"Known: {', '.join(known)}.")
+            raise InputError("no such parameter in this fit", key="figures", value=name, cure=f"Known: {', '.join(known)}.")
     if not names:
         raise InputError("a corner plot needs a parameter that varies")
 

@@ -211,7 +211,7 @@ def _delimiter(scan: _Scan, options: TextOptions, shown: str) -> str:
         delimiter = _WORDS.get(options.delimiter.lower(), options.delimiter)
         if delimiter != WHITESPACE and len(delimiter) != 1:
             raise InputError(
-                "a delimiter is one character, or `whitespace` or `tab`", column="sample.delimiter", value=options.delimiter,
+                "a delimiter is one character, or `whitespace` or `tab`", key="sample.delimiter", value=options.delimiter,
                 cure="Leave `delimiter` out to have it found",
             )  # fmt: skip
         return delimiter

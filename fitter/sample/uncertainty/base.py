@@ -101,6 +101,7 @@ class TermSettings(BaseModel):
     model_config = ConfigDict(extra="forbid", frozen=True)
 
     kind: ClassVar[str]
+    example: ClassVar[str]
 
     label: str | None = Field(None, min_length=1, description="What this term is called in results and studies.")
 

@@ -73,6 +73,7 @@ class Covariance(MatrixSettings):
     """An N×N covariance, mag², in a file."""
 
     kind: ClassVar[str] = "covariance"
+    example: ClassVar[str] = "{covariance: systematics.txt, label: calibration}"
 
     covariance: PathText = Field(description="File of an N × N covariance, mag².")
 

@@ -15,6 +15,7 @@ class CovarianceScale(TermSettings):
     """The whole covariance is multiplied by s²; the likelihood does it, nothing is added here."""
 
     kind: ClassVar[str] = "covariance_scale"
+    example: ClassVar[str] = "{covariance_scale: {log_uniform: [0.5, 2]}}"
 
     covariance_scale: FreeOrFixed = Field(description="Factor s on all errors, or its prior: the covariance is multiplied by s².")
 

@@ -17,6 +17,7 @@ class Intrinsic(TermSettings):
     """The same variance for every supernova; with a prior it is a parameter and adds nothing here."""
 
     kind: ClassVar[str] = "intrinsic"
+    example: ClassVar[str] = "{intrinsic: 0.1} or {intrinsic: {uniform: [0, 0.5]}}"
 
     intrinsic: FreeOrFixed = Field(description="Intrinsic scatter, mag; or a prior, and it is fitted.")
 

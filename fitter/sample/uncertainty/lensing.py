@@ -17,6 +17,7 @@ class Lensing(TermSettings):
     """σ_μ = ``lensing`` × z; 0.055 mag per unit redshift is usual (Jönsson et al. 2010)."""
 
     kind: ClassVar[str] = "lensing"
+    example: ClassVar[str] = "{lensing: 0.055}"
 
     lensing: Positive = Field(description="Scatter by lensing, mag per unit redshift.")
 

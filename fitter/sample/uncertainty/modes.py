@@ -21,6 +21,7 @@ class Modes(TermSettings):
     """k systematics, each a column of shifts (mag) for a change of one sigma."""
 
     kind: ClassVar[str] = "modes"
+    example: ClassVar[str] = "{modes: shifts.csv}"
 
     modes: PathText | Annotated[list[ColumnRef], Field(min_length=1)] = Field(
         description="File with a column of one-sigma shifts (mag) per systematic, or a list of such columns of the table."

@@ -31,6 +31,7 @@ class PeculiarVelocity(TermSettings):
     """
 
     kind: ClassVar[str] = "peculiar_velocity"
+    example: ClassVar[str] = "{peculiar_velocity: 250}"
 
     peculiar_velocity: Positive = Field(description="Dispersion of the line-of-sight peculiar velocities, km/s.")
 

@@ -20,6 +20,7 @@ class Precision(MatrixSettings):
     """An N×N inverse covariance, mag⁻², in a file: the inverse of the whole covariance, so it stands alone."""
 
     kind: ClassVar[str] = "precision"
+    example: ClassVar[str] = "{precision: inverse.npz}"
 
     precision: PathText = Field(description="File of an N × N inverse covariance, mag⁻²; it stands alone.")
 

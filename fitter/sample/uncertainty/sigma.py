@@ -19,6 +19,7 @@ class Sigma(TermSettings):
     """A column of one-sigma errors, mag."""
 
     kind: ClassVar[str] = "sigma"
+    example: ClassVar[str] = "{sigma: MUERR}"
 
     sigma: ColumnRef = Field(description="Column of the one-sigma errors, mag.")
 

@@ -71,7 +71,7 @@ def combine(terms: Sequence[Term], source: str | None = None) -> Noise:
         raise InputError(
             "there is no uncertainty term: nothing says how far the data scatter",
             file=source,
-            column="sample.uncertainty",
+            key="sample.uncertainty",
             cure="Add at least one, e.g. {sigma: COLUMN} or {covariance: FILE}",
         )
     parts = [term.noise for term in terms]

@@ -27,6 +27,7 @@ class ZeroPoint(TermSettings):
     """One mode per group: 1 for its members, times the one-sigma error of its zero point."""
 
     kind: ClassVar[str] = "zero_point"
+    example: ClassVar[str] = "{zero_point: group, sigma: 0.02}"
 
     zero_point: ColumnRef = Field(description="`group`, or the column whose values tell the groups apart.")
     sigma: Positive | PerGroup = Field(description="One-sigma error of each group's zero point, mag; or {GROUP: error} for some groups.")

@@ -9,15 +9,61 @@ from __future__ import annotations
 import numpy as np
 
 from fitter.constants import MAG_PER_LN
-from fitter.cosmology.distances import ANTIPODE, curved_ratio
+from fitter.cosmology.distances import ANTIPODE, curved_ratio, log_distance
 from fitter.cosmology.grid import Grid
 
-__all__ = ["exact_log_distance"]
+__all__ = ["exact_log_distance", "log_distance_at"]
 
+_FIXED_ORDER = 256
+_TAIL = 1e-9  # mag, of the fixed grid: its interpolation error is a few times that
+_BLOCK = 16_384
 _ORDER = 24
 _DEEPEST = 45  # halvings; the panel is then 3e-14 of the range
 _RELATIVE_TAIL = 1e-14
+_NEGLIGIBLE = 1e-12  # of the whole integral: where E² nearly vanishes, its rounding alone keeps a panel from converging
 _UNIT = Grid(np.expm1(2.0), _ORDER)  # only its matrices on x are used
+
+
+def log_distance_at(model, theta, z, omega_r=0.0, *, within=None):
+    """f at any redshifts for W parameter points: a fixed grid where it has converged, adaptive panels for the other points.
+
+    Parameters
+    ----------
+    model : Model
+    theta : (W, p) array
+    z : (M,) array, not negative
+    omega_r : float or (W,) array
+    within : float, optional
+        A model without a distance at the largest z is tried again up to this redshift; its f is NaN beyond.
+
+    Returns
+    -------
+    (W, M) array
+        mag, good to 1e-8; NaN where the model has no distance.
+    """
+    theta, u = np.asarray(theta, float), np.log1p(np.asarray(z, float))
+    omega_r = np.broadcast_to(omega_r, len(theta))
+    grid = Grid(np.max(z), _FIXED_ORDER)
+    nodes, tail, inside = log_distance(model, theta, grid, omega_r)
+    f = np.empty((len(theta), len(u)))
+    for start in range(0, len(u), _BLOCK):  # the interpolation matrix of a million redshifts would take 2 GB
+        rows = slice(start, start + _BLOCK)
+        f[:, rows] = nodes @ grid.interpolation(u[rows]).T
+    for i in np.flatnonzero(~(inside & (tail <= _TAIL))):
+        f[i] = _as_far_as_it_goes(model, theta[i], u, omega_r[i], within)
+    return f
+
+
+def _as_far_as_it_goes(model, theta, u, omega_r, within):
+    f = exact_log_distance(model, theta, u, omega_r)
+    if f is not None:
+        return f
+    f = np.full(len(u), np.nan)
+    near = np.zeros(len(u), dtype=bool) if within is None else u <= np.log1p(within)
+    if near.any() and not near.all():
+        found = exact_log_distance(model, theta, u[near], omega_r)
+        f[near] = np.nan if found is None else found
+    return f
 
 
 def exact_log_distance(model, theta, u, omega_r=0.0):
@@ -27,7 +73,7 @@ def exact_log_distance(model, theta, u, omega_r=0.0):
     ----------
     model : Model
     theta : (p,) array
-    u : (N,) array, positive
+    u : (N,) array, not negative
     omega_r : float
 
     Returns
@@ -47,12 +93,14 @@ def exact_log_distance(model, theta, u, omega_r=0.0):
     x = model.omega_k(theta, omega_r)[0] * distance**2
     if x.min() <= -ANTIPODE:
         return None
-    return MAG_PER_LN * np.log(distance / np.expm1(u) * curved_ratio(x))
+    at_zero = u == 0.0  # where D/z → 1/E(0)
+    mean = np.where(at_zero, model.e_squared(np.zeros(1), theta, omega_r)[0] ** -0.5, distance / np.where(at_zero, 1.0, np.expm1(u)))
+    return MAG_PER_LN * np.log(mean * curved_ratio(x))
 
 
 def _panels(model, theta, u_max, omega_r):
     """Panel edges, the Chebyshev coefficients of the integral on each, and the integral before each."""
-    todo, done = [(0.0, u_max, 0)], []
+    todo, done, size = [(0.0, u_max, 0)], [], None
     while todo:
         low, high, depth = todo.pop()
         u = low + 0.5 * (high - low) * (1.0 + _UNIT.x)
@@ -60,7 +108,9 @@ def _panels(model, theta, u_max, omega_r):
         if not e2.min() > 0.0 or not np.isfinite(e2).all():
             return None
         coefficients = _UNIT.to_coefficients @ (np.exp(u) / np.sqrt(e2))
-        if np.abs(coefficients[-3:]).max() <= _RELATIVE_TAIL * np.abs(coefficients).max() * _ORDER:
+        size = coefficients[0] * u_max if size is None else size
+        tail = np.abs(coefficients[-3:]).max()
+        if tail <= _RELATIVE_TAIL * np.abs(coefficients).max() * _ORDER or tail * (high - low) <= _NEGLIGIBLE * size:
             done.append((low, high, coefficients))
         elif depth == _DEEPEST:
             return None

@@ -9,9 +9,9 @@ from dataclasses import dataclass, replace
 import numpy as np
 
 from fitter.cosmology import get_model, radiation_density
+from fitter.cosmology.adaptive import log_distance_at
 from fitter.cosmology.derived import derived, derived_names
 from fitter.cosmology.distances import data_term, hubble_term, log_distance
-from fitter.cosmology.grid import Grid
 from fitter.errors import InputError
 from fitter.likelihood.design import Design
 from fitter.likelihood.kernel import Kernel
@@ -26,7 +26,6 @@ _MAGNITUDE = "absolute_magnitude"
 _SCATTER = "intrinsic_scatter"
 _POSITIVE = ("H0", "covariance_scale")
 _NOT_NEGATIVE = (*_POSITIVE, _SCATTER)
-_BLOCK = 16_384
 
 
 @dataclass(frozen=True)
@@ -307,17 +306,15 @@ class LogPosterior:
         return derived(self.model, self._cosmology(theta), self._omega_r(theta, h0), h0)
 
     def distance_modulus(self, theta, z, z_helio=None):
-        """Distance moduli, (W, M); on a relative scale for H0 = 70 km/s/Mpc, since the scale is arbitrary."""
+        """Distance moduli, (W, M); on a relative scale for H0 = 70 km/s/Mpc, since the scale is arbitrary.
+
+        Good to 1e-8 mag however close a model comes to having no big bang; NaN where a model has no distance.
+        """
         theta, z = np.atleast_2d(theta), np.asarray(z, float)
         h0 = self._h0(theta)
-        grid = Grid(z.max(), 256)
-        f, _, inside = log_distance(self.model, self._cosmology(theta), grid, self._omega_r(theta, h0))
-        mu = np.empty((len(theta), len(z)))
-        for start in range(0, len(z), _BLOCK):  # the interpolation matrix of a million redshifts would take 2 GB
-            rows = slice(start, start + _BLOCK)
-            mu[:, rows] = f @ grid.interpolation(np.log1p(z[rows])).T
-        mu += data_term(z, z if z_helio is None else z_helio)
-        mu[~inside] = np.nan
+        mu = log_distance_at(
+            self.model, self._cosmology(theta), z, self._omega_r(theta, h0), within=float(self.sample.redshift.max())
+        ) + data_term(z, z if z_helio is None else z_helio)
         return mu + hubble_term(REFERENCE_H0 if h0 is None else h0)[..., None]
 
     def zero_point(self, theta) -> float:

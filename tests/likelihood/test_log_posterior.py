@@ -308,3 +308,31 @@ def test_residuals_on_a_relative_scale_have_the_best_offset_off(survey):
     inverse = np.linalg.inv(covariance)
     assert inverse.sum(axis=0) @ residual == pytest.approx(0.0, abs=1e-6)
     assert residual @ inverse @ residual == pytest.approx(lp.chi2([[0.3]])[0], abs=1e-7)
+
+
+MATTER = 0.3
+BOUNCE = 1.0  # the redshift where E² vanishes
+_A = 1 + BOUNCE
+LAMBDA = (MATTER * _A**3 + (1 - MATTER) * _A**2) / (_A**2 - 1)  # above the line of no big bang: 1.733
+BOUNCED = np.array([[MATTER, LAMBDA, 70.0]])
+
+
+def posterior_up_to(z_max):
+    z = np.linspace(0.05, z_max, 20)
+    return LogPosterior.build(Sample.from_arrays(z, 40 + z, sigma=np.full(20, 0.1), distance_scale="absolute"), "curved_lcdm")
+
+
+def test_distances_up_to_a_bounce():
+    z = np.array([0.1, 0.5, 0.9, BOUNCE - 1e-6])
+    expected = distance_modulus(z, MATTER, LAMBDA, 70.0)
+    # The integrand rises like 1/√(1 − z): a fixed grid of 256 nodes is off by 0.02 mag.
+    np.testing.assert_allclose(posterior_up_to(z[-1]).distance_modulus(BOUNCED, z)[0], expected, rtol=0, atol=1e-8)
+
+
+def test_distances_end_at_a_bounce():
+    z = np.array([0.1, 0.9, 1.1])
+    assert np.isnan(posterior_up_to(1.5).distance_modulus(BOUNCED, z)).all()  # the prior of such data excludes the point
+    mu = posterior_up_to(0.95).distance_modulus(BOUNCED, z)[0]
+    # Data that end before it allow the point: it has distances up to their last redshift.
+    np.testing.assert_allclose(mu[:2], distance_modulus(z[:2], MATTER, LAMBDA, 70.0), rtol=0, atol=1e-8)
+    assert np.isnan(mu[2])

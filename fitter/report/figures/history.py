@@ -8,8 +8,7 @@ from dataclasses import dataclass, field
 import numpy as np
 
 from fitter.cosmology import get_model
-from fitter.cosmology.distances import log_distance
-from fitter.cosmology.grid import Grid
+from fitter.cosmology.adaptive import log_distance_at
 from fitter.errors import InputError
 from fitter.report.figures.panels import runs_of
 from fitter.report.figures.style import COLOURS, in_style, new_figure, width_inches
@@ -21,7 +20,6 @@ REFERENCE_OMEGA_M = 0.3
 _DRAWS = 3000
 _POINTS = 121
 _STEP = 1e-4  # in ln(1+z), for the derivative of E²: an error of about 1e-8
-_NODES = 96
 _LAMBDA_MODELS = ("flat_lcdm", "curved_lcdm")
 _LABELS = {
     "expansion": r"$H(z)/(1+z)\ \ [\mathrm{km\,s^{-1}\,Mpc^{-1}}]$",
@@ -104,11 +102,8 @@ def expansion(model, z, own, omega_r):
 
 def _distance(log_posterior, own, omega_r, z) -> np.ndarray:
     """Distance moduli minus those of flat ΛCDM with the same H0, (W, m)."""
-    grid = Grid(z[-1], _NODES)
-    f, _, inside = log_distance(log_posterior.model, own, grid, omega_r)
-    reference, _, _ = log_distance(get_model("flat_lcdm"), np.array([[REFERENCE_OMEGA_M]]), grid, float(np.mean(omega_r)))
-    f = np.where(np.asarray(inside)[:, None], f, np.nan)
-    return (f - reference) @ grid.interpolation(np.log1p(z)).T
+    reference = log_distance_at(get_model("flat_lcdm"), np.array([[REFERENCE_OMEGA_M]]), z, float(np.mean(omega_r)))
+    return log_distance_at(log_posterior.model, own, z, omega_r) - reference
 
 
 def _began(posterior) -> tuple[np.ndarray | None, float]:

@@ -4,29 +4,14 @@ import json
 import os
 import subprocess
 import sys
-from pathlib import Path
 
-import numpy as np
 import pytest
 from typer.testing import CliRunner
 
 from fitter import cli
 from fitter.errors import InputError, InputErrors
 
-CONFIG = """\
-title: a small survey
-sample:
-  table: survey.csv
-  columns: {redshift: z, distance_modulus: mu, group: survey}
-  uncertainty:
-    - {sigma: sigma}
-    - {covariance: systematics.npy, label: calibration}
-  distance_scale: absolute
-model: flat_lcdm
-parameters:
-  omega_m: {uniform: [0.05, 0.8]}
-sampling: {replicas: 2, walkers: 32, target_ess: 300}
-"""
+SAMPLING = "{replicas: 2, walkers: 32, target_ess: 300}"
 
 
 def run(*arguments, cwd, code=None, **environment):
@@ -36,21 +21,9 @@ def run(*arguments, cwd, code=None, **environment):
     return subprocess.run(command, cwd=cwd, env=env, capture_output=True, text=True, encoding="utf-8", check=False)
 
 
-def write_project(folder: Path) -> Path:
-    rng = np.random.default_rng(4)
-    z = np.linspace(0.02, 0.9, 40)
-    mu = 5 * np.log10(z * (1 + 0.775 * z)) + 43.16 + 0.1 * rng.standard_normal(40)
-    rows = [f"{a:.5f},{b:.4f},0.1,{'near' if a < 0.3 else 'far'}" for a, b in zip(z, mu, strict=True)]
-    folder.mkdir(exist_ok=True)
-    (folder / "survey.csv").write_text("z,mu,sigma,survey\n" + "\n".join(rows) + "\n")
-    np.save(folder / "systematics.npy", np.full((40, 40), 0.01**2))
-    (folder / "config.yaml").write_text(CONFIG)
-    return folder
-
-
 @pytest.fixture(scope="module")
-def project(tmp_path_factory):
-    return write_project(tmp_path_factory.mktemp("cli") / "Übung mit Leerzeichen")
+def project(tmp_path_factory, write_project):
+    return write_project(tmp_path_factory.mktemp("cli") / "Übung mit Leerzeichen", SAMPLING)
 
 
 @pytest.fixture(scope="module")
@@ -59,8 +32,8 @@ def fitted(project):
 
 
 @pytest.fixture
-def scratch(tmp_path):
-    return write_project(tmp_path / "project")
+def scratch(tmp_path, write_project):
+    return write_project(tmp_path / "project", SAMPLING)
 
 
 def test_help_is_fast_because_nothing_heavy_is_loaded():

@@ -15,7 +15,7 @@ import numpy as np
 
 from fitter.api import _Job, _likelihood, _settings, load_run
 from fitter.config.expand import Variant, expand
-from fitter.config.load import raise_all
+from fitter.config.load import placing, raise_all
 from fitter.config.settings import Config
 from fitter.config.write import input_problems
 from fitter.errors import InputError
@@ -200,7 +200,8 @@ def _samples(variants: list[Variant]) -> list[Sample]:
     for variant in variants:
         key = variant.data_key
         if key not in read:
-            read[key] = Sample.from_config(variant.complete_sample, variant.config.folder)
+            with placing(variant.config.document):
+                read[key] = Sample.from_config(variant.complete_sample, variant.config.folder)
         if (key, variant.without) not in found:
             found[key, variant.without] = _reduced(read[key], variant)
     return [found[v.data_key, v.without] for v in variants]

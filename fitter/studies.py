@@ -10,7 +10,7 @@ from typing import Any, Literal
 import numpy as np
 
 from fitter.api import _settings
-from fitter.config.load import raise_all, validate
+from fitter.config.load import placing, raise_all, validate
 from fitter.config.parameters import FLAT
 from fitter.config.settings import Config
 from fitter.config.write import as_run, config_hash, config_text, input_problems
@@ -231,7 +231,8 @@ class StudyJob:
         if config.variants:
             problem = "this config holds variants, not one fit"
             raise config.document.error(problem, ("variants",), cure="Give each variant a config of its own")
-        sample = Sample.from_config(config.sample, config.folder)
+        with placing(config.document):
+            sample = Sample.from_config(config.sample, config.folder)
         raise_all(input_problems(config, sample))
         if not sample.has_rows:
             raise InputError("a capsule has no single supernovae to leave out or to draw", cure="This needs the original data")

@@ -193,8 +193,8 @@ class _Observed:
             counts = ", ".join(f"{label} {count}" for label, count in cuts.removed.items()) or "none"
             self.problems.found.append(
                 InputError(
-                    f"the cuts leave none of the {self.table.n} supernovae (removed by {counts})", file=self.settings.table,
-                    key="sample.keep", cure="Widen the cuts",
+                    f"the cuts leave none of the {self.table.n} supernovae of {self.settings.table} (removed by {counts})",
+                    key="sample.keep", cure=" ".join(["Widen the cuts.", *cuts.notes]),
                 )
             )  # fmt: skip
         return kept, cuts

@@ -139,7 +139,7 @@ class Cuts:
                 near = difflib.get_close_matches(name, known.tolist(), n=1)
                 hint = f"Did you mean {near[0]}? " if near else ""
                 raise InputError(
-                    "no row has this group", file=self.table, key=f"sample.keep.{column.label}", value=name,
+                    f"no row of {self.table} has this group", key=f"sample.keep.{column.label}", value=name,
                     cure=f"{hint}The groups are: {', '.join(known[:20].tolist())}",
                 )  # fmt: skip
             others = np.where(members, self._passes(inner, column), others)

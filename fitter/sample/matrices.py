@@ -270,13 +270,25 @@ def _size_of(shape, counts, sizes, table: str, shown: str) -> tuple[int, bool]:
 def _wrong_size(n: int | None, total: int, sizes, table: str, shown: str) -> InputError:
     if n is None:
         return InputError(
-            f"the file holds {total} numbers, but {sizes[0]} rows in {table} call for {sizes[0]}² = {sizes[0] ** 2}", file=shown,
+            f"the file holds {total} numbers, which make no square; {_expected(sizes, table)}, that is {sizes[0] ** 2} numbers", file=shown,
             cure="Check that the file is whole and belongs to this table",
         )  # fmt: skip
-    return InputError(f"the matrix is {n} × {n}, but {table} has {sizes[0]} rows", file=shown, cure=_cure_size(n, sizes))
+    return InputError(f"the matrix is {n} × {n}, but {_expected(sizes, table)}", file=shown, cure=_cure_size(n, sizes))
+
+
+def _expected(sizes, table: str) -> str:
+    """Which N would have been right, before and after the cuts."""
+    if len(sizes) == 1:
+        return f"{table} has {sizes[0]} rows: N must be {sizes[0]}"
+    return (
+        f"{table} has {sizes[0]} rows before the cuts and {sizes[1]} after: N must be {sizes[0]} (the cuts then remove rows from both) "
+        f"or {sizes[1]} (the rows that are kept, in their order)"
+    )
 
 
 def _cure_size(n: int, sizes) -> str:
+    if len(sizes) > 1:
+        return "Give the matrix that belongs to the table, or make the cuts with which it was made"
     if 0 < sizes[0] - n:
         return f"Was it made after a cut? Then make the same cut with `keep:`, or give the table of those {n} rows"
     return "Give the table that the matrix was made for, and cut with `keep:`: rows are then removed from both"
@@ -356,8 +368,8 @@ def _from_text(path: Path, sizes, table: str, shown: str, on_labels=None):
         if total - 1 in (stated**2, stated * (stated + 1) // 2):
             raise _wrong_size(stated, total - 1, sizes, table, shown)
         raise InputError(
-            f"its first line says N = {stated}, which calls for {stated}² = {stated**2} numbers, but {total - 1} follow; {table} has "
-            f"{sizes[0]} rows",
+            f"its first line says N = {stated}, which calls for {stated}² = {stated**2} numbers, but {total - 1} follow; "
+            f"{_expected(sizes, table)}",
             file=shown, row=1, cure="Check that the file is whole",
         )  # fmt: skip
     root = math.isqrt(total)

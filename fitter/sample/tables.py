@@ -192,7 +192,7 @@ def bordered_table(path, data_kind: str, shown: str) -> Table:
     path = Path(path)
     if format_of(path, shown) != "FITS":
         raise InputError(
-            "a bordered matrix is read from a FITS image only", file=shown, key="sample.layout",
+            f"a bordered matrix is read from a FITS image only, and {shown} is none", key="sample.layout", value="bordered",
             cure="Save z and the moduli as a CSV table, and the inverse covariance as .npy",
         )  # fmt: skip
     redshift, data, _ = read_bordered(path, shown)

@@ -2,7 +2,7 @@
 
 import pytest
 
-from fitter.api import check
+from fitter.api import check, fit
 from fitter.config.load import config_from_mapping, load_config
 from fitter.errors import InputError, InputErrors
 
@@ -237,3 +237,24 @@ def test_inner_mistakes_come_with_a_cure(project, old, new, key, words):
 
 def test_keys_are_called_keys(project):
     assert "row 9, key model: expected one of" in str(only(project, ("flat_lcdm", "flat_lcmd")))
+
+
+@pytest.mark.parametrize(
+    ("keep", "key", "words"),
+    [
+        ("{redshift: [0.5, 0.1]}", "sample.keep.redshift", "lower end of the range is above the upper one"),
+        ("{redshift: {group: {neer: [0, 1]}}}", "sample.keep.redshift", "no row of survey.csv has this group (found 'neer')."),
+        ("{redshift: [5, 6]}", "sample.keep", "none of the 40 supernovae of survey.csv (removed by redshift 40)"),
+        ("{name: a}", "sample.keep.name", "`columns` does not map it"),
+    ],
+)  # fmt: skip
+def test_cuts_that_fail_name_the_config(project, keep, key, words):
+    """Its row and its key, whether it is checked or fitted."""
+    path = project / "config.yaml"
+    path.write_text(path.read_text().replace("  uncertainty:", f"  keep:\n    {keep[1:-1]}\n  uncertainty:"))
+    (problem,) = check(path).problems
+    assert problem.file == path and problem.row in (5, 6) and problem.key.startswith(key)
+    assert words in str(problem) and str(problem).startswith(f"{path}, row {problem.row}, key {problem.key}: ")
+    with pytest.raises(InputError) as caught:
+        fit(path, run_folder=False)
+    assert str(caught.value) == str(problem)

@@ -251,6 +251,14 @@ def test_matrix_of_another_size(size, load, tmp_path):
     assert error.file == "c.txt" and f"{size} × {size}" in str(error) and f"t.csv has {N} rows" in str(error)
 
 
+def test_matrix_of_another_size_beside_cuts(load, tmp_path):
+    """Whether the matrix of before or after the cuts is expected: either will do, and both sizes are told."""
+    np.savetxt(tmp_path / "c.txt", np.eye(N - 3))
+    kept = int((Z <= Z[-3]).sum())
+    error = refusal(load, uncertainty=[{"sigma": "e"}, {"covariance": "c.txt"}], keep={"redshift": [None, float(Z[-3])]})
+    assert f"has {N} rows before the cuts and {kept} after: N must be {N} (" in str(error) and f" or {kept} (" in str(error)
+
+
 def test_matrix_that_is_not_positive_definite(load, tmp_path):
     bad = covariance()
     bad[5, 5] = -0.5

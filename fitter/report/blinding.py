@@ -13,7 +13,7 @@ from __future__ import annotations
 
 import hashlib
 import hmac
-from collections.abc import Iterable, Mapping
+from collections.abc import Iterable, Mapping, Sequence
 from dataclasses import replace
 
 import numpy as np
@@ -71,7 +71,7 @@ def _half_width(name: str) -> float:
         prior = parameter(name).default_prior or {}
     except KeyError:
         return 1.0
-    numbers = next(iter(prior.values()), [])
+    numbers: Sequence[float] = next(iter(prior.values()), ())
     return 0.5 * abs(numbers[1] - numbers[0]) if len(numbers) == 2 and "normal" not in prior else 1.0
 
 

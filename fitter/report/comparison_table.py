@@ -6,6 +6,8 @@ import csv
 import io
 import math
 import textwrap
+from collections.abc import Mapping
+from typing import Any
 
 from fitter.report.digits import plain_number
 from fitter.report.facts import parameter, unit_text
@@ -21,7 +23,7 @@ _NONE = "—"
 _SHORT = {"not worth more than a bare mention": "bare mention"}
 
 
-def main_names(report: dict) -> list[str]:
+def main_names(report: Mapping[str, Any]) -> list[str]:
     """Parameters shown in a comparison: sampled and marginalised, then the main derived ones; fixed ones where others sample them."""
     kinds: dict[str, str] = {}
     for variant in report["variants"]:
@@ -168,7 +170,7 @@ def _width_sentences(report: dict) -> list[str]:
     lines = []
     for name in dict.fromkeys(r["variant"] for r in report["prior_widths"]):
         rows = [r for r in report["prior_widths"] if r["variant"] == name]
-        by_parameter = {}
+        by_parameter: dict[str, list[str]] = {}
         for r in rows:
             by_parameter.setdefault(r["parameter"], []).append(
                 f"{signed(r['delta_log_evidence'])}{' (verdict changes)' if r['changes'] else ''}"

@@ -107,7 +107,7 @@ def edge_density(draws: np.ndarray, low: float, high: float) -> tuple[float, flo
     # The peak of a histogram with noise is biased high: a mean over the three bins around it.
     peak = np.convolve(counts, np.ones(3) / 3, mode="valid").max()
     ends = np.minimum(counts[[0, -1]] / max(peak, 1), 1.0)
-    return tuple(float(e) if t else 0.0 for e, t in zip(ends, touches, strict=True))
+    return float(ends[0]) if touches[0] else 0.0, float(ends[1]) if touches[1] else 0.0
 
 
 def json_safe(value):

@@ -3,8 +3,13 @@
 from __future__ import annotations
 
 import math
+from collections.abc import Mapping
+from typing import TYPE_CHECKING
 
 import numpy as np
+
+if TYPE_CHECKING:
+    from fitter.likelihood.posterior import LogPosterior
 
 __all__ = ["deviance_draws", "information_criteria"]
 
@@ -42,7 +47,7 @@ def best_deviance(log_posterior, optimum) -> float:
     return float(optimum.chi2) + change + 2.0 * log_posterior.sample.n * math.log(scale)
 
 
-def noise_parameter(log_posterior, values: dict, name: str, default: float) -> float:
+def noise_parameter(log_posterior: LogPosterior, values: Mapping[str, float], name: str, default: float) -> float:
     """Value of a parameter of the noise: fitted, held fixed, or its default."""
     value = values.get(name, log_posterior.fixed.get(name, default))
     return default if value is None else float(value)
@@ -55,7 +60,7 @@ def fitted_noise(log_posterior, values: dict):
     return noise.plus_variance(scatter**2) if scatter else noise
 
 
-def noise_scale(log_posterior, values: dict) -> float:
+def noise_scale(log_posterior: LogPosterior, values: Mapping[str, float]) -> float:
     """Return the factor on all errors at these values, 1 where there is none."""
     return noise_parameter(log_posterior, values, "covariance_scale", 1.0)
 

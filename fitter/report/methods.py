@@ -127,12 +127,13 @@ def _bare(name: str) -> str:
 
 def _numbers(terms) -> dict[str, str]:
     """What a config says of a term beyond its label, by label as `fitter.sample` numbers them."""
-    said, seen = {}, {}
+    said: dict[str, str] = {}
+    seen: dict[str, int] = {}
     for term in terms or []:
         kind = next((k for k in _DETAILS if k in term), None)
-        label = term.get("label") or kind
         if kind is None or isinstance(term[kind], dict) or isinstance(term.get("sigma"), dict):
             continue
+        label = term.get("label") or kind
         seen[label] = count = seen.get(label, 0) + 1
         said[label if count == 1 else f"{label} {count}"] = _DETAILS[kind].format(value=term[kind], **{"sigma": "", **term})
     return said
@@ -208,8 +209,8 @@ def _in_unit(name: str) -> str:
 
 def _prior_words(text: str) -> str:
     """A prior as `Prior.describe` gives it, in words."""
-    kind, _, numbers = text.replace("(-", "(−").replace(" -", " −").partition("(")
-    numbers = [n.strip() for n in numbers.rstrip(")").split(",")]
+    kind, _, inside = text.replace("(-", "(−").replace(" -", " −").partition("(")
+    numbers = [n.strip() for n in inside.rstrip(")").split(",")]
     if kind in ("uniform", "log-uniform") and len(numbers) == 2:
         return f"{kind} from {numbers[0]} to {numbers[1]}"
     if kind == "normal" and len(numbers) == 2:

@@ -10,7 +10,7 @@ from pathlib import Path
 
 from fitter.errors import InputError
 from fitter.report.citations import bibliography
-from fitter.report.figures.draw import Drawable, drawings, overlays
+from fitter.report.figures.draw import Drawable, Drawing, drawings, overlays
 from fitter.report.figures.settings import FigureSettings
 from fitter.report.figures.style import save_figure, styled
 from fitter.report.methods import methods, methods_files
@@ -34,7 +34,8 @@ class PaperRun:
     folder : Path
     summary, settings : dict
         The contents of summary.json and of config.yaml.
-    drawable : Drawable
+    drawable : Drawable, optional
+        Tables and methods do without.
     """
 
     folder: Path
@@ -74,7 +75,7 @@ def table_files(runs: Sequence[PaperRun], formats: Sequence[str] = tuple(_SUFFIX
     labels = run_labels(runs)
     named = [{**run.summary, "title": label} for run, label in zip(runs, labels, strict=True)]
     text = caption_text(named, labels)
-    files = {}
+    files: dict[str, str] = {}
     for fmt in formats:
         parameters, fits = parameter_table(named, fmt, names), fit_table(named, fmt)
         if fmt in ("booktabs", "latex"):
@@ -147,15 +148,21 @@ def _written_before(folder: Path) -> dict[str, str]:
         return {}
 
 
-def _figures(runs: Sequence[PaperRun], how: FigureSettings) -> list:
+def _drawable(run: PaperRun) -> Drawable:
+    if run.drawable is None:
+        raise ValueError(f"the run {run.folder} was read without what its figures show")
+    return run.drawable
+
+
+def _figures(runs: Sequence[PaperRun], how: FigureSettings) -> list[Drawing]:
     """All figures of the main run, the planes that only others have, and the overlays that several share."""
-    found = {one.name: one for one in drawings(runs[0].drawable, how=how)}
+    found = {one.name: one for one in drawings(_drawable(runs[0]), how=how)}
     for run in runs[1:]:
-        for one in drawings(run.drawable, ["planes"], how, strict=False):
+        for one in drawings(_drawable(run), ["planes"], how, strict=False):
             found.setdefault(one.name, one)
     if len(runs) > 1:
         labels = [plain(label) for label in run_labels(runs)]
-        shared = {label: run.drawable for label, run in zip(labels, runs, strict=True)}
+        shared = {label: _drawable(run) for label, run in zip(labels, runs, strict=True)}
         for one in overlays(shared, how=how):
             if one.name == "history":
                 found["history_runs"] = type(one)("history_runs", one.make, one.caption)

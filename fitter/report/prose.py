@@ -151,9 +151,9 @@ def _character(c: str) -> str:
         return _TYPED[c]
     if (greek := _greek(unicodedata.name(c, ""))) is not None:
         return greek
-    base, *marks = unicodedata.normalize("NFD", c)
-    if len(marks) == 1 and marks[0] in _ACCENTS and base.isascii():
-        return rf"\{_ACCENTS[marks[0]]}{{{base}}}"
+    parts = unicodedata.normalize("NFD", c)
+    if len(parts) == 2 and parts[1] in _ACCENTS and parts[0].isascii():
+        return rf"\{_ACCENTS[parts[1]]}{{{parts[0]}}}"
     # A combining mark that no letter before it took up.
     return "" if unicodedata.combining(c) else "?"
 

@@ -209,7 +209,7 @@ def _diagnose(draws: np.ndarray, defined: np.ndarray, sd: float) -> tuple[float,
 def _edge_facts(draws: np.ndarray, prior, facts: dict) -> dict:
     """Density at the prior's edges, and a one-sided 95 % limit where the peak stands against one."""
     at_low, at_high = edge_density(draws, prior.low, prior.high)
-    more = {"density_at_prior_edge": [at_low, at_high]}
+    more: dict[str, object] = {"density_at_prior_edge": [at_low, at_high]}
     if max(at_low, at_high) > _LIMIT_DENSITY and min(at_low, at_high) <= _LIMIT_DENSITY:
         side, level = ("upper", 0.95) if at_low > at_high else ("lower", 0.05)
         more["limit"] = {"side": side, "level": 0.95, "value": float(np.quantile(draws, level))}

@@ -62,14 +62,14 @@ def _convergence(summary: dict) -> list[str]:
     sampled = {n: p for n, p in summary["parameters"].items() if p.get("ess") is not None}
     few = {n: p["ess"] for n, p in sampled.items() if p["ess"] < _FEW}
     if few:
-        worst = min(few, key=few.get)
+        worst = min(few, key=lambda name: few[name])
         texts.append(
             f"Too few independent samples: {few[worst]:.0f} for {parameter(worst).plain}, at least {_FEW} are needed for intervals. "
             "Raise sampling.target_ess or sampling.max_steps."
         )
     apart = {n: p["rhat"] for n, p in sampled.items() if p.get("rhat") is not None and p["rhat"] > _RHAT}
     if apart:
-        worst = max(apart, key=apart.get)
+        worst = max(apart, key=lambda name: apart[name])
         texts.append(
             f"The replicas disagree: R̂ = {apart[worst]:.3f} for {parameter(worst).plain} (below {_RHAT} is wanted). "
             "Run longer; if it stays, look at the chains for separate modes."

@@ -100,10 +100,11 @@ def _normal_matrix(noise, residual, column, b: int) -> np.ndarray:
     """[X U r]ᵀ S⁻¹ [X U r], summed over blocks of rows where S is diagonal."""
     n = len(residual)
     blocks = [slice(i, min(i + _BLOCK, n)) for i in range(0, n, _BLOCK)] if noise.is_diagonal else [slice(None)]
-    total = 0.0
+    width = b + noise.modes.shape[1] + 1
+    total = np.zeros((width, width))
     for rows in blocks:
         indicator = (column[rows, None] == np.arange(b)).astype(float)
         design = np.column_stack([indicator, noise.modes[rows], residual[rows]])
         white = noise.whiten(design, rows) if noise.is_diagonal else noise.whiten(design)
-        total = total + white.T @ white
+        total += white.T @ white
     return total

@@ -36,7 +36,9 @@ def chains_figure(posterior, names: Sequence[str] | None = None, *, width: str |
     names = list(names) if names is not None else list(posterior.names)
     unknown = [n for n in names if n not in posterior.kinds]
     if unknown or not names:
-        raise InputError("no such parameter in this fit", value=(unknown or [None])[0], cure=f"Known: {', '.join(posterior.kinds)}.")
+        raise InputError(
+            "no such parameter in this fit", value=unknown[0] if unknown else None, cure=f"Known: {', '.join(posterior.kinds)}."
+        )
     wide = width_inches(width) > 5
     columns, rows = (4, len(names)) if wide else (2, 2 * len(names))
     figure = new_figure(width, height=0.62 + (1.3 if wide else 1.25) * rows)

@@ -88,8 +88,8 @@ def correlation_data(sample, noise=None) -> CorrelationData:
     pairs = np.outer(count, count) - np.diag(count)
     with np.errstate(invalid="ignore", divide="ignore"):
         matrix = np.where(pairs > 0, total / pairs, np.nan)
-    ends = [np.array([f(sample.redshift[cell == i]) for i in range(b)]) for f in (np.min, np.max)]
-    return CorrelationData(matrix, np.array(names), *ends, count)
+    low, high = (np.array([f(sample.redshift[cell == i]) for i in range(b)]) for f in (np.min, np.max))
+    return CorrelationData(matrix, np.array(names), low, high, count)
 
 
 def _cells(sample) -> tuple[np.ndarray, list[str], int]:
@@ -97,7 +97,8 @@ def _cells(sample) -> tuple[np.ndarray, list[str], int]:
     flow = np.flatnonzero(~np.asarray(sample.is_calibrator))
     group = None if sample.group is None else np.asarray(sample.group)[flow]
     names, code = group_codes(group, len(flow))
-    cell, of_cell = np.full(sample.n, -1), []
+    cell = np.full(sample.n, -1)
+    of_cell: list[str] = []
     for i, name in enumerate(names):
         rows = flow[code == i]
         rows = rows[np.argsort(sample.redshift[rows], kind="stable")]
@@ -159,14 +160,14 @@ def draw_correlation(data: CorrelationData, *, width: str | float = "single"):
 def _name_surveys(ax, data: CorrelationData, side: float) -> None:
     b = len(data.group)
     starts = np.flatnonzero(np.r_[True, data.group[1:] != data.group[:-1]])
-    stops = np.r_[starts[1:], b]
+    stops = [*starts[1:].tolist(), b]
     for edge in starts[1:] - 0.5:
         ax.axhline(edge, color="black", lw=0.6)
         ax.axvline(edge, color="black", lw=0.6)
     ax.set_xticks([])
     ax.set_yticks([])
     room = -np.inf
-    for start, stop in zip(starts, stops, strict=True):
+    for start, stop in zip(starts.tolist(), stops, strict=True):
         position = max(side * 0.5 * (start + stop) / b, room)  # names of narrow blocks are pushed apart
         place = {"transform": ax.transAxes, "ha": "right", "va": "center", "fontsize": 7.5, "linespacing": 1.0}
         ax.text(-0.04, 1 - position / side, _survey_text(data, start, stop), **place)

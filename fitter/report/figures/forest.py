@@ -21,7 +21,7 @@ _CHARACTER = 0.068  # inches that a letter of a fit's name takes
 _LONGEST_NAME = 26
 
 
-def forest_names(report: dict) -> list[str]:
+def forest_names(report: Mapping) -> list[str]:
     """Parameters that two fits or more have with a posterior of some width; of derived ones only q0 and the curvature."""
 
     def drawn(name):

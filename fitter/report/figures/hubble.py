@@ -253,7 +253,8 @@ def _reach(data: HubbleData) -> float:
     if data.error is not None:
         return 1.06 * float(np.max(np.abs(data.residual) + data.error))
     spread = 1.4826 * float(np.median(np.abs(data.residual - np.median(data.residual))))
-    return max(4.0 * spread, 1.1 * float(np.max(np.abs(data.bins.mean) + data.bins.error)), 1e-3)
+    of_bins = 0.0 if data.bins is None else 1.1 * float(np.max(np.abs(data.bins.mean) + data.bins.error))
+    return max(4.0 * spread, of_bins, 1e-3)
 
 
 def _dress(figure, upper, lower, data: HubbleData) -> None:

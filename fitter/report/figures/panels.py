@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 from collections.abc import Mapping
+from typing import TypeVar
 
 import numpy as np
 
@@ -17,8 +18,11 @@ LINE = 0.9999  # correlation of two parameters of which one says all
 _REDSHIFTS = (0.001, 0.002, 0.005, 0.01, 0.02, 0.05, 0.1, 0.2, 0.5, 1, 2, 5)
 
 
-def runs_of(posteriors) -> dict[str, object]:
-    """Return {label: posterior} from one posterior or a mapping of several."""
+Run = TypeVar("Run")
+
+
+def runs_of(posteriors: Run | Mapping[str, Run]) -> dict[str, Run]:
+    """Return {label: run} from one run or a mapping of several; a run is a posterior, or what a figure shows of one."""
     return dict(posteriors) if isinstance(posteriors, Mapping) else {"": posteriors}
 
 

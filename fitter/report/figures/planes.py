@@ -159,7 +159,7 @@ def _limits(columns, show) -> tuple[float, float]:
 
 
 def _draw_lines(ax, plane: Plane, limits) -> None:
-    x = np.linspace(*limits[0], 400)
+    x = np.linspace(limits[0][0], limits[0][1], 400)
     if plane.shade is not None:
         edge = plane.shade(x)
         top = limits[1][1]
@@ -171,10 +171,10 @@ def _draw_lines(ax, plane: Plane, limits) -> None:
         style = {"color": "black", "lw": 0.8, "dashes": line.dashes, "zorder": 4}
         if line.at is not None:
             ax.axvline(line.at, **style)
-            continue
-        y = line.y(x)
-        ax.plot(x, y, **style)
-        _label_along(ax, line, x, y, limits)
+        if line.y is not None:
+            y = line.y(x)
+            ax.plot(x, y, **style)
+            _label_along(ax, line, x, y, limits)
 
 
 def _label_along(ax, line: Line, x, y, limits) -> None:

@@ -92,7 +92,11 @@ def _table(settings: SampleSettings, folder: Path, path: Path) -> Table:
     try:
         if settings.layout == "bordered":
             return bordered_table(path, settings.data_kind, settings.table)
-        return read_table(path, options, numbers=_wanted_numbers(settings), texts=_wanted_words(settings), shown=settings.table)
+        numbers = _wanted_numbers(settings)
+        # Where there is no calibrator, the end of a row may be left out, and where rows without values are dropped, the rest too.
+        spare = numbers if settings.missing == "drop" else [settings.columns.calibrator_modulus]
+        required = [ref for ref in numbers if ref not in spare]
+        return read_table(path, options, numbers=numbers, texts=_wanted_words(settings), required=required, shown=settings.table)
     except InputError as problem:
         raise _with_missing_files(problem, settings, folder) from None
 

@@ -138,7 +138,9 @@ class Table:
         return self.words[self.columns.position(ref)]
 
 
-def read_table(path, options=None, *, numbers: Sequence = (), texts: Sequence = (), shown: str | None = None) -> Table:
+def read_table(
+    path, options=None, *, numbers: Sequence = (), texts: Sequence = (), required: Sequence = (), shown: str | None = None
+) -> Table:
     """Read the columns of a table that are asked for.
 
     Parameters
@@ -148,6 +150,8 @@ def read_table(path, options=None, *, numbers: Sequence = (), texts: Sequence = 
         How a text table is laid out, where it is not to be found out.
     numbers, texts : sequences of str or int
         Columns by name or position (0 is the first).
+    required : sequence of str or int
+        Those for which every row of a text table must have a field, empty or not.
     shown : str, optional
         The path as messages should give it.
 
@@ -156,7 +160,7 @@ def read_table(path, options=None, *, numbers: Sequence = (), texts: Sequence = 
     InputError
         The file cannot be read as a table. A missing column is said when the `Table` is asked for it.
     """
-    return _read(Path(path), options, numbers=numbers, texts=texts, shown=shown or str(path))
+    return _read(Path(path), options, numbers=numbers, texts=texts, required=required, shown=shown or str(path))
 
 
 def _read(path: Path, options=None, **wanted) -> Table:
@@ -169,6 +173,7 @@ def _read(path: Path, options=None, **wanted) -> Table:
         from fitter.sample.readers.text import read_text
 
         return read_text(path, options or TextOptions(), **wanted)
+    wanted.pop("required", None)  # elsewhere all rows are of one length
     if kind == "Parquet":
         from fitter.sample.readers.parquet import read_parquet
 
@@ -225,7 +230,7 @@ def read_numbers(path, *, use: Sequence | None = None, shown: str | None = None)
         values = values.reshape(len(values), -1)
         positions = range(values.shape[1]) if use is None else Columns(None, values.shape[1], shown).known(use)
         return list(positions), np.ascontiguousarray(values[:, list(positions)], dtype=float), np.arange(1, len(values) + 1)
-    table = _read(path, numbers=use or (), everything=use is None, shown=shown)
+    table = _read(path, numbers=use or (), required=use or (), everything=use is None, shown=shown)
     refs = list(range(table.columns.n)) if use is None else list(use)
     refs = [r for r in refs if use is not None or table.columns.label(r) != "" or not np.isnan(table.floats[r]).all()]
     try:

@@ -166,7 +166,7 @@ def test_bad_value_names_its_place(column, value, words, load):
     rows = table(**{column: {4: value, 9: value}})
     if words is None:  # a decimal comma between commas is one field too many
         error = refusal(load, rows=rows)
-        assert error.row == 6 and "5 columns, the others 4" in str(error)
+        assert error.row == 6 and "this line has 5 fields, the header has 4" in str(error)
         return
     error = refusal(load, rows=rows)
     assert (error.file, error.row, error.column) == ("t.csv", 6, column)
@@ -239,6 +239,16 @@ def test_one_name_in_two_surveys(load):
 def test_the_same_row_twice_is_told(load):
     rows = table(name={7: "sn3"}, z={7: Z[3]}, mu={7: MU[3]})
     assert any("more than one row" in w for w in load(NAMED, rows).warnings)
+
+
+@pytest.mark.parametrize("cut", ["mu", "e"])
+def test_a_row_that_lacks_a_field(cut, load, tmp_path):
+    """One field too few is said as such, and not as the missing value that it makes of the last."""
+    rows = [",".join(map(str, row)) for row in zip(*table().values(), strict=True)]
+    rows[7] = ",".join(str(v[7]) for k, v in table().items() if k != cut)
+    (tmp_path / "ragged.csv").write_text("\n".join(["name,z,mu,e", *rows]) + "\n")
+    error = refusal(load, table="ragged.csv")
+    assert error.row == 9 and "this line has 3 fields, the header has 4" in str(error)
 
 
 # ------------------------------------------------------------------ refused: matrices

@@ -204,11 +204,28 @@ def test_decimal_comma_and_thousands(write):
     assert "thousands" in error.cure
 
 
+def test_short_rows_that_lack_a_needed_field(write):
+    path = write("name,z,mu,e,host\na,0.1,38,0.1\nb,0.2,0.1\nc,0.3,41,0.1,30\n")
+    with pytest.raises(InputError) as caught:
+        read_table(path, numbers=("z", "mu", "e", "host"), required=("z", "mu", "e"), shown="t.csv")
+    assert str(caught.value).startswith("t.csv, row 3: this line has 3 fields, the header has 5 (found 'b,0.2,0.1'). Leave the field empty")
+    # The same line is no obstacle where what it lacks is not needed; a quoted comma is no delimiter.
+    assert read_table(path, numbers=("z",), required=("z",)).n == 3
+    path = write('name,z,mu\n"a, b",0.1\nc,0.3,41\n')
+    with pytest.raises(InputError, match="this line has 2 fields, the header has 3"):
+        read_table(path, numbers=("mu",), required=("mu",))
+
+
+def test_short_rows_of_shifts(write):
+    with pytest.raises(InputError, match="row 3: this line has 1 fields, the header has 2"):
+        read_numbers(write("a,b\n0.1,0.2\n0.1\n0.1,0.3\n"))
+
+
 def test_rows_of_another_length(write):
     error = failure(write("z mu e\n0.1 38 0.1\n0.2 40\n0.3 41 0.1\n"))
-    assert error.row == 3 and "2 columns, the others 3" in str(error) and error.value == "0.2 40"
+    assert error.row == 3 and "this line has 2 fields, the header has 3" in str(error) and error.value == "0.2 40"
     error = failure(write("z,mu\n0.1,38\n0.2,40,7\n0.3,41\n"))
-    assert error.row == 3 and "3 columns, the others 2" in str(error)
+    assert error.row == 3 and "this line has 3 fields, the header has 2" in str(error)
     error = failure(write("z,mu\n0.1,38,1\n0.2,40,7\n0.3,41,1\n"))
     assert error.row == 1 and "2 names" in str(error) and "3 columns" in str(error)
 

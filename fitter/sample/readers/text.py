@@ -18,7 +18,9 @@ from fitter.sample.tables import Columns, Table
 __all__ = ["read_text"]
 
 
-def read_text(path: Path, options: TextOptions, *, numbers: Sequence = (), texts: Sequence = (), everything=False, shown: str) -> Table:
+def read_text(
+    path: Path, options: TextOptions, *, numbers: Sequence = (), texts: Sequence = (), required: Sequence = (), everything=False, shown: str
+) -> Table:
     """Read the columns of a text table that are asked for.
 
     Parameters
@@ -27,8 +29,10 @@ def read_text(path: Path, options: TextOptions, *, numbers: Sequence = (), texts
     options : TextOptions
     numbers, texts : sequences of str or int
         Columns by name or position, wanted as numbers or as words.
+    required : sequence of str or int
+        Those for which every row must have a field, empty or not.
     everything : bool
-        All columns as numbers, in the order of the table.
+        All columns as numbers, in the order of the table; all are required.
     shown : str
         The path as messages should give it.
 
@@ -41,12 +45,13 @@ def read_text(path: Path, options: TextOptions, *, numbers: Sequence = (), texts
     columns = Columns(layout.names, layout.n_columns, shown)
     as_numbers = list(range(layout.n_columns)) if everything else columns.known(numbers)
     as_texts = columns.known(texts)
+    in_each = [p for p in as_numbers if columns.label(p) != ""] if everything else columns.known(required)
     with reading(path, shown):
+        _check_lengths(path, layout, max(in_each, default=-1) + 1, shown, options)
         return _read(path, layout, columns, sorted(set(as_numbers)), sorted(set(as_texts)), shown, options)
 
 
 def _read(path: Path, layout: Layout, columns: Columns, as_numbers, as_texts, shown: str, options: TextOptions) -> Table:
-    _check_lengths(path, layout, shown, options)
     needed = sorted({*as_numbers, *as_texts})
     try:
         found = _parse(path, layout, options, as_numbers, needed)
@@ -82,20 +87,30 @@ def _rows(path: Path, layout: Layout, options: TextOptions):
             yield line if tag is None or layout.delimiter == WHITESPACE else line.removeprefix(layout.delimiter)
 
 
-def _check_lengths(path: Path, layout: Layout, shown: str, options: TextOptions) -> None:
-    """Refuse rows that are too long, and, where a gap would shift the columns, too short."""
+def _check_lengths(path: Path, layout: Layout, least: int, shown: str, options: TextOptions) -> None:
+    """Refuse rows that are too long, and those that are too short: for `least` columns, or at all where a gap shifts the columns."""
     n, delimiter = layout.n_columns, layout.delimiter
     for line, text in zip(layout.lines, _rows(path, layout, options), strict=True):
         count = len(text.split()) if delimiter == WHITESPACE else text.count(delimiter) + 1
-        if count == n or (count < n and delimiter != WHITESPACE):
+        plain = delimiter == WHITESPACE or '"' not in text  # a delimiter in quotes is none
+        if plain and (count == n or (least <= count < n and delimiter != WHITESPACE)):
             continue
         fields = split_fields(text, delimiter)
-        if len(fields) == n or (delimiter != WHITESPACE and not any(fields[n:])):
-            continue  # quoted fields, or spare delimiters at the end
+        if len(fields) == n or (delimiter != WHITESPACE and len(fields) >= least and not any(fields[n:])):
+            continue  # or spare delimiters at the end
+        others = "the other lines have" if layout.names is None else "the header has"
         raise InputError(
-            f"the row has {len(fields)} columns, the others {n}", file=shown, row=int(line), value=text[:60],
-            cure="Fill the gap or remove what is too much; set `delimiter` if columns are separated otherwise, `comment` if it ends in one",
+            f"this line has {len(fields)} fields, {others} {n}", file=shown, row=int(line), value=text[:60],
+            cure=f"{_gap(len(fields) < n, delimiter)}; set `delimiter` if columns are separated otherwise, `comment` if it ends in one",
         )  # fmt: skip
+
+
+def _gap(is_short: bool, delimiter: str) -> str:
+    if not is_short:
+        return "Remove what is too much, or put text that holds the delimiter in quotes"
+    return (
+        "Write `nan` where there is no value" if delimiter == WHITESPACE else f"Leave the field empty, between two {delimiter!r}, to say so"
+    )
 
 
 def _parse(path: Path, layout: Layout, options: TextOptions, as_numbers, needed) -> dict[int, np.ndarray]:

@@ -419,10 +419,12 @@ class _Job:
         return self._summarised(optimum, chains)
 
     def _summarised(self, optimum: Optimum, chains: Posterior) -> Fit:
+        from fitter.inference.profile import profile_intervals
         from fitter.inference.proof import prove
         from fitter.report.provenance import provenance
         from fitter.report.summary import Extras, summarise
 
+        chains = replace(chains, intervals=self.config.intervals)
         more = {"provenance": provenance(self.config.sampling.seed, config_hash(self.settings), self.sample.sources)}
         ess = {name: min(chains.sampling["ess_bulk"][name], chains.sampling["ess_tail"][name]) for name in chains.names}
         proof = prove(self.log_posterior, chains, optimum, ess, seed=self._seed(_PROOF))
@@ -432,7 +434,8 @@ class _Job:
             more["capsule"] = self.log_posterior.accuracy(chains.chain)
         if declared := declared_elsewhere(chains.kinds):
             more["declared"] = declared
-        extras = Extras(title=self.config.title, cross_check=proof.cross_check, evidence=proof.evidence, more=more)
+        profile = profile_intervals(self.log_posterior, optimum)
+        extras = Extras(self.config.title, proof.cross_check, proof.evidence, more, profile)
         summary = summarise(self.log_posterior, chains, optimum, extras)
         return Fit(self.config, self.sample, self.log_posterior, optimum, chains, None, summary)
 

@@ -1,5 +1,6 @@
 """Fits from Python: the objects, the run folder, and continuing a run."""
 
+import csv
 import html
 import json
 import logging
@@ -53,6 +54,45 @@ def test_a_fit_is_an_object(result, sample):
     shown = result._repr_html_()
     assert "sixty" in shown and "Sound." in shown and "Ω<sub>m</sub>" in shown and shown.count("<div>") == shown.count("</div>")
     assert all(html.escape(text) in shown for text in result.warnings)
+
+
+def test_shortest_intervals_on_request(result, sample):
+    settings = {"title": "sixty", "sample": sample, "model": "flat_lcdm", "sampling": SAMPLING}
+    again = fit(**settings, intervals="highest_density")
+    np.testing.assert_array_equal(again.chains.chain, result.chains.chain)
+    assert "68 % highest-density" in str(again) and "highest-density" not in str(result)
+    for name, facts in again.summary()["parameters"].items():
+        x = np.sort(again.posterior[name])
+        for share, held in (("68", 0.6827), ("95", 0.95)):
+            low, high = facts[f"low{share}"], facts[f"high{share}"]
+            inside = np.searchsorted(x, high, "right") - np.searchsorted(x, low)
+            assert inside == np.ceil(held * len(x))
+            other = result.summary()["parameters"][name]
+            assert high - low <= other[f"high{share}"] - other[f"low{share}"]
+        assert facts["median"] == result.summary()["parameters"][name]["median"]
+
+
+def test_profile_intervals_are_where_chi2_has_risen(result):
+    """Against a plain scalar minimisation of χ² over the other parameter."""
+    from scipy.optimize import minimize_scalar
+
+    chi2 = lambda omega_m, H0: float(result.log_posterior.chi2(np.array([[omega_m, H0]]))[0])  # noqa: E731
+    profile, lowest = result.summary()["profile"], result.summary()["best_fit"]["chi2"]
+    for delta in (1, 4):
+        for side in ("low", "high"):
+            end = profile["omega_m"][f"delta{delta}"][side]
+            assert minimize_scalar(lambda H0, m=end: chi2(m, H0), bounds=(60, 80), method="bounded").fun - lowest == pytest.approx(
+                delta, abs=1e-4
+            )
+            end = profile["H0"][f"delta{delta}"][side]
+            assert minimize_scalar(lambda m, H0=end: chi2(m, H0), bounds=(0, 1), method="bounded").fun - lowest == pytest.approx(
+                delta, abs=1e-4
+            )
+    assert "Profile likelihood, Δχ² = 1" in str(result)
+    rows = list(csv.DictReader((result.run_folder / "summary.csv").open(encoding="utf-8")))
+    assert float(rows[0]["profile_high_delta4"]) == profile["omega_m"]["delta4"]["high"]
+    assert float(rows[0]["hessian_error"]) == result.summary()["best_fit"]["errors"]["omega_m"]
+    assert "profile, Δχ² = 4" in (result.run_folder / "report.html").read_text(encoding="utf-8")
 
 
 def test_draws_for_arviz(result, monkeypatch):

@@ -5,7 +5,7 @@ from __future__ import annotations
 import os
 from collections.abc import Mapping
 from pathlib import Path
-from typing import Annotated, Any
+from typing import Annotated, Any, Literal
 
 from pydantic import BaseModel, BeforeValidator, ConfigDict, Field, PrivateAttr, WithJsonSchema
 
@@ -77,6 +77,10 @@ class Config(BaseModel):
     )
     compare: Annotated[CompareSettings, BeforeValidator(_empty_is_default)] = Field(
         default_factory=CompareSettings, description="How `mufitter compare` weighs the variants."
+    )
+    intervals: Literal["equal_tailed", "highest_density"] = Field(
+        "equal_tailed",
+        description="How the 68.3 % and 95 % intervals are made: the same probability below as above, or the shortest that holds it.",
     )
     figures: Annotated[FigureSettings, BeforeValidator(_empty_is_default)] = Field(
         default_factory=FigureSettings, description="Which figures a fit draws, how wide, in which formats and style."

@@ -19,7 +19,7 @@ __all__ = ["as_run", "config_hash", "config_text", "differences", "input_problem
 
 _PATH_KEYS = ("table", "capsule", "covariance", "precision", "modes")
 # What may change between an interrupted run and its continuation.
-_FREE_TO_CHANGE = ("title", "run_folder", "sampling.max_steps", "sampling.target_ess")
+_FREE_TO_CHANGE = ("title", "run_folder", "intervals", "sampling.max_steps", "sampling.target_ess")
 
 
 def as_run(config: Config, sample, target: Path) -> dict[str, Any]:
@@ -49,6 +49,7 @@ def as_run(config: Config, sample, target: Path) -> dict[str, Any]:
         "sampling": config.sampling.model_dump(mode="json", by_alias=True, exclude_none=True),
         **({"blind": config.blind} if config.blind else {}),
         "run_folder": str(config.default_run_folder()),
+        "intervals": config.intervals,
         **_looks(config, moved),
         "inputs": {moved(path): sha for path, sha in {**sample.sources, **config.model_sources}.items()},
     }

@@ -2,11 +2,15 @@
 
 from __future__ import annotations
 
+from collections.abc import Callable, Mapping
 from dataclasses import dataclass
 
 import numpy as np
 
-__all__ = ["Interval", "edge_leaning", "equal_tailed", "highest_density", "one_sided"]
+__all__ = ["INTERVALS", "SHARES", "Interval", "equal_tailed", "highest_density", "interval_words", "one_sided"]
+
+#: Posterior probability in the intervals of a summary, by the names of their ends.
+SHARES = {"68": 0.6827, "95": 0.95}
 
 
 @dataclass(frozen=True)
@@ -102,37 +106,21 @@ def one_sided(draws, share: float = 0.95, *, side: str) -> Interval:
     raise ValueError(f"side is 'upper' or 'lower', not {side!r}")
 
 
-def edge_leaning(draws, low: float, high: float) -> dict[str, float]:
-    """How high the posterior density is at the bounds of the prior, as a share of its peak.
+#: How the intervals of a fit can be made: the words of a config's ``intervals``, and the function of each.
+INTERVALS: dict[str, Callable[..., Interval]] = {"equal_tailed": equal_tailed, "highest_density": highest_density}
 
-    The density is counted in cells of a third of the standard deviation (or a thirtieth of the support, where that is
-    less); at a bound it is extrapolated linearly from the two nearest cells.
+
+def interval_words(kinds: Mapping[str, str]) -> str:
+    """Name the intervals of one fit or several, e.g. ``"equal-tailed 68.3 % intervals"``.
 
     Parameters
     ----------
-    draws : array
-    low, high : float
-        Bounds of the prior; infinite ones are never leant on.
-
-    Returns
-    -------
-    dict
-        ``{"low": share, "high": share}``, 0 … 1. A Gaussian whose mean is two standard deviations off the bound has 0.14, one
-        that is cut at its mean 1, a flat posterior 1 at both.
+    kinds : mapping
+        Name of a fit → a key of `INTERVALS`.
     """
-    x = _finite(draws)
-    out = {"low": 0.0, "high": 0.0}
-    spread = x.std()
-    if len(x) < 50 or spread == 0:
-        return out
-    first, last = (low if np.isfinite(low) else x.min()), (high if np.isfinite(high) else x.max())
-    width = min(spread / 3, (last - first) / 30)
-    cells = int(np.clip(round((last - first) / width), 30, 100_000))
-    density = np.histogram(x, bins=cells, range=(first, last))[0].astype(float)
-    # Three cells together, so that the peak is not the luckiest of many.
-    smooth = np.convolve(density, [1 / 3, 1 / 3, 1 / 3], mode="valid")
-    peak = max(smooth.max(), 1.5 * density[0] - 0.5 * density[1], 1.5 * density[-1] - 0.5 * density[-2])
-    for side, bound, (a, b) in (("low", low, density[:2]), ("high", high, density[:-3:-1])):
-        if np.isfinite(bound):
-            out[side] = float(np.clip((1.5 * a - 0.5 * b) / peak, 0.0, 1.0))
-    return out
+    share = f"{100 * SHARES['68']:.1f} % intervals"
+    said = {kind: kind.replace("_", "-") for kind in kinds.values()}
+    if len(said) == 1:
+        return f"{next(iter(said.values()))} {share}"
+    of = [f"{words} of {', '.join(name for name, k in kinds.items() if k == kind)}" for kind, words in said.items()]
+    return f"{share} ({'; '.join(of)})"

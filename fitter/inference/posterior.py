@@ -6,6 +6,8 @@ from dataclasses import dataclass
 
 import numpy as np
 
+from fitter.inference.intervals import INTERVALS, SHARES, Interval
+
 __all__ = ["Posterior"]
 
 
@@ -28,6 +30,8 @@ class Posterior:
     sampling : dict
         What was done: replicas, walkers, steps, burn_in, autocorrelation, acceptance, converged, reason,
         advice, seed, seconds, evaluations, and the diagnostics that decided.
+    intervals : str
+        How intervals are made of the draws: a key of `fitter.inference.intervals.INTERVALS`.
     """
 
     names: tuple[str, ...]
@@ -36,6 +40,17 @@ class Posterior:
     extra: dict[str, np.ndarray]
     kinds: dict[str, str]
     sampling: dict
+    intervals: str = "equal_tailed"
+
+    def interval(self, name: str, share: float = SHARES["68"]) -> Interval:
+        """Return the interval of one parameter that holds a share of the posterior, undefined draws left out.
+
+        Raises
+        ------
+        KeyError
+            If there is no such parameter.
+        """
+        return INTERVALS[self.intervals](self.draws(name), share)
 
     def draws(self, name: str) -> np.ndarray:
         """Return the draws of one parameter.

@@ -11,6 +11,9 @@ from fitter.inference.maximise import maximise
 __all__ = ["ProfileInterval", "profile_intervals", "profile_likelihood"]
 
 
+_NO_LIMIT = 1e3  # standard deviations from the best value
+
+
 @dataclass(frozen=True)
 class ProfileInterval:
     """Where −2 ln L, minimised over all other parameters, is `delta` above its minimum.
@@ -23,7 +26,8 @@ class ProfileInterval:
     best : float
         Maximum-likelihood value within the prior.
     low, high : float
-        The interval; a bound of the prior where it is reached first.
+        The interval; a bound of the prior where it is reached first, infinite where the likelihood sets no limit (a thousand
+        standard deviations away Δχ² is still below `delta`).
     low_at_edge, high_at_edge : bool
         Whether it is.
     """
@@ -185,9 +189,12 @@ class _Bracket:
         within = k[~outside]
         self.inner[within], self.f_inner[within] = trial[~outside], f[~outside]
         self.at_edge[within] |= self.inner[within] == self.bound[within]
+        endless = within[np.abs(self.inner[within] - self.profile.best[self.index[within]]) > _NO_LIMIT * self.scale[within]]
+        endless = endless[~np.isfinite(self.bound[endless])]
+        self.inner[endless] = self.bound[endless]
         done = np.abs(f) < 1e-6 * self.delta[k]
         self.inner[k[done]] = trial[done]
-        self.active[k] = ~(done | self.at_edge[k])
+        self.active[k] = ~(done | self.at_edge[k] | np.isinf(self.inner[k]))
         self._doubt(k)
 
     def _doubt(self, k):

@@ -139,6 +139,7 @@ def blind_summary(summary: dict, hidden: Mapping[str, float], log_posterior, key
     silent = {n: {k: v for k, v in facts.items() if k != "limit"} for n, facts in summary["parameters"].items()}
     warnings = practitioner_warnings({**summary, "parameters": silent}, log_posterior)
     parameters = {n: _moved(facts, hidden.get(n), n in log_posterior.names) for n, facts in silent.items()}
+    profile = {n: facts for n, facts in (summary.get("profile") or {}).items() if n not in hidden}
     best = {n: facts["best"] for n, facts in parameters.items() if facts.get("best") is not None}
     said = (
         f"Blinded: {', '.join(hidden)} {'are' if len(hidden) > 1 else 'is'} shown with hidden offsets, derived and marginalised "
@@ -148,6 +149,7 @@ def blind_summary(summary: dict, hidden: Mapping[str, float], log_posterior, key
         **summary,
         "parameters": parameters,
         "best_fit": {**summary["best_fit"], "values": best},
+        "profile": profile,
         "sampling": {**summary["sampling"], "blinded": sorted(hidden)},
         "blinded": sorted(hidden),
         "blinded_key": hashlib.sha256(key.encode()).hexdigest()[:16],

@@ -29,12 +29,13 @@ def write_chain(path: str | Path, posterior: Posterior, attributes: dict[str, st
 
     Notes
     -----
-    Datasets ``chain`` (R, S, W, n), ``log_posterior`` (R, S, W) and ``extra/NAME`` (R, S, W);
-    attributes ``format``, ``names``, ``kinds``, ``sampling`` and ``declared`` (symbols of parameters from a model of one's
-    own), the last four as JSON.
+    Datasets ``chain`` (R, S, W, n), ``log_posterior`` (R, S, W) and ``extra/NAME`` (R, S, W); attributes ``format``,
+    ``intervals`` (how they are made), and as JSON ``names``, ``kinds``, ``sampling`` and ``declared`` (symbols of parameters
+    from a model of one's own).
     """
     with writing_hdf5(path, CHAIN_FORMAT) as file:
         file.attrs["names"] = json.dumps(list(posterior.names))
+        file.attrs["intervals"] = posterior.intervals
         file.attrs["kinds"] = json.dumps(posterior.kinds)
         file.attrs["sampling"] = json.dumps(json_safe(posterior.sampling))
         file.attrs["declared"] = json.dumps(declared_elsewhere(posterior.kinds))
@@ -79,6 +80,7 @@ def read_chain(path: str | Path) -> Posterior:
                 extra=extra,
                 kinds=json.loads(file.attrs["kinds"]),
                 sampling=json.loads(file.attrs["sampling"]),
+                intervals=str(file.attrs.get("intervals", "equal_tailed")),
             )
     except (OSError, KeyError, ValueError) as error:
         raise InputError(f"the chain is damaged or cut short: {error}", file=path, cure="Run the fit again with --replace") from None

@@ -9,6 +9,7 @@ import textwrap
 from collections.abc import Mapping
 from typing import Any
 
+from fitter.inference.intervals import interval_words
 from fitter.report.digits import plain_number
 from fitter.report.facts import parameter, unit_text
 from fitter.report.tables import latex_cell, latex_text
@@ -128,8 +129,9 @@ def _blocks(table: list[list[str]], width: int) -> list[list[int]]:
 
 def caption(report: dict) -> str:
     """Return what a reader of the table must know."""
+    intervals = interval_words({v["name"]: v.get("intervals", "equal_tailed") for v in report["variants"]})
     return (
-        f"Medians with equal-tailed 68.3 % intervals; limits are one-sided, 95 %. Differences are from {report['reference']}; k counts the "
+        f"Medians with {intervals}; limits are one-sided, 95 %. Differences are from {report['reference']}; k counts the "
         f"marginalised zero point. Odds are evidence ratios, all models equally likely before the data; words after {report['scale']}."
     )
 
@@ -184,7 +186,8 @@ def _average_lines(report: dict) -> list[str]:
     average = report["average"]
     weights = ", ".join(f"{name} {weight:.3f}" for name, weight in average["weights"].items())
     facts = {n: {**f, "mcse": None} for n, f in average["parameters"].items()}
-    return [f"Weights: {weights}.", *(f"{parameter(n).plain}{unit_text(n)}: {cell_text(f)}" for n, f in facts.items())]
+    said = f"Weights: {weights}. Medians with {interval_words({'': 'equal_tailed'})}."
+    return [said, *(f"{parameter(n).plain}{unit_text(n)}: {cell_text(f)}" for n, f in facts.items())]
 
 
 def comparison_markdown(report: dict) -> str:

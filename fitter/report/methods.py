@@ -5,6 +5,7 @@ from __future__ import annotations
 from math import ceil, isfinite
 
 from fitter.cosmology import MODELS
+from fitter.inference.intervals import interval_words
 from fitter.report.citations import SHORT, bibliography
 from fitter.report.digits import figures_for, plain_number
 from fitter.report.prose import CHI2, cite, cited, latex, listed, math, model_text, plain, redshift_range, symbol, with_unit
@@ -253,9 +254,8 @@ def _likelihood(summary: dict) -> str:
 
 def _computation(summary: dict, settings: dict) -> list[str]:
     said = [*_sampler(summary), *_convergence(summary), *_cross_check(summary), *_evidence(summary), *_fit(summary)]
-    said.append(
-        "Quoted values are posterior medians with equal-tailed 68.3 % intervals, unless they are given as limits (one-sided, 95 %)."
-    )
+    intervals = interval_words({"": summary.get("intervals", "equal_tailed")})
+    said.append(f"Quoted values are posterior medians with {intervals}, unless they are given as limits (one-sided, 95 %).")
     return said + _versions(summary)
 
 

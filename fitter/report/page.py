@@ -14,12 +14,12 @@ from importlib import resources
 from pathlib import Path
 from string import Template
 
-from fitter.report.digits import plain_number
+from fitter.report.digits import figures_for, plain_number
 from fitter.report.facts import parameter, unit_text
 from fitter.report.prose import plain
 from fitter.report.summary import summary_csv
 from fitter.report.tables import parameter_table
-from fitter.report.terminal import best_text, cell_text, data_line, information_lines
+from fitter.report.terminal import best_text, cell_text, data_line, information_lines, median_head, profile_text
 
 __all__ = ["PAGE", "Picture", "fit_html", "page_text", "picture_of", "verdict"]
 
@@ -136,7 +136,7 @@ def fit_html(summary: dict) -> str:
     return (
         f"<div><strong>{_e(summary['title'] or summary['model'])}</strong>, {_e(data_line(summary).strip())}"
         f'<p><strong style="border-left:.3em solid {colour};padding-left:.5em">{_e(headline)}.</strong> {_e(reasons)}</p>'
-        f"<table><thead><tr><th></th><th>median, 68 %</th><th></th></tr></thead><tbody>{rows}</tbody></table>"
+        f"<table><thead><tr><th></th><th>{_e(median_head(summary))}</th><th></th></tr></thead><tbody>{rows}</tbody></table>"
         + (f"<details><summary>Warnings ({len(summary['warnings'])})</summary><ul>{warnings}</ul></details>" if warnings else "")
         + "</div>"
     )
@@ -193,7 +193,7 @@ def _parameters(summary: dict) -> str:
         best = best_text(facts) if facts.get("best") is not None and facts.get("sd") else ""
         rows.append([f"{_symbol(name)}{_e(unit_text(name))}", _e(value), _e(best), _e(parameter(name).meaning), _e(note)])
     rows += [[_symbol(n), _e(f"{v:g}"), "", _e(parameter(n).meaning), "held fixed"] for n, v in (summary.get("fixed") or {}).items()]
-    table = _table(["", "median, 68 %", "best fit", "meaning", "prior or kind"], rows, fixed=3)
+    table = _table(["", median_head(summary), "best fit", "meaning", "prior or kind"], rows, fixed=3)
     latex = _copyable("latex", "Copy as LaTeX", parameter_table(summary, "booktabs"), "LaTeX table")
     return table + latex + _copyable("csv", "Copy as CSV", summary_csv(summary), "CSV, full precision")
 
@@ -261,7 +261,27 @@ def _fit(summary: dict) -> str:
     fit = summary["best_fit"]
     p = f", p-value {plain_number(fit['p_value'], 3)}" if fit.get("p_value") is not None else ""
     lines = [f"χ² = {fit['chi2']:.2f} for {fit['dof']:,} degrees of freedom{p}.", *information_lines(summary["information"])]
-    return "".join(f"<p>{_e(line)}</p>" for line in lines)
+    return "".join(f"<p>{_e(line)}</p>" for line in lines) + _profile(summary)
+
+
+def _profile(summary: dict) -> str:
+    profile, errors = summary.get("profile") or {}, summary["best_fit"].get("errors") or {}
+    if not profile:
+        return ""
+    rows = [
+        [
+            _symbol(n),
+            _e(profile_text(facts, "delta1")),
+            _e(profile_text(facts, "delta4")),
+            _e(figures_for(errors[n], width=errors[n]).plain()) if errors.get(n) else "",
+        ]
+        for n, facts in profile.items()
+    ]
+    words = (
+        "Without the prior's density: the value of highest likelihood, and how far the parameter can go while all others adapt until "
+        "χ² has risen by 1 or 4 (68.3 % and 95.4 % for a Gaussian likelihood). Beside it the error from the curvature at the best fit."
+    )
+    return f"<p>{words}</p>" + _table(["", "profile, Δχ² = 1", "profile, Δχ² = 4", "curvature"], rows)
 
 
 def _provenance(summary: dict, made: dict) -> str:

@@ -5,10 +5,13 @@ from __future__ import annotations
 import csv
 import io
 import json
+from collections.abc import Iterable
 from dataclasses import dataclass, field
 
 import numpy as np
 
+from fitter.inference.intervals import INTERVALS, SHARES
+from fitter.inference.profile import ProfileInterval
 from fitter.report.facts import edge_density, json_safe, parameter
 from fitter.report.information import information_criteria, noise_scale
 
@@ -16,7 +19,6 @@ __all__ = ["SCHEMA", "Extras", "summarise", "summary_csv", "summary_json", "summ
 
 SCHEMA = "mufitter summary 1"
 
-_QUANTILES = {"low95": 0.025, "low68": 0.1587, "median": 0.5, "high68": 0.8413, "high95": 0.975}
 _ENOUGH_DRAWS = 100_000
 _MOST_GROUPS = 50
 _LIMIT_DENSITY = 0.6  # of the peak, at a prior's edge: the peak is within about 1σ of it
@@ -35,12 +37,15 @@ class Extras:
         Mapping or dataclass with log_evidence and log_evidence_error.
     more : dict
         Further top-level keys, written as they are.
+    profile : tuple of ProfileInterval
+        Profile-likelihood intervals of the sampled parameters.
     """
 
     title: str = ""
     cross_check: object | None = None
     evidence: object | None = None
     more: dict = field(default_factory=dict)
+    profile: tuple[ProfileInterval, ...] = ()
 
 
 def summarise(log_posterior, posterior, optimum, extras: Extras | None = None) -> dict:
@@ -56,8 +61,8 @@ def summarise(log_posterior, posterior, optimum, extras: Extras | None = None) -
     Returns
     -------
     dict
-        JSON-safe, with the keys schema, title, model, radiation, sample, parameters, best_fit, information,
-        sampling, cross_check, warnings.
+        JSON-safe, with the keys schema, title, model, radiation, sample, parameters, intervals, best_fit, profile,
+        information, sampling, cross_check, warnings.
     """
     from fitter.report.warnings import practitioner_warnings
 
@@ -71,7 +76,9 @@ def summarise(log_posterior, posterior, optimum, extras: Extras | None = None) -
         "radiation": bool(log_posterior.radiation),
         "sample": _sample_facts(log_posterior.sample),
         "parameters": {name: _parameter_facts(log_posterior, posterior, name, best.get(name)) for name in posterior.kinds},
+        "intervals": posterior.intervals,
         "best_fit": _best_fit(log_posterior, optimum, best),
+        "profile": profile_facts(extras.profile),
         "information": information_criteria(log_posterior, posterior, optimum, evidence),
         "sampling": dict(posterior.sampling),
         "cross_check": extras.cross_check,
@@ -130,8 +137,20 @@ def _best_fit(log_posterior, optimum, best: dict) -> dict:
         "p_value": chi2_p_value(float(optimum.chi2), dof),
         "log_posterior": float(optimum.log_posterior),
         "values": best,
+        "errors": dict(zip(log_posterior.names, optimum.errors.tolist(), strict=True)),
         "covariance_scale": noise_scale(log_posterior, optimum.values),
     }
+
+
+def profile_facts(intervals: Iterable[ProfileInterval]) -> dict[str, dict]:
+    """Return profile-likelihood intervals by parameter and Δχ², an end without a limit as None."""
+    facts: dict[str, dict] = {}
+    for one in intervals:
+        ends = {"low": one.low, "high": one.high}
+        told = {side: value if np.isfinite(value) else None for side, value in ends.items()}
+        edges = {"low_at_edge": one.low_at_edge, "high_at_edge": one.high_at_edge}
+        facts.setdefault(one.name, {"maximum": one.best})[f"delta{one.delta:g}"] = {**told, **edges}
+    return facts
 
 
 def chi2_p_value(chi2: float, dof: int) -> float | None:
@@ -152,7 +171,7 @@ def _parameter_facts(log_posterior, posterior, name: str, best: float | None) ->
     draws = np.asarray(posterior.draws(name), dtype=float)
     defined = np.isfinite(draws)
     everywhere = bool(defined.all())
-    facts = {"kind": posterior.kinds[name], **_moments(draws.ravel() if everywhere else draws[defined]), "best": best}
+    facts = {"kind": posterior.kinds[name], **_moments(draws.ravel() if everywhere else draws[defined], posterior.intervals), "best": best}
     facts.update(_accuracy(posterior, name, defined, facts["sd"]))
     if not everywhere:
         facts["undefined_fraction"] = float(1.0 - defined.mean())
@@ -162,15 +181,19 @@ def _parameter_facts(log_posterior, posterior, name: str, best: float | None) ->
     return facts
 
 
-def _moments(values: np.ndarray) -> dict:
+def _moments(values: np.ndarray, intervals: str) -> dict:
+    """Mean, standard deviation, median and the ends of the intervals."""
     if values.size == 0:
-        return dict.fromkeys(["mean", "sd", *_QUANTILES])
-    mean = float(values.mean())
-    sd = float(values.std(ddof=1)) if values.size > 1 else 0.0
-    quantiles = np.quantile(values, list(_QUANTILES.values()))
-    named = dict(zip(_QUANTILES, quantiles.tolist(), strict=True))
-    order = ("median", "low68", "high68", "low95", "high95")
-    return {"mean": mean, "sd": sd, **{key: named[key] for key in order}}
+        return dict.fromkeys(["mean", "sd", "median", *(f"{end}{share}" for share in SHARES for end in ("low", "high"))])
+    facts = {
+        "mean": float(values.mean()),
+        "sd": float(values.std(ddof=1)) if values.size > 1 else 0.0,
+        "median": float(np.median(values)),
+    }
+    for share, held in SHARES.items():
+        interval = INTERVALS[intervals](values, held)
+        facts |= {f"low{share}": interval.low, f"high{share}": interval.high}
+    return facts
 
 
 def _accuracy(posterior, name: str, defined: np.ndarray, sd: float | None) -> dict:
@@ -222,6 +245,7 @@ def summary_json(summary: dict) -> str:
 
 
 _COLUMNS = ("mean", "sd", "median", "low68", "high68", "low95", "high95", "best", "ess", "rhat", "mcse")
+_PROFILE_COLUMNS = {f"profile_{side}_delta{delta}": (f"delta{delta}", side) for delta in (1, 4) for side in ("low", "high")}
 
 
 def summary_csv(summary: dict) -> str:
@@ -231,13 +255,16 @@ def summary_csv(summary: dict) -> str:
     """
     out = io.StringIO()
     writer = csv.writer(out, lineterminator="\n")
-    writer.writerow(["name", "kind", "unit", "value", *_COLUMNS])
+    writer.writerow(["name", "kind", "unit", "value", *_COLUMNS, "hessian_error", *_PROFILE_COLUMNS])
+    errors, profile = summary["best_fit"].get("errors") or {}, summary.get("profile") or {}
     for name, facts in summary["parameters"].items():
-        writer.writerow([name, facts["kind"], facts.get("unit", ""), "", *(_cell(facts.get(c)) for c in _COLUMNS)])
+        numbers = [facts.get(c) for c in _COLUMNS] + [errors.get(name)]
+        numbers += [profile.get(name, {}).get(delta, {}).get(side) for delta, side in _PROFILE_COLUMNS.values()]
+        writer.writerow([name, facts["kind"], facts.get("unit", ""), "", *(_cell(x) for x in numbers)])
     for section in ("sample", "best_fit", "information", "sampling", "cross_check"):
         for key, value in (summary.get(section) or {}).items():
             if isinstance(value, int | float | str | bool):
-                writer.writerow([key, section, "", _cell(value), *[""] * len(_COLUMNS)])
+                writer.writerow([key, section, "", _cell(value), *[""] * (len(_COLUMNS) + 1 + len(_PROFILE_COLUMNS))])
     return out.getvalue()
 
 

@@ -6,10 +6,11 @@ import csv
 import io
 from collections.abc import Sequence
 
+from fitter.inference.intervals import interval_words
 from fitter.report.digits import figures_for, plain_number
 from fitter.report.facts import parameter, unit_text
 from fitter.report.prose import CHI2, ascii_formula, latex, latex_text, listed, math, model_text, plain, redshift_range, symbol
-from fitter.report.terminal import best_text, cell_text
+from fitter.report.terminal import best_text, cell_text, median_head
 
 __all__ = ["TABLE_FORMATS", "caption", "caption_text", "fit_table", "latex_float", "latex_text", "parameter_table"]
 
@@ -71,15 +72,20 @@ def caption_text(summaries: Sequence[dict], labels: Sequence[str] | None = None)
     labels : sequence of str, optional
         What the fits are called in the table, where there are several.
     """
-    text = "Posterior medians with equal-tailed 68.3 % intervals"
+    kinds = {label: s.get("intervals", "equal_tailed") for label, s in zip(_labels(summaries, labels), summaries, strict=True)}
+    text = f"Posterior medians with {interval_words(kinds)}"
     if any(facts.get("limit") for s in summaries for facts in s["parameters"].values()):
         text += "; limits are one-sided, 95 %"
     if len(summaries) == 1:
         return f"{text}. Model {_fit_text(summaries[0])}{_undefined(summaries[0])}"
-    names = labels or [s["title"] or s["model"] for s in summaries]
+    names = _labels(summaries, labels)
     # A fit that goes by the name of its model need not be told which one it is.
     each = [f"{name}: {_fit_text(s).removeprefix(name + ', ')}{_undefined(s)}" for name, s in zip(names, summaries, strict=True)]
     return text + ". " + " ".join(f"{one[:1].upper()}{one[1:]}" for one in each)
+
+
+def _labels(summaries: Sequence[dict], labels: Sequence[str] | None) -> list[str]:
+    return list(labels) if labels else [s["title"] or s["model"] for s in summaries]
 
 
 def _fit_text(summary: dict) -> str:
@@ -104,7 +110,7 @@ def _undefined(summary: dict) -> str:
 
 def _markdown(summaries: list[dict], names: list[str]) -> str:
     if len(summaries) == 1:
-        rows = [["parameter", "median, 68 %", "best fit", "kind"]]
+        rows = [["parameter", median_head(summaries[0]), "best fit", "kind"]]
         facts = summaries[0]["parameters"]
         rows += [[f"{parameter(n).plain}{unit_text(n)}", cell_text(facts[n]), best_text(facts[n]), facts[n]["kind"]] for n in names]
     else:

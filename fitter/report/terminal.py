@@ -48,7 +48,8 @@ def terminal_summary(summary: dict, *, stream=None, width: int = _WIDTH) -> str:
 
 def facts_lines(summary: dict) -> list[str]:
     """Return one line each for goodness of fit, convergence, cross-check, criteria and evidence."""
-    lines = [_chi2_line(summary["best_fit"]), _convergence_line(summary), _cross_check_line(summary.get("cross_check"))]
+    lines = [_chi2_line(summary["best_fit"]), _profile_line(summary.get("profile") or {}), _convergence_line(summary)]
+    lines.append(_cross_check_line(summary.get("cross_check")))
     return [line for line in (*lines, *information_lines(summary["information"])) if line]
 
 
@@ -84,8 +85,14 @@ def best_text(facts: dict) -> str:
     return figures_for(facts["best"], width=facts["sd"]).plain()
 
 
+def median_head(summary: dict) -> str:
+    """Return the head of the column of medians: what errors stand beside them."""
+    kind = summary.get("intervals", "equal_tailed")
+    return "median, 68 %" + ("" if kind == "equal_tailed" else " " + kind.replace("_", "-"))
+
+
 def _table(summary: dict, colour: bool) -> list[str]:
-    header = ("", "median, 68 %", "best fit", "")
+    header = ("", median_head(summary), "best fit", "")
     rows = []
     for name, facts in summary["parameters"].items():
         note = _KINDS[facts["kind"]]
@@ -112,6 +119,31 @@ def _chi2_line(fit: dict) -> str:
         return f"χ² = {fit['chi2']:.2f} with {fit['dof']} degrees of freedom"
     ratio = fit["chi2"] / fit["dof"]
     return f"χ²/dof = {fit['chi2']:.2f} / {fit['dof']} = {ratio:.3f}, p-value {plain_number(fit['p_value'], 3)}"
+
+
+def _profile_line(profile: dict) -> str:
+    said = "; ".join(f"{parameter(name).plain} {profile_text(facts, 'delta1')}" for name, facts in profile.items())
+    return f"Profile likelihood, Δχ² = 1: {said}" if said else ""
+
+
+def profile_text(facts: dict, delta: str) -> str:
+    """Return where the likelihood of a parameter is highest and how far it can go, e.g. ``"0.373 +0.056 −0.059"``.
+
+    Parameters
+    ----------
+    facts : dict
+        An entry of ``profile`` in summary.json.
+    delta : {"delta1", "delta4"}
+        Δχ² = 1 or 4.
+    """
+    ends = facts[delta]
+    inside = {side: ends[side] is not None and not ends[f"{side}_at_edge"] for side in ("low", "high")}
+    if all(inside.values()):
+        return figures_for(facts["maximum"], ends["low"], ends["high"]).plain()
+    if not any(inside.values()):
+        return "not limited within the prior"
+    sign, side = ("<", "high") if inside["high"] else (">", "low")
+    return f"{sign} {figures_for(ends[side], width=abs(ends[side] - facts['maximum']) or None).plain()}, to the prior's edge"
 
 
 def _convergence_line(summary: dict) -> str:

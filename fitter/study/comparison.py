@@ -117,6 +117,7 @@ def _variant(study: _Study, entry: Entry) -> dict:
         "model": summary["model"],
         "n": summary["sample"]["n"],
         "parameters": summary["parameters"],
+        "intervals": summary.get("intervals", "equal_tailed"),
         "fixed": summary.get("fixed", {}),
         "priors": summary.get("priors", {}),
         "converged": summary["sampling"]["converged"],

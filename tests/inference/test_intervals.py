@@ -2,7 +2,7 @@ import numpy as np
 import pytest
 from scipy import stats
 
-from fitter.inference.intervals import edge_leaning, equal_tailed, highest_density, one_sided
+from fitter.inference.intervals import equal_tailed, highest_density, interval_words, one_sided
 
 RNG = np.random.default_rng(1)
 N = 200_000
@@ -34,6 +34,12 @@ def test_highest_density_has_equal_density_at_its_ends():
     assert "highest-density" in i.label
 
 
+def test_fits_with_intervals_of_two_kinds_are_told_apart():
+    assert interval_words({"a": "equal_tailed", "b": "equal_tailed"}) == "equal-tailed 68.3 % intervals"
+    mixed = interval_words({"a": "equal_tailed", "b": "highest_density", "c": "equal_tailed"})
+    assert mixed == "68.3 % intervals (equal-tailed of a, c; highest-density of b)"
+
+
 def test_one_sided():
     up, down = one_sided(GAUSS, 0.95, side="upper"), one_sided(GAUSS, 0.95, side="lower")
     assert up.high == pytest.approx(1.6449, abs=4 * error(0.1031, 0.95)) and up.low == -np.inf
@@ -45,17 +51,3 @@ def test_one_sided():
 def test_undefined_draws_are_left_out():
     x = np.append(GAMMA, [np.nan, np.inf])
     assert equal_tailed(x) == equal_tailed(GAMMA)
-
-
-@pytest.mark.parametrize("offset, expected", [(0.0, 1.0), (1.0, np.exp(-0.5)), (2.0, np.exp(-2.0)), (4.0, 0.0)])
-def test_edge_leaning_of_a_cut_gaussian(offset, expected):
-    x = stats.truncnorm(-offset, 8).rvs(N, random_state=3)
-    lean = edge_leaning(x, -offset, 50.0)
-    assert lean["low"] == pytest.approx(expected, abs=0.06)
-    assert lean["high"] == 0.0
-
-
-def test_edge_leaning_of_a_flat_posterior_and_of_open_priors():
-    flat = edge_leaning(RNG.uniform(0, 1, N), 0, 1)
-    assert min(flat.values()) > 0.85
-    assert edge_leaning(GAUSS, -np.inf, np.inf) == {"low": 0.0, "high": 0.0}

@@ -4,6 +4,7 @@ import pytest
 from fitter.errors import InputError
 from fitter.inference.optimum import find_optimum
 from fitter.inference.profile import profile_intervals, profile_likelihood
+from fitter.likelihood.priors import Normal
 
 SEED = np.random.SeedSequence(7)
 
@@ -75,6 +76,16 @@ def test_profile_of_a_banana(doubles):
     assert one["x1", 4].low == pytest.approx(-1, abs=1e-5)
     assert one["x1", 1].high == pytest.approx(1 + 1 / 16, abs=1e-5)
     assert one["x1", 4].high == pytest.approx(4 + 1 / 16, abs=1e-5)
+
+
+def test_profile_without_a_limit(doubles):
+    # The likelihood knows nothing of x1, whose normal prior has no end, and limits x0 from above only.
+    target = doubles.Double(lambda t: -0.5 * np.maximum(t[:, 0], 0) ** 2, [(-np.inf, np.inf)] * 2)
+    target.priors = (Normal(0.5, 2.0), Normal(3.0, 1.0))
+    target.log_prior = lambda t: target.priors[0].log_density(t[:, 0]) + target.priors[1].log_density(t[:, 1])
+    x0, x1 = (i for i in profile_intervals(target, find_optimum(target, SEED)) if i.delta == 1)
+    assert x0.low == -np.inf and x0.high == pytest.approx(1, abs=1e-5)
+    assert (x1.low, x1.high, x1.low_at_edge, x1.high_at_edge) == (-np.inf, np.inf, False, False)
 
 
 def test_profile_stops_at_the_prior(doubles):

@@ -6,6 +6,7 @@ from types import SimpleNamespace
 import numpy as np
 import pytest
 
+from fitter.inference.optimum import Optimum
 from fitter.inference.posterior import Posterior
 from fitter.likelihood.posterior import LogPosterior
 from fitter.likelihood.priors import Uniform
@@ -133,7 +134,7 @@ def make_fit(sample=None, transform=None, sampling=None, shape=(4, 250, 16), **l
     density = LogPosteriorDouble(sample or make_sample(), **log_posterior)
     theta = np.array(density.mean)
     values = dict(zip(density.names, density.mean, strict=True)) | dict.fromkeys(density.marginalised, -19.3)
-    optimum = SimpleNamespace(
+    optimum = Optimum(
         theta=theta,
         log_posterior=float(density.log_likelihood(theta[None])[0]),
         chi2=density.chi2_min,
@@ -179,7 +180,7 @@ def make_real_fit(model="flat_wcdm", sample=None, truth=None, sd=None, shape=(4,
     posterior = Posterior(density.names, chain, density(flat).reshape(shape), extra, kinds, facts)
     values = dict(zip(density.names, theta.tolist(), strict=True))
     values |= {n: float(v[0]) for n, v in density.best_marginalised(theta[None]).items()}
-    optimum = SimpleNamespace(
+    optimum = Optimum(
         theta=theta, log_posterior=float(density(theta[None])[0]), chi2=float(density.chi2(theta[None])[0]),
         covariance=np.diag(spread**2), values=values,
     )  # fmt: skip

@@ -55,7 +55,8 @@ def blind(folder, shown):
 def values_of(summary):
     """Every central value that must not be readable."""
     keys = ("mean", "median", "low68", "high68", "low95", "high95", "best")
-    return [facts[key] for facts in summary["parameters"].values() for key in keys]
+    profile = [facts[delta][side] for facts in summary["profile"].values() for delta in ("delta1", "delta4") for side in ("low", "high")]
+    return [facts[key] for facts in summary["parameters"].values() for key in keys] + profile
 
 
 def _key(result):

@@ -1,11 +1,10 @@
 """Figures of a comparison: what is drawn, where, and in whose colour."""
 
-from types import SimpleNamespace
-
 import numpy as np
 import pytest
 from matplotlib.backends.backend_agg import FigureCanvasAgg
 
+from fitter.inference.posterior import Posterior
 from fitter.report.comparison_figures import draw_comparison, overlay_names
 from fitter.report.figures.corner import corner_figure
 from fitter.report.figures.forest import forest_figure, forest_names
@@ -19,7 +18,10 @@ def posterior(seed, n=20_000, **columns):
     draws = {k: rng.normal(*v, n) for k, v in columns.items() if not callable(v)}
     kinds = dict.fromkeys(draws, "sampled") | {k: "derived" for k, v in columns.items() if callable(v)}
     draws |= {k: v(draws) for k, v in columns.items() if callable(v)}
-    return SimpleNamespace(names=tuple(k for k in kinds if kinds[k] == "sampled"), kinds=kinds, draws=lambda k: draws[k].reshape(4, -1, 50))
+    names = tuple(k for k in kinds if kinds[k] == "sampled")
+    chain = np.stack([draws[k].reshape(4, -1, 50) for k in names], axis=-1)
+    extra = {k: draws[k].reshape(4, -1, 50) for k in kinds if k not in names}
+    return Posterior(names, chain, np.zeros(chain.shape[:3]), extra, kinds, {})
 
 
 @pytest.fixture

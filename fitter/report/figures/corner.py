@@ -93,7 +93,7 @@ def corner_figure(
         _draw_run(axes, names, table, limits, scale, COLOURS[index % len(COLOURS)], alone=len(runs) == 1)
     _dress(axes, names, limits, scale, labels or {})
     if len(runs) == 1:
-        _titles(axes, names, next(iter(runs.values())), labels or {})
+        _titles(axes, names, next(iter(runs.values())), labels or {}, scale)
     else:
         _legend(figure, list(runs))
     _mark(axes, names, reference or {}, scale)
@@ -113,7 +113,8 @@ def corner_caption(posteriors, names: Sequence[str] | None = None) -> str:
     units = [f"{symbol(name)} is in {with_unit(name).strip()}" for name in names if parameter(name).unit]
     text += f" {listed(units)}." if units else ""
     if len(runs) == 1:
-        return f"{text} Titles and dashed lines: median and equal-tailed 68.3 % interval of each parameter."
+        kind = next(iter(runs.values())).intervals.replace("_", "-")
+        return f"{text} Titles and dashed lines: median and {kind} 68.3 % interval of each parameter."
     return f"{text} Overlaid: {', '.join(runs)}; each density is scaled to its own peak."
 
 
@@ -154,9 +155,6 @@ def _draw_run(axes, names, table, limits, scale, colour, *, alone: bool) -> None
             continue
         draws = table[y] * scale[y]
         draw_density(axes[row, row], draws, scaled[y], colour, fill=alone)
-        if alone:
-            for q in np.nanquantile(draws, [0.1587, 0.5, 0.8413]):
-                axes[row, row].axvline(q, color=colour, ls=(0, (4, 3)), lw=0.6)
         for column, x in enumerate(names[:row]):
             if x in table:
                 # Bins follow the run's own range: in that of the widest run a narrow one would be smeared.
@@ -224,13 +222,15 @@ def _align(axes, k: int) -> None:
             left.yaxis.set_label_coords(0, 0.5, transform=beside)
 
 
-def _titles(axes, names, posterior, labels) -> None:
-    """Median and 68 % over each marginal, in the digits its width deserves; smaller where the panel is."""
+def _titles(axes, names, posterior, labels, scale) -> None:
+    """Median and 68 % over each marginal and as lines in it, in the digits its width deserves; smaller where the panel is."""
     panel_inches = axes[0, 0].get_position().width * axes[0, 0].figure.get_figwidth()
     for i, name in enumerate(names):
         draws = posterior.draws(name)
-        low, median, high = np.quantile(draws[np.isfinite(draws)], [0.1587, 0.5, 0.8413])
-        figures = figures_for(median, low, high)
+        interval, median = posterior.interval(name), np.nanmedian(draws)
+        for x in (interval.low, median, interval.high):
+            axes[i, i].axvline(x * scale[name], color=COLOURS[0], ls=(0, (4, 3)), lw=0.6)
+        figures = figures_for(median, interval.low, interval.high)
         # A power of ten goes before the symbol: 10⁵² Λ = 1.09 ± 0.05 is shorter, and as true.
         power = f"10^{{{-figures.exponent}}}\\," if figures.exponent else ""
         value = replace(figures, exponent=0).latex()

@@ -7,6 +7,7 @@ from collections.abc import Mapping, Sequence
 
 import numpy as np
 
+from fitter.inference.intervals import interval_words
 from fitter.report.comparison_table import main_names
 from fitter.report.facts import axis_label
 from fitter.report.figures.corner import inner_ticks
@@ -98,7 +99,8 @@ def _draw_panel(ax, report: dict, name: str) -> None:
 def forest_caption(report: Mapping, names: Sequence[str] | None = None) -> str:
     """Return the caption of the forest plot."""
     names = names or forest_names(report)
+    kinds = interval_words({v["name"]: v.get("intervals", "equal_tailed") for v in report["variants"]})
     return (
-        f"{listed(symbol(n) for n in names)} in each fit: median (circle), equal-tailed 68.3 % (thick) and 95 % (thin) intervals. "
+        f"{listed(symbol(n) for n in names)} in each fit: median (circle), {kinds} (thick) and those of 95 % (thin). "
         f"Diamonds: held fixed. Grey: the 68.3 % interval of {report['reference']}."
     )

@@ -1,5 +1,7 @@
 """Figures: axes, labels, the data drawn, levels, nothing clipped, files with embedded fonts."""
 
+from dataclasses import replace
+
 import matplotlib
 import numpy as np
 import pytest
@@ -9,7 +11,8 @@ from fitter.errors import InputError
 from fitter.report.facts import axis_label
 from fitter.report.figures.binned import binned_means, redshift_edges
 from fitter.report.figures.corner import corner_caption, corner_figure, inner_ticks, main_parameters
-from fitter.report.figures.hubble import hubble_caption, hubble_data, hubble_figure, reference_distance
+from fitter.report.figures.groups import group_colour
+from fitter.report.figures.hubble import beyond_panel, hubble_caption, hubble_data, hubble_figure, reference_distance
 from fitter.report.figures.panels import contours, density, plot_range, thinned
 from fitter.report.figures.style import DOUBLE, LEVELS, SINGLE, new_figure, save_figure, styled, width_inches
 from fitter.report.prose import plain
@@ -282,7 +285,43 @@ def test_hubble_text_is_inside_the_canvas(build, scale, width):
         box, frame = legend.get_window_extent(), upper.get_window_extent()
         assert frame.x0 <= box.x0 and box.x1 <= frame.x1 and frame.y0 <= box.y0
     labels = [t.get_text() for legend in upper.findobj(matplotlib.legend.Legend) for t in legend.get_texts()]
-    assert {"near", "far", "middle", "best fit", "binned", "empty"} <= set(labels)
+    assert {"near", "far", "middle", "best fit", "binned", "empty", "posterior, 95.4 %"} <= set(labels)
+
+
+def test_residuals_beyond_the_panel_are_marked_and_counted(build):
+    far = {17: 3.0, 60: -2.0, 200: 5.0}
+    shift = np.zeros(300)
+    shift[list(far)] = list(far.values())
+    sample = build.sample()
+    fit = build.fit(replace(sample, data=sample.data + shift))
+    data = hubble_data(fit.log_posterior, fit.optimum)
+    lower = hubble_figure(fit.log_posterior, fit.optimum).axes[1]
+    top = lower.get_ylim()[1]
+    assert set(np.flatnonzero(beyond_panel(data))) == set(far)
+    up, down = ([line for line in lower.get_lines() if line.get_marker() == marker] for marker in "^v")
+    np.testing.assert_array_equal(up[0].get_xdata(), data.redshift[[17, 200]])
+    np.testing.assert_array_equal(down[0].get_xdata(), data.redshift[[60]])
+    assert 0.9 * top < up[0].get_ydata().min() and up[0].get_ydata().max() < top
+    assert "3 single supernovae lie beyond the lower panel" in hubble_caption(data)
+    few = build.fit(build.sample(n=40))
+    assert "beyond" not in hubble_caption(hubble_data(few.log_posterior, few.optimum))
+
+
+def test_surveys_have_the_colours_of_the_other_figures(build):
+    fit = build.fit(build.sample(group=np.repeat(["few", "most", "some"], [50, 150, 100])))
+    upper = hubble_figure(fit.log_posterior, fit.optimum).axes[0]
+    colours = {line.get_label(): line.get_color() for line in upper.get_lines()}
+    assert [colours[name] for name in ("most", "some", "few")] == [group_colour(i) for i in range(3)]
+
+
+def test_ticks_keep_off_the_seam_of_the_panels(build):
+    for shift in np.linspace(0, 2, 9):
+        sample = build.sample()
+        fit = build.fit(replace(sample, data=sample.data + shift))
+        for ax in hubble_figure(fit.log_posterior, fit.optimum).axes:
+            low, high = ax.get_ylim()
+            assert len(ax.get_yticks()) >= 3
+            assert all(low + 0.05 * (high - low) < t < high - 0.05 * (high - low) for t in ax.get_yticks())
 
 
 def test_relative_scale_is_aligned_and_says_so(build):

@@ -9,6 +9,7 @@ import numpy as np
 
 from fitter.errors import InputError
 from fitter.report.figures.binned import BinnedMeans, binned_means, redshift_edges
+from fitter.report.figures.groups import MOST_GROUPS, group_codes, group_colour, short_name
 from fitter.report.figures.panels import redshift_ticks
 from fitter.report.figures.style import COLOURS, GREY, in_style, new_figure, width_inches
 from fitter.report.information import fitted_noise, noise_scale
@@ -17,7 +18,6 @@ __all__ = ["REFERENCES", "HubbleData", "draw_hubble", "hubble_caption", "hubble_
 
 _FEW = 80  # up to so many points each is drawn with its error instead of bins
 _MOST_POINTS = 20_000
-_MOST_GROUPS = 6
 _BAND_DRAWS = 200
 _LOW = 1e-6  # a redshift at which every distance is cz/H0
 REFERENCES = {"no_dark_energy": r"$\Omega_m$ as fitted, no dark energy", "empty": "empty", "matter_only": r"$\Omega_m = 1$, matter only"}
@@ -179,6 +179,7 @@ def draw_hubble(data: HubbleData, *, width: str | float = "double", references: 
     _draw_bins(upper, lower, data)
     lines = _draw_references(upper, lower, data, references)
     _dress(figure, upper, lower, data)
+    _mark_beyond(lower, data)
     main = upper.legend(handles=[h for h in upper.get_legend_handles_labels()[0] if h not in lines], loc="lower right", markerscale=1.5)
     if lines:
         upper.legend(handles=lines, loc="upper left", handlelength=2.6)
@@ -202,21 +203,22 @@ def _draw_points(upper, lower, data: HubbleData) -> None:
 
 
 def _groups(data: HubbleData):
-    """Yield label, colour and members: by survey where there are a few of them."""
-    names = [] if data.group is None else sorted(set(data.group.tolist()))
-    if not 2 <= len(names) <= _MOST_GROUPS:
+    """Yield label, colour and members: by survey where there are a few of them, coloured as in the other figures."""
+    names, code = group_codes(data.group, len(data.redshift))
+    if not 2 <= len(names) <= MOST_GROUPS:
         yield "single supernovae", GREY, np.ones(len(data.redshift), dtype=bool)
         return
-    tints = ("#6f8fc4", "#e0a458", "#76bfb3", "#c385a5", "#b0a05c", "#9a9cc4")
-    for name, tint in zip(names, tints, strict=False):
-        yield name, tint, data.group == name
+    for i, name in enumerate(names):
+        yield short_name(name), group_colour(i), code == i
 
 
 def _draw_model(upper, lower, data: HubbleData) -> None:
     upper.plot(data.curve_redshift, data.curve, color="black", lw=0.9, zorder=3, label="best fit")
     lower.axhline(0.0, color="black", lw=0.9, zorder=3)
     if data.band.any():
-        lower.fill_between(data.curve_redshift, *data.band, color="black", alpha=0.16, lw=0, zorder=2)
+        shade = {"color": "black", "alpha": 0.16, "lw": 0, "zorder": 2}
+        lower.fill_between(data.curve_redshift, *data.band, **shade)
+        upper.fill_between([], [], [], label="posterior, 95.4 %", **shade)  # it would be thinner than the line here: the legend needs it
 
 
 def _draw_bins(upper, lower, data: HubbleData) -> None:
@@ -224,7 +226,7 @@ def _draw_bins(upper, lower, data: HubbleData) -> None:
         return
     bins = data.bins
     at_model = np.interp(np.log(bins.redshift), np.log(data.curve_redshift), data.curve)
-    style = {"fmt": "s", "ms": 3.4, "lw": 1.0, "color": COLOURS[3], "mec": "white", "mew": 0.4, "zorder": 5}
+    style = {"fmt": "s", "ms": 3.4, "lw": 1.0, "color": "black", "mec": "white", "mew": 0.4, "zorder": 5}
     upper.errorbar(bins.redshift, at_model + bins.mean, bins.error, label="binned", **style)
     lower.errorbar(bins.redshift, bins.mean, bins.error, **style)
 
@@ -257,18 +259,44 @@ def _reach(data: HubbleData) -> float:
     return max(4.0 * spread, of_bins, 1e-3)
 
 
-def _dress(figure, upper, lower, data: HubbleData) -> None:
+def beyond_panel(data: HubbleData) -> np.ndarray:
+    """Return which of the single points lie outside the residual panel, (n,) bool."""
+    return np.abs(data.residual) > _reach(data)
+
+
+def _mark_beyond(lower, data: HubbleData) -> None:
+    """Mark residuals outside the panel by triangles at its edge."""
+    beyond, edge = beyond_panel(data), 0.965 * _reach(data)
+    for _, colour, members in _groups(data):
+        for side, marker in ((1, "^"), (-1, "v")):
+            z = data.redshift[members & beyond & (np.sign(data.residual) == side)]
+            if z.size:
+                lower.plot(z, np.full(z.size, side * edge), ls="", marker=marker, ms=3.0, mew=0, color=colour, zorder=3)
+
+
+def _off_the_seam(low: float, high: float, wanted: int) -> list[float]:
+    """Return three round values or more: one at the seam of the panels would meet the other's, or be hidden by the frame."""
     from matplotlib.ticker import MaxNLocator
 
+    margin = 0.06 * (high - low)
+    ticks: list[float] = []
+    for most in range(wanted, 12):
+        values = MaxNLocator(most, steps=[1, 2, 5, 10]).tick_values(low, high)
+        ticks = [float(t) for t in values if low + margin < t < high - margin]
+        if len(ticks) >= 3:
+            break
+    return ticks
+
+
+def _dress(figure, upper, lower, data: HubbleData) -> None:
     upper.set_xscale("log")
     lower.set_xlim(data.curve_redshift[0], data.curve_redshift[-1])
     reach = _reach(data)
     lower.set_ylim(-reach, reach)
     margin = 0.04 * float(np.ptp(data.curve))
     upper.set_ylim(min(data.curve.min(), data.shown.min()) - margin, max(data.curve.max(), data.shown.max()) + margin)
-    upper.yaxis.set_major_locator(
-        MaxNLocator("auto", steps=[1, 2, 5, 10], prune="lower")
-    )  # a number at the seam would meet the lower panel's
+    for ax, wanted in ((upper, 7), (lower, 4)):
+        ax.set_yticks(_off_the_seam(*ax.get_ylim(), wanted))
     upper.set_ylabel(data.label)
     lower.set_ylabel("Residual  [mag]")
     lower.set_xlabel("Redshift  $z$")
@@ -277,6 +305,15 @@ def _dress(figure, upper, lower, data: HubbleData) -> None:
     width, height = figure.get_size_inches()
     figure.subplots_adjust(left=0.56 / width, right=1 - 0.1 / width, bottom=0.42 / height, top=1 - 0.1 / height)
     figure.align_ylabels([upper, lower])
+
+
+def _beyond_text(data: HubbleData) -> str:
+    n = int(beyond_panel(data).sum())
+    if n == 0:
+        return ""
+    which = "single supernova lies" if n == 1 else "single supernovae lie"
+    drawn = " of those drawn" if data.n > len(data.redshift) else ""
+    return f"{n} {which}{drawn} beyond the lower panel ({'a triangle at its edge' if n == 1 else 'triangles at its edges'}). "
 
 
 def hubble_caption(data: HubbleData) -> str:
@@ -290,6 +327,7 @@ def hubble_caption(data: HubbleData) -> str:
             "least squares with the whole covariance; their errors, which the bins partly share, come from the diagonal "
             "of the covariance of the means. "
         )
+    text += _beyond_text(data)
     if data.band.any():
         text += "Shaded: the central 95.4 % of the posterior's predictions. "
     if "constant" in data.label or "Standardised" in data.label:

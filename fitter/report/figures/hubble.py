@@ -274,10 +274,11 @@ def _mark_beyond(lower, data: HubbleData) -> None:
                 lower.plot(z, np.full(z.size, side * edge), ls="", marker=marker, ms=3.0, mew=0, color=colour, zorder=3)
 
 
-def _off_the_seam(low: float, high: float, wanted: int) -> list[float]:
+def _off_the_seam(limits: tuple[float, float], wanted: int) -> list[float]:
     """Return three round values or more: one at the seam of the panels would meet the other's, or be hidden by the frame."""
     from matplotlib.ticker import MaxNLocator
 
+    low, high = limits
     margin = 0.06 * (high - low)
     ticks: list[float] = []
     for most in range(wanted, 12):
@@ -296,7 +297,7 @@ def _dress(figure, upper, lower, data: HubbleData) -> None:
     margin = 0.04 * float(np.ptp(data.curve))
     upper.set_ylim(min(data.curve.min(), data.shown.min()) - margin, max(data.curve.max(), data.shown.max()) + margin)
     for ax, wanted in ((upper, 7), (lower, 4)):
-        ax.set_yticks(_off_the_seam(*ax.get_ylim(), wanted))
+        ax.set_yticks(_off_the_seam(ax.get_ylim(), wanted))
     upper.set_ylabel(data.label)
     lower.set_ylabel("Residual  [mag]")
     lower.set_xlabel("Redshift  $z$")

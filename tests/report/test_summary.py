@@ -128,6 +128,12 @@ def test_density_at_an_edge(distance, expected):
     assert high == 0.0
 
 
+def test_density_at_the_edges_of_a_flat_posterior_and_of_open_priors():
+    draws = np.random.default_rng(6).uniform(size=400_000)
+    assert min(edge_density(draws, 0.0, 1.0)) > 0.9
+    assert edge_density(draws, -np.inf, np.inf) == (0.0, 0.0)
+
+
 def test_json_safe_has_no_nan():
     assert json_safe({"a": np.array([1.0, np.nan]), "b": np.float32(2), 3: (np.inf, {"c"})}) == {
         "a": [1.0, None],

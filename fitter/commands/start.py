@@ -26,13 +26,15 @@ def start(
         list[Path] | None, typer.Option(metavar="FILE", help="A covariance or an inverse covariance; more than once if need be.")
     ] = None,
     output: Annotated[
-        Path | None, typer.Option("--output", "-o", help="The config to write.", show_default="beside the table, with its name")
+        Path | None,
+        typer.Option("--output", "-o", help="The config to write, or a folder for it.", show_default="here, with the table's name"),
     ] = None,
 ) -> None:
     """Look at a table and write a commented config for it; nothing is overwritten."""
     from fitter.config.start import start as draft
 
-    target = output or table.with_name(f"{table.name.split('.')[0] or 'config'}.yaml")
+    # Not beside the table: a folder of shared data may be nobody's to write to.
+    target = _target(output or Path(), table)
     _refuse_taken(target)
     made = draft(table, target.parent, covariance or ())
     _write_new(target, made.text)
@@ -41,6 +43,11 @@ def start(
             print("\n".join([heading, *(f"  {line}" for line in lines)]))
     sys.stdout.flush()
     _say_checked(target)
+
+
+def _target(output: Path, table: Path) -> Path:
+    """The file to write: what is said, or in the folder that is said, called like the table."""
+    return output / f"{table.name.split('.')[0] or 'config'}.yaml" if output.is_dir() else output
 
 
 def _say_checked(target: Path) -> None:
@@ -60,6 +67,8 @@ def _refuse_taken(target: Path) -> None:
         raise InputError("there is such a file already, and nothing is overwritten", file=target, cure="Give another name with -o")
     if not target.parent.is_dir():
         raise InputError("there is no such folder", file=target.parent, cure="Make it first")
+    if not os.access(target.parent, os.W_OK):
+        raise InputError("there is no permission to write here", file=target.parent, cure="Name a file or folder of yours with -o")
 
 
 def _write_new(target: Path, text: str) -> None:

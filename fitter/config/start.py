@@ -115,7 +115,8 @@ class _Draft:
 
     def relative(self, path) -> str:
         """A path as the config writes it."""
-        return _quoted(os.path.relpath(path, self.folder).replace(os.sep, "/"))
+        # A link to the folder leads elsewhere with `..` than its name says.
+        return _quoted(os.path.relpath(os.path.abspath(path), os.path.realpath(self.folder)).replace(os.sep, "/"))
 
     def tags(self) -> list[str]:
         options = self.found.options

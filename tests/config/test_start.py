@@ -129,7 +129,25 @@ def test_matrix_of_another_size(tmp_path):
         start(write(tmp_path, ["z", "mu", "e"], Z, MU, np.full(N, 0.1)), tmp_path, [tmp_path / "c.npy"])
 
 
-def test_command_writes_beside_the_table_and_overwrites_nothing(tmp_path):
+def test_command_writes_here_and_not_into_the_folder_of_the_data(tmp_path, monkeypatch):
+    data, here, there = tmp_path / "shared data", tmp_path / "mine", tmp_path / "there"
+    for folder in (data, here, there):
+        folder.mkdir()
+    table = write(data, ["z", "mu", "err"], Z, MU, np.full(N, 0.1))
+    np.save(data / "c.npy", 1e-4 * np.eye(N))
+    monkeypatch.chdir(here)
+    done = run(table, "--covariance", data / "c.npy")
+    assert done.exit_code == 0 and "Next: mufitter check t.yaml" in done.stderr
+    assert [p.name for p in here.iterdir()] == ["t.yaml"] and sorted(p.name for p in data.iterdir()) == ["c.npy", "t.csv"]
+    text = (here / "t.yaml").read_text()
+    assert "table: ../shared data/t.csv" in text and "covariance: ../shared data/c.npy" in text and check(here / "t.yaml").ok
+    # Elsewhere: a folder, or a file.
+    assert run(table, "-o", there).exit_code == 0 and check(there / "t.yaml").ok
+    assert run(table, "-o", there / "named.yaml").exit_code == 0 and check(there / "named.yaml").ok
+
+
+def test_command_overwrites_nothing(tmp_path, monkeypatch):
+    monkeypatch.chdir(tmp_path)
     table = write(tmp_path, ["z", "mu", "err"], Z, MU, np.full(N, 0.1))
     first = run(table)
     assert first.exit_code == 0 and "Guessed:" in first.stdout and check(tmp_path / "t.yaml").ok

@@ -15,13 +15,13 @@ from typing import TYPE_CHECKING, Any, Literal
 
 import numpy as np
 
+from fitter.checking import Check, check, likelihood_of
 from fitter.config.figures import figure_problems
-from fitter.config.load import config_from_mapping, files_at_a_glance, load_config, placing, raise_all, valid, validate
-from fitter.config.parameters import FLAT
+from fitter.config.load import config_from_mapping, load_config, placing, raise_all, valid, validate
 from fitter.config.settings import Config
 from fitter.config.write import as_run, config_hash, config_text, differences, input_problems
 from fitter.config.yaml_file import read_yaml
-from fitter.errors import InputError, InputErrors, MufitterError
+from fitter.errors import InputError, MufitterError
 from fitter.inference.seeds import child_seed
 from fitter.parameters import declared_elsewhere
 from fitter.report.blinding import (
@@ -181,9 +181,8 @@ class Fit:
             "posterior": {name: by_walker(chains.draws(name)) for name in chains.kinds},
             "sample_stats": {"lp": by_walker(chains.log_posterior)},
         }
-        if int(arviz.__version__.split(".")[0]) < 1:
-            return arviz.from_dict(**groups)
-        return arviz.from_dict(groups)
+        from_dict: Any = arviz.from_dict  # its first argument is of another type since version 1
+        return from_dict(**groups) if int(arviz.__version__.split(".")[0]) < 1 else from_dict(groups)
 
     def _repr_html_(self) -> str:
         from fitter.report.facts import relabelled
@@ -296,7 +295,7 @@ class _Job:
             if sample is None:
                 sample = Sample.from_config(config.sample, config.folder)
                 raise_all(input_problems(config, sample))
-            log_posterior = _likelihood(config, sample)
+            log_posterior = likelihood_of(config, sample)
             config.sampling.check_dimension(len(log_posterior.names))
             raise_all(figure_problems(config, log_posterior))
             hidden_names(config.blind, log_posterior)
@@ -482,13 +481,6 @@ class _Job:
             _log.warning(text)
 
 
-def _likelihood(config: Config, sample: Sample) -> LogPosterior:
-    from fitter.likelihood.posterior import LogPosterior
-
-    given = {k: v for k, v in config.complete_parameters(sample).items() if v != FLAT}
-    return LogPosterior.build(sample, config.cosmology, given, radiation=config.radiation)
-
-
 def _draw(result: Fit, folder: Path) -> dict[str, Picture]:
     """Keep what the figures of a fit show, and draw those that were asked for."""
     from fitter.report.facts import relabelled
@@ -545,90 +537,6 @@ class _RunLog(AbstractContextManager):
         _log.setLevel(self._level)
         _log.propagate = self._propagate
         self._handler.close()
-
-
-@dataclass(frozen=True)
-class Check:
-    """What a config would fit, and everything that is wrong with it."""
-
-    problems: tuple[InputError, ...]
-    config: Config | None = None
-    sample: Sample | None = None
-    log_posterior: LogPosterior | None = None
-
-    @property
-    def ok(self) -> bool:
-        """Whether the fit can be made."""
-        return not self.problems
-
-    def __str__(self) -> str:
-        from fitter.report.check_text import check_text
-
-        return check_text(self.config, self.sample, self.log_posterior)
-
-
-def check(path: str | Path, *, allow_code: bool = False) -> Check:
-    """Read everything that a config names and fit nothing.
-
-    Parameters
-    ----------
-    path : path-like
-        The config file.
-    allow_code : bool
-        Whether the file of a model of one's own may be run.
-
-    Returns
-    -------
-    Check
-        Problems of the config and of the sample's files together.
-    """
-    try:
-        document = read_yaml(path)
-    except InputErrors as error:
-        return Check(error.errors)
-    except InputError as error:
-        return Check((error,))
-    folder = Path(path).parent
-    config, sample_settings, problems = validate(document, folder, allow_code=allow_code)
-    sample = None
-    if sample_settings is None:
-        problems += files_at_a_glance(document, folder)
-    else:
-        try:
-            with placing(document):
-                sample = Sample.from_config(sample_settings, folder)
-        except InputError as error:
-            problems += getattr(error, "errors", [error])
-    problems += _variant_problems(config)
-    if config is None or sample is None or problems:
-        return Check(tuple(problems), config, sample)
-    return _check_likelihood(config, sample)
-
-
-def _variant_problems(config: Config | None) -> list[InputError]:
-    """Return what is wrong with the variants of a config, if it has any."""
-    if config is None or not config.variants:
-        return []
-    from fitter.config.expand import expand
-
-    try:
-        expand(config)
-    except InputError as error:
-        return list(getattr(error, "errors", [error]))
-    return []
-
-
-def _check_likelihood(config: Config, sample: Sample) -> Check:
-    problems = input_problems(config, sample)
-    try:
-        with placing(config.document):
-            log_posterior = _likelihood(config, sample)
-            config.sampling.check_dimension(len(log_posterior.names))
-            problems += figure_problems(config, log_posterior)
-            hidden_names(config.blind, log_posterior)
-    except InputError as error:
-        return Check((*problems, *getattr(error, "errors", [error])), config, sample)
-    return Check(tuple(problems), config, sample, log_posterior)
 
 
 def load_run(path: str | Path, *, allow_code: bool = False) -> tuple[Run, Config]:

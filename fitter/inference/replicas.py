@@ -264,16 +264,14 @@ def _call_in_worker(work):
 
 def _advance(log_posterior, task, board) -> Chunk:
     """Run one replica until its steps are done, its time is over, or a stop is asked for."""
-    from emcee import EnsembleSampler
     from emcee.state import State
     from threadpoolctl import threadpool_limits
 
+    from fitter.inference.ensemble import Ensemble
     from fitter.inference.moves import ensemble_moves
 
     before = dict(log_posterior.counts)
-    sampler = EnsembleSampler(*task.positions.shape, log_posterior, vectorize=True, moves=ensemble_moves(task.move, task.pilot))
-    # emcee wraps the function to print a traceback of its own at every exception.
-    sampler.log_prob_fn = log_posterior
+    sampler = Ensemble(*task.positions.shape, log_posterior, vectorize=True, moves=ensemble_moves(task.move, task.pilot))
     state = State(task.positions, log_prob=task.log_prob, random_state=task.random_state, copy=True)
     end = time.monotonic() + _SLICE_SECONDS
     with threadpool_limits(1):

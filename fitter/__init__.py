@@ -5,7 +5,8 @@ from __future__ import annotations
 from typing import TYPE_CHECKING
 
 if TYPE_CHECKING:
-    from fitter.api import Check, Fit, check, fit
+    from fitter.api import Fit, fit
+    from fitter.checking import Check, check
     from fitter.comparing import Comparison, compare
     from fitter.config.load import load_config
     from fitter.config.settings import Config
@@ -32,7 +33,7 @@ __all__ = [
 
 # Loaded on first use (PEP 562), so that `mufitter --help` does not wait for numpy and friends.
 _HOMES = {
-    "Check": "fitter.api",
+    "Check": "fitter.checking",
     "Comparison": "fitter.comparing",
     "Config": "fitter.config.settings",
     "Fit": "fitter.api",
@@ -40,7 +41,7 @@ _HOMES = {
     "InputErrors": "fitter.errors",
     "MufitterError": "fitter.errors",
     "Sample": "fitter.sample.sample",
-    "check": "fitter.api",
+    "check": "fitter.checking",
     "compare": "fitter.comparing",
     "fit": "fitter.api",
     "load_config": "fitter.config.load",

@@ -304,15 +304,13 @@ def _print_study(study, as_json: bool, quiet: bool) -> None:
 @_reported
 def _check(config: ConfigFile, allow_code: AllowCode = False) -> None:
     """Read everything, say what will be fitted and all that is wrong; fit nothing."""
-    from fitter.api import check
+    from fitter.checking import check
 
     found = check(config, allow_code=allow_code)
-    text = str(found)
-    if text:
-        print(text, flush=True)
     if not found.ok:
         raise InputErrors(found.problems)
-    _say("Nothing is wrong.")
+    print(found, flush=True)
+    _say("Nothing is wrong for a rehearsal; a fit needs a column of moduli or magnitudes." if found.planned else "Nothing is wrong.")
 
 
 @app.command("schema")

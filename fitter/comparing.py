@@ -13,9 +13,10 @@ from typing import Any, Literal
 
 import numpy as np
 
-from fitter.api import _Job, _likelihood, _settings, load_run
+from fitter.api import _Job, _settings, load_run
+from fitter.checking import likelihood_of, samples_of
 from fitter.config.expand import Variant, expand
-from fitter.config.load import placing, raise_all
+from fitter.config.load import raise_all
 from fitter.config.settings import Config
 from fitter.config.write import input_problems
 from fitter.errors import InputError
@@ -174,16 +175,16 @@ def _compare_variants(what, options: dict, run_folder, replace: bool, allow_code
     if run_folder is False:
         raise InputError("the fits of a comparison need a folder", cure="Give run_folder a path")
     folder = _target(run_folder or config.default_run_folder(), replace)
-    samples = _samples(variants)
+    samples = samples_of(variants)
     for variant, sample in zip(variants, samples, strict=True):
         raise_all(input_problems(variant.config, sample))
-        _likelihood(variant.config, sample)  # what is wrong with one of them is told before any is fitted
+        likelihood_of(variant.config, sample)  # what is wrong with one of them is told before any is fitted
     given = config.compare.model_dump()
     folder.open()
     try:
         runs = _fit_all(variants, samples, folder.path / "variants", folder.target / "variants", tell)
         entries = [
-            _entry(v.name, run, lambda v=v, sample=sample: _likelihood(v.config, sample))
+            _entry(v.name, run, lambda v=v, sample=sample: likelihood_of(v.config, sample))
             for v, run, sample in zip(variants, runs, samples, strict=True)
         ]
         report = _report(entries, given | options, config.sampling.seed)
@@ -191,29 +192,6 @@ def _compare_variants(what, options: dict, run_folder, replace: bool, allow_code
         return Comparison(report, tuple(entries), folder.finish())
     finally:
         folder.leave()
-
-
-def _samples(variants: list[Variant]) -> list[Sample]:
-    """The sample of each variant; what several share is read once."""
-    read: dict[str, Sample] = {}
-    found: dict[tuple, Sample] = {}
-    for variant in variants:
-        key = variant.data_key
-        if key not in read:
-            with placing(variant.config.document):
-                read[key] = Sample.from_config(variant.complete_sample, variant.config.folder)
-        if (key, variant.without) not in found:
-            found[key, variant.without] = _reduced(read[key], variant)
-    return [found[v.data_key, v.without] for v in variants]
-
-
-def _reduced(sample: Sample, variant: Variant) -> Sample:
-    """The sample without some of its uncertainty terms, and without the record of files that only these read."""
-    if not variant.without:
-        return sample
-    settings: Any = variant.config.sample
-    files = {settings.table, *(f for term in settings.uncertainty for f in term.files())}
-    return replace(sample.without(variant.without), sources={k: v for k, v in sample.sources.items() if k in files})
 
 
 _work: tuple = ()
@@ -310,7 +288,7 @@ def _rebuilt(run, path, allow_code: bool):
         sample = Sample.from_config(config.sample, config.folder) if config.sample is not None else None
         if sample is None or input_problems(config, sample):
             return None
-        return _likelihood(config, sample) if sample.sha256 == run.summary["sample"]["sha256"] else None
+        return likelihood_of(config, sample) if sample.sha256 == run.summary["sample"]["sha256"] else None
     except InputError as error:
         _log.info("%s: cannot be evaluated anew: %s", path, error)
         return None

@@ -12,9 +12,10 @@ import numpy as np
 from fitter.api import _settings
 from fitter.config.load import placing, raise_all, validate
 from fitter.config.parameters import FLAT
+from fitter.config.planned import with_stand_in
 from fitter.config.settings import Config
 from fitter.config.write import as_run, config_hash, config_text, input_problems
-from fitter.config.yaml_file import Document, read_yaml
+from fitter.config.yaml_file import read_yaml
 from fitter.errors import InputError
 from fitter.inference.seeds import child_seed
 from fitter.report.run_folder import RunFolder, write_atomic, writing
@@ -287,18 +288,11 @@ class StudyJob:
 
 
 def _planned_config(path: Path, allow_code: bool) -> Config | None:
-    """Return the config of a survey that does not exist yet, or None where there are data.
-
-    The redshift stands in for the moduli: any number will do, since every mock brings its own.
-    """
-    document = read_yaml(path)
-    sample = document.data.get("sample")
-    columns = sample.get("columns") if isinstance(sample, dict) else None
-    if sample is None or not isinstance(columns, dict) or "redshift" not in columns or {"distance_modulus", "magnitude"} & set(columns):
+    """Return the config of a survey that does not exist yet, or None where there are data."""
+    document = with_stand_in(read_yaml(path))
+    if document is None:
         return None
-    role = "magnitude" if "calibrator_modulus" in columns else "distance_modulus"
-    data = {**document.data, "sample": {**sample, "columns": {**columns, role: columns["redshift"]}}}
-    config, _, problems = validate(Document(data, document.lines, document.path), path.parent, allow_code=allow_code)
+    config, _, problems = validate(document, path.parent, allow_code=allow_code)
     raise_all(problems)
     return config
 

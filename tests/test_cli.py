@@ -165,9 +165,9 @@ def test_an_unknown_option_ends_with_2_in_a_real_process(scratch):
 
 def test_our_own_faults_end_with_3_and_a_traceback_in_a_file(scratch):
     code = (
-        "import sys, fitter.api\n"
+        "import sys, fitter.checking\n"
         "def broken(path, **_): raise ZeroDivisionError('the inner works')\n"
-        "fitter.api.check = broken\n"
+        "fitter.checking.check = broken\n"
         "from fitter.cli import main\n"
         "sys.argv = ['mufitter', 'check', 'config.yaml']\n"
         "main()\n"
@@ -185,7 +185,7 @@ def test_an_interruption_ends_with_130(scratch, monkeypatch):
     def interrupted(_, **__):
         raise KeyboardInterrupt
 
-    monkeypatch.setattr("fitter.api.check", interrupted)
+    monkeypatch.setattr("fitter.checking.check", interrupted)
     found = CliRunner().invoke(cli.app, ["check", str(scratch / "config.yaml")])
     assert found.exit_code == 130
     assert found.stderr == "mufitter: interrupted\n"
@@ -239,6 +239,7 @@ def test_the_schema_describes_the_config():
         "figures",
         "labels",
         "blind",
+        "intervals",
     }
     assert "flat_w0wa" in schema["properties"]["model"]["anyOf"][0]["enum"]
     assert "uniform" in json.dumps(schema["properties"]["parameters"]["properties"]["H0"])

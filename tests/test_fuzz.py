@@ -12,7 +12,7 @@ import yaml
 from hypothesis import HealthCheck, Phase, example, given, settings
 from hypothesis import strategies as st
 
-from fitter.api import check
+from fitter.checking import check
 from fitter.config.start import start
 from fitter.errors import InputError
 

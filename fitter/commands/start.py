@@ -51,7 +51,7 @@ def _target(output: Path, table: Path) -> Path:
 
 
 def _say_checked(target: Path) -> None:
-    from fitter.api import check
+    from fitter.checking import check
 
     found = check(target)
     print(f"Written to {target}", file=sys.stderr)

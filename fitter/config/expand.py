@@ -20,7 +20,7 @@ from fitter.sample.capsule import CapsuleSettings
 from fitter.sample.settings import SampleSettings
 from fitter.sample.uncertainty.base import is_free
 
-__all__ = ["Variant", "expand"]
+__all__ = ["Variant", "expand", "expand_as_far_as_possible"]
 
 _VARIANT_SEED = 5  # child of the base's seed; the variants' are its children
 _MOVED = {"keep": ("sample", "keep"), "uncertainty": ("sample", "uncertainty")}
@@ -68,7 +68,15 @@ def expand(config: Config) -> list[Variant]:
     InputError, InputErrors
         No variants, a name given twice, an unknown reference, or anything wrong with one of them, with its row.
     """
-    problems, variants = _name_problems(config), []
+    variants, problems = expand_as_far_as_possible(config)
+    raise_all(problems)
+    return variants
+
+
+def expand_as_far_as_possible(config: Config) -> tuple[list[Variant], list[InputError]]:
+    """Return the variants that are right, and what is wrong with the others or with the list."""
+    problems: list[InputError] = _name_problems(config)
+    variants: list[Variant] = []
     used: set[str] = set()
     for i in range(len(config.variants)):
         document, known = _document(config, i)
@@ -87,8 +95,7 @@ def expand(config: Config) -> list[Variant]:
     cure = "Remove it, or add a variant whose model has it"
     problems += [config.document.error("no variant has this parameter", ("parameters", n), cure=cure) for n in unused]
     # What is wrong with the base is wrong with each variant: once is enough.
-    raise_all(list({str(p): p for p in problems}.values()))
-    return variants
+    return variants, list({str(p): p for p in problems}.values())
 
 
 def _name_problems(config: Config) -> list[InputError]:

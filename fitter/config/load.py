@@ -26,6 +26,7 @@ __all__ = [
     "load_config",
     "described",
     "files_at_a_glance",
+    "mended_config",
     "placing",
     "raise_all",
     "valid",
@@ -125,7 +126,7 @@ def validate(
     reading = read_through(document)
     config, problems = reading.config, reading.problems
     if config is not None:
-        config._document, config._folder, config._cosmology, config._allow_code = document, folder, model, allow_code
+        _told(config, document, folder, model, allow_code)
     if arrays is None and document.data.get("sample") is None:
         cure = "It says what was observed: `sample: {table: …, columns: {…}, uncertainty: […]}`"
         problems.insert(0, document.error("the key `sample` is missing", cure=cure))
@@ -139,6 +140,21 @@ def validate(
 def files_at_a_glance(document: Document, folder: Path) -> list[InputError]:
     """Return which files and columns are missing, for a config whose ``sample`` is not right as a whole."""
     return glance(read_through(document).document.data.get("sample"), folder)
+
+
+def mended_config(document: Document, folder: Path, *, allow_code: bool = False) -> Config | None:
+    """Return a config with misspelt keys read as what they most likely stand for, to look for more problems with; None if that fails."""
+    reading = read_through(document)
+    if reading.mended is None or not reading.is_whole("sample"):
+        return None
+    model, _ = chosen_model(reading.document, folder, allow_code)
+    return _told(reading.mended, reading.document, folder, model, allow_code)
+
+
+def _told(config: Config, document: Document, folder: Path, model: Model | None, allow_code: bool) -> Config:
+    """A config that knows where it came from."""
+    config._document, config._folder, config._cosmology, config._allow_code = document, folder, model, allow_code
+    return config
 
 
 def _sample_settings(reading: Reading) -> SampleSettings | CapsuleSettings | None:

@@ -31,6 +31,8 @@ class Reading:
         The settings, mended where that was needed.
     config : Config or None
         The validated settings; None where anything was wrong.
+    mended : Config or None
+        The settings of `document`, where they could be made right.
     problems : list of InputError
     left_out : set of tuple
         Places whose content is not in `document` any more, or is in doubt.
@@ -38,6 +40,7 @@ class Reading:
 
     document: Document
     config: Config | None = None
+    mended: Config | None = None
     problems: list[InputError] = field(default_factory=list)
     left_out: set[tuple[Key, ...]] = field(default_factory=set)
 
@@ -64,7 +67,7 @@ def read_through(document: Document) -> Reading:
         except ValidationError as wrong:
             error = wrong
         else:
-            reading.config = config if turn == 0 else None
+            reading.config, reading.mended = config if turn == 0 else None, config
             break
         found = problems_of(error, Config, reading.document)
         said = {str(p) for p in reading.problems}

@@ -11,7 +11,7 @@ __all__ = ["check_text"]
 _SHOWN = 5  # examples of a kind
 
 
-def check_text(config, sample, log_posterior) -> str:
+def check_text(config, sample, log_posterior, *, planned: bool = False) -> str:
     """Return what is known of a fit as readable text.
 
     Parameters
@@ -20,12 +20,14 @@ def check_text(config, sample, log_posterior) -> str:
     sample : Sample or None
     log_posterior : LogPosterior or None
         Each None where the input does not allow to make it.
+    planned : bool
+        Whether something only stands in for the data, which are still to be observed.
     """
     lines = []
     if config is not None and config.title:
         lines.append(config.title)
     if sample is not None:
-        lines += _data(sample) + (_terms(sample) + _covariance(sample) + _oddities(sample) if sample.has_rows else _capsule(sample))
+        lines += _data(sample, planned) + _of_rows(sample, planned) if sample.has_rows else _data(sample) + _capsule(sample)
     if config is not None:
         lines.append(f"Model: {config.cosmology.name}, {'with' if config.radiation else 'no'} radiation")
     if config is not None and config.variants:
@@ -33,7 +35,7 @@ def check_text(config, sample, log_posterior) -> str:
             f"Variants, compared with {config.compare.reference or config.variants[0].name}: {', '.join(v.name for v in config.variants)}"
         )
     if log_posterior is not None:
-        lines += _parameters(log_posterior) + _cost(config, log_posterior)
+        lines += _parameters(log_posterior) + ([] if planned else _cost(config, log_posterior))
     if sample is not None and sample.warnings:
         lines += ["Warnings:", *(f"  ! {text}" for text in sample.warnings)]
     return "\n".join(lines)
@@ -45,9 +47,14 @@ def _capsule(sample) -> list[str]:
     return [f"A capsule of order {c.order}: the likelihood of {c.n:,} supernovae{title}, no single rows"]
 
 
-def _data(sample) -> list[str]:
-    kind = sample.data_kind.replace("_", " ")
-    lines = [f"Data: {sample.n:,} rows, {kind}, distance scale {sample.distance_scale}, {_range(sample.redshift)}"]
+def _of_rows(sample, planned: bool) -> list[str]:
+    return _terms(sample) + _covariance(sample) + ([] if planned else _oddities(sample))
+
+
+def _data(sample, planned: bool = False) -> list[str]:
+    kind = "no moduli or magnitudes" if planned else sample.data_kind.replace("_", " ")
+    lines = ["A survey to come: `mufitter rehearse` draws its data and fits them; there is nothing to fit yet."] if planned else []
+    lines.append(f"Data: {sample.n:,} rows, {kind}, distance scale {sample.distance_scale}, {_range(sample.redshift)}")
     if sample.n_calibrators:
         lines.append(f"  calibrators: {sample.n_calibrators}")
     if sample.group is not None and sample.has_rows:

@@ -8,7 +8,7 @@ import numpy as np
 
 from fitter.sample.sample import Sample
 
-__all__ = ["advice", "scatter_about_curve", "smooth_residuals"]
+__all__ = ["about_data", "advice", "scatter_about_curve", "smooth_residuals"]
 
 _ODD = 4.0  # times larger or smaller than the scatter
 _FEWEST_ROWS = 15  # below which a scatter about a curve says little
@@ -35,6 +35,11 @@ def advice(sample: Sample, columns: dict | None = None, n_calibrators_inside: in
         _size_of_errors(sample),
     ]
     return [text for text in found if text]
+
+
+def about_data(sample: Sample) -> list[str]:
+    """Return those of the warnings that the data themselves give rise to; idle where something stands in for them."""
+    return [text for text in (_data_range(sample), _systematics_only(sample), _size_of_errors(sample)) if text]
 
 
 def _data_range(sample: Sample):

@@ -48,7 +48,8 @@ class Columns(_Section):
     @model_validator(mode="after")
     def _one_kind_of_data(self):
         if (self.distance_modulus is None) == (self.magnitude is None):
-            raise ValueError("map exactly one of `distance_modulus` and `magnitude`")
+            what = "both" if self.magnitude is not None else "neither; a survey without data is for `mufitter rehearse`"
+            raise ValueError(f"map exactly one of `distance_modulus` and `magnitude`, not {what}")
         return self
 
 

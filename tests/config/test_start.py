@@ -7,7 +7,7 @@ import numpy as np
 import pytest
 from typer.testing import CliRunner
 
-from fitter.api import check
+from fitter.checking import check
 from fitter.cli import app
 from fitter.config.start import start
 from fitter.errors import InputError

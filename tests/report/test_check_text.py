@@ -9,7 +9,7 @@ import numpy as np
 import pytest
 
 from fitter import Sample
-from fitter.api import check
+from fitter.checking import check
 from fitter.sample.examination import budget, condition_number, correlations, outliers, repeated_rows
 
 ROOT = Path(__file__).resolve().parents[2]

@@ -1,6 +1,8 @@
 """Figures: axes, labels, the data drawn, levels, nothing clipped, files with embedded fonts."""
 
+import importlib.util
 from dataclasses import replace
+from pathlib import Path
 
 import matplotlib
 import numpy as np
@@ -16,6 +18,10 @@ from fitter.report.figures.hubble import beyond_panel, hubble_caption, hubble_da
 from fitter.report.figures.panels import contours, density, plot_range, thinned
 from fitter.report.figures.style import DOUBLE, LEVELS, SINGLE, new_figure, save_figure, styled, width_inches
 from fitter.report.prose import plain
+
+_spec = importlib.util.spec_from_file_location("looks", Path(__file__).with_name("looks.py"))
+looks = importlib.util.module_from_spec(_spec)
+_spec.loader.exec_module(looks)
 
 
 def assert_inside_canvas(figure):
@@ -136,6 +142,40 @@ def test_corner_has_a_lower_triangle_with_symbols_and_titles(fit):
 @pytest.mark.parametrize("width", ["single", "double"])
 def test_corner_text_is_inside_the_canvas(fit, names, width):
     assert_inside_canvas(corner_figure(fit.posterior, names, width=width))
+
+
+def test_one_parameter_fills_the_figure_and_has_no_contours_to_speak_of(fit):
+    figure = corner_figure(fit.posterior, ["omega_m"])
+    (ax,) = figure.axes
+    assert figure.get_figwidth() == pytest.approx(SINGLE)
+    box = ax.get_position()
+    assert box.x0 == pytest.approx(1 - box.x1) and box.width > 0.9 and box.height > 0.7
+    text = plain(corner_caption(fit.posterior, ["omega_m"]))
+    assert text.startswith("Marginal posterior of Ωm.") and "contours" not in text and "each" not in text
+
+
+@pytest.mark.parametrize("width", ["single", "double"])
+@pytest.mark.parametrize("names", [["omega_m"], ["omega_m", "H0"], None, ["omega_m", "omega_lambda", "H0", "omega_k", "lambda_si"]])
+def test_no_text_of_a_corner_plot_is_too_small_or_far_from_its_numbers(fit, names, width):
+    figure = corner_figure(fit.posterior, names, width=width)
+    texts = looks.drawn_texts(figure)
+    assert min(text.get_fontsize() for text, _ in texts) >= 8
+    assert sum("=" in text.get_text() for text, _ in texts) == len(names or main_parameters(fit.posterior))
+    looks.assert_nothing_overlaps(figure)
+    for ax in figure.axes:
+        numbers = [t.label1.get_window_extent() for t in ax.xaxis.get_major_ticks() if t.label1.get_visible() and t.label1.get_text()]
+        if ax.get_xlabel():
+            gap = min(box.y0 for box in numbers) - ax.xaxis.label.get_window_extent().y1
+            assert 0 <= gap / figure.dpi < 0.15  # inches
+
+
+def test_long_names_of_runs_stay_off_the_panels(fit):
+    runs = {"an exceedingly long description of the first of two fits": fit.posterior, "another one": fit.posterior}
+    for names in (["omega_m"], ["omega_m", "H0"], None):
+        figure = corner_figure(runs, names)
+        assert_inside_canvas(figure)
+        (legend,) = figure.legends
+        assert not any(legend.get_window_extent().overlaps(ax.get_window_extent()) for ax in figure.axes)
 
 
 def test_a_small_parameter_gets_its_power_of_ten(fit):

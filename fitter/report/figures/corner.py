@@ -10,8 +10,18 @@ import numpy as np
 from fitter.errors import InputError
 from fitter.report.digits import figures_for
 from fitter.report.facts import axis_label, parameter
-from fitter.report.figures.panels import LINE, common_exponent, contours, draw_density, plot_range, runs_of, thinned
-from fitter.report.figures.style import COLOURS, LEVELS, in_style, new_figure, width_inches
+from fitter.report.figures.panels import (
+    LINE,
+    common_exponent,
+    contours,
+    draw_density,
+    legend_layout,
+    plot_range,
+    run_legend,
+    runs_of,
+    thinned,
+)
+from fitter.report.figures.style import COLOURS, LEVELS, SINGLE, in_style, new_figure, width_inches
 from fitter.report.prose import listed, symbol, with_unit
 
 __all__ = ["corner_caption", "corner_figure", "main_parameters"]
@@ -19,8 +29,12 @@ __all__ = ["corner_caption", "corner_figure", "main_parameters"]
 # Of the derived parameters, those that say something beside the sampled ones; the rest follow from them.
 _MAIN_DERIVED = ("omega_k", "omega_lambda", "q0")
 _MOST_PANELS = 7
-_SMALL_PANEL = 0.95  # inches
-_LEFT, _BOTTOM, _TOP, _RIGHT, _GAP = 0.62, 0.62, 0.3, 0.1, 0.05  # inches
+_SMALL_PANEL, _TURNED = 0.95, 1.1  # inches: smaller panels get labels without units, and tick labels aslant
+_LEFT, _BOTTOM, _TOP, _RIGHT, _GAP = 0.62, 0.62, 0.27, 0.1, 0.05  # inches, until the labels are measured
+_PAD, _EDGE = 0.04, 0.05  # inches between numbers and label, and around everything
+_LONE_RATIO = 0.62  # height over width of a panel that stands alone
+_TITLE_SIZES = (9, 8)
+_LISTED_SIZE, _LISTED_LINE = 8, 0.165  # points, inches
 
 
 def main_parameters(posterior) -> list[str]:
@@ -92,11 +106,12 @@ def corner_figure(
     for index, table in enumerate(tables.values()):
         _draw_run(axes, names, table, limits, scale, COLOURS[index % len(COLOURS)], alone=len(runs) == 1)
     _dress(axes, names, limits, scale, labels or {})
-    if len(runs) == 1:
-        _titles(axes, names, next(iter(runs.values())), labels or {}, scale)
-    else:
-        _legend(figure, list(runs))
     _mark(axes, names, reference or {}, scale)
+    if len(runs) == 1:
+        _draw_intervals(axes, names, next(iter(runs.values())), scale)
+        _say_intervals(figure, axes, _interval_texts(names, next(iter(runs.values())), labels or {}))
+    else:
+        _legend(figure, axes, list(runs))
     return figure
 
 
@@ -105,16 +120,17 @@ def corner_caption(posteriors, names: Sequence[str] | None = None) -> str:
     runs = runs_of(posteriors)
     names = list(names) if names is not None else main_parameters(next(iter(runs.values())))
     first, second = (f"{100 * level:.1f}" for level in LEVELS)
-    text = (
-        f"Marginal posteriors of {listed(symbol(name) for name in names)}. The contours are the smallest regions that hold "
-        f"{first} % and {second} % "
-        "of the probability of each pair (not the 39.3 % and 86.5 % inside one and two standard deviations of a two-dimensional Gaussian)."
-    )
+    text = f"Marginal posterior{'s' if len(names) > 1 else ''} of {listed(symbol(name) for name in names)}."
+    if len(names) > 1:
+        text += (
+            f" The contours are the smallest regions that hold {first} % and {second} % of the probability of each pair "
+            "(not the 39.3 % and 86.5 % inside one and two standard deviations of a two-dimensional Gaussian)."
+        )
     units = [f"{symbol(name)} is in {with_unit(name).strip()}" for name in names if parameter(name).unit]
     text += f" {listed(units)}." if units else ""
     if len(runs) == 1:
         kind = next(iter(runs.values())).intervals.replace("_", "-")
-        return f"{text} Titles and dashed lines: median and {kind} 68.3 % interval of each parameter."
+        return f"{text} Numbers and dashed lines: median and {kind} 68.3 % interval{' of each parameter' if len(names) > 1 else ''}."
     return f"{text} Overlaid: {', '.join(runs)}; each density is scaled to its own peak."
 
 
@@ -133,19 +149,33 @@ def _columns(posterior, names: Sequence[str]) -> dict[str, np.ndarray]:
 
 
 def _grid(k: int, width: str | float):
-    """Make only the panels of the lower triangle, with margins measured in inches."""
+    """Make only the panels of the lower triangle."""
     inches = width_inches(width)
-    inches = min(inches, _LEFT + _RIGHT + 1.9 * k) if isinstance(width, str) else inches
-    panel = (inches - _LEFT - _RIGHT - _GAP * (k - 1)) / k
-    height = _BOTTOM + _TOP + panel * k + _GAP * (k - 1)
-    figure = new_figure(inches, height=height)
+    most = SINGLE if k == 1 else _LEFT + _RIGHT + 1.9 * k
+    figure = new_figure(min(inches, most) if isinstance(width, str) else inches)
     axes = np.full((k, k), None, dtype=object)
     for row in range(k):
         for column in range(row + 1):
-            left = _LEFT + column * (panel + _GAP)
-            bottom = _BOTTOM + (k - 1 - row) * (panel + _GAP)
-            axes[row, column] = figure.add_axes([left / inches, bottom / height, panel / inches, panel / height])
+            axes[row, column] = figure.add_axes((0, 0, 1, 1))
+    _place(figure, axes, _LEFT if k > 1 else _RIGHT, _BOTTOM, _TOP)
     return figure, axes
+
+
+def _place(figure, axes, left: float, bottom: float, top: float) -> None:
+    """Give the panels the room that these margins (inches) leave of the figure's width; the height follows."""
+    k, inches = len(axes), figure.get_figwidth()
+    panel = (inches - left - _RIGHT - _GAP * (k - 1)) / k
+    tall = panel if k > 1 else _LONE_RATIO * panel
+    height = bottom + top + tall * k + _GAP * (k - 1)
+    figure.set_figheight(height)
+    for row in range(k):
+        for column in range(row + 1):
+            x, y = left + column * (panel + _GAP), bottom + (k - 1 - row) * (tall + _GAP)
+            axes[row, column].set_position((x / inches, y / height, panel / inches, tall / height))
+
+
+def _panel_inches(axes) -> float:
+    return float(axes[0, 0].get_position().width * axes[0, 0].figure.get_figwidth())
 
 
 def _draw_run(axes, names, table, limits, scale, colour, *, alone: bool) -> None:
@@ -165,26 +195,26 @@ def _draw_run(axes, names, table, limits, scale, colour, *, alone: bool) -> None
 def _dress(axes, names, limits, scale, labels) -> None:
     """Limits, ticks and labels; numbers only along the left and the bottom."""
     k = len(names)
-    small = axes[0, 0].get_position().width * axes[0, 0].figure.get_figwidth() < _SMALL_PANEL
+    small, turn = _panel_inches(axes) < _SMALL_PANEL, 45 if _panel_inches(axes) < _TURNED else 0
     for row in range(k):
         for column in range(row + 1):
             ax = axes[row, column]
             x, y = names[column], names[row]
             ax.set_xlim(*(v * scale[x] for v in limits[x]))
             ax.set_xticks(inner_ticks(limits[x], scale[x], 2 if small else 4))
-            ax.tick_params(axis="x", labelrotation=45, labelbottom=row == k - 1)
+            ax.tick_params(axis="x", labelrotation=turn, labelbottom=row == k - 1)
             if row == column:
                 ax.set_ylim(0, 1.12)
                 ax.set_yticks([])
             else:
                 ax.set_ylim(*(v * scale[y] for v in limits[y]))
                 ax.set_yticks(inner_ticks(limits[y], scale[y], 2 if small else 4))
-                ax.tick_params(axis="y", labelrotation=45, labelleft=column == 0)
+                ax.tick_params(axis="y", labelrotation=turn, labelleft=column == 0)
             if row == k - 1:
                 ax.set_xlabel(labels.get(x, _label(x, limits[x], small)))
             if column == 0 and row > 0:
                 ax.set_ylabel(labels.get(y, _label(y, limits[y], small)))
-    _align(axes, k)
+    _align(axes)
 
 
 def _label(name: str, limits: tuple[float, float], small: bool) -> str:
@@ -209,41 +239,89 @@ def inner_ticks(limits: tuple[float, float], scale: float = 1.0, wanted: int = 4
     return ticks
 
 
-def _align(axes, k: int) -> None:
-    """Put the labels of a column, and of the bottom row, on one line at a fixed distance in inches."""
+def _align(axes) -> None:
+    """Put the labels of a row or column on one line just beyond the longest number, and the margins where that needs them."""
     from matplotlib.transforms import ScaledTranslation
 
+    k, figure = len(axes), axes[0, 0].figure
+    figure.draw_without_rendering()
+    below = _reach([ax.xaxis for ax in axes[k - 1]], figure) + _PAD
+    beside = _reach([ax.yaxis for ax in axes[1:, 0]], figure) + _PAD
     for i in range(k):
         bottom, left = axes[k - 1, i], axes[i, 0]
-        below = bottom.transAxes + ScaledTranslation(0, -0.42, bottom.figure.dpi_scale_trans)
-        bottom.xaxis.set_label_coords(0.5, 0, transform=below)
+        down = bottom.transAxes + ScaledTranslation(0, -below, figure.dpi_scale_trans)
+        bottom.xaxis.set_label_coords(0.5, 0, transform=down)
         if i > 0:
-            beside = left.transAxes + ScaledTranslation(-0.42, 0, left.figure.dpi_scale_trans)
-            left.yaxis.set_label_coords(0, 0.5, transform=beside)
+            aside = left.transAxes + ScaledTranslation(-beside, 0, figure.dpi_scale_trans)
+            left.yaxis.set_label_coords(0, 0.5, transform=aside)
+    deep = max(ax.xaxis.label.get_window_extent().height for ax in axes[k - 1]) / figure.dpi
+    wide = max([ax.yaxis.label.get_window_extent().width for ax in axes[1:, 0]], default=0.0) / figure.dpi
+    _place(figure, axes, beside + wide + _EDGE if k > 1 else _RIGHT, below + deep + _EDGE, _TOP)
 
 
-def _titles(axes, names, posterior, labels, scale) -> None:
-    """Median and 68 % over each marginal and as lines in it, in the digits its width deserves; smaller where the panel is."""
-    panel_inches = axes[0, 0].get_position().width * axes[0, 0].figure.get_figwidth()
+def _reach(axis_of, figure) -> float:
+    """How far tick labels stretch out from their axes, inches."""
+    reach = [0.0]
+    for axis in axis_of:
+        frame = axis.axes.get_window_extent()
+        for tick in axis.get_major_ticks():
+            if tick.label1.get_text() and tick.label1.get_visible():
+                box = tick.label1.get_window_extent()
+                reach.append(frame.y0 - box.y0 if axis.axis_name == "x" else frame.x0 - box.x0)
+    return max(reach) / float(figure.dpi)
+
+
+def _draw_intervals(axes, names, posterior, scale) -> None:
     for i, name in enumerate(names):
-        draws = posterior.draws(name)
-        interval, median = posterior.interval(name), np.nanmedian(draws)
-        for x in (interval.low, median, interval.high):
+        interval = posterior.interval(name)
+        for x in (interval.low, np.nanmedian(posterior.draws(name)), interval.high):
             axes[i, i].axvline(x * scale[name], color=COLOURS[0], ls=(0, (4, 3)), lw=0.6)
-        figures = figures_for(median, interval.low, interval.high)
+
+
+def _interval_texts(names, posterior, labels) -> list[str]:
+    """Median and 68 % of each parameter, in the digits its width deserves."""
+    texts = []
+    for name in names:
+        interval = posterior.interval(name)
+        figures = figures_for(float(np.nanmedian(posterior.draws(name))), interval.low, interval.high)
         # A power of ten goes before the symbol: 10⁵² Λ = 1.09 ± 0.05 is shorter, and as true.
         power = f"10^{{{-figures.exponent}}}\\," if figures.exponent else ""
         value = replace(figures, exponent=0).latex()
-        text = f"${power}{parameter(name).latex} = {value}$" if name not in labels else f"{labels[name]} $= {value}$"
-        size = 9 if panel_inches > 1.25 else 7.5 if panel_inches > 0.85 else 6 if panel_inches > 0.5 else 5
-        axes[i, i].set_title(text, fontsize=size, pad=4)
+        texts.append(f"${power}{parameter(name).latex} = {value}$" if name not in labels else f"{labels[name]} $= {value}$")
+    return texts
 
 
-def _legend(figure, labels: Sequence[str]) -> None:
-    from matplotlib.lines import Line2D
+def _say_intervals(figure, axes, texts: Sequence[str]) -> None:
+    """Write the intervals over their panels, or all of them into the empty corner where a panel is too narrow."""
+    k, room = len(texts), (_panel_inches(axes) + _GAP) * figure.dpi
+    for size in _TITLE_SIZES:
+        titles = [axes[i, i].set_title(text, fontsize=size, pad=4) for i, text in enumerate(texts)]
+        if all(title.get_window_extent().width <= room for title in titles):
+            return
+    if k < 3:  # there is no empty corner to speak of
+        return
+    for title in titles:
+        title.set_text("")
+    position, height, inches = axes[-1, 0].get_position(), figure.get_figheight(), figure.get_figwidth()
+    _place(figure, axes, position.x0 * inches, position.y0 * height, _EDGE)
+    for i, text in enumerate(texts):
+        # On the baseline: the height of a text depends on its errors.
+        y = 1 - (_EDGE + _LISTED_LINE * (i + 0.75)) / figure.get_figheight()
+        figure.text(1 - _RIGHT / inches, y, text, ha="right", va="baseline", fontsize=_LISTED_SIZE)
 
-    handles = [Line2D([], [], color=COLOURS[i % len(COLOURS)], lw=2, label=label) for i, label in enumerate(labels)]
-    figure.legend(handles=handles, loc="upper right", bbox_to_anchor=(0.99, 0.99))
+
+def _legend(figure, axes, labels: Sequence[str]) -> None:
+    """Write the legend into the empty corner, or along the top of a panel that stands alone."""
+    colours = {label: COLOURS[i % len(COLOURS)] for i, label in enumerate(labels)}
+    k, inches = len(axes), figure.get_figwidth()
+    if k == 1:
+        *_, height = legend_layout(labels, inches)
+        position = axes[0, 0].get_position()
+        _place(figure, axes, _RIGHT, position.y0 * figure.get_figheight(), height)
+        run_legend(figure, colours, inches)
+        return
+    room = (k - 1) * (_panel_inches(axes) + _GAP) - 2 * _EDGE
+    run_legend(figure, colours, min(room, 3.0), loc="upper right", bbox_to_anchor=(1.0, 1.0))
 
 
 def _mark(axes, names, reference, scale) -> None:

@@ -2,19 +2,32 @@
 
 from __future__ import annotations
 
-from collections.abc import Mapping
+import textwrap
+from collections.abc import Mapping, Sequence
 from typing import TypeVar
 
 import numpy as np
 
 from fitter.report.figures.style import LEVELS
 
-__all__ = ["common_exponent", "contours", "density", "draw_density", "plot_range", "redshift_ticks", "runs_of", "thinned"]
+__all__ = [
+    "common_exponent",
+    "contours",
+    "density",
+    "draw_density",
+    "legend_layout",
+    "plot_range",
+    "redshift_ticks",
+    "run_legend",
+    "runs_of",
+    "thinned",
+]
 
 _MOST_DRAWS = 150_000  # more make a slower figure, not a better one
 _BINS = 44
 _SMOOTHING = 1.3  # bins
 LINE = 0.9999  # correlation of two parameters of which one says all
+_HANDLE, _LETTER, _LINE_HEIGHT = 0.5, 0.062, 0.16  # inches of a legend: its line with its gaps, a letter, a row
 _REDSHIFTS = (0.001, 0.002, 0.005, 0.01, 0.02, 0.05, 0.1, 0.2, 0.5, 1, 2, 5)
 
 
@@ -177,3 +190,34 @@ def redshift_ticks(ax) -> None:
     ax.set_xticks([z for z in ticks if f"{z:e}"[0] == "1"] if len(ticks) > 8 else ticks)
     ax.xaxis.set_major_formatter(FuncFormatter(lambda value, _: f"{value:g}"))
     ax.xaxis.set_minor_formatter(NullFormatter())
+
+
+def legend_layout(labels: Sequence[str], inches: float) -> tuple[list[str], int, float]:
+    """Return how a legend of runs fits into a width: the labels, broken where they are too long, columns, and height in inches."""
+    labels = [textwrap.fill(label, max(int((inches - _HANDLE) / _LETTER), 8)) for label in labels]
+    longest = max(len(line) for label in labels for line in label.split("\n"))
+    columns = int(np.clip(inches / (_HANDLE + _LETTER * longest), 1, len(labels)))
+    filled = np.array_split(labels, columns)  # matplotlib fills column by column
+    lines = max(sum(1 + label.count("\n") for label in column) for column in filled)
+    return labels, columns, 0.14 + _LINE_HEIGHT * lines
+
+
+def run_legend(figure, colours: Mapping[str, str], inches: float, **where) -> None:
+    """Draw the legend of several runs, by default along the top of the figure, in the room that :func:`legend_layout` gives.
+
+    Parameters
+    ----------
+    figure : Figure
+    colours : mapping
+        Label of each run → its colour.
+    inches : float
+        Width that it may take.
+    **where
+        As matplotlib places a legend.
+    """
+    from matplotlib.lines import Line2D
+
+    labels, columns, _ = legend_layout(list(colours), inches)
+    handles = [Line2D([], [], color=colour, lw=2, label=label) for label, colour in zip(labels, colours.values(), strict=True)]
+    place = {"loc": "upper center", "bbox_to_anchor": (0.5, 1.0), "columnspacing": 1.0, "borderaxespad": 0.3, "labelspacing": 0.35, **where}
+    figure.legend(handles=handles, ncols=columns, **place)

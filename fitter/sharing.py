@@ -6,8 +6,6 @@ from collections.abc import Sequence
 from pathlib import Path
 from typing import Any
 
-import numpy as np
-
 from fitter import __version__
 from fitter.api import load_run
 from fitter.config.load import raise_all
@@ -17,6 +15,7 @@ from fitter.errors import InputError
 from fitter.likelihood.capsule import DEFAULT_ORDER, encapsulate
 from fitter.report.run_folder import read_run, write_atomic, writing
 from fitter.report.summary import group_counts
+from fitter.sample.budget import error_budget
 from fitter.sample.capsule import Capsule
 from fitter.sample.sample import Sample
 
@@ -72,7 +71,7 @@ def capsule_of_sample(
     sample: Sample, *, order: int = DEFAULT_ORDER, scatter: float = 0.0, title: str = "", citation: str = "", without: tuple[str, ...] = ()
 ) -> Capsule:
     """Compress a sample, with a description of what is in it."""
-    terms = [{"label": t.label, "kind": t.kind, "median_sigma": float(np.sqrt(np.median(t.variance)))} for t in sample.terms]
+    terms = [part.facts() for part in error_budget(sample)]
     words = f"The likelihood of {title or 'a supernova sample'}, compressed with mufitter {__version__}. Cite the authors of the data."
     facts = {
         "title": title,

@@ -5,6 +5,7 @@ from __future__ import annotations
 import numpy as np
 
 from fitter.report.facts import parameter
+from fitter.sample.budget import SHARE
 
 __all__ = ["check_text"]
 
@@ -75,7 +76,7 @@ def _terms(sample) -> list[str]:
     parts = budget(sample)
     if not parts:
         return ["Uncertainties: an inverse covariance, too large to be taken apart here"]
-    lines = ["Uncertainties, median σ in mag and share of the total variance (mean over the rows):"]
+    lines = [f"Uncertainties, median σ in mag and {SHARE}:"]
     width = max(len("together"), *(len(part.label) for part in parts))
     lines += [f"  {part.label:<{width}}  {part.sigma:.4f}  {100 * part.share:5.1f} %  ({part.kind})" for part in parts]
     if len(parts) > 1:

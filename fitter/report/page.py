@@ -20,6 +20,7 @@ from fitter.report.prose import plain
 from fitter.report.summary import summary_csv
 from fitter.report.tables import parameter_table
 from fitter.report.terminal import best_text, cell_text, data_line, information_lines, median_head, profile_text
+from fitter.sample.budget import SHARE
 
 __all__ = ["PAGE", "Picture", "fit_html", "page_text", "picture_of", "verdict"]
 
@@ -243,17 +244,17 @@ def _cross_check(summary: dict) -> str:
 
 def _errors(summary: dict) -> str:
     terms = summary["sample"].get("terms") or []
-    total = sum(t["median_sigma"] ** 2 for t in terms)
-    if not total:
+    if not terms:
         return ""
     rows = []
-    for term in sorted(terms, key=lambda t: -t["median_sigma"]):
-        share = term["median_sigma"] ** 2 / total
+    for term in sorted(terms, key=lambda t: -(t.get("share") or 0.0)):
+        share = term.get("share")
+        if share is None:
+            rows.append([_e(term["label"]), _e(term["kind"].replace("_", " ")), f"{term['median_sigma']:.4f}", ""])
+            continue
         bar = f'<span class="bar" style="width:{max(2, round(100 * share)) / 16:.2f}rem" aria-hidden="true"></span>{100 * share:.0f} %'
         rows.append([_e(term["label"]), _e(term["kind"].replace("_", " ")), f"{term['median_sigma']:.4f}", bar])
-    words = (
-        "Median error of one supernova by source, in mag, and its share of the variance. Correlated sources weigh more in the parameters."
-    )
+    words = f"Median error of one supernova by source, in mag, and {SHARE}. Correlated sources weigh more in the parameters."
     return f"<p>{words}</p>" + _table(["source", "kind", "σ (mag)", "share"], rows)
 
 

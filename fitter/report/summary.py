@@ -14,6 +14,7 @@ from fitter.inference.intervals import INTERVALS, SHARES
 from fitter.inference.profile import ProfileInterval
 from fitter.report.facts import edge_density, json_safe, parameter
 from fitter.report.information import information_criteria, noise_scale
+from fitter.sample.budget import error_budget
 
 __all__ = ["SCHEMA", "Extras", "summarise", "summary_csv", "summary_json", "summary_markdown"]
 
@@ -114,7 +115,7 @@ def _sample_facts(sample) -> dict:
         "distance_scale": sample.distance_scale,
         "data_kind": sample.data_kind,
         "removed": dict(sample.removed),
-        "terms": [{"label": t.label, "kind": t.kind, "median_sigma": float(np.sqrt(np.median(t.variance)))} for t in sample.terms],
+        "terms": [part.facts() for part in error_budget(sample)],
         "groups": group_counts(sample),
     }
 

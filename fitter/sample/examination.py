@@ -7,33 +7,15 @@ from dataclasses import dataclass
 import numpy as np
 
 from fitter.sample.advice import smooth_residuals
+from fitter.sample.budget import Budget, error_budget
 from fitter.sample.sample import Sample
 
-__all__ = ["Budget", "Correlations", "Outlier", "budget", "condition_number", "correlations", "outliers", "repeated_rows"]
+__all__ = ["Correlations", "Outlier", "budget", "condition_number", "correlations", "outliers", "repeated_rows"]
 
 BEYOND = 4.0  # σ
 _EIGENVALUES_OF = 3000  # rows up to which a dense matrix is diagonalised
 _CORRELATED_ROWS = 1500  # rows of which correlations are looked at
 _INVERTED = 6000  # rows up to which a precision is inverted for its diagonal
-
-
-@dataclass(frozen=True)
-class Budget:
-    """One uncertainty term's part.
-
-    Parameters
-    ----------
-    label, kind : str
-    sigma : float
-        Its median error, mag.
-    share : float
-        Its part of the total variance, averaged over the rows.
-    """
-
-    label: str
-    kind: str
-    sigma: float
-    share: float
 
 
 @dataclass(frozen=True)
@@ -74,12 +56,7 @@ def budget(sample: Sample) -> list[Budget]:
     """The part of each term; the shares add to 1. Empty where a large precision would have to be inverted."""
     if sample.noise.precision is not None and sample.n > _INVERTED:
         return []
-    variances = [term.variance for term in sample.terms]
-    total = np.sum(variances, axis=0)
-    return [
-        Budget(term.label, term.kind, float(np.sqrt(np.median(v))), float(np.mean(v / total)))
-        for term, v in zip(sample.terms, variances, strict=True)
-    ]
+    return error_budget(sample)
 
 
 def condition_number(sample: Sample) -> float | None:

@@ -8,8 +8,11 @@ from pathlib import Path
 import numpy as np
 import pytest
 
-from fitter import Sample
+from fitter import Sample, fit
 from fitter.checking import check
+from fitter.report.check_text import check_text
+from fitter.report.page import page_text
+from fitter.sample.budget import SHARE
 from fitter.sample.examination import budget, condition_number, correlations, outliers, repeated_rows
 
 ROOT = Path(__file__).resolve().parents[2]
@@ -66,6 +69,22 @@ def test_shares_add_to_one_and_condition_is_the_ratio_of_eigenvalues():
     assert sum(part.share for part in budget(sample)) == pytest.approx(1, abs=1e-12)
     values = np.linalg.eigvalsh(sample.noise.covariance())
     assert condition_number(sample) == pytest.approx(values[-1] / values[0], rel=1e-9)
+
+
+def test_check_report_and_capsule_tell_the_same_share():
+    """The mean over the supernovae, not the ratio of medians: with errors that grow with redshift the two differ."""
+    sigma = np.where(Z < 0.8, 0.05, 0.4)
+    sample = Sample.from_arrays(Z, MU, sigma=sigma, modes=0.1 * np.ones((N, 1)))
+    variance = sigma**2
+    expected = np.mean(variance / (variance + 0.01))
+    assert abs(np.median(variance) / (np.median(variance) + 0.01) - expected) > 0.05
+    made = fit(sample=sample, model="flat_lcdm", sampling={"target_ess": 200, "walkers": 16, "replicas": 2})
+    said = f"{100 * expected:.1f} %"
+    assert re.search(rf"^Uncertainties, .*{SHARE}", check_text(None, sample, None), re.MULTILINE) and said in check_text(None, sample, None)
+    for terms in (made.summary()["sample"]["terms"], made.capsule().terms):
+        assert terms[0]["share"] == pytest.approx(expected, rel=1e-12) and terms[1]["share"] == pytest.approx(1 - expected, rel=1e-12)
+    page = made._repr_html_() + page_text(made.summary(), "", {})
+    assert SHARE in page and f"{100 * expected:.0f} %" in page
 
 
 def test_condition_of_many_rows_is_found_without_a_matrix(monkeypatch):

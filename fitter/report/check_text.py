@@ -90,13 +90,12 @@ def _terms(sample) -> list[str]:
 
 def _covariance(sample) -> list[str]:
     """Condition number and correlations."""
-    from fitter.sample.examination import condition_number, correlations
+    from fitter.sample.examination import EIGENVALUES_OF, condition_number, correlations
 
-    lines = []
     condition = condition_number(sample)
-    if condition is not None:
-        weak = " (above 1e12 digits are lost: check the matrix)" if condition > 1e12 else ""
-        lines.append(f"  condition number {condition:.3g}{weak}")
+    weak = " (above 1e12 digits are lost: check the matrix)" if condition > 1e12 else ""
+    said = f"{condition:.3g}" if sample.n <= EIGENVALUES_OF else f"about {condition:.2g}"
+    lines = [f"  condition number {said}{weak}"]
     found = correlations(sample)
     if found is None:
         return lines if sample.noise.precision is not None else [*lines, "  rows are uncorrelated"]

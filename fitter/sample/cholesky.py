@@ -96,6 +96,14 @@ class Cholesky:
         out = lapack.dtfsm(1.0, self._packed, flat, transr="N", side="L", uplo="L", trans="N", diag="N")
         return out.reshape(x.shape)
 
+    def inverse_times(self, x):
+        """A⁻¹ x for x of shape (N,) or (N, m)."""
+        from scipy.linalg import lapack
+
+        flat = np.asarray(x, dtype=float).reshape(self.n, -1)
+        out, _ = lapack.dpftrs(self.n, self._packed, flat, transr="N", uplo="L")
+        return out.reshape(np.shape(x))
+
     def transpose_product(self, x: FloatArray) -> FloatArray:
         """Lᵀ x for x of shape (N,) or (N, m)."""
         x = np.asarray(x, dtype=float)

@@ -167,6 +167,32 @@ class Noise:
         full[np.diag_indices(self.n)] += self.variance
         return full
 
+    def apply(self, x: np.ndarray) -> np.ndarray:
+        """C x for x of shape (N,), with everything in C, without forming it."""
+        if self.precision is not None:
+            base = self._factor.inverse_times(x)
+        else:
+            base = self.variance * x if self.dense is None else self.dense @ x + self.variance * x
+        return base + self.modes @ (self.modes.T @ x)
+
+    def apply_inverse(self, x: np.ndarray) -> np.ndarray:
+        """C⁻¹ x for x of shape (N,); the modes by the Woodbury identity."""
+        base = self._base_inverse(x[:, None])[:, 0]
+        if not self.mode_names:
+            return base
+        spread, capacitance = self._woodbury
+        return base - spread @ np.linalg.solve(capacitance, self.modes.T @ base)
+
+    @cached_property
+    def _woodbury(self):
+        spread = self._base_inverse(self.modes)
+        return spread, np.eye(len(self.mode_names)) + self.modes.T @ spread
+
+    def _base_inverse(self, x: np.ndarray) -> np.ndarray:
+        if self.precision is not None:
+            return self.precision @ x
+        return x / self.variance[:, None] if self.dense is None else self._factor.inverse_times(x)
+
     def draw(self, rng: np.random.Generator, size: int) -> FloatArray:
         """Return (size, N) draws of the scatter from the whole C, mag."""
         white = rng.standard_normal((self.n, size))

@@ -91,8 +91,25 @@ def test_condition_of_many_rows_is_found_without_a_matrix(monkeypatch):
     modes = np.column_stack([0.02 + 0 * Z, 0.03 * Z])
     sample = Sample.from_arrays(Z, MU, sigma=0.1, modes=modes)
     exact = condition_number(sample)
-    monkeypatch.setattr("fitter.sample.examination._EIGENVALUES_OF", 10)
+    monkeypatch.setattr("fitter.sample.examination.EIGENVALUES_OF", 10)
     assert condition_number(sample) == pytest.approx(exact, rel=0.01)
+
+
+@pytest.mark.parametrize("kind", ["covariance", "precision"])
+@pytest.mark.parametrize("with_modes", [False, True])
+def test_condition_of_many_correlated_rows_is_estimated(kind, with_modes, monkeypatch):
+    """Lanczos finds both ends of the spectrum from inside; the ends of this one stand apart, so that a few steps reach them."""
+    dense = 0.02**2 * np.exp(-np.abs(Z[:, None] - Z)) + np.diag(np.linspace(0.05, 0.2, N) ** 2)
+    modes = np.column_stack([0.02 + 0 * Z, 0.03 * Z]) if with_modes else None
+    given = {kind: dense if kind == "covariance" else np.linalg.inv(dense)}
+    sample = Sample.from_arrays(Z, MU, modes=modes, **given)
+    values = np.linalg.eigvalsh(sample.noise.covariance())
+    vector = RNG.standard_normal(N)
+    np.testing.assert_allclose(sample.noise.apply(vector), sample.noise.covariance() @ vector, rtol=1e-9, atol=1e-12)
+    np.testing.assert_allclose(sample.noise.apply(sample.noise.apply_inverse(vector)), vector, rtol=1e-8, atol=1e-8)
+    monkeypatch.setattr("fitter.sample.examination.EIGENVALUES_OF", 10)
+    found = condition_number(sample)
+    assert 0.9 * values[-1] / values[0] < found <= 1.0001 * values[-1] / values[0]
 
 
 def test_correlations_within_and_between_groups():

@@ -6,11 +6,17 @@ series of 1/E converges on each; a panel that never does hides a zero of E², an
 
 from __future__ import annotations
 
+from typing import TYPE_CHECKING
+
 import numpy as np
 
+from fitter.array_types import FloatArray
 from fitter.constants import MAG_PER_LN
 from fitter.cosmology.distances import ANTIPODE, curved_ratio, log_distance
 from fitter.cosmology.grid import Grid
+
+if TYPE_CHECKING:
+    from fitter.cosmology.base import Model
 
 __all__ = ["exact_log_distance", "log_distance_at"]
 
@@ -24,7 +30,9 @@ _NEGLIGIBLE = 1e-12  # of the whole integral: where E² nearly vanishes, its rou
 _UNIT = Grid(np.expm1(2.0), _ORDER)  # only its matrices on x are used
 
 
-def log_distance_at(model, theta, z, omega_r=0.0, *, within=None):
+def log_distance_at(
+    model: Model, theta: FloatArray, z: FloatArray, omega_r: float | FloatArray = 0.0, *, within: float | None = None
+) -> FloatArray:
     """f at any redshifts for W parameter points: a fixed grid where it has converged, adaptive panels for the other points.
 
     Parameters
@@ -54,7 +62,7 @@ def log_distance_at(model, theta, z, omega_r=0.0, *, within=None):
     return f
 
 
-def _as_far_as_it_goes(model, theta, u, omega_r, within):
+def _as_far_as_it_goes(model: Model, theta: FloatArray, u: FloatArray, omega_r: float, within: float | None) -> FloatArray:
     f = exact_log_distance(model, theta, u, omega_r)
     if f is not None:
         return f
@@ -66,7 +74,7 @@ def _as_far_as_it_goes(model, theta, u, omega_r, within):
     return f
 
 
-def exact_log_distance(model, theta, u, omega_r=0.0):
+def exact_log_distance(model: Model, theta: FloatArray, u: FloatArray, omega_r: float = 0.0) -> FloatArray | None:
     """f at any u = ln(1+z) for one parameter point, without an interpolation error worth naming.
 
     Parameters
@@ -98,7 +106,7 @@ def exact_log_distance(model, theta, u, omega_r=0.0):
     return MAG_PER_LN * np.log(mean * curved_ratio(x))
 
 
-def _panels(model, theta, u_max, omega_r):
+def _panels(model: Model, theta: FloatArray, u_max: float, omega_r: float) -> tuple[FloatArray, list[FloatArray], FloatArray] | None:
     """Panel edges, the Chebyshev coefficients of the integral on each, and the integral before each."""
     todo, done, size = [(0.0, u_max, 0)], [], None
     while todo:
@@ -123,7 +131,7 @@ def _panels(model, theta, u_max, omega_r):
     return edges, series, np.concatenate([[0.0], np.cumsum(whole)])
 
 
-def _integral_at(u, edges, series, before):
+def _integral_at(u: FloatArray, edges: FloatArray, series: list[FloatArray], before: FloatArray) -> FloatArray:
     panel = np.clip(np.searchsorted(edges, u, side="right") - 1, 0, len(series) - 1)
     order = np.argsort(panel, kind="stable")
     starts = np.searchsorted(panel[order], np.arange(len(series) + 1))

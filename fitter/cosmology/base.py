@@ -5,10 +5,12 @@ from __future__ import annotations
 from abc import ABC, abstractmethod
 from collections.abc import Callable, Mapping
 from dataclasses import dataclass
-from typing import ClassVar
+from typing import ClassVar, NoReturn
 
 import numpy as np
+from numpy.typing import ArrayLike
 
+from fitter.array_types import FloatArray
 from fitter.constants import MAG_PER_LN, N_EFF, photon_density_h2
 from fitter.errors import InputError
 from fitter.parameters import Parameter
@@ -16,7 +18,7 @@ from fitter.parameters import Parameter
 __all__ = ["DistanceModel", "FluidModel", "Model", "Within", "flatness", "radiation_density"]
 
 
-def radiation_density(h0):
+def radiation_density(h0: ArrayLike) -> FloatArray:
     """Ω_r of photons and massless neutrinos for an expansion rate in km/s/Mpc.
 
     Each neutrino species adds 7/8 (4/11)^(4/3) of the photons' energy [1]_.
@@ -43,10 +45,10 @@ class Within:
     """
 
     model: str
-    at: Mapping[str, float | str | Callable]
+    at: Mapping[str, float | str | Callable[[Mapping[str, float | FloatArray]], float | FloatArray]]
 
 
-def flatness(values):
+def flatness(values: Mapping[str, float | FloatArray]) -> float | FloatArray:
     """Dark-energy density of flat space, given the simpler model's values."""
     return 1.0 - values["omega_m"] - values["omega_r"]
 
@@ -65,7 +67,7 @@ class Model(ABC):
     """Simpler models nested in this one, for likelihood-ratio tests and density ratios; theirs need not be repeated."""
 
     @abstractmethod
-    def e_squared(self, z, theta, omega_r=0.0):
+    def e_squared(self, z: FloatArray, theta: FloatArray, omega_r: float | FloatArray = 0.0) -> FloatArray:
         """E² = (H/H0)².
 
         Parameters
@@ -83,7 +85,7 @@ class Model(ABC):
             May be ≤ 0 where the model has no big bang; callers treat that as outside the prior.
         """
 
-    def omega_k(self, theta, omega_r=0.0):
+    def omega_k(self, theta: FloatArray, omega_r: float | FloatArray = 0.0) -> FloatArray:
         """Curvature term today, (W,) array; zero for a flat model."""
         return np.zeros(len(theta))
 
@@ -106,7 +108,7 @@ class DistanceModel(Model):
     has_expansion_rate = False
 
     @abstractmethod
-    def distance_over_z(self, z, theta):
+    def distance_over_z(self, z: FloatArray, theta: FloatArray) -> FloatArray:
         """Transverse comoving distance D_M in units of c z / H0.
 
         Parameters
@@ -121,13 +123,13 @@ class DistanceModel(Model):
             Not positive, or NaN, where the model has no distance: outside the prior.
         """
 
-    def log_distance(self, z, theta):
+    def log_distance(self, z: FloatArray, theta: FloatArray) -> FloatArray:
         """5 log10[D_M H0 / (c z)], mag, (W, M); NaN outside the model's range."""
         with np.errstate(invalid="ignore", divide="ignore", over="ignore"):
             ratio = np.asarray(self.distance_over_z(z, theta), float)
             return MAG_PER_LN * np.log(np.where(ratio > 0, ratio, np.nan))
 
-    def e_squared(self, z, theta, omega_r=0.0):
+    def e_squared(self, z: FloatArray, theta: FloatArray, omega_r: float | FloatArray = 0.0) -> NoReturn:
         raise InputError(f"{self.name} gives distances, not an expansion rate")
 
 
@@ -143,14 +145,14 @@ class FluidModel(Model):
     curved: ClassVar[bool]
 
     @abstractmethod
-    def dark_energy_growth(self, z, theta):
+    def dark_energy_growth(self, z: FloatArray, theta: FloatArray) -> float | FloatArray:
         """X(z), dark-energy density over its value today; (W, M) or broadcastable."""
 
     @abstractmethod
-    def equation_of_state(self, z, theta):
+    def equation_of_state(self, z: FloatArray, theta: FloatArray) -> FloatArray:
         """w(z), (W, M) array."""
 
-    def densities(self, theta, omega_r=0.0):
+    def densities(self, theta: FloatArray, omega_r: float | FloatArray = 0.0) -> tuple[FloatArray, FloatArray, FloatArray]:
         """Ω_m, Ω_DE and Ω_k today, each a (W,) array."""
         omega_m = theta[:, 0]
         if self.curved:
@@ -158,14 +160,14 @@ class FluidModel(Model):
             return omega_m, omega_de, 1.0 - omega_m - omega_de - omega_r
         return omega_m, 1.0 - omega_m - omega_r, np.zeros(len(theta))
 
-    def omega_k(self, theta, omega_r=0.0):
+    def omega_k(self, theta: FloatArray, omega_r: float | FloatArray = 0.0) -> FloatArray:
         return self.densities(theta, omega_r)[2]
 
     @property
     def is_flat(self) -> bool:
         return not self.curved
 
-    def e_squared(self, z, theta, omega_r=0.0):
+    def e_squared(self, z: FloatArray, theta: FloatArray, omega_r: float | FloatArray = 0.0) -> FloatArray:
         omega_m, omega_de, omega_k = (x[:, None] for x in self.densities(theta, omega_r))
         a = 1.0 + np.asarray(z, float)
         e2 = omega_m * a**3

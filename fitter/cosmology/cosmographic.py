@@ -1,7 +1,10 @@
 """Cosmography: the expansion written as a series, with no assumption on what drives it."""
 
+from __future__ import annotations
+
 import numpy as np
 
+from fitter.array_types import FloatArray
 from fitter.cosmology.base import DistanceModel
 from fitter.parameters import PARAMETERS
 
@@ -41,12 +44,12 @@ class Cosmographic(DistanceModel):
     name = "cosmographic"
     parameters = (PARAMETERS["q0"], PARAMETERS["j0"])
 
-    def distance_over_z(self, z, theta):
+    def distance_over_z(self, z: FloatArray, theta: FloatArray) -> FloatArray:
         z = np.asarray(z, float)
         q0, j0 = theta[:, :1], theta[:, 1:2]
         return (1.0 + z * ((1.0 - q0) / 2.0 - (1.0 - q0 - 3.0 * q0**2 + j0) / 6.0 * z)) / (1.0 + z)
 
-    def advice(self, redshift_max):
+    def advice(self, redshift_max: float) -> tuple[str, ...]:
         if redshift_max <= REACH:
             return ()
         return (

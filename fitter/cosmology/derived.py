@@ -5,11 +5,18 @@ Sources: Weinberg 2008, Cosmology, chapter 1 (q, age, epochs); Carroll, Press & 
 
 from __future__ import annotations
 
+from collections.abc import Callable
+from typing import TYPE_CHECKING
+
 import numpy as np
 
+from fitter.array_types import BoolArray, FloatArray, IntArray
 from fitter.constants import C_M_S, GYR_S, critical_density, hubble_si
 from fitter.cosmology.base import FluidModel
 from fitter.cosmology.lcdm import FlatLCDM
+
+if TYPE_CHECKING:
+    from fitter.cosmology.base import Model
 
 __all__ = ["age_gyr", "deceleration", "derived", "derived_names", "vacuum"]
 
@@ -17,7 +24,7 @@ _Z_SEARCH = np.expm1(np.linspace(0.0, np.log(51.0), 241))  # epochs are looked f
 _CHUNK = 20_000
 
 
-def derived_names(model, has_h0: bool) -> tuple[str, ...]:
+def derived_names(model: Model, has_h0: bool) -> tuple[str, ...]:
     """Names of what `derived` returns, in reporting order."""
     if not isinstance(model, FluidModel):
         own = [p.name for p in model.parameters]
@@ -33,7 +40,7 @@ def derived_names(model, has_h0: bool) -> tuple[str, ...]:
     return tuple(names)
 
 
-def derived(model, theta, omega_r=0.0, h0=None) -> dict[str, np.ndarray]:
+def derived(model: Model, theta: FloatArray, omega_r: float | FloatArray = 0.0, h0: FloatArray | None = None) -> dict[str, FloatArray]:
     """Derived quantities of W parameter points.
 
     Parameters
@@ -65,7 +72,7 @@ def derived(model, theta, omega_r=0.0, h0=None) -> dict[str, np.ndarray]:
     return {name: has[name] for name in names}
 
 
-def deceleration(model, z, theta, omega_r=0.0):
+def deceleration(model: Model, z: FloatArray, theta: FloatArray, omega_r: float | FloatArray = 0.0) -> FloatArray:
     """q(z) = −1 + dlnE/dln(1+z), (W, M): for fluids the sum over densities, otherwise a central difference."""
     z = np.asarray(z, float)
     if isinstance(model, FluidModel):
@@ -81,7 +88,7 @@ def deceleration(model, z, theta, omega_r=0.0):
     return -1.0 + (np.log(up) - np.log(down)) / (4 * step)
 
 
-def age_gyr(model, theta, h0, omega_r=0.0):
+def age_gyr(model: Model, theta: FloatArray, h0: FloatArray, omega_r: float | FloatArray = 0.0) -> FloatArray:
     """Age ∫ da / (a H) in Gyr, (W,); NaN where there was no big bang.
 
     With a = x² the integrand 2/(x E) is smooth at the big bang of a universe of matter or radiation;
@@ -100,13 +107,13 @@ def age_gyr(model, theta, h0, omega_r=0.0):
     return out / hubble_si(np.asarray(h0, float)) / GYR_S
 
 
-def vacuum(omega_lambda, h0):
+def vacuum(omega_lambda: FloatArray, h0: FloatArray) -> tuple[FloatArray, FloatArray]:
     """Λ = 3 Ω_Λ H0²/c² in m⁻² and its energy density Ω_Λ ρ_c c² in J/m³."""
     h0 = np.asarray(h0, float)
     return 3 * omega_lambda * (hubble_si(h0) / C_M_S) ** 2, omega_lambda * critical_density(h0) * C_M_S**2
 
 
-def _z_acceleration(model, theta, omega_r):
+def _z_acceleration(model: FluidModel, theta: FloatArray, omega_r: FloatArray) -> FloatArray:
     """Redshift since which the expansion has been accelerating; NaN where it is not accelerating today."""
     if isinstance(model, FlatLCDM) and not np.any(omega_r):
         omega_m, omega_de, _ = model.densities(theta)
@@ -116,10 +123,10 @@ def _z_acceleration(model, theta, omega_r):
     return _first_crossing(lambda z, rows: deceleration(model, z, theta[rows], omega_r[rows]), len(theta))
 
 
-def _z_equality(model, theta, omega_r):
+def _z_equality(model: FluidModel, theta: FloatArray, omega_r: FloatArray) -> FloatArray:
     """Redshift at which matter and dark energy were equally dense; NaN where there was none since."""
 
-    def excess(z, rows):
+    def excess(z: FloatArray, rows: IntArray) -> FloatArray:
         omega_m, omega_de, _ = (x[:, None] for x in model.densities(theta[rows], omega_r[rows]))
         return omega_m * (1.0 + z) ** 3 - omega_de * model.dark_energy_growth(z, theta[rows])
 
@@ -131,7 +138,7 @@ def _z_equality(model, theta, omega_r):
     return _first_crossing(excess, len(theta))
 
 
-def _expands_since(model, theta, omega_r, z):
+def _expands_since(model: Model, theta: FloatArray, omega_r: FloatArray, z: FloatArray) -> BoolArray:
     """Whether E² stays positive from z to today, (W,): beyond a bounce there was no such epoch."""
     # A little beyond z too: where E² passes zero q changes sign, and that is no epoch.
     share = np.append(np.linspace(0.0, 1.0, 33), 1.0 + 1e-6)
@@ -143,7 +150,7 @@ def _expands_since(model, theta, omega_r, z):
     return out
 
 
-def _first_crossing(function, n):
+def _first_crossing(function: Callable[[FloatArray, IntArray], FloatArray], n: int) -> FloatArray:
     """Lowest z at which a function (z (M,) or (W, 1), rows) → (W, M), negative at z = 0, turns positive; NaN where it does not."""
     out = np.full(n, np.nan)
     for start in range(0, n, _CHUNK):

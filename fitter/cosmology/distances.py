@@ -13,7 +13,9 @@ References
 from __future__ import annotations
 
 import numpy as np
+from numpy.typing import ArrayLike
 
+from fitter.array_types import BoolArray, FloatArray
 from fitter.constants import C_KM_S, MAG_PER_LN
 from fitter.cosmology.base import Model
 from fitter.cosmology.grid import Grid
@@ -26,7 +28,7 @@ _SERIES_BELOW = 2.0
 _SERIES = 1.0 / np.cumprod([1.0] + [2 * n * (2 * n + 1) for n in range(1, 11)])
 
 
-def curved_ratio(x):
+def curved_ratio(x: FloatArray) -> FloatArray:
     """sinh(√x)/√x for x > 0, sin(√−x)/√−x for x < 0: transverse over line-of-sight distance, x = Ω_k (D_C H0/c)².
 
     One series serves both signs, so no digit is lost as x → 0. NaN stays NaN.
@@ -42,17 +44,19 @@ def curved_ratio(x):
     return ratio
 
 
-def data_term(z, z_helio):
+def data_term(z: FloatArray, z_helio: FloatArray) -> FloatArray:
     """5 log10[z (1 + z_hel)], mag: the part of μ that depends on the data only."""
     return MAG_PER_LN * np.log(z * (1.0 + z_helio))
 
 
-def hubble_term(h0):
+def hubble_term(h0: ArrayLike) -> FloatArray:
     """5 log10(c / H0 / Mpc) + 25, mag, for H0 in km/s/Mpc."""
     return MAG_PER_LN * np.log(C_KM_S / np.asarray(h0, float)) + 25.0
 
 
-def log_distance(model: Model, theta, grid: Grid, omega_r=0.0):
+def log_distance(
+    model: Model, theta: FloatArray, grid: Grid, omega_r: float | FloatArray = 0.0
+) -> tuple[FloatArray, FloatArray, BoolArray]:
     """f at the nodes for W parameter points, with its convergence.
 
     Parameters
@@ -98,5 +102,5 @@ def log_distance(model: Model, theta, grid: Grid, omega_r=0.0):
     return f, tail, inside
 
 
-def _tail(values, grid):
+def _tail(values: FloatArray, grid: Grid) -> FloatArray:
     return np.abs(values @ grid.tail.T).max(axis=1)

@@ -9,6 +9,8 @@ from functools import cached_property
 
 import numpy as np
 
+from fitter.array_types import FloatArray
+
 __all__ = ["Grid"]
 
 N_TAIL = 3  # trailing coefficients that judge convergence; three, since a symmetric function skips every other one
@@ -25,7 +27,7 @@ class Grid:
         K; there are K + 1 nodes, the first at z = 0, the last at z_max.
     """
 
-    def __init__(self, z_max: float, order: int = 32):
+    def __init__(self, z_max: float, order: int = 32) -> None:
         self.z_max, self.order = float(z_max), int(order)
         self.u_max = np.log1p(self.z_max)
         # x runs from −1 to 1; sin keeps the symmetric pairs exact.
@@ -36,7 +38,7 @@ class Grid:
         self.weights[[0, -1]] *= 0.5
 
     @cached_property
-    def to_coefficients(self) -> np.ndarray:
+    def to_coefficients(self) -> FloatArray:
         """(K+1, K+1): node values → Chebyshev coefficients."""
         j = np.arange(self.order + 1)
         # Node j stands at x = cos(π (K − j)/K).
@@ -46,12 +48,12 @@ class Grid:
         return m
 
     @cached_property
-    def tail(self) -> np.ndarray:
+    def tail(self) -> FloatArray:
         """(3, K+1): node values → the last three Chebyshev coefficients."""
         return np.ascontiguousarray(self.to_coefficients[-N_TAIL:])
 
     @cached_property
-    def antiderivative(self) -> np.ndarray:
+    def antiderivative(self) -> FloatArray:
         """(K+1, K+1): g at the nodes → ∫₀ᵘ g du′ at the nodes."""
         k = self.order
         # ∫T_n = T_{n+1}/(2(n+1)) − T_{n−1}/(2(n−1)); the constant makes the integral vanish at u = 0.
@@ -66,7 +68,7 @@ class Grid:
         return 0.5 * self.u_max * (values - at_zero) @ raise_degree @ self.to_coefficients
 
     @cached_property
-    def mean_to_node(self) -> np.ndarray:
+    def mean_to_node(self) -> FloatArray:
         """(K+1, K+1): g at the nodes → (1/z) ∫₀ᵘ g du′, whose limit at z = 0 is g(0)."""
         m = self.antiderivative.copy()
         m[1:] /= self.z[1:, None]
@@ -74,7 +76,7 @@ class Grid:
         m[0, 0] = 1.0
         return m
 
-    def interpolation(self, u) -> np.ndarray:
+    def interpolation(self, u: FloatArray) -> FloatArray:
         """Return the (N, K+1) matrix that takes node values to values at `u`, (N,), by the barycentric formula."""
         x = 2.0 * np.asarray(u, float) / self.u_max - 1.0
         distance = x[:, None] - self.x

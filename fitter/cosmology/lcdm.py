@@ -1,9 +1,12 @@
 """Matter and a cosmological constant."""
 
+from __future__ import annotations
+
 from typing import ClassVar
 
 import numpy as np
 
+from fitter.array_types import FloatArray
 from fitter.cosmology.base import FluidModel, Within, flatness
 from fitter.parameters import PARAMETERS, Parameter
 
@@ -17,10 +20,10 @@ class FlatLCDM(FluidModel):
     parameters: ClassVar[tuple[Parameter, ...]] = (PARAMETERS["omega_m"],)
     curved = False
 
-    def dark_energy_growth(self, z, theta):
+    def dark_energy_growth(self, z: FloatArray, theta: FloatArray) -> float:
         return 1.0
 
-    def equation_of_state(self, z, theta):
+    def equation_of_state(self, z: FloatArray, theta: FloatArray) -> FloatArray:
         return np.full(np.broadcast_shapes((len(theta), 1), np.shape(z)), -1.0)
 
 

@@ -1,9 +1,12 @@
 """Matter and dark energy whose equation of state changes linearly with the scale factor."""
 
+from __future__ import annotations
+
 from typing import ClassVar
 
 import numpy as np
 
+from fitter.array_types import FloatArray
 from fitter.cosmology.base import FluidModel, Within, flatness
 from fitter.parameters import PARAMETERS, Parameter
 
@@ -26,12 +29,12 @@ class FlatW0WA(FluidModel):
     curved = False
     contains: ClassVar[tuple[Within, ...]] = (Within("flat_wcdm", {"w0": "w", "wa": 0.0}),)
 
-    def dark_energy_growth(self, z, theta):
+    def dark_energy_growth(self, z: FloatArray, theta: FloatArray) -> FloatArray:
         z = np.asarray(z, float)
         w0, wa = theta[:, -2:-1], theta[:, -1:]
         return np.exp(3.0 * ((1.0 + w0 + wa) * np.log1p(z) - wa * (z / (1.0 + z))))
 
-    def equation_of_state(self, z, theta):
+    def equation_of_state(self, z: FloatArray, theta: FloatArray) -> FloatArray:
         z = np.asarray(z, float)
         return theta[:, -2:-1] + theta[:, -1:] * (z / (1.0 + z))
 

@@ -1,9 +1,12 @@
 """Matter and dark energy with a constant equation of state."""
 
+from __future__ import annotations
+
 from typing import ClassVar
 
 import numpy as np
 
+from fitter.array_types import FloatArray
 from fitter.cosmology.base import FluidModel, Within, flatness
 from fitter.parameters import PARAMETERS, Parameter
 
@@ -18,10 +21,10 @@ class FlatWCDM(FluidModel):
     curved = False
     contains: ClassVar[tuple[Within, ...]] = (Within("flat_lcdm", {"w": -1.0}),)
 
-    def dark_energy_growth(self, z, theta):
+    def dark_energy_growth(self, z: FloatArray, theta: FloatArray) -> FloatArray:
         return np.exp(3.0 * (1.0 + theta[:, -1:]) * np.log1p(z))
 
-    def equation_of_state(self, z, theta):
+    def equation_of_state(self, z: FloatArray, theta: FloatArray) -> FloatArray:
         return theta[:, -1:] + np.zeros_like(np.asarray(z, float))  # z may be (M,) or (W, 1)
 
 

@@ -9,11 +9,14 @@ from __future__ import annotations
 
 import json
 import os
+from collections.abc import Callable, Iterable
 from dataclasses import dataclass, replace
 from pathlib import Path
+from typing import IO
 
 import numpy as np
 
+from fitter.array_types import FloatArray
 from fitter.errors import InputError
 
 __all__ = ["Checkpoint", "Chunk", "remove_checkpoint", "veiled", "write_atomically"]
@@ -40,8 +43,8 @@ class Chunk:
     """
 
     start: int
-    chain: np.ndarray
-    log_posterior: np.ndarray
+    chain: FloatArray
+    log_posterior: FloatArray
     accepted: int
     random_state: tuple
     counts: dict[str, int]
@@ -72,7 +75,7 @@ class Checkpoint:
         If there is a checkpoint that may not be continued, naming what differs; or if nothing can be written there.
     """
 
-    def __init__(self, folder, about: dict, *, resume: bool, veil: bytes = b""):
+    def __init__(self, folder: Path, about: dict, *, resume: bool, veil: bytes = b"") -> None:
         self.folder = Path(folder) / "checkpoint"
         self._veil = veil
         self.about = json.loads(json.dumps({"format": _FORMAT, **about}))
@@ -83,7 +86,7 @@ class Checkpoint:
             _writable(lambda: self.folder.mkdir(parents=True, exist_ok=True), self.folder)
             write_atomically(path, lambda f: f.write(json.dumps(self.about, indent=1).encode()))
 
-    def _compare(self, path, resume):
+    def _compare(self, path: Path, resume: bool) -> None:
         if not resume:
             raise InputError(
                 "an unfinished run is stored here", file=self.folder, cure="Continue it with --resume, or start anew with --replace"
@@ -131,7 +134,7 @@ class Checkpoint:
         return chunks
 
 
-def veiled(values, key: bytes) -> np.ndarray:
+def veiled(values: FloatArray, key: bytes) -> FloatArray:
     """Return an array of the same shape with its bits turned by a stream from the key; twice gives it back."""
     if not key:
         return values
@@ -140,7 +143,7 @@ def veiled(values, key: bytes) -> np.ndarray:
     return (bits ^ stream.integers(0, 2**64, size=bits.shape, dtype=np.uint64)).view(float)
 
 
-def _read_chunk(path):
+def _read_chunk(path: Path) -> Chunk:
     import zipfile
 
     try:
@@ -153,7 +156,7 @@ def _read_chunk(path):
         raise InputError(f"a chunk of the chain cannot be read: {error}", file=path, cure="Start anew with --replace") from error
 
 
-def add_counts(counts) -> dict[str, int]:
+def add_counts(counts: Iterable[dict[str, int]]) -> dict[str, int]:
     """Sum dicts of numbers key by key."""
     total: dict[str, int] = {}
     for one in counts:
@@ -162,7 +165,7 @@ def add_counts(counts) -> dict[str, int]:
     return total
 
 
-def write_atomically(path, write) -> None:
+def write_atomically(path: Path, write: Callable[[IO[bytes]], object]) -> None:
     """Write a file whole or not at all.
 
     Parameters
@@ -179,7 +182,7 @@ def write_atomically(path, write) -> None:
     path = Path(path)
     temporary = path.with_name(f".{path.name}.{os.getpid()}.partial")
 
-    def work():
+    def work() -> None:
         try:
             with open(temporary, "wb") as f:
                 write(f)
@@ -192,7 +195,7 @@ def write_atomically(path, write) -> None:
     _writable(work, path)
 
 
-def _writable(action, path):
+def _writable(action: Callable[[], object], path: Path) -> None:
     try:
         action()
     except OSError as error:
@@ -203,7 +206,7 @@ def _writable(action, path):
         ) from error
 
 
-def remove_checkpoint(folder) -> None:
+def remove_checkpoint(folder: Path) -> None:
     """Remove the checkpoint of a run folder once its chain is stored elsewhere; other files in it stay."""
     folder = Path(folder) / "checkpoint"
     if not folder.is_dir():

@@ -7,6 +7,7 @@ from math import ceil, isfinite, nan
 
 import numpy as np
 
+from fitter.array_types import FloatArray
 from fitter.inference.diagnostics import autocorrelation_time, ess_bulk, ess_sd, ess_tail, split_rhat
 
 __all__ = ["FIRST_STEPS", "Status", "assess", "next_length"]
@@ -54,7 +55,7 @@ class Status:
         return float(np.min([*self.bulk.values(), *self.tail.values(), *(v / SPREAD_SHARE for v in self.spread.values())]))
 
 
-def assess(chain, names, target_ess: float) -> Status:
+def assess(chain: FloatArray, names: tuple[str, ...], target_ess: float) -> Status:
     """Judge a chain.
 
     Burn-in is ten autocorrelation times, at most half of the chain; τ is first measured in the second half, then in
@@ -88,7 +89,7 @@ def assess(chain, names, target_ess: float) -> Status:
     return replace(status, lacking=_lacking(status, target_ess))
 
 
-def _lacking(status, target_ess):
+def _lacking(status: Status, target_ess: float) -> tuple[str, ...]:
     out = []
     length = status.steps - status.burn_in
     for name, tau in status.tau.items():

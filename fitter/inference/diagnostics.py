@@ -18,6 +18,8 @@ from __future__ import annotations
 
 import numpy as np
 
+from fitter.array_types import FloatArray
+
 __all__ = [
     "autocorrelation_time",
     "ess_bulk",
@@ -32,7 +34,7 @@ __all__ = [
 ]
 
 
-def autocorrelation_time(x, window: float = 5.0) -> float:
+def autocorrelation_time(x: FloatArray, window: float = 5.0) -> float:
     """Integrated autocorrelation time in steps, averaged over all walkers of all replicas.
 
     Parameters
@@ -59,7 +61,7 @@ def autocorrelation_time(x, window: float = 5.0) -> float:
     return float(taus[np.argmax(beyond)] if beyond.any() else taus[-1])
 
 
-def split_rhat(x) -> float:
+def split_rhat(x: FloatArray) -> float:
     """Rank-normalised split R-hat across replicas, the larger of bulk and folded.
 
     Parameters
@@ -76,28 +78,28 @@ def split_rhat(x) -> float:
     return max(_rhat(rank_normalised(x)), _rhat(rank_normalised(folded)))
 
 
-def ess_bulk(x) -> float:
+def ess_bulk(x: FloatArray) -> float:
     """Effective sample size for the middle of the distribution, from rank-normalised draws, (R, S, W)."""
     return _ess(rank_normalised(x))
 
 
-def ess_mean(x) -> float:
+def ess_mean(x: FloatArray) -> float:
     """Effective sample size for the mean of the draws as they are, (R, S, W)."""
     return _ess(np.asarray(x, dtype=float))
 
 
-def ess_quantile(x, p: float) -> float:
+def ess_quantile(x: FloatArray, p: float) -> float:
     """Effective sample size for the quantile of probability `p` of the draws, (R, S, W)."""
     x = np.asarray(x, dtype=float)
     return _ess((x <= np.quantile(x, p)).astype(float))
 
 
-def ess_tail(x) -> float:
+def ess_tail(x: FloatArray) -> float:
     """The smaller of the effective sample sizes for the 5 % and 95 % quantiles of the draws, (R, S, W)."""
     return min(ess_quantile(x, 0.05), ess_quantile(x, 0.95))
 
 
-def ess_sd(x) -> float:
+def ess_sd(x: FloatArray) -> float:
     """Effective sample size for the standard deviation of the draws, (R, S, W).
 
     The number of independent Gaussian draws that would tell it as well: N with relative error 1/√(2N). It falls where a
@@ -108,13 +110,13 @@ def ess_sd(x) -> float:
     return float(2 * square.mean() ** 2 * _ess(square) / spread) if spread > 0 else float("nan")
 
 
-def mcse_mean(x) -> float:
+def mcse_mean(x: FloatArray) -> float:
     """Monte Carlo standard error of the mean of the draws, (R, S, W)."""
     x = np.asarray(x, dtype=float)
     return float(x.std() / np.sqrt(ess_mean(x)))
 
 
-def mcse_quantile(x, p: float) -> float:
+def mcse_quantile(x: FloatArray, p: float) -> float:
     """Monte Carlo standard error of the quantile of probability `p` of the draws, (R, S, W).
 
     Half the distance between the sample quantiles at the ±1σ points of the beta distribution of the order statistic.
@@ -128,7 +130,7 @@ def mcse_quantile(x, p: float) -> float:
     return float((b - a) / 2)
 
 
-def rank_normalised(x):
+def rank_normalised(x: FloatArray) -> FloatArray:
     """Replace draws by the normal scores of their ranks among all draws; ties share the mean rank. Shape kept."""
     from scipy.special import ndtri
 
@@ -138,19 +140,19 @@ def rank_normalised(x):
     return ndtri((rank - 0.375) / (x.size + 0.25))[inverse].reshape(x.shape)
 
 
-def _as_chains(x):
+def _as_chains(x: FloatArray) -> FloatArray:
     """(R, S, W) → (R·W, S)."""
     x = np.asarray(x, dtype=float)
     return np.ascontiguousarray(x.transpose(0, 2, 1)).reshape(-1, x.shape[1])
 
 
-def _halves(x):
+def _halves(x: FloatArray) -> FloatArray:
     """(R, S, …) → (2R, S // 2, …): each replica's first and last half."""
     half = x.shape[1] // 2
     return np.concatenate([x[:, :half], x[:, x.shape[1] - half :]])
 
 
-def _rhat(z):
+def _rhat(z: FloatArray) -> float:
     parts = _halves(z)
     parts = parts.reshape(len(parts), -1)
     n = parts.shape[1]
@@ -161,7 +163,7 @@ def _rhat(z):
     return float(np.sqrt((n - 1) / n + between / within))
 
 
-def _ess(z):
+def _ess(z: FloatArray) -> float:
     """The smaller of the two estimates of the module's head."""
     total = z.var()
     if total == 0 or z.shape[1] < 8:
@@ -173,7 +175,7 @@ def _ess(z):
     return float(min(walkers, ensemble, z.size * np.log10(z.size)))
 
 
-def _variance_plus(chains):
+def _variance_plus(chains: FloatArray) -> float:
     """Vehtari et al.'s estimate of the marginal variance of (M, N) chains."""
     n = chains.shape[1]
     within = chains.var(axis=1, ddof=1).mean()
@@ -181,7 +183,7 @@ def _variance_plus(chains):
     return within * (n - 1) / n + between
 
 
-def _ess_of_chains(chains):
+def _ess_of_chains(chains: FloatArray) -> float:
     """Effective sample size of independent (M, N) chains: eqs. 10–11 with Geyer's initial monotone sequence."""
     m, n = chains.shape
     acov = _autocovariance(chains).mean(axis=0) * n / (n - 1)
@@ -195,7 +197,7 @@ def _ess_of_chains(chains):
     return m * n / tau
 
 
-def _autocovariance(chains, block: int = 256):
+def _autocovariance(chains: FloatArray, block: int = 256) -> FloatArray:
     """Autocovariance at every lag of (M, N) chains, normalised by N, by Fourier transform in blocks of chains."""
     from scipy.fft import irfft, next_fast_len, rfft
 

@@ -11,10 +11,17 @@ References
 from __future__ import annotations
 
 from dataclasses import dataclass
+from typing import TYPE_CHECKING
 
 import numpy as np
+from numpy.typing import ArrayLike
 
+from fitter.array_types import FloatArray
 from fitter.inference.mixture import fit_mixture
+from fitter.inference.target import Target
+
+if TYPE_CHECKING:
+    from fitter.inference.posterior import Posterior
 
 __all__ = ["KOLMOGOROV", "WeightedPosterior", "importance"]
 
@@ -43,8 +50,8 @@ class WeightedPosterior:
     log_evidence_error: float
     evaluations: int
     effective: float
-    _draws: np.ndarray  # (M, d)
-    _weights: np.ndarray  # (M,), sum 1
+    _draws: FloatArray  # (M, d)
+    _weights: FloatArray  # (M,), sum 1
     method = "importance sampling from a fitted mixture"
 
     @property
@@ -52,7 +59,7 @@ class WeightedPosterior:
         """Error of `cdf` that chance exceeds once in 10,000 times."""
         return KOLMOGOROV / np.sqrt(self.effective)
 
-    def cdf(self, name: str, x) -> np.ndarray:
+    def cdf(self, name: str, x: ArrayLike) -> FloatArray:
         """Marginal cumulative distribution at x, (M,)."""
         values = self._draws[:, self.names.index(name)]
         order = np.argsort(values)
@@ -60,7 +67,7 @@ class WeightedPosterior:
         return below[np.searchsorted(values[order], np.atleast_1d(x), side="right")]
 
 
-def importance(log_posterior, posterior, *, seed: np.random.SeedSequence, draws: int = 131_072) -> WeightedPosterior:
+def importance(log_posterior: Target, posterior: Posterior, *, seed: np.random.SeedSequence, draws: int = 131_072) -> WeightedPosterior:
     """Weight independent draws from a mixture fitted to the chain.
 
     Parameters

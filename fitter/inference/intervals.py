@@ -7,6 +7,8 @@ from dataclasses import dataclass
 
 import numpy as np
 
+from fitter.array_types import FloatArray
+
 __all__ = ["INTERVALS", "SHARES", "Interval", "equal_tailed", "highest_density", "interval_words", "one_sided"]
 
 #: Posterior probability in the intervals of a summary, by the names of their ends.
@@ -38,12 +40,12 @@ class Interval:
         return f"{100 * self.share:.3g} % {self.kind}"
 
 
-def _finite(draws):
+def _finite(draws: FloatArray) -> FloatArray:
     draws = np.asarray(draws, dtype=float).ravel()
     return draws[np.isfinite(draws)]
 
 
-def equal_tailed(draws, share: float = 0.6827) -> Interval:
+def equal_tailed(draws: FloatArray, share: float = 0.6827) -> Interval:
     """Interval with the same probability below as above it.
 
     Parameters
@@ -60,7 +62,7 @@ def equal_tailed(draws, share: float = 0.6827) -> Interval:
     return Interval(float(low), float(high), share, "equal-tailed")
 
 
-def highest_density(draws, share: float = 0.6827) -> Interval:
+def highest_density(draws: FloatArray, share: float = 0.6827) -> Interval:
     """Shortest interval that holds `share` of the draws; for one peak the interval of highest density.
 
     Parameters
@@ -79,7 +81,7 @@ def highest_density(draws, share: float = 0.6827) -> Interval:
     return Interval(float(x[first]), float(x[first + held - 1]), share, "highest-density")
 
 
-def one_sided(draws, share: float = 0.95, *, side: str) -> Interval:
+def one_sided(draws: FloatArray, share: float = 0.95, *, side: str) -> Interval:
     """Limit with `share` of the posterior on one side.
 
     Parameters

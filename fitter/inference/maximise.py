@@ -2,7 +2,17 @@
 
 from __future__ import annotations
 
+from collections.abc import Callable
+from typing import TYPE_CHECKING
+
 import numpy as np
+
+from fitter.array_types import BoolArray, FloatArray
+
+if TYPE_CHECKING:
+    pass
+
+Density = Callable[[FloatArray], FloatArray]
 
 __all__ = ["maximise", "quadratic_model"]
 
@@ -12,7 +22,14 @@ _DAMPING = np.concatenate([[0.0], np.logspace(-4, 5, 14)])
 _WIDTHS = ((0.3, 1e-3, 100), (0.02, 1e-11, 150))
 
 
-def maximise(function, starts, scale, low, high, free=None):
+def maximise(
+    function: Density,
+    starts: FloatArray,
+    scale: FloatArray,
+    low: FloatArray,
+    high: FloatArray,
+    free: BoolArray | None = None,
+) -> tuple[FloatArray, FloatArray]:
     """Climb from every start to a local maximum, all starts in the same function calls.
 
     Each iteration fits a quadratic model by finite differences, then tries Newton steps with a range
@@ -56,7 +73,17 @@ def maximise(function, starts, scale, low, high, free=None):
     return x, values
 
 
-def _iterate(function, x, values, h, low, high, free, width, turn):
+def _iterate(
+    function: Density,
+    x: FloatArray,
+    values: FloatArray,
+    h: FloatArray,
+    low: FloatArray,
+    high: FloatArray,
+    free: BoolArray,
+    width: float,
+    turn: int,
+) -> tuple[FloatArray, FloatArray, FloatArray, BoolArray]:
     """One stencil and one set of damped steps for every problem; returns points, values, new stencil widths, stencil finite."""
     centre, stencil, f, gradient, curvature, good = _stencil(function, x, h, low, high, free)
     gradient, curvature = gradient * h, curvature * h[:, :, None] * h[:, None, :]
@@ -84,7 +111,7 @@ def _iterate(function, x, values, h, low, high, free, width, turn):
     return points[rows, pick], scores[rows, pick], h * factor, good
 
 
-def _damped_steps(gradient, curvature):
+def _damped_steps(gradient: FloatArray, curvature: FloatArray) -> FloatArray:
     """(B, n) gradient, (B, n, n) negative Hessian → (B, L, n) Newton steps, negative curvature turned positive."""
     w, v = np.linalg.eigh(curvature)
     w = np.abs(w)
@@ -95,13 +122,15 @@ def _damped_steps(gradient, curvature):
     return np.einsum("bij,blj->bli", v, np.nan_to_num(damped, posinf=0.0, neginf=0.0))
 
 
-def _chance_steps(x, h, low, high, turn):
+def _chance_steps(x: FloatArray, h: FloatArray, low: FloatArray, high: FloatArray, turn: int) -> FloatArray:
     """Steps of about `h` in directions that change from turn to turn, always the same ones in the same turn."""
     directions = np.random.default_rng(turn).standard_normal((len(_DAMPING), x.shape[1]))
     return np.clip(x[:, None, :] + directions * h[:, None, :], low, high)
 
 
-def quadratic_model(function, x, h, low, high):
+def quadratic_model(
+    function: Density, x: FloatArray, h: FloatArray, low: FloatArray, high: FloatArray
+) -> tuple[FloatArray, FloatArray, bool]:
     """Gradient and negative Hessian near one point by finite differences.
 
     Within `h` of a bound the stencil is shifted inwards, which makes the differences one-sided.
@@ -126,7 +155,9 @@ def quadratic_model(function, x, h, low, high):
     return gradient[0], curvature[0], bool(good[0])
 
 
-def _stencil(function, x, h, low, high, free):
+def _stencil(
+    function: Density, x: FloatArray, h: FloatArray, low: FloatArray, high: FloatArray, free: BoolArray
+) -> tuple[FloatArray, FloatArray, FloatArray, FloatArray, FloatArray, BoolArray]:
     """Second-order central differences, the centre kept `h` inside the bounds."""
     n = x.shape[1]
     h = np.where(free, h, 0.0)
@@ -134,7 +165,7 @@ def _stencil(function, x, h, low, high, free):
     offsets, pairs = _offsets(n)
     points = centre[:, None, :] + offsets[None] * h[:, None, :]
     f = np.asarray(function(points.reshape(-1, n)), dtype=float).reshape(points.shape[:2])
-    good = np.isfinite(f).all(axis=1)
+    good: BoolArray = np.isfinite(f).all(axis=1)
     g = np.where(good[:, None], f, 0.0)
     middle, plus, minus = g[:, :1], g[:, 1 : n + 1], g[:, n + 1 : 2 * n + 1]
     safe = np.where(free, h, 1.0)
@@ -150,7 +181,7 @@ def _stencil(function, x, h, low, high, free):
     return centre, points, f, gradient, curvature, good
 
 
-def _offsets(n):
+def _offsets(n: int) -> tuple[FloatArray, list[tuple[int, int]]]:
     """Unit offsets of the stencil: centre, +e_i, −e_i, then ±(e_a + e_b) for every pair."""
     unit = np.eye(n)
     pairs = [(a, b) for a in range(n) for b in range(a)]

@@ -6,6 +6,9 @@ from dataclasses import dataclass
 from math import lgamma, log, pi
 
 import numpy as np
+from numpy.typing import ArrayLike
+
+from fitter.array_types import FloatArray, IntArray
 
 __all__ = ["StudentMixture", "blend", "fit_mixture"]
 
@@ -26,19 +29,25 @@ class StudentMixture:
         Degrees of freedom.
     """
 
-    weights: np.ndarray
-    means: np.ndarray
-    factors: np.ndarray
-    inverses: np.ndarray
+    weights: FloatArray
+    means: FloatArray
+    factors: FloatArray
+    inverses: FloatArray
     nu: float
 
-    def log_density(self, x):
+    @classmethod
+    def of_factors(cls, weights: FloatArray, means: FloatArray, factors: ArrayLike, nu: float) -> StudentMixture:
+        """Make a mixture of its Cholesky factors, which are inverted here."""
+        lower = np.asarray(factors, np.float64)
+        return cls(weights, means, lower, np.asarray(np.linalg.inv(lower), np.float64), nu)
+
+    def log_density(self, x: FloatArray) -> FloatArray:
         """Return the ln density, (M,), at the points `x`, (M, d)."""
         joint, _ = self._joint(x)
         top = joint.max(axis=0)
         return top + np.log(np.exp(joint - top).sum(axis=0))
 
-    def draw(self, random, size):
+    def draw(self, random: np.random.Generator | np.random.RandomState, size: int) -> FloatArray:
         """Return `size` independent draws, (size, d).
 
         Parameters
@@ -51,7 +60,7 @@ class StudentMixture:
         z = random.normal(size=(size, d)) * np.sqrt(self.nu / random.chisquare(self.nu, size=(size, 1)))
         return self.means[which] + (self.factors[which] @ z[:, :, None])[:, :, 0]
 
-    def _joint(self, x):
+    def _joint(self, x: FloatArray) -> tuple[FloatArray, FloatArray]:
         """ln(weight × density) of every component, (K, M), and squared distances, (K, M)."""
         d = x.shape[1]
         white = (x - self.means[:, None, :]) @ self.inverses.transpose(0, 2, 1)
@@ -74,7 +83,14 @@ def blend(first: StudentMixture, second: StudentMixture, share: float) -> Studen
 
 
 def fit_mixture(
-    points, components: int, *, nu: float = 5.0, iterations: int = 3, broad: float = 0.0, ridge: float = 0.003, bisect: bool = False
+    points: FloatArray,
+    components: int,
+    *,
+    nu: float = 5.0,
+    iterations: int = 3,
+    broad: float = 0.0,
+    ridge: float = 0.003,
+    bisect: bool = False,
 ) -> StudentMixture:
     """Fit a mixture by expectation–maximisation from a fixed start.
 
@@ -132,14 +148,14 @@ def fit_mixture(
     return StudentMixture(fitted.weights, centre + fitted.means * scale, fitted.factors * grow, fitted.inverses / grow.T, nu)
 
 
-def _slices(y, components, whole):
+def _slices(y: FloatArray, components: int, whole: FloatArray) -> IntArray:
     """Part of every point: slices of equal count along the longest axis."""
     axis = np.linalg.eigh(whole)[1][:, -1]
     rank = np.argsort(np.argsort(y @ axis, kind="stable"), kind="stable")
     return rank * components // len(y)
 
 
-def _bisections(y, components):
+def _bisections(y: FloatArray, components: int) -> IntArray:
     """Part of every point: halves of halves, each cut across its own longest axis."""
     part = np.zeros(len(y), dtype=int)
     for _ in range(int(components).bit_length() - 1):
@@ -153,13 +169,12 @@ def _bisections(y, components):
     return part
 
 
-def _with_broad(fitted, whole, weight):
-    factor = np.linalg.cholesky(whole)[None]
-    broad = StudentMixture(np.ones(1), np.zeros((1, len(whole))), factor, np.linalg.inv(factor), fitted.nu)
+def _with_broad(fitted: StudentMixture, whole: FloatArray, weight: float) -> StudentMixture:
+    broad = StudentMixture.of_factors(np.ones(1), np.zeros((1, len(whole))), np.linalg.cholesky(whole)[None], fitted.nu)
     return blend(fitted, broad, weight)
 
 
-def _maximisation(y, share, pull, floor, nu):
+def _maximisation(y: FloatArray, share: FloatArray, pull: FloatArray, floor: FloatArray, nu: float) -> StudentMixture:
     """Weights, means and scale matrices from responsibilities, (K, M), and Student-t weights, (K, M)."""
     m, d = y.shape
     count = share.sum(axis=1) + 1e-6
@@ -170,4 +185,4 @@ def _maximisation(y, share, pull, floor, nu):
     scatter = (heavy[:, :, None] * from_mean).transpose(0, 2, 1) @ from_mean / count[:, None, None]
     factors = np.linalg.cholesky(scatter + floor)
     weights = (count + 0.01 * m) / (count + 0.01 * m).sum()
-    return StudentMixture(weights, means, factors, np.linalg.inv(factors), nu)
+    return StudentMixture.of_factors(weights, means, factors, nu)

@@ -2,11 +2,20 @@
 
 from __future__ import annotations
 
+from typing import TYPE_CHECKING, Any
+
 import numpy as np
 from emcee.moves import MHMove, RedBlueMove, StretchMove
 from emcee.state import State
 
+from fitter.array_types import BoolArray, FloatArray
 from fitter.inference.mixture import fit_mixture
+
+if TYPE_CHECKING:
+    from emcee.model import Model as EmceeModel
+
+    from fitter.inference.mixture import StudentMixture
+
 
 __all__ = ["DifferenceMove", "MixtureMove", "PilotMove", "ensemble_moves"]
 
@@ -34,11 +43,13 @@ class MixtureMove(RedBlueMove):
     nu = 5.0
     broad = 0.15
 
-    def __init__(self, components: int | None = None, iterations: int = 0):
+    def __init__(self, components: int | None = None, iterations: int = 0) -> None:
         super().__init__(nsplits=2, randomize_split=True)
         self.components, self.iterations = components, iterations
 
-    def get_proposal(self, sample, complement, random):
+    def get_proposal(
+        self, sample: FloatArray, complement: list[FloatArray], random: np.random.RandomState
+    ) -> tuple[FloatArray, FloatArray]:
         """Return proposals, (M, d), for the walkers `sample`, (M, d), and ln[q(old) / q(new)], (M,)."""
         points = np.concatenate(complement, axis=0)
         k = self.components or _components(*points.shape)
@@ -47,7 +58,7 @@ class MixtureMove(RedBlueMove):
         density = mixture.log_density(np.concatenate([sample, proposal]))
         return proposal, density[: len(sample)] - density[len(sample) :]
 
-    def propose(self, model, state):
+    def propose(self, model: EmceeModel, state: Any) -> tuple[Any, BoolArray]:
         """Update both halves in turn; as the parent's, but the acceptance is decided for all walkers at once."""
         half = np.arange(len(state.coords)) % self.nsplits
         model.random.shuffle(half)
@@ -78,11 +89,11 @@ class PilotMove(MHMove):
     mixture : StudentMixture
     """
 
-    def __init__(self, mixture):
+    def __init__(self, mixture: StudentMixture) -> None:
         super().__init__(self._propose)
         self.mixture = mixture
 
-    def _propose(self, positions, random):
+    def _propose(self, positions: FloatArray, random: np.random.RandomState) -> tuple[FloatArray, FloatArray]:
         """Return proposals, (W, d), and ln[q(old) / q(new)], (W,)."""
         proposal = self.mixture.draw(random, len(positions))
         density = self.mixture.log_density(np.concatenate([positions, proposal]))
@@ -99,7 +110,9 @@ class DifferenceMove(RedBlueMove):
 
     shortest = 1e-3
 
-    def get_proposal(self, sample, complement, random):
+    def get_proposal(
+        self, sample: FloatArray, complement: list[FloatArray], random: np.random.RandomState
+    ) -> tuple[FloatArray, FloatArray]:
         """Return proposals, (M, d), for the walkers `sample`, (M, d), and zeros, (M,)."""
         points = np.concatenate(complement, axis=0)
         size, n = len(sample), len(points)
@@ -109,7 +122,7 @@ class DifferenceMove(RedBlueMove):
         return sample + length * (points[first] - points[second]), np.zeros(size)
 
 
-def ensemble_moves(name: str, pilot=None):
+def ensemble_moves(name: str, pilot: StudentMixture | None = None) -> list[tuple[DifferenceMove | MixtureMove | PilotMove, float]]:
     """Return the moves of one step, in the form that emcee's sampler takes.
 
     Parameters

@@ -2,13 +2,19 @@
 
 from __future__ import annotations
 
+from collections.abc import Callable
 from dataclasses import dataclass, field
+from typing import TYPE_CHECKING
 
 import numpy as np
 
+from fitter.array_types import FloatArray
 from fitter.errors import InputError
 from fitter.inference.maximise import maximise, quadratic_model
 from fitter.inference.seeds import child_seed
+
+if TYPE_CHECKING:
+    from fitter.likelihood.posterior import LogPosterior
 
 __all__ = ["Optimum", "find_optimum", "hessian_covariance", "prior_draws"]
 
@@ -38,22 +44,22 @@ class Optimum:
         Parameters whose best value is a bound of the prior.
     """
 
-    theta: np.ndarray
+    theta: FloatArray
     log_posterior: float
     chi2: float
-    covariance: np.ndarray
+    covariance: FloatArray
     values: dict[str, float]
     starts: int = 1
     agreeing: int = 1
     at_edge: tuple[str, ...] = field(default=())
 
     @property
-    def errors(self) -> np.ndarray:
+    def errors(self) -> FloatArray:
         """(n,) standard deviations from the Hessian."""
         return np.sqrt(np.diag(self.covariance))
 
 
-def find_optimum(log_posterior, seed: np.random.SeedSequence) -> Optimum:
+def find_optimum(log_posterior: LogPosterior, seed: np.random.SeedSequence) -> Optimum:
     """Maximise the posterior density.
 
     Prior draws are screened in one call; local climbs start from the best of them and from good ones far
@@ -104,7 +110,7 @@ def find_optimum(log_posterior, seed: np.random.SeedSequence) -> Optimum:
     )
 
 
-def prior_draws(log_posterior, rng, size):
+def prior_draws(log_posterior: LogPosterior, rng: np.random.Generator, size: int) -> tuple[FloatArray, FloatArray]:
     """Draw from the prior until at least a few draws have a finite posterior density.
 
     Parameters
@@ -144,7 +150,7 @@ def prior_draws(log_posterior, rng, size):
     return np.concatenate(kept), np.concatenate(heights)
 
 
-def _choose_starts(draws, values):
+def _choose_starts(draws: FloatArray, values: FloatArray) -> tuple[FloatArray, FloatArray]:
     """The best draw, then draws of the best twentieth as far as possible from those already chosen."""
     order = np.argsort(-values, kind="stable")
     top = order[: max(_STARTS, len(order) // 20)]
@@ -160,7 +166,9 @@ def _choose_starts(draws, values):
     return draws[top[chosen]], np.where(scale > 0, scale, spread)
 
 
-def hessian_covariance(function, theta, width, low, high):
+def hessian_covariance(
+    function: Callable[[FloatArray], FloatArray], theta: FloatArray, width: FloatArray, low: FloatArray, high: FloatArray
+) -> FloatArray:
     """Covariance from the curvature at `theta`.
 
     The stencil is scaled to about half a conditional standard deviation, shifted inwards at a bound, and

@@ -3,11 +3,17 @@
 from __future__ import annotations
 
 from functools import partial
+from typing import TYPE_CHECKING
 
 import numpy as np
 
+from fitter.array_types import FloatArray
 from fitter.inference.mixture import StudentMixture, blend, fit_mixture
 from fitter.inference.optimum import prior_draws
+
+if TYPE_CHECKING:
+    from fitter.inference.optimum import Optimum
+    from fitter.likelihood.posterior import LogPosterior
 
 __all__ = ["pilot_mixture"]
 
@@ -25,7 +31,7 @@ _TAIL_SHARE = 0.3
 _FEWEST = 300
 
 
-def pilot_mixture(log_posterior, optimum, seed: np.random.SeedSequence) -> StudentMixture:
+def pilot_mixture(log_posterior: LogPosterior, optimum: Optimum, seed: np.random.SeedSequence) -> StudentMixture:
     """Fit a Student-t mixture to a flattened posterior by repeated importance sampling.
 
     The first draws come from the prior and from a wide Student-t around the optimum; each round weights its draws by
@@ -66,12 +72,11 @@ def pilot_mixture(log_posterior, optimum, seed: np.random.SeedSequence) -> Stude
     return _around(optimum) if mixture is None else mixture
 
 
-def _around(optimum):
-    factor = 2 * np.linalg.cholesky(optimum.covariance)[None]
-    return StudentMixture(np.ones(1), optimum.theta[None], factor, np.linalg.inv(factor), 5.0)
+def _around(optimum: Optimum) -> StudentMixture:
+    return StudentMixture.of_factors(np.ones(1), optimum.theta[None], 2 * np.linalg.cholesky(optimum.covariance)[None], 5.0)
 
 
-def _first_draws(log_posterior, optimum, size, rng):
+def _first_draws(log_posterior: LogPosterior, optimum: Optimum, size: int, rng: np.random.Generator) -> tuple[FloatArray, FloatArray]:
     """Possible points of the prior and draws around the optimum, with the ln density of the two together."""
     spread, _ = prior_draws(log_posterior, rng, size)
     local = _around(optimum)
@@ -82,12 +87,12 @@ def _first_draws(log_posterior, optimum, size, rng):
     return points, log_q
 
 
-def _efficiency(log_w):
+def _efficiency(log_w: FloatArray) -> float:
     w = np.exp(log_w - log_w.max())
     return w.sum() ** 2 / (w**2).sum() / len(w)
 
 
-def _weights(values, log_q, power):
+def _weights(values: FloatArray, log_q: FloatArray, power: float) -> FloatArray:
     """density^β / q, normalised, with the largest β up to `power` that leaves enough effective draws."""
     while True:
         log_w = power * values - log_q
@@ -98,7 +103,7 @@ def _weights(values, log_q, power):
         power *= 0.7
 
 
-def _resample(points, weights, size, rng):
+def _resample(points: FloatArray, weights: FloatArray, size: int, rng: np.random.Generator) -> FloatArray:
     """Systematic resampling to `size` points of equal weight."""
     ladder = (np.arange(size) + rng.random()) / size
     return points[np.minimum(np.searchsorted(np.cumsum(weights), ladder), len(points) - 1)]

@@ -4,8 +4,7 @@ from __future__ import annotations
 
 from dataclasses import dataclass
 
-import numpy as np
-
+from fitter.array_types import FloatArray
 from fitter.inference.intervals import INTERVALS, SHARES, Interval
 
 __all__ = ["Posterior"]
@@ -35,9 +34,9 @@ class Posterior:
     """
 
     names: tuple[str, ...]
-    chain: np.ndarray
-    log_posterior: np.ndarray
-    extra: dict[str, np.ndarray]
+    chain: FloatArray
+    log_posterior: FloatArray
+    extra: dict[str, FloatArray]
     kinds: dict[str, str]
     sampling: dict
     intervals: str = "equal_tailed"
@@ -52,7 +51,7 @@ class Posterior:
         """
         return INTERVALS[self.intervals](self.draws(name), share)
 
-    def draws(self, name: str) -> np.ndarray:
+    def draws(self, name: str) -> FloatArray:
         """Return the draws of one parameter.
 
         Parameters

@@ -3,10 +3,17 @@
 from __future__ import annotations
 
 from dataclasses import dataclass
+from typing import TYPE_CHECKING
 
 import numpy as np
+from numpy.typing import ArrayLike
 
+from fitter.array_types import BoolArray, FloatArray, IntArray
 from fitter.inference.maximise import maximise
+
+if TYPE_CHECKING:
+    from fitter.inference.optimum import Optimum
+    from fitter.likelihood.posterior import LogPosterior
 
 __all__ = ["ProfileInterval", "profile_intervals", "profile_likelihood"]
 
@@ -41,7 +48,7 @@ class ProfileInterval:
     high_at_edge: bool
 
 
-def profile_likelihood(log_posterior, optimum, name: str, values):
+def profile_likelihood(log_posterior: LogPosterior, optimum: Optimum, name: str, values: ArrayLike) -> FloatArray:
     """−2 ln L, minimised over the other parameters, at fixed values of one.
 
     Parameters
@@ -61,11 +68,13 @@ def profile_likelihood(log_posterior, optimum, name: str, values):
     """
     profile = _Profile(log_posterior, optimum)
     i = log_posterior.names.index(name)
-    values = np.asarray(values, dtype=float)
-    return profile.at(np.full(len(values), i), values)[1]
+    at = np.asarray(values, dtype=float)
+    return profile.at(np.full(len(at), i), at)[1]
 
 
-def profile_intervals(log_posterior, optimum, deltas=(1.0, 4.0)) -> tuple[ProfileInterval, ...]:
+def profile_intervals(
+    log_posterior: LogPosterior, optimum: Optimum, deltas: tuple[float, float] = (1.0, 4.0)
+) -> tuple[ProfileInterval, ...]:
     """Profile-likelihood intervals of every sampled parameter.
 
     The prior only gives the bounds: the likelihood is profiled, not the posterior.
@@ -100,7 +109,7 @@ def profile_intervals(log_posterior, optimum, deltas=(1.0, 4.0)) -> tuple[Profil
 class _Profile:
     """Constrained maxima of the likelihood, many at a time, started from the nearest ones already known."""
 
-    def __init__(self, log_posterior, optimum):
+    def __init__(self, log_posterior: LogPosterior, optimum: Optimum) -> None:
         self.low = np.array([p.low for p in log_posterior.priors], dtype=float)
         self.high = np.array([p.high for p in log_posterior.priors], dtype=float)
         self.function = _InsidePrior(log_posterior, self.low, self.high)
@@ -110,7 +119,7 @@ class _Profile:
         self.best, self.height = best[0], float(height[0])
         self.known = self.best[None]
 
-    def at(self, index, values):
+    def at(self, index: IntArray, values: FloatArray) -> tuple[FloatArray, FloatArray]:
         """Maximise with parameter ``index[k]`` held at ``values[k]``: points (V, n) and −2 ln L (V,)."""
         rows = np.arange(len(values))
         starts = self._starts(index, values)
@@ -128,7 +137,7 @@ class _Profile:
                 self.height, self.best = float(value.max()), points[int(np.argmax(value))]
         return points, -2 * value
 
-    def _starts(self, index, values):
+    def _starts(self, index: IntArray, values: FloatArray) -> FloatArray:
         """For each value: the known points nearest to it, and the Gaussian ridge from the best one."""
         n = len(self.best)
         starts = []
@@ -145,10 +154,10 @@ class _Profile:
 class _InsidePrior:
     """ln likelihood, −inf where the prior is zero."""
 
-    def __init__(self, log_posterior, low, high):
+    def __init__(self, log_posterior: LogPosterior, low: FloatArray, high: FloatArray) -> None:
         self.log_posterior, self.low, self.high = log_posterior, low, high
 
-    def __call__(self, theta):
+    def __call__(self, theta: FloatArray) -> FloatArray:
         value = np.full(len(theta), -np.inf)
         inside = np.isfinite(self.log_posterior.log_prior(theta))
         if inside.any():
@@ -159,7 +168,7 @@ class _InsidePrior:
 class _Bracket:
     """The end of every interval of `sides`, (index, Δ, −1 or 1), between a value inside and one outside."""
 
-    def __init__(self, profile, sides):
+    def __init__(self, profile: _Profile, sides: list[tuple[int, float, int]]) -> None:
         self.profile = profile
         self.index = np.array([s[0] for s in sides])
         self.delta = np.array([s[1] for s in sides], dtype=float)
@@ -174,7 +183,7 @@ class _Bracket:
         self.active = ~self.at_edge
         self.doubted = np.zeros(len(sides), dtype=int)
 
-    def trial(self, k, turn):
+    def trial(self, k: IntArray, turn: int) -> FloatArray:
         """Next values to try: outwards until something outside is found, then inside the bracket."""
         outwards = self.inner[k] + self.sign[k] * self.step[k]
         between = _inside(self.inner[k], self.f_inner[k], self.outer[k], self.f_outer[k], self.delta[k], turn)
@@ -182,7 +191,7 @@ class _Bracket:
         self.step[k] *= 1.6
         return np.where(self.sign[k] < 0, np.maximum(trial, self.bound[k]), np.minimum(trial, self.bound[k]))
 
-    def take(self, k, trial, f):
+    def take(self, k: IntArray, trial: FloatArray, f: FloatArray) -> None:
         """Narrow the brackets by Δχ² − Δ at the trial values."""
         outside = f > 0
         self.outer[k[outside]], self.f_outer[k[outside]] = trial[outside], f[outside]
@@ -197,7 +206,7 @@ class _Bracket:
         self.active[k] = ~(done | self.at_edge[k] | np.isinf(self.inner[k]))
         self._doubt(k)
 
-    def _doubt(self, k):
+    def _doubt(self, k: IntArray) -> None:
         """A jump in the profile may be a minimisation that failed: look outwards again, a few times, before believing it."""
         shut = k[self.active[k] & (np.abs(self.outer[k] - self.inner[k]) < 1e-5 * self.scale[k])]
         self.doubted[shut] += 1
@@ -207,7 +216,7 @@ class _Bracket:
         self.active[shut[self.doubted[shut] > 5]] = False
 
 
-def _crossings(profile, sides, turns: int = 200):
+def _crossings(profile: _Profile, sides: list[tuple[int, float, int]], turns: int = 200) -> tuple[FloatArray, BoolArray]:
     """Ends of the intervals, and whether each is a bound of the prior."""
     bracket = _Bracket(profile, sides)
     for turn in range(turns):
@@ -220,7 +229,7 @@ def _crossings(profile, sides, turns: int = 200):
     return bracket.inner, bracket.at_edge
 
 
-def _inside(a, fa, b, fb, delta, turn):
+def _inside(a: FloatArray, fa: FloatArray, b: FloatArray, fb: FloatArray, delta: FloatArray, turn: int) -> FloatArray:
     """Next trial in the bracket (a, b): a secant in √Δχ², in which profiles are nearly straight; every third time the middle."""
     root_a, root_b = np.sqrt(np.maximum(fa + delta, 0)), np.sqrt(np.maximum(fb + delta, 0))
     share = np.full(len(a), 0.5)

@@ -4,7 +4,7 @@ from __future__ import annotations
 
 import sys
 from dataclasses import dataclass
-from typing import Protocol
+from typing import Any, Protocol, Self, TextIO
 
 __all__ = ["Progress", "ProgressBar", "ProgressReport", "progress_bar"]
 
@@ -42,7 +42,7 @@ class Progress(Protocol):
 class ProgressBar:
     """A bar on a terminal: steps, τ, effective sample size, time left. Close it at the end."""
 
-    def __init__(self, stream=None):
+    def __init__(self, stream: TextIO | None = None) -> None:
         from tqdm import tqdm
 
         self._bar = tqdm(
@@ -71,10 +71,10 @@ class ProgressBar:
         """Take the bar off the terminal."""
         self._bar.close()
 
-    def __enter__(self):
+    def __enter__(self) -> Self:
         return self
 
-    def __exit__(self, *_):
+    def __exit__(self, *_: Any) -> None:
         self.close()
 
 
@@ -87,14 +87,14 @@ class _Silent:
     def close(self) -> None:
         pass
 
-    def __enter__(self):
+    def __enter__(self) -> _Silent:
         return self
 
-    def __exit__(self, *_):
+    def __exit__(self, *_: Any) -> None:
         pass
 
 
-def progress_bar(quiet: bool = False, stream=None):
+def progress_bar(quiet: bool = False, stream: TextIO | None = None) -> _Silent | ProgressBar:
     """Return a bar, or something silent if `quiet` or if `stream` (default stderr) is no terminal.
 
     Either is a context manager.

@@ -2,12 +2,20 @@
 
 from __future__ import annotations
 
+from collections.abc import Iterator
 from dataclasses import dataclass
+from typing import TYPE_CHECKING, Any
 
 import numpy as np
 
+from fitter.array_types import FloatArray
 from fitter.inference.importance import KOLMOGOROV, WeightedPosterior, importance
 from fitter.inference.quadrature import GridPosterior, integrate
+
+if TYPE_CHECKING:
+    from fitter.inference.optimum import Optimum
+    from fitter.inference.posterior import Posterior
+    from fitter.likelihood.posterior import LogPosterior
 
 __all__ = ["Proof", "cross_check", "prove"]
 
@@ -35,13 +43,15 @@ class Proof:
     weighted : WeightedPosterior
     """
 
-    cross_check: dict
-    evidence: dict
+    cross_check: dict[str, Any]
+    evidence: dict[str, Any]
     grid: GridPosterior | None
     weighted: WeightedPosterior
 
 
-def prove(log_posterior, posterior, optimum, ess: dict[str, float], *, seed: np.random.SeedSequence) -> Proof:
+def prove(
+    log_posterior: LogPosterior, posterior: Posterior, optimum: Optimum, ess: dict[str, float], *, seed: np.random.SeedSequence
+) -> Proof:
     """Check a chain and compute its evidence.
 
     Parameters
@@ -73,7 +83,7 @@ def prove(log_posterior, posterior, optimum, ess: dict[str, float], *, seed: np.
     return Proof(cross_check(best, posterior, ess), evidence, grid, weighted)
 
 
-def cross_check(other: GridPosterior | WeightedPosterior, posterior, ess: dict[str, float]) -> dict:
+def cross_check(other: GridPosterior | WeightedPosterior, posterior: Posterior, ess: dict[str, float]) -> dict[str, Any]:
     """Compare every marginal of a chain with another account of the posterior.
 
     Parameters
@@ -104,7 +114,7 @@ def cross_check(other: GridPosterior | WeightedPosterior, posterior, ess: dict[s
     }
 
 
-def _differences(other, draws, name, ess):
+def _differences(other: GridPosterior | WeightedPosterior, draws: FloatArray, name: str, ess: float) -> Iterator[tuple[float, float]]:
     """Yield pairs (difference of the two distribution functions, what chance allows): over the whole range, then in each tail."""
     flat = np.sort(draws, axis=None)
     at = flat[np.linspace(0, len(flat) - 1, 513).astype(int)[1:-1]]

@@ -10,12 +10,19 @@ References
 
 from __future__ import annotations
 
+from collections.abc import Callable
 from dataclasses import dataclass
+from typing import TYPE_CHECKING
 
 import numpy as np
 from numpy.polynomial import legendre
+from numpy.typing import ArrayLike
 
+from fitter.array_types import FloatArray, IntArray
 from fitter.inference.target import Place, Target
+
+if TYPE_CHECKING:
+    pass
 
 __all__ = ["MAX_DIMENSIONS", "GridPosterior", "integrate"]
 
@@ -31,14 +38,14 @@ _BUDGET = {1: 1_000_000, 2: 1_000_000, 3: 3_000_000, 4: 1_000_000}
 class _Cells:
     """C cells of a d-dimensional box, and the density at their nodes."""
 
-    low: np.ndarray  # (C, d)
-    high: np.ndarray  # (C, d)
-    value: np.ndarray  # (C, n, …, n), density over its maximum
-    mass: np.ndarray  # (C,)
-    tail: np.ndarray  # (C, d), mass that the trailing coefficients along each axis stand for
+    low: FloatArray  # (C, d)
+    high: FloatArray  # (C, d)
+    value: FloatArray  # (C, n, …, n), density over its maximum
+    mass: FloatArray  # (C,)
+    tail: FloatArray  # (C, d), mass that the trailing coefficients along each axis stand for
 
     @property
-    def error(self) -> np.ndarray:
+    def error(self) -> FloatArray:
         """(C,) error of each cell's mass.
 
         A rule of n points integrates up to degree 2n − 1. Where coefficients fall geometrically, what it misses is to the last
@@ -49,7 +56,7 @@ class _Cells:
             falling = np.where(self.mass > 0, np.minimum(worst / self.mass, 1.0), 1.0)
         return worst * falling
 
-    def join(self, other: _Cells, keep) -> _Cells:
+    def join(self, other: _Cells, keep: IntArray) -> _Cells:
         fields = (f for f in self.__dataclass_fields__)
         return _Cells(*(np.concatenate([getattr(self, f)[keep], getattr(other, f)]) for f in fields))
 
@@ -57,7 +64,7 @@ class _Cells:
 class _Rule:
     """A tensor Gauss–Legendre rule with n points on each of d axes."""
 
-    def __init__(self, dimensions: int):
+    def __init__(self, dimensions: int) -> None:
         self.d, self.n = dimensions, _POINTS[dimensions]
         self.node, self.weight = legendre.leggauss(self.n)
         k = np.arange(self.n)
@@ -66,7 +73,7 @@ class _Rule:
         # Node values → ∫ from −1 up to x, through the same coefficients: see `below`.
         self._mesh = np.stack(np.meshgrid(*[self.node] * self.d, indexing="ij"), axis=-1).reshape(-1, self.d)
 
-    def evaluate(self, density, low, high) -> _Cells:
+    def evaluate(self, density: Callable[[FloatArray], FloatArray], low: FloatArray, high: FloatArray) -> _Cells:
         points = low[:, None] + 0.5 * (high - low)[:, None] * (1.0 + self._mesh)
         value = density(points.reshape(-1, self.d)).reshape((len(low),) + (self.n,) * self.d)
         volume = np.prod(0.5 * (high - low), axis=1)
@@ -74,29 +81,29 @@ class _Rule:
         tail = np.stack([volume * self._tail(value, axis) for axis in range(self.d)], axis=1)
         return _Cells(low, high, value, mass, tail)
 
-    def _contract(self, value, keep):
+    def _contract(self, value: FloatArray, keep: int | None) -> FloatArray:
         """Integrate over all axes but `keep`, on [−1, 1]."""
         for axis in reversed(range(self.d)):
             if axis != keep:
                 value = np.tensordot(value, self.weight, axes=(axis + 1, 0))
         return value
 
-    def marginal(self, cells: _Cells, axis: int):
+    def marginal(self, cells: _Cells, axis: int) -> FloatArray:
         """(C, n) integrals over the other axes at each node of one axis."""
         others = np.prod(np.delete(0.5 * (cells.high - cells.low), axis, axis=1), axis=1)
         return self._contract(cells.value, axis) * others[:, None]
 
-    def _tail(self, value, axis):
+    def _tail(self, value: FloatArray, axis: int) -> FloatArray:
         """Mass that the last two coefficients along an axis stand for."""
         last = np.tensordot(value, self.transform[-2:], axes=(axis + 1, 1))
         return self._contract_abs(np.abs(last).max(axis=-1))
 
-    def _contract_abs(self, value):
+    def _contract_abs(self, value: FloatArray) -> FloatArray:
         for _ in range(self.d - 1):
             value = value @ self.weight
         return 2.0 * value
 
-    def below(self, marginal, x):
+    def below(self, marginal: FloatArray, x: FloatArray) -> FloatArray:
         """(C,) or (C, M) integral of node values (C, n) from −1 to x ∈ [−1, 1], (C, M)."""
         coefficients = marginal @ self.transform.T
         values = legendre.legvander(x, self.n)  # (C, M, n+1)
@@ -136,14 +143,14 @@ class GridPosterior:
         """Bound on the error of `cdf`: the relative error of the whole mass."""
         return self.log_evidence_error
 
-    def cdf(self, name: str, x) -> np.ndarray:
+    def cdf(self, name: str, x: ArrayLike) -> FloatArray:
         """Marginal cumulative distribution at x, (M,)."""
         x = np.atleast_1d(np.asarray(x, float))
         low, high, marginal = self._strips(self.names.index(name))
         local = np.clip(2 * (x - low) / (high - low) - 1, -1, 1)
         return (self._rule.below(marginal, local) * 0.5 * (high - low)).sum(axis=0) / self._cells.mass.sum()
 
-    def _strips(self, axis):
+    def _strips(self, axis: int) -> tuple[FloatArray, FloatArray, FloatArray]:
         """Cells with the same interval along an axis, added up: ends (S, 1), marginal node values (S, n)."""
         ends = np.stack([self._cells.low[:, axis], self._cells.high[:, axis]], axis=1)
         strip, which = np.unique(ends, axis=0, return_inverse=True)
@@ -151,7 +158,7 @@ class GridPosterior:
         np.add.at(marginal, which.ravel(), self._rule.marginal(self._cells, axis))
         return strip[:, :1], strip[:, 1:], marginal
 
-    def points(self):
+    def points(self) -> tuple[FloatArray, FloatArray]:
         """The nodes, (M, d), and the share of the posterior that each stands for, (M,)."""
         cells, rule = self._cells, self._rule
         theta = cells.low[:, None] + 0.5 * (cells.high - cells.low)[:, None] * (1.0 + rule._mesh)
@@ -177,7 +184,7 @@ class GridPosterior:
         """Marginal standard deviation."""
         return float(np.sqrt(self.moment(name, 2, self.mean(name))))
 
-    def quantile(self, name: str, p) -> np.ndarray:
+    def quantile(self, name: str, p: ArrayLike) -> FloatArray:
         """Marginal quantiles, by inverting the cumulative distribution; (M,)."""
         axis = self.names.index(name)
         x = np.linspace(self._cells.low[:, axis].min(), self._cells.high[:, axis].max(), 4001)
@@ -214,7 +221,7 @@ def integrate(
     rule, peak = _Rule(d), float(log_posterior(optimum.theta)[0])
     max_evaluations = _BUDGET[d] if max_evaluations is None else max_evaluations
 
-    def density(points):
+    def density(points: FloatArray) -> FloatArray:
         return np.concatenate([np.exp(log_posterior(points[i : i + _BATCH]) - peak) for i in range(0, len(points), _BATCH)])
 
     cells = rule.evaluate(density, *_first_cells(log_posterior, optimum))
@@ -236,7 +243,7 @@ def integrate(
     return GridPosterior(log_posterior.names, float(np.log(total) + peak), error, evaluations, bool(converged), cells, rule)
 
 
-def _first_cells(log_posterior, optimum):
+def _first_cells(log_posterior: Target, optimum: Place) -> tuple[FloatArray, FloatArray]:
     """Cut the prior box around the optimum, so that a narrow peak is not overlooked."""
     errors = np.sqrt(np.diag(optimum.covariance))
     edges = []
@@ -249,10 +256,11 @@ def _first_cells(log_posterior, optimum):
         edges.append(np.array([low, *sorted(c for c in cuts if low + margin < c < high - margin), high]))
     lows = np.meshgrid(*[e[:-1] for e in edges], indexing="ij")
     highs = np.meshgrid(*[e[1:] for e in edges], indexing="ij")
-    return (np.stack([m.ravel() for m in side], axis=1) for side in (lows, highs))
+    bottom, top = (np.stack([m.ravel() for m in side], axis=1) for side in (lows, highs))
+    return bottom, top
 
 
-def _halves(cells, chosen):
+def _halves(cells: _Cells, chosen: IntArray) -> tuple[FloatArray, FloatArray]:
     """Cut the chosen cells in two along the axis with the worst coefficients."""
     low, high = cells.low[chosen], cells.high[chosen]
     axis = cells.tail[chosen].argmax(axis=1)

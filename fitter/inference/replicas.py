@@ -8,14 +8,25 @@ import signal
 import sys
 import threading
 import time
+from collections.abc import Callable
 from concurrent.futures import FIRST_COMPLETED, ProcessPoolExecutor, wait
 from dataclasses import dataclass, field
+from multiprocessing.context import BaseContext
+from types import FrameType
+from typing import TYPE_CHECKING, Any, Self, TypeVar
 
 import numpy as np
 
+from fitter.array_types import FloatArray
 from fitter.inference.checkpoint import Checkpoint, Chunk, add_counts
 
+if TYPE_CHECKING:
+    from fitter.inference.mixture import StudentMixture
+    from fitter.likelihood.posterior import LogPosterior
+
 __all__ = ["Replica", "Replicas", "available_cores"]
+
+Result = TypeVar("Result")
 
 # Longest time a replica works before another one has its turn, and between two writes of its chain, in seconds.
 _SLICE_SECONDS = 0.25
@@ -34,8 +45,8 @@ def available_cores() -> int:
 class Replica:
     """One ensemble: where it is, and the chunks of chain behind it."""
 
-    positions: np.ndarray
-    log_prob: np.ndarray
+    positions: FloatArray
+    log_prob: FloatArray
     random_state: tuple
     chunks: list[Chunk] = field(default_factory=list)
     unwritten: list[Chunk] = field(default_factory=list)
@@ -58,13 +69,13 @@ class _Task:
     """What a worker needs to advance one replica."""
 
     replica: int
-    positions: np.ndarray
-    log_prob: np.ndarray
+    positions: FloatArray
+    log_prob: FloatArray
     random_state: tuple
     start: int
     steps: int
     move: str
-    pilot: object
+    pilot: StudentMixture | None
 
 
 class Replicas:
@@ -89,20 +100,28 @@ class Replicas:
     replica finish its step and sets `interrupted`; a second one acts at once.
     """
 
-    def __init__(self, log_posterior, replicas: list[Replica], move: str, pilot, processes: int, checkpoint: Checkpoint | None):
+    def __init__(
+        self,
+        log_posterior: LogPosterior,
+        replicas: list[Replica],
+        move: str,
+        pilot: StudentMixture | None,
+        processes: int,
+        checkpoint: Checkpoint | None,
+    ) -> None:
         self.log_posterior, self.replicas, self.checkpoint = log_posterior, replicas, checkpoint
         self.move, self.pilot = move, pilot
         self.processes = min(processes, len(replicas))
         self.interrupted = False
-        self._pool = None
-        self._restore = None
+        self._pool: ProcessPoolExecutor | None = None
+        self._restore: Callable[[int, FrameType | None], Any] | int | None = None
         now = time.monotonic()
         for i, replica in enumerate(replicas):
             replica.written_at = now
             for chunk in checkpoint.read(i) if checkpoint else []:
                 replica.append(chunk)
 
-    def __enter__(self):
+    def __enter__(self) -> Self:
         context = _context()
         self._board = _Board(context, len(self.replicas))
         if self.processes > 1:
@@ -113,14 +132,14 @@ class Replicas:
             self._restore = signal.signal(signal.SIGINT, self._on_interrupt)
         return self
 
-    def __exit__(self, kind, *_):
+    def __exit__(self, *_: object) -> None:
         self._board.stop.value = 1
         if self._pool is not None:
             self._pool.shutdown(wait=True, cancel_futures=True)
         if self._restore is not None:
             signal.signal(signal.SIGINT, self._restore)
 
-    def _on_interrupt(self, *_):
+    def _on_interrupt(self, *_: object) -> None:
         self.interrupted = True
         self._board.stop.value = 1
         signal.signal(signal.SIGINT, self._restore)
@@ -130,7 +149,7 @@ class Replicas:
         """Steps that all replicas have done."""
         return min(r.steps for r in self.replicas)
 
-    def advance(self, target: int, look=None) -> None:
+    def advance(self, target: int, look: Callable[[int], None] | None = None) -> None:
         """Bring every replica to at least `target` steps, or as far as an interrupt lets it.
 
         Parameters
@@ -145,14 +164,14 @@ class Replicas:
             if self._pool is None:
                 self._advance_here(target, look)
             else:
-                self._advance_in_pool(target, look)
+                self._advance_in_pool(self._pool, target, look)
         except KeyboardInterrupt:
             # Only where no handler could be set, e.g. outside the main thread.
             self.interrupted = True
         if self.interrupted:
             self._flush(everything=True)
 
-    def _advance_here(self, target, look):
+    def _advance_here(self, target: int, look: Callable[[int], None] | None) -> None:
         # In turns, so that an interrupt finds all of them about equally long.
         while self.steps < target and not self.interrupted:
             for i in range(len(self.replicas)):
@@ -161,39 +180,36 @@ class Replicas:
             if look is not None:
                 look(self.steps)
 
-    def _advance_in_pool(self, target, look):
-        running = {self._submit(i, target): i for i, r in enumerate(self.replicas) if r.steps < target}
+    def _advance_in_pool(self, pool: ProcessPoolExecutor, target: int, look: Callable[[int], None] | None) -> None:
+        running = {pool.submit(_advance_in_worker, self._task(i, target)): i for i, r in enumerate(self.replicas) if r.steps < target}
         while running:
             done, _ = wait(running, timeout=_LOOK_SECONDS, return_when=FIRST_COMPLETED)
             for future in done:
                 i = running.pop(future)
                 self._take(i, future.result())
                 if self.replicas[i].steps < target and not self.interrupted:
-                    running[self._submit(i, target)] = i
+                    running[pool.submit(_advance_in_worker, self._task(i, target))] = i
             if look is not None:
                 look(min(self._board.steps))
 
-    def map(self, function, arguments: list[tuple]) -> list:
+    def map(self, function: Callable[..., Result], arguments: list[tuple[Any, ...]]) -> list[Result]:
         """Return ``function(log_posterior, *args)`` for every tuple of `arguments`, in order, from the worker processes."""
         if self._pool is None:
             return [function(self.log_posterior, *args) for args in arguments]
         return list(self._pool.map(_call_in_worker, [(function, args) for args in arguments]))
 
-    def _task(self, i, target):
+    def _task(self, i: int, target: int) -> _Task:
         r = self.replicas[i]
         return _Task(i, r.positions, r.log_prob, r.random_state, r.steps, target - r.steps, self.move, self.pilot)
 
-    def _submit(self, i, target):
-        return self._pool.submit(_advance_in_worker, self._task(i, target))
-
-    def _take(self, i, chunk):
+    def _take(self, i: int, chunk: Chunk) -> None:
         if len(chunk.chain) == 0:
             return
         self.replicas[i].append(chunk)
         self.replicas[i].unwritten.append(chunk)
         self._flush()
 
-    def _flush(self, everything=False):
+    def _flush(self, everything: bool = False) -> None:
         if self.checkpoint is None:
             return
         now = time.monotonic()
@@ -203,7 +219,7 @@ class Replicas:
                 replica.unwritten = []
                 replica.written_at = now
 
-    def chain(self, steps: int):
+    def chain(self, steps: int) -> tuple[FloatArray, FloatArray]:
         """Return the first `steps` steps of all replicas: positions (R, S, W, n) and ln densities (R, S, W)."""
         chain = [np.concatenate([c.chain for c in r.chunks])[:steps] for r in self.replicas]
         values = [np.concatenate([c.log_posterior for c in r.chunks])[:steps] for r in self.replicas]
@@ -224,20 +240,20 @@ class Replicas:
 class _Board:
     """A few numbers that workers and parent share: a flag that asks to stop, and each replica's steps."""
 
-    def __init__(self, context, n):
+    def __init__(self, context: BaseContext, n: int) -> None:
         self.stop = context.Value("b", 0, lock=False)
         self.steps = context.Array("q", n, lock=False)
 
 
-def _context():
+def _context() -> BaseContext:
     """Fork where it is safe: the likelihood is then shared without a copy."""
     return mp.get_context("fork" if sys.platform.startswith("linux") else "spawn")
 
 
-_worker: dict = {}
+_worker: dict[str, Any] = {}
 
 
-def _start_worker(log_posterior, board, parent):
+def _start_worker(log_posterior: LogPosterior, board: _Board, parent: int) -> None:
     """Once per process: keep the likelihood, one BLAS thread, leave Ctrl-C to the parent, and end with it."""
     from threadpoolctl import threadpool_limits
 
@@ -246,23 +262,23 @@ def _start_worker(log_posterior, board, parent):
     threading.Thread(target=_end_with, args=(parent,), daemon=True).start()
 
 
-def _end_with(parent):
+def _end_with(parent: int) -> None:
     """A killed parent cannot tell its workers; they would wait for work for ever."""
     while os.getppid() == parent:
         time.sleep(0.5)
     os._exit(1)
 
 
-def _advance_in_worker(task):
+def _advance_in_worker(task: _Task) -> Chunk:
     return _advance(_worker["log_posterior"], task, _worker["board"])
 
 
-def _call_in_worker(work):
+def _call_in_worker(work: tuple[Callable[..., Result], tuple[Any, ...]]) -> Result:
     function, args = work
     return function(_worker["log_posterior"], *args)
 
 
-def _advance(log_posterior, task, board) -> Chunk:
+def _advance(log_posterior: LogPosterior, task: _Task, board: _Board) -> Chunk:
     """Run one replica until its steps are done, its time is over, or a stop is asked for."""
     from emcee.state import State
     from threadpoolctl import threadpool_limits
@@ -271,7 +287,8 @@ def _advance(log_posterior, task, board) -> Chunk:
     from fitter.inference.moves import ensemble_moves
 
     before = dict(log_posterior.counts)
-    sampler = Ensemble(*task.positions.shape, log_posterior, vectorize=True, moves=ensemble_moves(task.move, task.pilot))
+    walkers, ndim = task.positions.shape
+    sampler = Ensemble(walkers, ndim, log_posterior, vectorize=True, moves=ensemble_moves(task.move, task.pilot))
     state = State(task.positions, log_prob=task.log_prob, random_state=task.random_state, copy=True)
     end = time.monotonic() + _SLICE_SECONDS
     with threadpool_limits(1):

@@ -3,10 +3,14 @@
 from __future__ import annotations
 
 import time
+from collections.abc import Callable
 from math import isfinite, nan
+from pathlib import Path
+from typing import TYPE_CHECKING, Any
 
 import numpy as np
 
+from fitter.array_types import FloatArray
 from fitter.inference.checkpoint import Checkpoint
 from fitter.inference.convergence import FIRST_STEPS, Status, assess, next_length
 from fitter.inference.pilot import pilot_mixture
@@ -17,6 +21,10 @@ from fitter.inference.seeds import child_seed, random_state
 from fitter.inference.settings import SamplingSettings
 from fitter.inference.start import starting_walkers
 
+if TYPE_CHECKING:
+    from fitter.inference.optimum import Optimum
+    from fitter.likelihood.posterior import LogPosterior
+
 __all__ = ["derive_and_draw", "sample_posterior"]
 
 # Below this number of steps there is nothing to summarise.
@@ -26,13 +34,13 @@ _BLOCK = 16384
 
 
 def sample_posterior(
-    log_posterior,
+    log_posterior: LogPosterior,
     settings: SamplingSettings,
-    optimum,
+    optimum: Optimum,
     *,
     seed: np.random.SeedSequence,
-    folder=None,
-    progress=None,
+    folder: Path | None = None,
+    progress: Callable[[ProgressReport], None] | None = None,
     resume: bool = False,
     fingerprint: str = "",
     processes: int | None = None,
@@ -96,7 +104,7 @@ def sample_posterior(
     return Posterior(tuple(log_posterior.names), chain, values, extra, kinds, facts)
 
 
-def _about(log_posterior, settings, seed, fingerprint):
+def _about(log_posterior: LogPosterior, settings: SamplingSettings, seed: np.random.SeedSequence, fingerprint: str) -> dict[str, Any]:
     """What must agree for a chain to be continued; its length may change."""
     return {
         "fingerprint": fingerprint,
@@ -108,12 +116,14 @@ def _about(log_posterior, settings, seed, fingerprint):
     }
 
 
-def _begin(log_posterior, settings, optimum, seed):
+def _begin(log_posterior: LogPosterior, settings: SamplingSettings, optimum: Optimum, seed: np.random.SeedSequence) -> Replica:
     positions, values = starting_walkers(log_posterior, optimum, settings.walkers, child_seed(seed, 0))
     return Replica(positions, values, random_state(child_seed(seed, 1)))
 
 
-def _run(ensembles: Replicas, names, settings, progress) -> Status:
+def _run(
+    ensembles: Replicas, names: tuple[str, ...], settings: SamplingSettings, progress: Callable[[ProgressReport], None] | None
+) -> Status:
     """Rounds until converged, at the limit, or interrupted."""
     target, status = min(FIRST_STEPS, settings.max_steps), None
     while True:
@@ -128,13 +138,15 @@ def _run(ensembles: Replicas, names, settings, progress) -> Status:
         target = next_length(status, settings.target_ess, settings.max_steps)
 
 
-def _reporter(progress, first, aim, status):
+def _reporter(
+    progress: Callable[[ProgressReport], None] | None, first: int, aim: int, status: Status | None
+) -> Callable[[int], None] | None:
     if progress is None:
         return None
     began = time.monotonic()
     tau, ess, rhat = (nan, nan, nan) if status is None else (max(status.tau.values()), status.ess, max(status.rhat.values()))
 
-    def look(steps):
+    def look(steps: int) -> None:
         rate = (steps - first) / max(time.monotonic() - began, 1e-9)
         left = (aim - steps) / rate if rate > 0 else nan
         progress(ProgressReport(min(steps, aim), aim, tau, ess, rhat, max(left, 0.0) if isfinite(left) else nan))
@@ -142,7 +154,9 @@ def _reporter(progress, first, aim, status):
     return look
 
 
-def derive_and_draw(log_posterior, chain, seed, run):
+def derive_and_draw(
+    log_posterior: LogPosterior, chain: FloatArray, seed: np.random.SeedSequence, run: Callable[..., Any]
+) -> dict[str, FloatArray]:
     """Marginalised parameters, drawn, and derived ones, computed, for every position; in blocks to bound the memory.
 
     Parameters
@@ -161,7 +175,7 @@ def derive_and_draw(log_posterior, chain, seed, run):
     moved[:, 1:] = (chain[:, 1:] != chain[:, :-1]).any(axis=-1)
     order = np.where(moved, np.cumsum(moved).reshape(moved.shape) - 1, 0)
     order = np.maximum.accumulate(order, axis=1).ravel()
-    extra = {}
+    extra: dict[str, FloatArray] = {}
     if log_posterior.marginalised:
         extra |= _joined(run(_draw_block, [(b, child_seed(seed, k)) for k, b in enumerate(_blocks(rows))]))
     if log_posterior.derived_names:
@@ -170,23 +184,23 @@ def derive_and_draw(log_posterior, chain, seed, run):
     return {name: column.reshape(chain.shape[:-1]) for name, column in extra.items()}
 
 
-def _blocks(rows):
+def _blocks(rows: FloatArray) -> list[FloatArray]:
     return [rows[start : start + _BLOCK] for start in range(0, len(rows), _BLOCK)]
 
 
-def _draw_block(log_posterior, theta, seed):
+def _draw_block(log_posterior: LogPosterior, theta: FloatArray, seed: np.random.SeedSequence) -> dict[str, FloatArray]:
     return log_posterior.draw_marginalised(theta, np.random.default_rng(seed))
 
 
-def _derive_block(log_posterior, theta):
+def _derive_block(log_posterior: LogPosterior, theta: FloatArray) -> dict[str, FloatArray]:
     return log_posterior.derived(theta)
 
 
-def _joined(parts):
+def _joined(parts: list[dict[str, FloatArray]]) -> dict[str, FloatArray]:
     return {name: np.concatenate([part[name] for part in parts]) for name in parts[0]}
 
 
-def _facts(ensembles, status, settings, seconds):
+def _facts(ensembles: Replicas, status: Status, settings: SamplingSettings, seconds: float) -> dict[str, Any]:
     """The ``sampling`` part of the summary."""
     reason, advice = _verdict(ensembles, status, settings)
     return {
@@ -215,7 +229,7 @@ def _facts(ensembles, status, settings, seconds):
     }
 
 
-def _verdict(ensembles, status, settings):
+def _verdict(ensembles: Replicas, status: Status, settings: SamplingSettings) -> tuple[str, str]:
     if ensembles.interrupted:
         return "interrupted", "Continue with --resume."
     if status.converged:

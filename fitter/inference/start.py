@@ -2,17 +2,26 @@
 
 from __future__ import annotations
 
+from typing import TYPE_CHECKING
+
 import numpy as np
 
+from fitter.array_types import FloatArray, IntArray
 from fitter.errors import InputError
 from fitter.inference.optimum import prior_draws
+
+if TYPE_CHECKING:
+    from fitter.inference.optimum import Optimum
+    from fitter.likelihood.posterior import LogPosterior
 
 __all__ = ["starting_walkers"]
 
 _SCREENED = 2048
 
 
-def starting_walkers(log_posterior, optimum, walkers: int, seed: np.random.SeedSequence):
+def starting_walkers(
+    log_posterior: LogPosterior, optimum: Optimum, walkers: int, seed: np.random.SeedSequence
+) -> tuple[FloatArray, FloatArray]:
     """Draw the first positions of one ensemble, wider than the posterior.
 
     Half of them come from a Student-t of twice the Hessian's width around the optimum, from a centre of this
@@ -54,7 +63,7 @@ def starting_walkers(log_posterior, optimum, walkers: int, seed: np.random.SeedS
     return positions, values
 
 
-def _around(log_posterior, optimum, walkers, rng):
+def _around(log_posterior: LogPosterior, optimum: Optimum, walkers: int, rng: np.random.Generator) -> tuple[FloatArray, FloatArray]:
     """Over-dispersed draws around the optimum that have a finite density, at most `walkers`."""
     n = len(optimum.theta)
     factor = np.linalg.cholesky(optimum.covariance)
@@ -69,7 +78,7 @@ def _around(log_posterior, optimum, walkers, rng):
     return trial[good], values[good]
 
 
-def _tempered_choice(heights, size, rng):
+def _tempered_choice(heights: FloatArray, size: int, rng: np.random.Generator) -> IntArray:
     """Choose `size` different draws with probability density^(1/T), T the smallest that leaves enough to choose from."""
     if size == 0:
         return np.array([], dtype=int)

@@ -11,10 +11,11 @@ may matter are counted, and their effect on χ² is bounded (`CapsulePosterior.a
 from __future__ import annotations
 
 from types import SimpleNamespace
-from typing import Any, NoReturn
+from typing import TYPE_CHECKING, Any, NoReturn
 
 import numpy as np
 
+from fitter.array_types import BoolArray, FloatArray
 from fitter.cosmology import get_model
 from fitter.cosmology.distances import log_distance
 from fitter.cosmology.grid import Grid
@@ -26,6 +27,12 @@ from fitter.likelihood.posterior import LogPosterior
 from fitter.parameters import ZERO_POINT
 from fitter.sample.capsule import Amplitude, Capsule, CapsuleSample, pack
 
+if TYPE_CHECKING:
+    from fitter.cosmology.base import Model
+    from fitter.likelihood.scatter import ScatterNodes
+    from fitter.sample.noise import Noise
+    from fitter.sample.sample import Sample
+
 __all__ = ["DEFAULT_ORDER", "CapsulePosterior", "encapsulate"]
 
 DEFAULT_ORDER = 48
@@ -34,7 +41,7 @@ _MATTERS = 0.01  # a change of χ² that no posterior shows
 _CHECKED = 4000
 
 
-def encapsulate(sample, *, order: int = DEFAULT_ORDER, scatter: float = 0.0, facts: dict[str, Any] | None = None) -> Capsule:
+def encapsulate(sample: Sample, *, order: int = DEFAULT_ORDER, scatter: float = 0.0, facts: dict[str, Any] | None = None) -> Capsule:
     """Compress a sample into a capsule.
 
     Parameters
@@ -102,14 +109,14 @@ def encapsulate(sample, *, order: int = DEFAULT_ORDER, scatter: float = 0.0, fac
     return capsule.model_copy(update={"checksum": capsule.digest()})
 
 
-def _reference(grid: Grid) -> np.ndarray:
+def _reference(grid: Grid) -> FloatArray:
     """f of the reference model at the nodes of a grid, through the finest grid."""
     finest = Grid(grid.z_max, FINEST_ORDER)
     values = log_distance(get_model("flat_lcdm"), REFERENCE, finest)[0][0]
     return finest.interpolation(grid.u) @ values
 
 
-def _compressed(capsule: Capsule, design) -> Compressed:
+def _compressed(capsule: Capsule, design: Design) -> Compressed:
     """Eliminate what this fit marginalises: the amplitudes, and the magnitude where its prior is flat or Gaussian."""
     r, y, _ = capsule.arrays()
     kept, last = len(capsule.amplitudes), len(r) - 1
@@ -136,7 +143,7 @@ def _compressed(capsule: Capsule, design) -> Compressed:
 class CapsuleKernel(Kernel):
     """χ² and its normalisation from a capsule: one level, with what lies beyond it counted."""
 
-    def __init__(self, design, model, capsule: Capsule):
+    def __init__(self, design: Design, model: Model, capsule: Capsule) -> None:
         self.design, self.model, self.scatter, self.capsule = design, model, None, capsule
         table = _compressed(capsule, design)
         grid = Grid(float(np.expm1(capsule.u_max)), capsule.order)
@@ -148,7 +155,7 @@ class CapsuleKernel(Kernel):
         self._finest = Grid(grid.z_max, FINEST_ORDER)
         self._to_nodes = self._finest.interpolation(grid.u)
 
-    def shape(self, theta, omega_r):
+    def shape(self, theta: FloatArray, omega_r: FloatArray) -> tuple[FloatArray, FloatArray, BoolArray]:
         """f at the nodes, its tail there, and whether the model exists: (W, K+1), (W,), (W,)."""
         grid = self.levels[0].grid
         f, tail, inside = log_distance(self.model, theta, grid, omega_r)
@@ -161,7 +168,9 @@ class CapsuleKernel(Kernel):
             self.counts["refined"] += int(rough.sum())
         return f, tail, inside
 
-    def __call__(self, theta, omega_r, offset, linear, sigma=None):
+    def __call__(
+        self, theta: FloatArray, omega_r: FloatArray, offset: FloatArray, linear: FloatArray, sigma: FloatArray | None = None
+    ) -> tuple[FloatArray, float | FloatArray]:
         """Evaluate W points; arguments and values as for `Kernel`."""
         f, _, inside = self.shape(theta, omega_r)
         chi2 = np.full(len(theta), np.inf)
@@ -171,7 +180,15 @@ class CapsuleKernel(Kernel):
         self.counts["excluded"] += int((~inside).sum())
         return chi2, self.log_norms[0]
 
-    def nuisance(self, theta, omega_r, offset, linear, sigma=None, noise=None):
+    def nuisance(
+        self,
+        theta: FloatArray,
+        omega_r: FloatArray,
+        offset: FloatArray,
+        linear: FloatArray,
+        sigma: FloatArray | None = None,
+        noise: FloatArray | None = None,
+    ) -> FloatArray:
         """Nuisance amplitudes given the rest, (W, m); as for `Kernel`."""
         from scipy.linalg import solve_triangular
 
@@ -181,7 +198,7 @@ class CapsuleKernel(Kernel):
         rhs = c.nuisance_y - level.point(f, offset, linear) @ c.nuisance_x.T
         return solve_triangular(c.nuisance_r, (rhs if noise is None else rhs + noise).T).T
 
-    def with_data(self, data) -> NoReturn:
+    def with_data(self, data: Any) -> NoReturn:
         """Refuse: there are no rows to put other data in."""
         raise _no_rows()
 
@@ -190,16 +207,17 @@ class CapsulePosterior(LogPosterior):
     """The posterior given a capsule; everything that needs no single supernova."""
 
     sample: CapsuleSample
+    kernel: CapsuleKernel
 
-    def _make_design(self, noise, flat, gaussian, linear, shift):
+    def _make_design(self, noise: Noise, flat: FloatArray, gaussian: FloatArray, linear: FloatArray, shift: float) -> Any:
         return SimpleNamespace(
             noise=noise, flat=flat, gaussian=gaussian, linear=linear, shift=shift, n_nuisance=gaussian.shape[1] + flat.shape[1]
         )
 
-    def _make_kernel(self, scatter):
+    def _make_kernel(self, scatter: ScatterNodes | None) -> CapsuleKernel:
         return CapsuleKernel(self.design, self.model, self.sample.capsule)
 
-    def accuracy(self, chain) -> dict[str, Any]:
+    def accuracy(self, chain: FloatArray) -> dict[str, Any]:
         """How far the nodes suffice in a posterior.
 
         Parameters
@@ -223,19 +241,19 @@ class CapsulePosterior(LogPosterior):
         worst = float(error.max(initial=0.0))
         return {"order": self.sample.capsule.order, "draws": len(theta), "beyond": float(np.mean(error > _MATTERS)), "worst": worst}
 
-    def residuals(self, theta) -> NoReturn:
+    def residuals(self, theta: FloatArray) -> NoReturn:
         """Refuse: there are no rows."""
         raise InputError("a capsule has no single supernovae, and so no residuals", cure="This needs the original data")
 
-    def with_data(self, data) -> NoReturn:
+    def with_data(self, data: Any) -> NoReturn:
         """Refuse: there are no rows."""
         raise _no_rows()
 
-    def expected(self, theta) -> NoReturn:
+    def expected(self, theta: FloatArray) -> NoReturn:
         """Refuse: there are no rows."""
         raise _no_rows()
 
-    def simulate(self, theta, rng) -> NoReturn:
+    def simulate(self, theta: FloatArray, rng: np.random.Generator) -> NoReturn:
         """Refuse: there are no rows."""
         raise _no_rows()
 

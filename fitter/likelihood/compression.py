@@ -12,10 +12,14 @@ References
 
 from __future__ import annotations
 
+from collections.abc import Iterable, Iterator
+from contextlib import AbstractContextManager
 from dataclasses import dataclass
+from typing import Protocol
 
 import numpy as np
 
+from fitter.array_types import FloatArray
 from fitter.likelihood.design import Design
 
 __all__ = ["Compressed", "compress", "compress_many", "stacked_qr"]
@@ -23,6 +27,21 @@ __all__ = ["Compressed", "compress", "compress_many", "stacked_qr"]
 _ROWS = 2048  # rows of the design held at once: a block that stays in the cache
 _PANEL = 32  # columns that LAPACK eliminates at once
 _MANY = 50_000  # rows above which one thread is asked for: threads gain nothing on blocks so narrow, and lose much on a busy machine
+
+
+class Whitening(Protocol):
+    """What the compression needs of a covariance, its modes apart."""
+
+    @property
+    def is_diagonal(self) -> bool:
+        """Whether `whiten` works on any block of rows."""
+
+    @property
+    def log_det(self) -> float:
+        """ln det C."""
+
+    def whiten(self, x: FloatArray, rows: slice = ...) -> FloatArray:
+        """L⁻¹ x, with C = L Lᵀ."""
 
 
 @dataclass(frozen=True)
@@ -43,21 +62,21 @@ class Compressed:
         shapes (m, m) upper triangular, (m, K+1+s), (m,).
     """
 
-    r: np.ndarray
-    y: np.ndarray
+    r: FloatArray
+    y: FloatArray
     rho2: float
     log_norm: float
-    nuisance_r: np.ndarray
-    nuisance_x: np.ndarray
-    nuisance_y: np.ndarray
+    nuisance_r: FloatArray
+    nuisance_x: FloatArray
+    nuisance_y: FloatArray
 
-    def chi2(self, x) -> np.ndarray:
+    def chi2(self, x: FloatArray) -> FloatArray:
         """χ² of (W, K+1+s) points, minimised over the nuisance amplitudes."""
         residual = x @ self.r.T
         residual -= self.y
         return np.einsum("wq,wq->w", residual, residual) + self.rho2
 
-    def project(self, embed) -> Compressed:
+    def project(self, embed: FloatArray) -> Compressed:
         """The same likelihood on fewer nodes: `embed` (K+1, k+1) takes values at them to the full set."""
         pad = self.r.shape[1] - embed.shape[0]
         full = np.block([[embed, np.zeros((embed.shape[0], pad))], [np.zeros((pad, embed.shape[1])), np.eye(pad)]])
@@ -65,12 +84,12 @@ class Compressed:
         factor = stacked_qr([np.column_stack([self.r @ full, self.y])])
         leftover = factor[q:, -1]
         return Compressed(
-            factor[:q, :-1], factor[:q, -1], self.rho2 + leftover @ leftover, self.log_norm,
+            factor[:q, :-1], factor[:q, -1], self.rho2 + float(leftover @ leftover), self.log_norm,
             self.nuisance_r, self.nuisance_x @ full, self.nuisance_y,
         )  # fmt: skip
 
 
-def stacked_qr(blocks) -> np.ndarray:
+def stacked_qr(blocks: Iterable[FloatArray]) -> FloatArray:
     """R of the QR factorisation of blocks stacked on top of each other, one block at a time.
 
     Once R is square, a block is eliminated below it without touching the zeros of R (LAPACK's tpqrt).
@@ -90,7 +109,7 @@ def stacked_qr(blocks) -> np.ndarray:
     return r
 
 
-def _threads(n: int):
+def _threads(n: int) -> AbstractContextManager[object]:
     """One BLAS thread where there are many rows."""
     from contextlib import nullcontext
 
@@ -100,7 +119,7 @@ def _threads(n: int):
     return threadpool_limits(1) if n > _MANY else nullcontext()
 
 
-def compress(design: Design, noise=None, *, rotated=None) -> Compressed:
+def compress(design: Design, noise: Whitening | None = None, *, rotated: FloatArray | None = None) -> Compressed:
     """Factor the whitened design once.
 
     Parameters
@@ -118,7 +137,9 @@ def compress(design: Design, noise=None, *, rotated=None) -> Compressed:
     return compress_many(design, design.data[None], noise, rotated=rotated)[0]
 
 
-def compress_many(design: Design, data, noise=None, *, rotated=None) -> list[Compressed]:
+def compress_many(
+    design: Design, data: FloatArray, noise: Whitening | None = None, *, rotated: FloatArray | None = None
+) -> list[Compressed]:
     """Factor the whitened design once for M data vectors: each is one more column, not one more factorisation.
 
     Parameters
@@ -153,7 +174,7 @@ def compress_many(design: Design, data, noise=None, *, rotated=None) -> list[Com
     return [Compressed(r, y[i], float(rho2[i]), log_norm, nuisance_r, nuisance_x, nuisance_y[i]) for i in range(len(data))]
 
 
-def _whitened_blocks(design, noise, data, rotated):
+def _whitened_blocks(design: Design, noise: Whitening, data: FloatArray, rotated: FloatArray | None) -> Iterator[FloatArray]:
     """The prior rows of the Gaussian templates, then the whitened rows."""
     k = design.gaussian.shape[1]
     width = design.n_nuisance + design.grid.order + 1 + design.linear.shape[1] + len(data)

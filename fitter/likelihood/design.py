@@ -10,12 +10,17 @@ Calibrators, whose distance is known, have a zero row in B.
 from __future__ import annotations
 
 from dataclasses import dataclass, field
+from typing import TYPE_CHECKING
 
 import numpy as np
 
+from fitter.array_types import FloatArray
 from fitter.cosmology import get_model
 from fitter.cosmology.distances import data_term, log_distance
 from fitter.cosmology.grid import Grid
+
+if TYPE_CHECKING:
+    from fitter.sample.noise import Noise
 
 __all__ = ["FINEST_ORDER", "REFERENCE", "Design"]
 
@@ -44,19 +49,19 @@ class Design:
         Constant taken off the data (the mean of a Gaussian prior on the magnitude).
     """
 
-    redshift: np.ndarray
-    redshift_helio: np.ndarray
-    data: np.ndarray
-    calibrator_modulus: np.ndarray
-    noise: object
-    flat: np.ndarray
-    gaussian: np.ndarray
-    linear: np.ndarray
+    redshift: FloatArray
+    redshift_helio: FloatArray
+    data: FloatArray
+    calibrator_modulus: FloatArray
+    noise: Noise
+    flat: FloatArray
+    gaussian: FloatArray
+    linear: FloatArray
     shift: float = 0.0
     grid: Grid = field(init=False)
     reference: np.ndarray = field(init=False)
 
-    def __post_init__(self):
+    def __post_init__(self) -> None:
         free = np.isnan(self.calibrator_modulus)
         z_max = self.redshift[free].max() if free.any() else 1.0
         grid = Grid(z_max, FINEST_ORDER)
@@ -72,20 +77,20 @@ class Design:
         """Number of nuisance templates, Gaussian ones first."""
         return self.gaussian.shape[1] + self.flat.shape[1]
 
-    def interpolation(self, rows=slice(None)) -> np.ndarray:
+    def interpolation(self, rows: slice = slice(None)) -> FloatArray:
         """B for those rows, (n, K+1)."""
         free = np.isnan(self.calibrator_modulus[rows])
         matrix = np.zeros((len(free), self.grid.order + 1))
         matrix[free] = self.grid.interpolation(np.log1p(self.redshift[rows][free]))
         return matrix
 
-    def known(self, rows=slice(None)) -> np.ndarray:
+    def known(self, rows: slice = slice(None)) -> FloatArray:
         """What the data alone say of each modulus, (n,): the calibrator's own, or 5 log10[z (1 + z_hel)]."""
         calibrator = self.calibrator_modulus[rows]
         term = data_term(self.redshift[rows], self.redshift_helio[rows])
         return np.where(np.isnan(calibrator), term, calibrator) + self.shift
 
-    def block(self, rows=slice(None), data=None) -> np.ndarray:
+    def block(self, rows: slice = slice(None), data: FloatArray | None = None) -> FloatArray:
         """Columns [U, T, B, x, d − B f_ref] for those rows; `data` (M, N) in place of the design's own makes M last columns."""
         b = self.interpolation(rows)
         data = self.data[None] if data is None else np.asarray(data)

@@ -3,10 +3,18 @@
 from __future__ import annotations
 
 from functools import cached_property
+from typing import TYPE_CHECKING
 
 import numpy as np
+from numpy.typing import ArrayLike
 
+from fitter.array_types import FloatArray
 from fitter.cosmology.adaptive import exact_log_distance
+
+if TYPE_CHECKING:
+    from fitter.cosmology.base import Model
+    from fitter.likelihood.design import Design
+    from fitter.sample.noise import Noise
 
 __all__ = ["Direct"]
 
@@ -21,12 +29,12 @@ class Direct:
         Covariance without the modes (those are in the design).
     """
 
-    def __init__(self, design, noise):
+    def __init__(self, design: Design, noise: Noise) -> None:
         self.design, self.noise = design, noise
         self.free = np.isnan(design.calibrator_modulus)
 
     @cached_property
-    def _nuisance_basis(self):
+    def _nuisance_basis(self) -> FloatArray:
         """Orthonormal basis of the whitened nuisance templates, without the prior rows, (N, m)."""
         design = self.design
         k = design.gaussian.shape[1]
@@ -34,7 +42,7 @@ class Direct:
         q, _ = np.linalg.qr(np.vstack([np.eye(k, design.n_nuisance), whitened]))
         return q[k:]
 
-    def chi2(self, f, offset=0.0, linear=()) -> float:
+    def chi2(self, f: FloatArray, offset: float = 0.0, linear: ArrayLike = ()) -> float:
         """χ² of f at the supernovae that are no calibrators, minimised over the nuisance amplitudes."""
         design = self.design
         residual = design.data - design.known()
@@ -45,7 +53,7 @@ class Direct:
         explained = self._nuisance_basis.T @ whitened if design.n_nuisance else np.zeros(0)
         return float(whitened @ whitened - explained @ explained)
 
-    def chi2_of_model(self, model, theta, omega_r=0.0, offset=0.0, linear=()) -> float:
+    def chi2_of_model(self, model: Model, theta: FloatArray, omega_r: float = 0.0, offset: float = 0.0, linear: ArrayLike = ()) -> float:
         """χ² of one parameter point; +inf where the model is outside the prior."""
         if not self.free.any():
             return self.chi2(np.zeros(0), offset, linear)

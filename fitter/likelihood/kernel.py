@@ -4,14 +4,21 @@ from __future__ import annotations
 
 from collections.abc import Iterator
 from dataclasses import dataclass, replace
+from typing import TYPE_CHECKING
 
 import numpy as np
 
+from fitter.array_types import BoolArray, FloatArray
 from fitter.cosmology.distances import log_distance
 from fitter.cosmology.grid import Grid
 from fitter.likelihood.compression import Compressed, compress, compress_many
 from fitter.likelihood.design import FINEST_ORDER, Design
 from fitter.likelihood.direct import Direct
+
+if TYPE_CHECKING:
+    from fitter.cosmology.base import Model
+    from fitter.likelihood.scatter import ScatterNodes
+
 
 __all__ = ["CHI2_TOLERANCE", "ORDERS", "TAIL_TOLERANCE", "Kernel", "Level"]
 
@@ -28,15 +35,15 @@ class Level:
     """The compressed likelihood on one grid, at every node in the scatter (one node where it is fixed)."""
 
     grid: Grid
-    reference: np.ndarray
-    r: np.ndarray  # (m q, K+1+s)
-    y: np.ndarray  # (m q,)
-    rho2: np.ndarray  # (m,)
+    reference: FloatArray
+    r: FloatArray  # (m q, K+1+s)
+    y: FloatArray  # (m q,)
+    rho2: FloatArray  # (m,)
     norm: float  # of R at the first node in the scatter, where it is largest
     nodes: tuple[Compressed, ...]
 
     @classmethod
-    def build(cls, design: Design, finest, order: int):
+    def build(cls, design: Design, finest: tuple[Compressed, ...], order: int) -> Level:
         grid = Grid(design.grid.z_max, order)
         if order == FINEST_ORDER:
             nodes, reference = tuple(finest), design.reference
@@ -47,13 +54,13 @@ class Level:
         r, y = np.vstack([c.r for c in nodes]), np.concatenate([c.y for c in nodes])
         return cls(grid, reference, r, y, np.array([c.rho2 for c in nodes]), float(np.linalg.norm(nodes[0].r)), nodes)
 
-    def point(self, f, offset, linear):
+    def point(self, f: FloatArray, offset: FloatArray, linear: FloatArray) -> FloatArray:
         """x of the compressed least squares, (W, K+1+s)."""
         x = f - self.reference
         x += offset[:, None]
         return np.hstack([x, linear]) if linear.shape[1] else x
 
-    def chi2(self, x):
+    def chi2(self, x: FloatArray) -> FloatArray:
         """χ², (W, m)."""
         residual = x @ self.r.T
         residual -= self.y
@@ -61,7 +68,7 @@ class Level:
         m = len(self.rho2)
         return residual.reshape(len(x), m, len(self.y) // m).sum(axis=2) + self.rho2
 
-    def converged(self, chi2, tail):
+    def converged(self, chi2: FloatArray, tail: FloatArray) -> BoolArray:
         """Whether the interpolation error is below tolerance: |Δχ²| ≤ 2 √χ² ‖R‖ |Δf|, (W,) bool."""
         return tail <= np.maximum(CHI2_TOLERANCE / (2 * self.norm * np.sqrt(np.maximum(chi2, 1.0))), _ROUNDING)
 
@@ -79,7 +86,7 @@ class Kernel:
         The compression of the design, where it is known already.
     """
 
-    def __init__(self, design: Design, model, scatter=None, compressed: Compressed | None = None):
+    def __init__(self, design: Design, model: Model, scatter: ScatterNodes | None = None, compressed: Compressed | None = None) -> None:
         self.design, self.model, self.scatter = design, model, scatter
         finest = scatter.compressed if scatter else (compressed or compress(design),)
         self.levels = tuple(Level.build(design, finest, order) for order in ORDERS)
@@ -87,7 +94,7 @@ class Kernel:
         self.counts = {"evaluations": 0, "refined": 0, "direct": 0, "excluded": 0}
         self._direct = Direct(design, design.noise)
 
-    def with_data(self, data) -> Iterator[Kernel]:
+    def with_data(self, data: FloatArray) -> Iterator[Kernel]:
         """The same likelihood for each of M other data vectors (M, N): the covariance is factored once for all."""
         designs = (replace(self.design, data=row) for row in data)
         if self.scatter:
@@ -97,7 +104,9 @@ class Kernel:
             tables = compress_many(self.design, data)
             yield from (Kernel(design, self.model, compressed=table) for design, table in zip(designs, tables, strict=True))
 
-    def __call__(self, theta, omega_r, offset, linear, sigma=None):
+    def __call__(
+        self, theta: FloatArray, omega_r: FloatArray, offset: FloatArray, linear: FloatArray, sigma: FloatArray | None = None
+    ) -> tuple[FloatArray, float | FloatArray]:
         """Evaluate W points.
 
         Parameters
@@ -116,7 +125,7 @@ class Kernel:
         chi2, log_norm : (W,) arrays
             χ² minimised over the nuisance amplitudes (+inf outside the prior); ln L = log_norm − χ²/2.
         """
-        weights = self.scatter.weights(sigma) if self.scatter else None
+        weights = self.scatter.weights(sigma) if self.scatter and sigma is not None else None
         chi2 = np.full(len(theta), np.inf)
         todo = np.arange(len(theta))
         for level in self.levels:
@@ -137,11 +146,19 @@ class Kernel:
         self.counts["excluded"] += int(np.isinf(chi2).sum())
         return chi2, self.log_norms[0] if weights is None else weights @ self.log_norms
 
-    def _exactly(self, theta, omega_r, offset, linear, sigma):
+    def _exactly(self, theta: FloatArray, omega_r: float, offset: float, linear: FloatArray, sigma: float | None) -> float:
         direct = self._direct if sigma is None else Direct(self.design, self.design.noise.plus_variance(sigma**2))
         return direct.chi2_of_model(self.model, theta, omega_r, offset, linear)
 
-    def nuisance(self, theta, omega_r, offset, linear, sigma=None, noise=None):
+    def nuisance(
+        self,
+        theta: FloatArray,
+        omega_r: FloatArray,
+        offset: FloatArray,
+        linear: FloatArray,
+        sigma: FloatArray | None = None,
+        noise: FloatArray | None = None,
+    ) -> FloatArray:
         """Nuisance amplitudes given the rest, (W, m): the conditional mean, plus `noise` (W, m) of unit Gaussians where given.
 
         With a free scatter, mean and spread at the nodes in σ are interpolated like χ². NaN where the model is outside its range.
@@ -154,7 +171,7 @@ class Kernel:
             f, _, _ = log_distance(self.model, theta[rough], finest.grid, omega_r[rough])
             on_finest = finest.point(f, offset[rough], linear[rough])
         out = np.zeros((len(theta), self.design.n_nuisance))
-        weights = self.scatter.weights(sigma) if self.scatter else np.ones((len(theta), 1))
+        weights = self.scatter.weights(sigma) if self.scatter and sigma is not None else np.ones((len(theta), 1))
         for node, weight in enumerate(weights.T):
             mean = _amplitudes(level.nodes[node], x, noise)
             if rough.any():
@@ -163,7 +180,7 @@ class Kernel:
         return out
 
 
-def _amplitudes(node: Compressed, x, noise):
+def _amplitudes(node: Compressed, x: FloatArray, noise: FloatArray | None) -> FloatArray:
     """Solve for the nuisance amplitudes of one compressed likelihood, (W, m)."""
     from scipy.linalg import solve_triangular
 

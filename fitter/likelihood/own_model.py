@@ -10,10 +10,14 @@ import inspect
 import re
 import sys
 import traceback
+from collections.abc import Callable
 from pathlib import Path
+from types import ModuleType
+from typing import Any
 
 import numpy as np
 
+from fitter.array_types import FloatArray
 from fitter.cosmology import MODELS
 from fitter.cosmology.base import Model
 from fitter.errors import InputError
@@ -58,14 +62,14 @@ def load_model(file: str | Path, name: str | None = None) -> Model:
 class _Reducer:
     """How copies of a model reach other processes: by its file."""
 
-    def __init__(self, file: str, name: str):
+    def __init__(self, file: str, name: str) -> None:
         self.file, self.name = file, name
 
-    def __call__(self, model):
+    def __call__(self, model: Model) -> tuple[Callable[..., Any], tuple[str, str]]:
         return load_model, (self.file, self.name)
 
 
-def _run(file: Path):
+def _run(file: Path) -> ModuleType:
     try:
         content = file.read_bytes()
     except OSError as error:
@@ -94,7 +98,7 @@ def _theirs(error: Exception, file: Path, problem: str) -> InputError:
     return InputError(f"{problem}: {type(error).__name__}: {error}", file=file, row=row)
 
 
-def _models_in(module) -> list[type[Model]]:
+def _models_in(module: ModuleType) -> list[type[Model]]:
     own = [v for v in vars(module).values() if inspect.isclass(v) and issubclass(v, Model) and v.__module__ == module.__name__]
     return [k for k in own if not inspect.isabstract(k)]
 
@@ -144,7 +148,7 @@ def _check_parameter(model: str, p: Parameter, file: Path) -> None:
 
 def _try_out(model: Model, file: Path) -> None:
     """Evaluate the model at three points of its default priors, together and one by one."""
-    priors = [parse_prior(p.default_prior) for p in model.parameters]
+    priors = [parse_prior(p.default_prior or {}) for p in model.parameters]
     theta = np.array([[float(prior.quantile(share)) for prior in priors] for share in _PRIOR_SHARES])
     what = "log_distance" if hasattr(model, "log_distance") else "e_squared"
     function = getattr(model, what)
@@ -160,7 +164,7 @@ def _try_out(model: Model, file: Path) -> None:
         raise InputError(f"{model.name}: omega_k must return one number a point, shape (W,)", file=file, value=curvature.shape)
 
 
-def _check_values(model: Model, what: str, together, apart, file: Path) -> None:
+def _check_values(model: Model, what: str, together: FloatArray, apart: FloatArray, file: Path) -> None:
     wanted = (len(_PRIOR_SHARES), len(_TRIED_Z))
     if together.shape != wanted:
         cure = "Broadcast: theta[:, 0:1] is (W, 1), z is (M,)"

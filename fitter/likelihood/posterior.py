@@ -5,9 +5,11 @@ from __future__ import annotations
 import copy
 from collections.abc import Iterator
 from dataclasses import dataclass, replace
+from typing import TYPE_CHECKING, Any
 
 import numpy as np
 
+from fitter.array_types import FloatArray
 from fitter.cosmology import get_model, radiation_density
 from fitter.cosmology.adaptive import log_distance_at
 from fitter.cosmology.derived import derived, derived_names
@@ -17,6 +19,13 @@ from fitter.likelihood.design import Design
 from fitter.likelihood.kernel import Kernel
 from fitter.likelihood.priors import Normal, Prior, TruncatedNormal, Uniform, parse_prior
 from fitter.parameters import PARAMETERS, ZERO_POINT
+
+if TYPE_CHECKING:
+    from fitter.cosmology.base import Model
+    from fitter.likelihood.scatter import ScatterNodes
+    from fitter.parameters import Parameter
+    from fitter.sample.noise import Noise
+    from fitter.sample.sample import Sample
 
 __all__ = ["LogPosterior", "REFERENCE_H0"]
 
@@ -35,12 +44,19 @@ class _Layout:
     names: tuple[str, ...]
     fixed: dict[str, float]
 
-    def column(self, theta, name, default=None):
-        """(W,) values of a parameter, sampled, fixed or by default; None if there is none."""
+    def column(self, theta: FloatArray, name: str) -> FloatArray | None:
+        """(W,) values of a parameter, sampled or fixed; None if there is none."""
         if name in self.names:
             return theta[:, self.names.index(name)]
-        value = self.fixed.get(name, default)
+        value = self.fixed.get(name)
         return None if value is None else np.full(len(theta), value)
+
+    def known(self, theta: FloatArray, name: str) -> FloatArray:
+        """(W,) values of a parameter that is there for certain."""
+        found = self.column(theta, name)
+        if found is None:
+            raise KeyError(name)
+        return found
 
 
 class LogPosterior:
@@ -60,7 +76,7 @@ class LogPosterior:
         Supernovae (calibrators included); sampled parameters plus linear ones marginalised with a flat prior or fitted.
     """
 
-    def __init__(self, sample, model, priors: dict[str, Prior], fixed: dict[str, float], *, radiation: bool = False):
+    def __init__(self, sample: Sample, model: Model, priors: dict[str, Prior], fixed: dict[str, float], *, radiation: bool = False) -> None:
         self.sample, self.model, self.radiation = sample, model, radiation
         self.names = tuple(priors)
         self.priors = tuple(priors.values())
@@ -76,7 +92,7 @@ class LogPosterior:
         self.kernel = self._make_kernel(scatter)
 
     @classmethod
-    def build(cls, sample, model_name, parameters: dict | None = None, *, radiation: bool = False) -> LogPosterior:
+    def build(cls, sample: Sample, model_name: Model | str, parameters: dict | None = None, *, radiation: bool = False) -> LogPosterior:
         """Assemble the posterior of a sample.
 
         Parameters
@@ -115,7 +131,7 @@ class LogPosterior:
 
     # ------------------------------------------------------------------ set-up
 
-    def _set_up_linear(self, priors):
+    def _set_up_linear(self, priors: dict[str, Prior]) -> None:
         """Decide what becomes of the zero point: a flat template, a Gaussian one, a sampled column, or a constant."""
         s = self.sample
         ones, none = np.ones((len(s.redshift), 1)), np.zeros((len(s.redshift), 0))
@@ -151,24 +167,24 @@ class LogPosterior:
         self.n_parameters = len(self.names) + self._n_flat
         self.design = self._make_design(noise, flat, gaussian, linear, shift)
 
-    def _make_design(self, noise, flat, gaussian, linear, shift):
+    def _make_design(self, noise: Noise, flat: FloatArray, gaussian: FloatArray, linear: FloatArray, shift: float) -> Design:
         s = self.sample
         return Design(s.redshift, s.redshift_helio, s.data, s.calibrator_modulus, noise, flat, gaussian, linear, shift)
 
-    def _make_kernel(self, scatter):
+    def _make_kernel(self, scatter: ScatterNodes | None) -> Kernel:
         return Kernel(self.design, self.model, scatter)
 
-    def _require_calibrators(self):
+    def _require_calibrators(self) -> None:
         if self.sample.distance_scale == "absolute":
             cure = "Give absolute_magnitude a number or a normal prior, or use distance_scale: relative."
             raise InputError("magnitudes on an absolute scale need the absolute magnitude", key="parameters", cure=cure)
 
-    def _drop(self, name):
+    def _drop(self, name: str) -> None:
         keep = [i for i, n in enumerate(self.names) if n != name]
         self.names, self.priors = tuple(self.names[i] for i in keep), tuple(self.priors[i] for i in keep)
         self._layout = _Layout(self.names, self.fixed)
 
-    def _set_up_prior_box(self):
+    def _set_up_prior_box(self) -> None:
         self._low = np.array([p.low for p in self.priors])
         self._high = np.array([p.high for p in self.priors])
         uniform = [isinstance(p, Uniform) for p in self.priors]
@@ -189,7 +205,7 @@ class LogPosterior:
         """How many evaluations there were, and how many needed finer grids or adaptive quadrature, or were excluded."""
         return self.kernel.counts
 
-    def log_prior(self, theta):
+    def log_prior(self, theta: FloatArray) -> FloatArray:
         """ln prior density, (W,); −inf outside, and for NaN."""
         theta = np.atleast_2d(np.asarray(theta, float))
         with np.errstate(invalid="ignore"):
@@ -199,7 +215,7 @@ class LogPosterior:
             value = value + self.priors[i].log_density(theta[:, i])
         return value
 
-    def __call__(self, theta):
+    def __call__(self, theta: FloatArray) -> FloatArray:
         """ln posterior density (not divided by the evidence), (W,); −inf outside the prior, never NaN."""
         theta = np.atleast_2d(np.asarray(theta, float))
         value = self.log_prior(theta)
@@ -210,7 +226,7 @@ class LogPosterior:
             value[inside] += self.log_likelihood(theta[inside])
         return value
 
-    def log_likelihood(self, theta):
+    def log_likelihood(self, theta: FloatArray) -> FloatArray:
         """ln likelihood with every normalisation, marginalised over the linear parameters, (W,)."""
         theta = np.atleast_2d(np.asarray(theta, float))
         chi2, log_norm = self._chi2_raw(theta)
@@ -219,17 +235,17 @@ class LogPosterior:
             return log_norm - 0.5 * chi2
         return log_norm - (self.n_data - self._n_flat) * np.log(scale) - 0.5 * chi2 / scale**2
 
-    def chi2(self, theta):
+    def chi2(self, theta: FloatArray) -> FloatArray:
         """χ², minimised over the marginalised parameters, (W,); +inf outside the model's range."""
         theta = np.atleast_2d(np.asarray(theta, float))
         chi2, _ = self._chi2_raw(theta)
         scale = self._layout.column(theta, "covariance_scale")
         return chi2 if scale is None else chi2 / scale**2
 
-    def _chi2_raw(self, theta):
+    def _chi2_raw(self, theta: FloatArray) -> tuple[FloatArray, float | FloatArray]:
         return self.kernel(*self._ingredients(theta))
 
-    def _ingredients(self, theta):
+    def _ingredients(self, theta: FloatArray) -> tuple[FloatArray, FloatArray, FloatArray, FloatArray, FloatArray | None]:
         """The kernel's arguments."""
         w = len(theta)
         h0 = self._h0(theta)
@@ -239,37 +255,37 @@ class LogPosterior:
         return self._cosmology(theta), self._omega_r(theta, h0), offset, linear, sigma
 
     @property
-    def _scatter_is_free(self):
+    def _scatter_is_free(self) -> bool:
         return _SCATTER in self.names
 
-    def _cosmology(self, theta):
+    def _cosmology(self, theta: FloatArray) -> FloatArray:
         """(W, p) parameters of the model, sampled or fixed."""
         own = [p.name for p in self.model.parameters]
         if own == list(self.names[: len(own)]):
             return theta[:, : len(own)]
-        return np.column_stack([self._layout.column(theta, name) for name in own])
+        return np.column_stack([self._layout.known(theta, name) for name in own])
 
-    def _h0(self, theta):
+    def _h0(self, theta: FloatArray) -> FloatArray | None:
         return None if self.sample.distance_scale == "relative" else self._layout.column(theta, "H0")
 
-    def _omega_r(self, theta, h0):
+    def _omega_r(self, theta: FloatArray, h0: FloatArray | None) -> FloatArray:
         if not self.radiation:
             return np.zeros(len(theta))
         return radiation_density(np.full(len(theta), REFERENCE_H0) if h0 is None else h0)
 
     # ------------------------------------------------------------------ what else can be said
 
-    def draw_marginalised(self, theta, rng: np.random.Generator) -> dict[str, np.ndarray]:
+    def draw_marginalised(self, theta: FloatArray, rng: np.random.Generator) -> dict[str, FloatArray]:
         """Draws of the marginalised parameters from their conditional Gaussian, one for each row of `theta`."""
         if not self.marginalised:
             return {}
         return self._nuisance(theta, rng.standard_normal((len(theta), self.design.n_nuisance)))
 
-    def best_marginalised(self, theta) -> dict[str, np.ndarray]:
+    def best_marginalised(self, theta: FloatArray) -> dict[str, FloatArray]:
         """Conditional means of the marginalised parameters, (W,) each."""
         return self._nuisance(theta, None) if self.marginalised else {}
 
-    def _nuisance(self, theta, noise):
+    def _nuisance(self, theta: FloatArray, noise: FloatArray | None) -> dict[str, FloatArray]:
         theta = np.atleast_2d(theta)
         scale = self._layout.column(theta, "covariance_scale")
         if noise is not None and scale is not None:
@@ -285,7 +301,7 @@ class LogPosterior:
                 out[name] = amplitude[:, column] * np.abs(self.sample.noise.modes[:, column]).max()
         return out
 
-    def cosmology(self, theta):
+    def cosmology(self, theta: FloatArray) -> tuple[FloatArray, FloatArray, FloatArray | None]:
         """The model's own parameters (W, p), Ω_r (W,), and H0 (W,) in km/s/Mpc or None on a relative scale."""
         theta = np.atleast_2d(np.asarray(theta, float))
         h0 = self._h0(theta)
@@ -296,16 +312,16 @@ class LogPosterior:
         return derived_names(self.model, self._has_h0)
 
     @property
-    def _has_h0(self):
+    def _has_h0(self) -> bool:
         return self.sample.distance_scale != "relative"
 
-    def derived(self, theta) -> dict[str, np.ndarray]:
+    def derived(self, theta: FloatArray) -> dict[str, FloatArray]:
         """Derived parameters, (W,) each; NaN where one does not exist."""
         theta = np.atleast_2d(theta)
         h0 = self._h0(theta)
         return derived(self.model, self._cosmology(theta), self._omega_r(theta, h0), h0)
 
-    def distance_modulus(self, theta, z, z_helio=None):
+    def distance_modulus(self, theta: FloatArray, z: FloatArray, z_helio: FloatArray | None = None) -> FloatArray:
         """Distance moduli, (W, M); on a relative scale for H0 = 70 km/s/Mpc, since the scale is arbitrary.
 
         Good to 1e-8 mag however close a model comes to having no big bang; NaN where a model has no distance.
@@ -317,7 +333,7 @@ class LogPosterior:
         ) + data_term(z, z if z_helio is None else z_helio)
         return mu + hubble_term(REFERENCE_H0 if h0 is None else h0)[..., None]
 
-    def zero_point(self, theta) -> float:
+    def zero_point(self, theta: FloatArray) -> float:
         """What is added to `distance_modulus` to predict the data, mag: the magnitude, or the best offset of a relative scale."""
         theta = np.atleast_2d(theta)
         if self.sample.distance_scale == "relative":
@@ -328,7 +344,7 @@ class LogPosterior:
                 return float(source[0])
         return 0.0
 
-    def residuals(self, theta):
+    def residuals(self, theta: FloatArray) -> FloatArray:
         """Data minus model at one point, (N,) mag, with the best marginalised values; systematic modes are not taken off."""
         theta = np.atleast_2d(theta)
         s = self.sample
@@ -339,7 +355,7 @@ class LogPosterior:
 
     # ------------------------------------------------------------------ other data
 
-    def with_data(self, data) -> Iterator[LogPosterior]:
+    def with_data(self, data: FloatArray) -> Iterator[LogPosterior]:
         """The posterior given each of M other data vectors (M, N), all else being equal: one factorisation for all of them."""
         data = np.atleast_2d(np.asarray(data, float))
         for row, kernel in zip(data, self.kernel.with_data(data), strict=True):
@@ -347,7 +363,7 @@ class LogPosterior:
             other.sample, other.design, other.kernel = replace(self.sample, data=row), kernel.design, kernel
             yield other
 
-    def expected(self, theta):
+    def expected(self, theta: FloatArray) -> FloatArray:
         """The data that theta predicts, (W, N) mag.
 
         Marginalised parameters are at the mean of their prior; a flat one, which has none, at its best value.
@@ -363,12 +379,12 @@ class LogPosterior:
         magnitude = self._layout.column(theta, _MAGNITUDE)
         return predicted + (self.design.shift if magnitude is None else magnitude[:, None])
 
-    def simulate(self, theta, rng: np.random.Generator):
+    def simulate(self, theta: FloatArray, rng: np.random.Generator) -> FloatArray:
         """One mock data vector for each row of theta, (W, N) mag: the prediction and a draw of everything that scatters."""
         theta = np.atleast_2d(np.asarray(theta, float))
         scatter = self.design.noise.draw(rng, len(theta))
         if self._scatter_is_free:
-            scatter = scatter + self._layout.column(theta, _SCATTER)[:, None] * rng.standard_normal(scatter.shape)
+            scatter = scatter + self._layout.known(theta, _SCATTER)[:, None] * rng.standard_normal(scatter.shape)
         extra = self.design.gaussian[:, self.sample.noise.modes.shape[1] :]  # the prior of the absolute magnitude
         scatter = scatter + rng.standard_normal((len(theta), extra.shape[1])) @ extra.T
         scale = self._layout.column(theta, "covariance_scale")
@@ -383,22 +399,22 @@ class LogPosterior:
         return float(1.0 - inside.mean())
 
 
-def _takes_magnitude(sample) -> bool:
+def _takes_magnitude(sample: Sample) -> bool:
     return sample.distance_scale == "calibrated" or (sample.distance_scale == "absolute" and sample.data_kind == "magnitude")
 
 
-def _free_parameters(sample, model):
+def _free_parameters(sample: Sample, model: Model) -> tuple[Parameter, ...]:
     return model.parameters + (() if sample.distance_scale == "relative" else (PARAMETERS["H0"],))
 
 
-def _assign(name, spec, priors, fixed):
+def _assign(name: str, spec: dict[str, Any] | float, priors: dict[str, Any], fixed: dict[str, Any]) -> None:
     if isinstance(spec, (int, float)) and not isinstance(spec, bool):
         fixed[name] = float(spec)
     else:
         priors[name] = _physical(name, parse_prior(spec, key=f"parameters.{name}"))
 
 
-def _physical(name, prior):
+def _physical(name: str, prior: Prior) -> Prior:
     """Cut a prior at zero, and normalise it again, where the parameter cannot be negative."""
     if name not in _NOT_NEGATIVE or prior.low >= 0:
         return prior
@@ -406,10 +422,12 @@ def _physical(name, prior):
         raise InputError(f"{name} cannot be negative", key=f"parameters.{name}", value=prior.describe(), cure="Give it room above 0.")
     if isinstance(prior, Uniform):
         return Uniform(0.0, prior.high)
-    return TruncatedNormal(prior.mean, prior.sd, 0.0, prior.high)
+    if isinstance(prior, Normal | TruncatedNormal):
+        return TruncatedNormal(prior.mean, prior.sd, 0.0, prior.high)
+    return prior
 
 
-def _refuse_unknown(wanted, sample, model):
+def _refuse_unknown(wanted: dict[str, Any], sample: Sample, model: Model) -> None:
     problems = [
         InputError(*_why_not(name, sample, model)[:1], key=f"parameters.{name}", cure=_why_not(name, sample, model)[1]) for name in wanted
     ]
@@ -421,7 +439,7 @@ def _refuse_unknown(wanted, sample, model):
         raise InputErrors(problems)
 
 
-def _why_not(name, sample, model):
+def _why_not(name: str, sample: Sample, model: Model) -> tuple[str, str]:
     """Why a parameter cannot be given a prior here, and what to do."""
     own = ", ".join(p.name for p in _free_parameters(sample, model))
     if sample.distance_scale == "relative" and name in ("H0", _MAGNITUDE):
@@ -435,6 +453,6 @@ def _why_not(name, sample, model):
     return "there is no such parameter", f"{model.name} takes {own}."
 
 
-def _scatter_limit(prior):
+def _scatter_limit(prior: Prior) -> float:
     limit = prior.high if np.isfinite(prior.high) else float(prior.quantile(1 - 1e-12))
     return max(limit, 1e-3)

@@ -8,7 +8,9 @@ from dataclasses import dataclass
 from typing import ClassVar
 
 import numpy as np
+from numpy.typing import ArrayLike
 
+from fitter.array_types import FloatArray
 from fitter.errors import InputError
 
 __all__ = ["PRIORS", "LogUniform", "Normal", "Prior", "TruncatedNormal", "Uniform", "parse_prior"]
@@ -26,14 +28,14 @@ class Prior(ABC):
     high: float
 
     @abstractmethod
-    def log_density(self, x) -> np.ndarray:
+    def log_density(self, x: ArrayLike) -> FloatArray:
         """ln p(x) for an array; −inf outside the support and for NaN."""
 
     @abstractmethod
-    def quantile(self, p) -> np.ndarray:
+    def quantile(self, p: ArrayLike) -> FloatArray:
         """Inverse cumulative distribution, for p in [0, 1]."""
 
-    def sample(self, rng: np.random.Generator, size=None) -> np.ndarray:
+    def sample(self, rng: np.random.Generator, size: int | None = None) -> FloatArray:
         """Independent draws."""
         return self.quantile(rng.random(size))
 
@@ -52,12 +54,12 @@ class Prior(ABC):
         return f"{self.keyword.replace('_', '-')}({numbers})"
 
 
-def _inside(x, low, high, value):
+def _inside(x: FloatArray, low: float, high: float, value: float | FloatArray) -> FloatArray:
     with np.errstate(invalid="ignore"):
         return np.where((x >= low) & (x <= high), value, -np.inf)
 
 
-def _require(ok: bool, problem: str):
+def _require(ok: bool, problem: str) -> None:
     if not ok:
         raise InputError(problem)
 
@@ -71,13 +73,13 @@ class Uniform(Prior):
     keyword = "uniform"
     fields = ("low", "high")
 
-    def __post_init__(self):
+    def __post_init__(self) -> None:
         _require(self.low < self.high, "uniform: [low, high] needs low < high")
 
-    def log_density(self, x):
+    def log_density(self, x: ArrayLike) -> FloatArray:
         return _inside(np.asarray(x, float), self.low, self.high, -math.log(self.high - self.low))
 
-    def quantile(self, p):
+    def quantile(self, p: ArrayLike) -> FloatArray:
         return self.low + (self.high - self.low) * np.asarray(p)
 
 
@@ -90,15 +92,15 @@ class LogUniform(Prior):
     keyword = "log_uniform"
     fields = ("low", "high")
 
-    def __post_init__(self):
+    def __post_init__(self) -> None:
         _require(0 < self.low < self.high, "log_uniform: [low, high] needs 0 < low < high")
 
-    def log_density(self, x):
+    def log_density(self, x: ArrayLike) -> FloatArray:
         x = np.asarray(x, float)
         with np.errstate(invalid="ignore", divide="ignore"):
             return _inside(x, self.low, self.high, -np.log(x) - math.log(math.log(self.high / self.low)))
 
-    def quantile(self, p):
+    def quantile(self, p: ArrayLike) -> FloatArray:
         return np.exp(math.log(self.low) + math.log(self.high / self.low) * np.asarray(p))
 
 
@@ -113,23 +115,23 @@ class TruncatedNormal(Prior):
     keyword = "truncated_normal"
     fields = ("mean", "sd", "low", "high")
 
-    def __post_init__(self):
+    def __post_init__(self) -> None:
         _require(self.sd > 0, "truncated_normal: [mean, sd, low, high] needs sd > 0")
         _require(self.low < self.high, "truncated_normal: [mean, sd, low, high] needs low < high")
         _require(self._cdf_limits()[1] > self._cdf_limits()[0], "truncated_normal: nothing of the Gaussian is left between low and high")
 
-    def _cdf_limits(self):
+    def _cdf_limits(self) -> tuple[float, float]:
         from scipy.special import ndtr
 
         return ndtr((self.low - self.mean) / self.sd), ndtr((self.high - self.mean) / self.sd)
 
-    def log_density(self, x):
+    def log_density(self, x: ArrayLike) -> FloatArray:
         x = np.asarray(x, float)
         below, above = self._cdf_limits()
         log_norm = math.log(self.sd * math.sqrt(2 * math.pi) * (above - below))
         return _inside(x, self.low, self.high, -0.5 * ((x - self.mean) / self.sd) ** 2 - log_norm)
 
-    def quantile(self, p):
+    def quantile(self, p: ArrayLike) -> FloatArray:
         from scipy.special import ndtri
 
         below, above = self._cdf_limits()
@@ -147,14 +149,14 @@ class Normal(Prior):
     low = -math.inf
     high = math.inf
 
-    def __post_init__(self):
+    def __post_init__(self) -> None:
         _require(self.sd > 0, "normal: [mean, sd] needs sd > 0")
 
-    def log_density(self, x):
+    def log_density(self, x: ArrayLike) -> FloatArray:
         x = np.asarray(x, float)
         return _inside(x, self.low, self.high, -0.5 * ((x - self.mean) / self.sd) ** 2 - math.log(self.sd * math.sqrt(2 * math.pi)))
 
-    def quantile(self, p):
+    def quantile(self, p: ArrayLike) -> FloatArray:
         from scipy.special import ndtri
 
         return self.mean + self.sd * ndtri(np.asarray(p))
@@ -163,7 +165,7 @@ class Normal(Prior):
 PRIORS: dict[str, type[Prior]] = {p.keyword: p for p in (Uniform, Normal, TruncatedNormal, LogUniform)}
 
 
-def parse_prior(spec, *, key: str | None = None) -> Prior:
+def parse_prior(spec: object, *, key: str | None = None) -> Prior:
     """Make a prior from what a config says, e.g. ``{"uniform": [0, 1]}``.
 
     Parameters

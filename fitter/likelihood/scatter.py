@@ -9,7 +9,9 @@ from __future__ import annotations
 from dataclasses import dataclass
 
 import numpy as np
+from numpy.typing import ArrayLike
 
+from fitter.array_types import FloatArray
 from fitter.cosmology.grid import Grid
 from fitter.errors import MufitterError
 from fitter.likelihood.compression import Compressed, compress, compress_many
@@ -30,13 +32,13 @@ class ScatterNodes:
     compressed: tuple[Compressed, ...]
     error: float
 
-    def with_data(self, design: Design, data) -> list[ScatterNodes]:
+    def with_data(self, design: Design, data: FloatArray) -> list[ScatterNodes]:
         """The same nodes for M other data vectors (M, N), all compressed together."""
         variance, rotated = _diagonal_basis(design, data)
         tables = [compress_many(design, data, Diagonal(variance + (self.scale * np.sinh(t)) ** 2), rotated=rotated) for t in self.grid.u]
         return [ScatterNodes(self.scale, self.grid, nodes, self.error) for nodes in zip(*tables, strict=True)]
 
-    def weights(self, sigma) -> np.ndarray:
+    def weights(self, sigma: ArrayLike) -> FloatArray:
         """(W, m) interpolation weights for scatters `sigma`, (W,)."""
         return self.grid.interpolation(np.arcsinh(np.asarray(sigma) / self.scale))
 
@@ -64,7 +66,7 @@ def scatter_nodes(design: Design, sigma_max: float) -> ScatterNodes:
     raise MufitterError(f"the free intrinsic scatter could not be tabulated: error {error:.1e} in −2 ln L with {order} nodes")
 
 
-def _diagonal_basis(design, data=None):
+def _diagonal_basis(design: Design, data: FloatArray | None = None) -> tuple[FloatArray, FloatArray | None]:
     """Variances, and the design's columns in the basis where the fixed covariance is diagonal."""
     noise = design.noise
     if noise.is_diagonal:
@@ -78,7 +80,7 @@ def _diagonal_basis(design, data=None):
     return variance, vectors.T @ design.block(data=data)
 
 
-def _at(design, variance, rotated, sigma):
+def _at(design: Design, variance: FloatArray, rotated: FloatArray | None, sigma: float) -> Compressed:
     return compress(design, Diagonal(variance + sigma**2), rotated=rotated)
 
 
@@ -86,10 +88,10 @@ def _at(design, variance, rotated, sigma):
 class Diagonal:
     """The part of Noise that `compress` needs, for independent rows."""
 
-    variance: np.ndarray
+    variance: FloatArray
     is_diagonal = True
 
-    def whiten(self, x, rows=slice(None)):
+    def whiten(self, x: FloatArray, rows: slice = slice(None)) -> FloatArray:
         return x / np.sqrt(self.variance[rows])[:, None]
 
     @property
@@ -97,7 +99,7 @@ class Diagonal:
         return float(np.log(self.variance).sum())
 
 
-def _error(grid, nodes, t, truth):
+def _error(grid: Grid, nodes: list[Compressed], t: float, truth: Compressed) -> float:
     """Error in −2 ln L at t for three shapes: the reference, a tilt and a bend of 0.2 mag."""
     x = np.zeros((3, truth.r.shape[1]))
     ramp = np.linspace(0, 0.2, x.shape[1])

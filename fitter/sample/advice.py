@@ -6,6 +6,7 @@ import re
 
 import numpy as np
 
+from fitter.array_types import FloatArray
 from fitter.sample.sample import Sample
 
 __all__ = ["about_data", "advice", "scatter_about_curve", "smooth_residuals"]
@@ -42,7 +43,7 @@ def about_data(sample: Sample) -> list[str]:
     return [text for text in (_data_range(sample), _systematics_only(sample), _size_of_errors(sample)) if text]
 
 
-def _data_range(sample: Sample):
+def _data_range(sample: Sample) -> str | None:
     low, high = (5.0, 35.0) if sample.data_kind == "magnitude" else (20.0, 50.0)
     outside = (sample.data < low) | (sample.data > high)
     if not outside.any():
@@ -55,7 +56,7 @@ def _data_range(sample: Sample):
     )
 
 
-def _heliocentric(sample: Sample, columns: dict):
+def _heliocentric(sample: Sample, columns: dict) -> str | None:
     name = str(columns.get("redshift", ""))
     if re.search(r"hel", name, re.IGNORECASE):
         return (
@@ -72,7 +73,7 @@ def _heliocentric(sample: Sample, columns: dict):
     return None
 
 
-def _calibrators(sample: Sample, inside: int):
+def _calibrators(sample: Sample, inside: int) -> str | None:
     if not inside:
         return None
     return (
@@ -120,7 +121,7 @@ def _included_already(sample: Sample) -> list[str]:
     return found
 
 
-def _systematics_only(sample: Sample):
+def _systematics_only(sample: Sample) -> str | None:
     """Errors far below the scatter of the data about a smooth curve, where no statistical term was given."""
     statistical = {"sigma", "precision", "intrinsic"}
     if statistical & {t.kind for t in sample.terms} or sample.intrinsic_prior is not None:
@@ -137,7 +138,7 @@ def _systematics_only(sample: Sample):
     )
 
 
-def _size_of_errors(sample: Sample):
+def _size_of_errors(sample: Sample) -> str | None:
     """Uncorrelated errors that are far from the scatter of the data: another unit, variances, or something left out."""
     known = ("sigma", "intrinsic", "peculiar_velocity", "lensing")
     terms = [t for t in sample.terms if t.kind in known]
@@ -162,13 +163,15 @@ def _size_of_errors(sample: Sample):
     return None
 
 
-def scatter_about_curve(z, data, sigma) -> tuple[float, float]:
+def scatter_about_curve(z: FloatArray, data: FloatArray, sigma: FloatArray) -> tuple[float, float]:
     """Robust scatter about a smooth Hubble diagram, in units of the errors and in mag."""
     residual = smooth_residuals(z, data, sigma, fewest=1)
+    if residual is None:
+        raise ValueError("there are no data to put a curve through")
     return 1.4826 * float(np.median(np.abs(residual / np.maximum(sigma, 1e-12)))), 1.4826 * float(np.median(np.abs(residual)))
 
 
-def smooth_residuals(z, data, sigma, fewest: int = _FEWEST_ROWS):
+def smooth_residuals(z: FloatArray, data: FloatArray, sigma: FloatArray, fewest: int = _FEWEST_ROWS) -> FloatArray | None:
     """Data less a smooth Hubble diagram, (N,) mag: a quartic in ln(1 + z) beside 5 log10 z, fitted three times without what is far off.
 
     None where there are fewer rows than ``fewest``.

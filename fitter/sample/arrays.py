@@ -2,8 +2,12 @@
 
 from __future__ import annotations
 
-import numpy as np
+from typing import Any
 
+import numpy as np
+from numpy.typing import ArrayLike
+
+from fitter.array_types import FloatArray
 from fitter.errors import InputError
 from fitter.sample.assembly import Problems, finish
 from fitter.sample.matrices import make_symmetric
@@ -16,7 +20,16 @@ from fitter.sample.validate import Place
 __all__ = ["assemble_arrays"]
 
 
-def assemble_arrays(z, mu, *, distance_scale, data_kind, intrinsic, covariance_scale, **given) -> Sample:
+def assemble_arrays(
+    z: ArrayLike,
+    mu: ArrayLike,
+    *,
+    distance_scale: str,
+    data_kind: str,
+    intrinsic: dict[str, list[float]] | float | None,
+    covariance_scale: dict[str, list[float]] | None,
+    **given: Any,
+) -> Sample:
     """Do the work of `Sample.from_arrays`."""
     problems = Problems()
     for key, value, known in (("data_kind", data_kind, DATA_KINDS), ("distance_scale", distance_scale, DISTANCE_SCALES)):
@@ -40,7 +53,7 @@ def assemble_arrays(z, mu, *, distance_scale, data_kind, intrinsic, covariance_s
     return finish(take, terms, place, problems, rest=rest, calibrators_inside=inside)
 
 
-def _rows(z, mu, given: dict, problems: Problems) -> dict:
+def _rows(z: ArrayLike, mu: ArrayLike, given: dict, problems: Problems) -> dict:
     data = _numbers(mu, "mu", None, problems)
     n = len(data)
     if not n:
@@ -51,16 +64,16 @@ def _rows(z, mu, given: dict, problems: Problems) -> dict:
     if given["calibrator_modulus"] is not None:
         calibrators = _numbers(given["calibrator_modulus"], "calibrator_modulus", n, problems)
         calibrators = np.where(calibrators > 0, calibrators, np.nan)
-    take = {"redshift": redshift, "redshift_helio": helio, "data": data, "calibrator_modulus": calibrators}
+    take: dict[str, Any] = {"redshift": redshift, "redshift_helio": helio, "data": data, "calibrator_modulus": calibrators}
     for key in ("group", "name"):
         values = given[key]
         take[key] = None if values is None else np.array([str(v) for v in values], dtype=str)
-        if values is not None and len(take[key]) != n:
-            problems.found.append(InputError(f"{key} must have one value per supernova, {n}", value=len(take[key])))
+        if values is not None and len(values) != n:
+            problems.found.append(InputError(f"{key} must have one value per supernova, {n}", value=len(values)))
     return take
 
 
-def _numbers(values, key: str, n: int | None, problems: Problems):
+def _numbers(values: ArrayLike, key: str, n: int | None, problems: Problems) -> FloatArray:
     """A private (N,) copy of an array of numbers."""
     try:
         numbers = np.array(values, dtype=float)
@@ -74,7 +87,7 @@ def _numbers(values, key: str, n: int | None, problems: Problems):
     return numbers
 
 
-def _terms(n: int, given: dict, intrinsic, problems: Problems) -> list[Term]:
+def _terms(n: int, given: dict, intrinsic: dict[str, list[float]] | float | None, problems: Problems) -> list[Term]:
     terms = []
     sigma, precision = given["sigma"], given["precision"]
     if precision is not None and (sigma is not None or given["covariance"] is not None):
@@ -94,8 +107,8 @@ def _terms(n: int, given: dict, intrinsic, problems: Problems) -> list[Term]:
         if given[kind] is not None:
             with problems.collect():
                 matrix = _matrix(given[kind], n, kind)
-                part = {"dense": matrix} if kind == "covariance" else {"precision": matrix}
-                terms.append(Term(kind, kind, Noise(np.zeros(n), **part)))
+                dense, inverse = (matrix, None) if kind == "covariance" else (None, matrix)
+                terms.append(Term(kind, kind, Noise(np.zeros(n), dense=dense, precision=inverse)))
     if given["modes"] is not None:
         with problems.collect():
             terms.append(_modes(given["modes"], n))
@@ -104,7 +117,7 @@ def _terms(n: int, given: dict, intrinsic, problems: Problems) -> list[Term]:
     return terms
 
 
-def _matrix(values, n: int, kind: str):
+def _matrix(values: ArrayLike, n: int, kind: str) -> FloatArray:
     matrix = np.array(values, dtype=float, order="C")
     if matrix.shape != (n, n):
         shape = " × ".join(map(str, matrix.shape))
@@ -113,7 +126,7 @@ def _matrix(values, n: int, kind: str):
     return matrix
 
 
-def _modes(values, n: int) -> Term:
+def _modes(values: ArrayLike, n: int) -> Term:
     modes = np.array(values, dtype=float)
     modes = modes[:, None] if modes.ndim == 1 else modes
     if modes.ndim != 2 or len(modes) != n or not np.all(np.isfinite(modes)):

@@ -3,14 +3,16 @@
 from __future__ import annotations
 
 import os
-from collections.abc import Callable
+from collections.abc import Callable, Collection, Iterator, Sequence
 from contextlib import contextmanager
 from dataclasses import dataclass, field, replace
 from pathlib import Path
 from typing import Any
 
 import numpy as np
+from numpy.typing import NDArray
 
+from fitter.array_types import BoolArray, FloatArray
 from fitter.errors import InputError, InputErrors
 from fitter.sample.advice import advice
 from fitter.sample.cuts import CutColumn, Cuts, one_per_object
@@ -39,7 +41,7 @@ class Problems:
     found: list[InputError] = field(default_factory=list)
 
     @contextmanager
-    def collect(self):
+    def collect(self) -> Iterator[None]:
         """Keep an InputError that is raised inside and carry on after it."""
         try:
             yield
@@ -57,7 +59,7 @@ class Problems:
             raise InputErrors(unique)
 
 
-def assemble(settings: SampleSettings, folder) -> Sample:
+def assemble(settings: SampleSettings, folder: Path) -> Sample:
     """Do the work of `Sample.from_config`."""
     folder = Path(folder)
     path = folder / os.path.expanduser(settings.table)
@@ -114,7 +116,7 @@ def _text_options(settings: SampleSettings) -> TextOptions:
     return TextOptions(settings.header_tag, settings.row_tag, settings.delimiter, settings.comment)
 
 
-def _mapped(columns: Columns, ref):
+def _mapped(columns: Columns, ref: str | int) -> str | int:
     """The column that a role or a column is read from."""
     if isinstance(ref, str) and ref in Columns.model_fields and getattr(columns, ref) is not None:
         return getattr(columns, ref)
@@ -137,7 +139,7 @@ def _wanted_words(settings: SampleSettings) -> list:
 class _Observed:
     """The columns of the table by role, before any cut."""
 
-    def __init__(self, settings: SampleSettings, table: Table, problems: Problems):
+    def __init__(self, settings: SampleSettings, table: Table, problems: Problems) -> None:
         self.settings, self.table, self.problems = settings, table, problems
         self.columns = settings.columns
         self.unreadable: set[str] = set()
@@ -161,7 +163,7 @@ class _Observed:
             return self.values["redshift"]
         return np.full(self.table.n, np.nan)
 
-    def _words(self, role: str):
+    def _words(self, role: str) -> NDArray[np.str_] | None:
         ref = getattr(self.columns, role)
         if ref is None:
             return None
@@ -169,22 +171,22 @@ class _Observed:
             return self.table.texts(ref)
         return None
 
-    def numbers(self, ref) -> np.ndarray:
+    def numbers(self, ref: str | int) -> np.ndarray:
         """Return a column as numbers, those that stand for a missing value turned to NaN."""
         values = self.table.numbers(_mapped(self.columns, ref))
         stand_ins = self.settings.missing_values
         return np.where(np.isin(values, stand_ins), np.nan, values) if stand_ins else values
 
-    def texts(self, ref) -> np.ndarray:
+    def texts(self, ref: str | int) -> np.ndarray:
         """Return a column, or a role's, as words."""
         return self.table.texts(_mapped(self.columns, ref))
 
-    def place(self, kept) -> Place:
+    def place(self, kept: BoolArray) -> Place:
         """Return where the kept rows stand."""
         columns = {role: getattr(self.columns, role) for role in Columns.model_fields if getattr(self.columns, role) is not None}
         return Place(self.settings.table, self.table.lines[kept], columns | {"data": columns.get(self.settings.data_kind)})
 
-    def cut(self):
+    def cut(self) -> tuple[BoolArray, Cuts]:
         """Return the mask of the rows that are kept and the cuts that made it."""
         cuts = Cuts(self.settings.keep, self._cut_column, self.words["group"], self.is_calibrator, self.calibrated, self.settings.table)
         kept = cuts.apply()
@@ -220,8 +222,8 @@ class _Observed:
         words = self.table.texts(mapped)
         return CutColumn(ref, words, self._converter(words, self.table.columns.label(position)), is_redshift=is_redshift)
 
-    def _converter(self, words, label) -> Callable[[], np.ndarray]:
-        def convert():
+    def _converter(self, words: NDArray[np.str_], label: str | int) -> Callable[[], np.ndarray]:
+        def convert() -> FloatArray:
             values, problem = to_numbers(words, self.table.lines, label, self.settings.table)
             if problem is not None:
                 raise problem
@@ -275,9 +277,11 @@ def _put_together(observed: _Observed, rows: Rows, terms: list[Term], removed: d
     )  # fmt: skip
 
 
-def _one_per(observed: _Observed, kept, terms: list[Term], removed: dict, problems: Problems):
+def _one_per(observed: _Observed, kept: BoolArray, terms: list[Term], removed: dict, problems: Problems) -> tuple[BoolArray, list[Term]]:
     """Keep the row with the smallest error of each object; the terms follow."""
     ref = observed.settings.keep.one_per
+    if ref is None:
+        return kept, terms
     with problems.collect():
         objects = observed.texts(ref)[kept]
         if not terms:
@@ -291,8 +295,9 @@ def _one_per(observed: _Observed, kept, terms: list[Term], removed: dict, proble
 
 
 def finish(
-    take: dict[str, Any], terms: list[Term], place: Place, problems: Problems, *, rest: dict, skip=frozenset(), allow_duplicates=False,
-    calibrators_inside=0, notes=(),
+    take: dict[str, Any], terms: list[Term], place: Place, problems: Problems, *, rest: dict, skip: Collection[str] = frozenset(),
+    allow_duplicates: bool = False,
+    calibrators_inside: int = 0, notes: Sequence[str] = (),
 ) -> Sample:  # fmt: skip
     """Check the rows and terms that are kept, and make the sample of them.
 
@@ -314,7 +319,9 @@ def finish(
     return replace(sample, warnings=said)
 
 
-def _check(take: dict, place: Place, skip, distance_scale: str, allow_duplicates: bool):
+def _check(
+    take: dict, place: Place, skip: Collection[str], distance_scale: str, allow_duplicates: bool
+) -> tuple[list[InputError], list[str]]:
     problems: list[InputError] = []
     for role in _REDSHIFTS:
         given = role == "redshift" or take[role] is not take["redshift"]

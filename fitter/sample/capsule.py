@@ -7,7 +7,7 @@ import binascii
 import hashlib
 import json
 import os
-from collections.abc import Iterable
+from collections.abc import Iterable, Sequence
 from dataclasses import dataclass, field
 from pathlib import Path
 from types import SimpleNamespace
@@ -16,6 +16,7 @@ from typing import Annotated, Any, Literal, NoReturn
 import numpy as np
 from pydantic import BaseModel, ConfigDict, Discriminator, Field, Tag, ValidationError
 
+from fitter.array_types import BoolArray, FloatArray, IntArray
 from fitter.errors import InputError
 from fitter.sample.files import reading, sha256_of
 from fitter.sample.noise import Noise
@@ -120,7 +121,7 @@ class Capsule(BaseModel):
         return json.dumps(self.model_dump(mode="json", by_alias=True), indent=1, ensure_ascii=False, allow_nan=False) + "\n"
 
 
-def pack(values) -> str:
+def pack(values: FloatArray) -> str:
     """Doubles as text: little-endian IEEE 754, base64."""
     return base64.b64encode(np.ascontiguousarray(values, "<f8").tobytes()).decode()
 
@@ -224,11 +225,11 @@ class CapsuleSample(Sample):
         cure = "Write one without the term from the original run: `mufitter capsule RUN --without LABEL`"
         raise InputError("no uncertainty term can be taken out of a capsule", value=labels, cure=cure)
 
-    def select(self, mask) -> NoReturn:
+    def select(self, mask: BoolArray | IntArray | Sequence[int]) -> NoReturn:
         """Refuse: there are no rows."""
         raise InputError("a capsule has no single supernovae to select from", cure="This needs the original data")
 
 
-def sample_from_capsule(settings: CapsuleSettings, folder) -> CapsuleSample:
+def sample_from_capsule(settings: CapsuleSettings, folder: Path) -> CapsuleSample:
     """Read the capsule that a config names."""
     return CapsuleSample.from_file(Path(folder) / os.path.expanduser(settings.capsule), settings.capsule)

@@ -3,11 +3,14 @@
 from __future__ import annotations
 
 import difflib
-from collections.abc import Callable
+from collections.abc import Callable, Sequence
 from dataclasses import dataclass, field
+from typing import Any, TypeGuard
 
 import numpy as np
+from numpy.typing import NDArray
 
+from fitter.array_types import BoolArray, FloatArray
 from fitter.errors import InputError
 from fitter.sample.settings import Keep, RuleSettings
 
@@ -81,11 +84,11 @@ class Cuts:
             kept = self._count(ref, kept, passes)
         return kept
 
-    def _count(self, label: str, kept, passes):
+    def _count(self, label: str, kept: BoolArray, passes: BoolArray) -> BoolArray:
         self.removed[str(label)] = int((kept & ~passes).sum())
         return kept & passes
 
-    def _passes(self, rule, column: CutColumn) -> np.ndarray:
+    def _passes(self, rule: Any, column: CutColumn) -> np.ndarray:
         if isinstance(rule, RuleSettings):
             if rule.range is not None:
                 return self._in_range(rule.range, column)
@@ -100,7 +103,7 @@ class Cuts:
             return self._in_range(rule, column)
         return self._is_one_of(rule, column)
 
-    def _in_range(self, bounds, column: CutColumn) -> np.ndarray:
+    def _in_range(self, bounds: Sequence[float | None], column: CutColumn) -> np.ndarray:
         low = -np.inf if bounds[0] is None else bounds[0]
         high = np.inf if bounds[1] is None else bounds[1]
         if low > high:
@@ -111,7 +114,7 @@ class Cuts:
         values = column.numbers()
         return (values >= low) & (values <= high)
 
-    def _is_one_of(self, wanted, column: CutColumn) -> np.ndarray:
+    def _is_one_of(self, wanted: Sequence[bool | int | float | str | None], column: CutColumn) -> np.ndarray:
         if None in wanted:
             raise InputError(
                 "a list of values cannot hold null", key=f"sample.keep.{column.label}", value=wanted,
@@ -146,11 +149,11 @@ class Cuts:
         return others
 
 
-def _is_plain_number(value) -> bool:
+def _is_plain_number(value: object) -> TypeGuard[float]:
     return isinstance(value, int | float) and not isinstance(value, bool)
 
 
-def _equal(value, column: CutColumn) -> np.ndarray:
+def _equal(value: bool | int | float | str | None, column: CutColumn) -> np.ndarray:
     words = column.words
     if isinstance(value, bool):
         forms = ("true", "yes", "t", "1") if value else ("false", "no", "f", "0")
@@ -165,14 +168,14 @@ def _equal(value, column: CutColumn) -> np.ndarray:
     return matches if words is not None else np.zeros(len(column.numbers()), dtype=bool)
 
 
-def _nearest(value, column: CutColumn) -> str:
+def _nearest(value: object, column: CutColumn) -> str:
     if column.words is None:
         return ""
     near = difflib.get_close_matches(str(value), np.unique(column.words)[:10_000].tolist(), n=1)
     return f" Did you mean {near[0]}?" if near else ""
 
 
-def one_per_object(objects, variance) -> np.ndarray:
+def one_per_object(objects: NDArray[np.str_], variance: FloatArray) -> np.ndarray:
     """Return the mask that keeps, of the rows with the same word, the one with the smallest variance.
 
     Rows without a word are objects of their own; of equal variances the first is kept.

@@ -11,9 +11,11 @@ import tokenize
 import zipfile
 from collections.abc import Callable, Sequence
 from pathlib import Path
+from typing import IO, Any
 
 import numpy as np
 
+from fitter.array_types import BoolArray, FloatArray
 from fitter.errors import InputError
 from fitter.sample.cholesky import LARGEST, mirror_lower
 from fitter.sample.files import open_binary, reading
@@ -32,9 +34,9 @@ _CHUNK = 1 << 24  # characters of text at a time
 
 
 def read_matrix(
-    path, *, sizes: Sequence[int], what: str, array: str | None = None, table: str = "the table", shown: str | None = None,
+    path: Path, *, sizes: Sequence[int], what: str, array: str | None = None, table: str = "the table", shown: str | None = None,
     bordered: bool = False, on_labels: Callable[[list[str]], None] | None = None,
-):  # fmt: skip
+) -> FloatArray:  # fmt: skip
     """Read an N×N matrix.
 
     Parameters
@@ -87,7 +89,7 @@ def read_matrix(
     return matrix
 
 
-def make_symmetric(matrix, what: str, shown: str | None = None) -> None:
+def make_symmetric(matrix: FloatArray, what: str, shown: str | None = None) -> None:
     """Average a matrix with its transpose, in place, after checking that they agree and are finite.
 
     Raises
@@ -119,7 +121,7 @@ def make_symmetric(matrix, what: str, shown: str | None = None) -> None:
         )  # fmt: skip
 
 
-def _symmetrise_block(matrix, rows: slice, columns: slice, scale) -> tuple[float, int, int, float, float]:
+def _symmetrise_block(matrix: FloatArray, rows: slice, columns: slice, scale: FloatArray) -> tuple[float, int, int, float, float]:
     """Average a block with its mirror image; return the largest difference, beside the errors, its place and the two numbers."""
     block, mirror = matrix[rows, columns], matrix[columns, rows].T
     unequal = block != mirror
@@ -139,7 +141,7 @@ def _symmetrise_block(matrix, rows: slice, columns: slice, scale) -> tuple[float
     return worst
 
 
-def compact(matrix, keep):
+def compact(matrix: FloatArray, keep: BoolArray) -> FloatArray:
     """Return the rows and columns of a matrix that are kept; the matrix itself is spent.
 
     Works in the memory of ``matrix``, which no copy of most of a large matrix would fit beside.
@@ -156,7 +158,7 @@ def compact(matrix, keep):
     return flat[: n * n].reshape(n, n)
 
 
-def _from_npy(path: Path, sizes, table: str, shown: str):
+def _from_npy(path: Path, sizes: list[int], table: str, shown: str) -> FloatArray:
     with open_binary(path) as stream:
         shape, dtype = _array_header(stream, shown)
         _require_numbers(dtype, shown)
@@ -164,7 +166,7 @@ def _from_npy(path: Path, sizes, table: str, shown: str):
     return _unpack(read_array(path, shown), n, packed)
 
 
-def read_array(path: Path, shown: str):
+def read_array(path: Path, shown: str) -> FloatArray:
     """Read an .npy file, never a pickle."""
     with open_binary(path) as stream:
         _require_numbers(_array_header(stream, shown)[1], shown)
@@ -172,14 +174,14 @@ def read_array(path: Path, shown: str):
         return _load(stream, shown)
 
 
-def _load(stream, shown: str):
+def _load(stream: IO[bytes] | io.BufferedIOBase, shown: str) -> FloatArray:
     try:
         return np.lib.format.read_array(stream, allow_pickle=False)
     except (ValueError, struct.error) as problem:
         raise InputError(f"the array cannot be read: {problem}", file=shown, cure="Check that the file is whole") from None
 
 
-def _array_header(stream, shown: str):
+def _array_header(stream: IO[bytes] | io.BufferedIOBase, shown: str) -> tuple[tuple[int, ...], np.dtype[Any]]:
     """Shape and dtype of the .npy array that a stream begins with, before its numbers are read."""
     try:
         version = np.lib.format.read_magic(stream)
@@ -192,14 +194,14 @@ def _array_header(stream, shown: str):
     return shape, dtype
 
 
-def _require_numbers(dtype, shown: str) -> None:
+def _require_numbers(dtype: np.dtype[Any], shown: str) -> None:
     if dtype.kind not in "fiub":
         raise InputError(
             f"the array holds {dtype}, not real numbers", file=shown, cure="Save it as an array of floats; Python objects are never loaded"
         )
 
 
-def _from_npz(path: Path, sizes, wanted: str | None, table: str, shown: str):
+def _from_npz(path: Path, sizes: list[int], wanted: str | None, table: str, shown: str) -> FloatArray:
     """Look at the header of every array, choose the matrix, and load only that."""
     with open_binary(path) as stream:
         try:
@@ -215,7 +217,7 @@ def _from_npz(path: Path, sizes, wanted: str | None, table: str, shown: str):
             raise InputError(f"the .npz file is damaged: {problem}", file=shown, cure="Fetch or write it again") from None
 
 
-def _npz_headers(archive: zipfile.ZipFile, shown: str):
+def _npz_headers(archive: zipfile.ZipFile, shown: str) -> tuple[dict[str, tuple[tuple[int, ...], np.dtype[Any]]], list[int]]:
     """Shape and dtype of every array by name, and the values of whole numbers that stand alone: one may be N."""
     headers, counts = {}, []
     for member in (m for m in archive.namelist() if m.endswith(".npy")):
@@ -228,7 +230,7 @@ def _npz_headers(archive: zipfile.ZipFile, shown: str):
     return headers, counts
 
 
-def _choose(headers: dict, wanted: str | None, sizes, shown: str) -> str:
+def _choose(headers: dict, wanted: str | None, sizes: list[int], shown: str) -> str:
     listed = ", ".join(f"{name} {shape}" for name, (shape, _) in headers.items())
     if wanted is not None:
         if wanted not in headers:
@@ -247,7 +249,7 @@ def _choose(headers: dict, wanted: str | None, sizes, shown: str) -> str:
     return candidates[0]
 
 
-def _size_of(shape, counts, sizes, table: str, shown: str) -> tuple[int, bool]:
+def _size_of(shape: tuple[int, ...], counts: list[int] | None, sizes: list[int], table: str, shown: str) -> tuple[int, bool]:
     """N of an array and whether it is a packed triangle; refuses an N that the table does not have."""
     total = math.prod(shape)
     if len(shape) == 2 and shape[0] != shape[1] and 1 not in shape:
@@ -267,7 +269,7 @@ def _size_of(shape, counts, sizes, table: str, shown: str) -> tuple[int, bool]:
     raise _wrong_size(nearest[0][0] if nearest else None, total, sizes, table, shown)
 
 
-def _wrong_size(n: int | None, total: int, sizes, table: str, shown: str) -> InputError:
+def _wrong_size(n: int | None, total: int, sizes: list[int], table: str, shown: str) -> InputError:
     if n is None:
         return InputError(
             f"the file holds {total} numbers, which make no square; {_expected(sizes, table)}, that is {sizes[0] ** 2} numbers", file=shown,
@@ -276,7 +278,7 @@ def _wrong_size(n: int | None, total: int, sizes, table: str, shown: str) -> Inp
     return InputError(f"the matrix is {n} × {n}, but {_expected(sizes, table)}", file=shown, cure=_cure_size(n, sizes))
 
 
-def _expected(sizes, table: str) -> str:
+def _expected(sizes: list[int], table: str) -> str:
     """Which N would have been right, before and after the cuts."""
     if len(sizes) == 1:
         return f"{table} has {sizes[0]} rows: N must be {sizes[0]}"
@@ -286,7 +288,7 @@ def _expected(sizes, table: str) -> str:
     )
 
 
-def _cure_size(n: int, sizes) -> str:
+def _cure_size(n: int, sizes: list[int]) -> str:
     if len(sizes) > 1:
         return "Give the matrix that belongs to the table, or make the cuts with which it was made"
     if 0 < sizes[0] - n:
@@ -294,7 +296,7 @@ def _cure_size(n: int, sizes) -> str:
     return "Give the table that the matrix was made for, and cut with `keep:`: rows are then removed from both"
 
 
-def _unpack(values, n: int, packed: bool):
+def _unpack(values: FloatArray, n: int, packed: bool) -> FloatArray:
     """An (N, N) array of native float64 from a square or a packed triangle."""
     if not packed:
         values = values.reshape(n, n)
@@ -311,7 +313,7 @@ def _unpack(values, n: int, packed: bool):
     return matrix
 
 
-def _fill_from_upper(matrix, values) -> None:
+def _fill_from_upper(matrix: FloatArray, values: FloatArray) -> None:
     """The upper triangle row by row, which is also the lower one column by column."""
     n, start = len(matrix), 0
     for i in range(n):
@@ -320,7 +322,7 @@ def _fill_from_upper(matrix, values) -> None:
     mirror_lower(matrix)
 
 
-def _fill_from_lower(matrix, values) -> None:
+def _fill_from_lower(matrix: FloatArray, values: FloatArray) -> None:
     """The lower triangle row by row, which is also the upper one column by column."""
     start = 0
     for i in range(len(matrix)):
@@ -329,7 +331,7 @@ def _fill_from_lower(matrix, values) -> None:
     mirror_lower(matrix)
 
 
-def _plausible(matrix) -> bool:
+def _plausible(matrix: FloatArray) -> bool:
     """Whether the diagonal is positive and no correlation is beyond 1: which order a triangle was packed in."""
     scale = np.diagonal(matrix)
     if not np.all(scale > 0):
@@ -338,7 +340,7 @@ def _plausible(matrix) -> bool:
     return all(np.all(np.abs(matrix[i : i + _BLOCK]) <= 1.001 * scale[i : i + _BLOCK, None] * scale) for i in range(0, len(matrix), _BLOCK))
 
 
-def _from_fits(path: Path, sizes, bordered: bool, table: str, shown: str):
+def _from_fits(path: Path, sizes: list[int], bordered: bool, table: str, shown: str) -> FloatArray:
     from fitter.sample.readers.astro import read_bordered, read_image
 
     image = read_bordered(path, shown)[2] if bordered else read_image(path, shown)
@@ -346,7 +348,7 @@ def _from_fits(path: Path, sizes, bordered: bool, table: str, shown: str):
     return _unpack(image, n, False)
 
 
-def _from_text(path: Path, sizes, table: str, shown: str, on_labels=None):
+def _from_text(path: Path, sizes: list[int], table: str, shown: str, on_labels: Callable[..., Any] | None = None) -> FloatArray:
     """Read the numbers in their order, whatever the lines: N on the first, or N² alone, or a triangle; or a labelled matrix."""
     from fitter.sample.readers.labelled import read_labelled
 
@@ -376,7 +378,7 @@ def _from_text(path: Path, sizes, table: str, shown: str, on_labels=None):
     raise _wrong_size(root if root * root == total and total else None, total, sizes, table, shown)
 
 
-def _numbers(path: Path, capacity: int, shown: str):
+def _numbers(path: Path, capacity: int, shown: str) -> tuple[FloatArray, int, bool]:
     """All numbers of a text file in order (the first ``capacity`` kept), how many, and whether the first has a line of its own."""
     values, total, alone, line = np.empty(min(capacity, _most_numbers(path))), 0, False, 0
     capacity = len(values)
@@ -405,7 +407,7 @@ def _most_numbers(path: Path) -> int:
     return path.stat().st_size * (516 if packed else 1) + 1
 
 
-def _slowly(lines, before: int, shown: str):
+def _slowly(lines: list[str], before: int, shown: str) -> FloatArray:
     """Convert line by line, to accept other minus signs and exponents, or to say where something is no number."""
     found = []
     for number, line in enumerate(lines, before + 1):

@@ -10,6 +10,7 @@ from pathlib import Path
 
 import numpy as np
 
+from fitter.array_types import FloatArray
 from fitter.errors import InputError
 from fitter.sample.files import open_binary, reading
 from fitter.sample.readers.formats import format_of
@@ -84,7 +85,7 @@ class _Rule:
     by_content: bool = False  # whether the content alone may decide
 
 
-def recognise(path, shown: str | None = None) -> Recognised:
+def recognise(path: str | Path, shown: str | None = None) -> Recognised:
     """Look at a table and say which column is what.
 
     Raises
@@ -143,29 +144,29 @@ def _tags(path: Path, shown: str) -> TextOptions:
     return TextOptions(header_tag=header, row_tag=tag)
 
 
-def _share(values, low: float, high: float) -> float:
+def _share(values: FloatArray, low: float, high: float) -> float:
     """Share of the numbers that are within (low, high)."""
     finite = values[np.isfinite(values)]
     return float(np.mean((finite > low) & (finite < high))) if len(finite) else 0.0
 
 
-def _is_redshift(values) -> bool:
+def _is_redshift(values: FloatArray) -> bool:
     return _share(values, 0, 5) > _SEVERAL and len(np.unique(values[np.isfinite(values)])) > min(2, len(values) - 1)
 
 
-def _is_modulus(values) -> bool:
+def _is_modulus(values: FloatArray) -> bool:
     return _share(values, 20, 50) > _SEVERAL
 
 
-def _is_magnitude(values) -> bool:
+def _is_magnitude(values: FloatArray) -> bool:
     return _share(values, 8, 30) > _SEVERAL
 
 
-def _is_sigma(values) -> bool:
-    return _share(values, 0, 3) > _SEVERAL and np.nanmedian(values) < 1
+def _is_sigma(values: FloatArray) -> bool:
+    return bool(_share(values, 0, 3) > _SEVERAL and np.nanmedian(values) < 1)
 
 
-def _is_calibrator(values) -> bool:
+def _is_calibrator(values: FloatArray) -> bool:
     """Moduli in some rows, and nothing, or what stands for nothing, in the others."""
     known = np.isfinite(values) & (values > 0)
     return 0 < known.sum() < 0.5 * len(values) and _share(values[known], 20, 45) == 1
@@ -183,7 +184,7 @@ _NUMBER_RULES = (
 )
 
 
-def _label(table: Table, position: int):
+def _label(table: Table, position: int) -> str | int:
     label = table.columns.label(position)
     names = table.columns.names
     return label if isinstance(label, str) and names is not None and list(names).count(label) == 1 else position
@@ -283,6 +284,6 @@ def _words(found: Recognised) -> None:
             found.reasons[role] = f"{distinct.pop(p)} different words in {n} rows"
 
 
-def _range(values) -> str:
+def _range(values: FloatArray) -> str:
     finite = values[np.isfinite(values)]
     return f"{finite.min():.4g} to {finite.max():.4g}"

@@ -3,16 +3,23 @@
 from __future__ import annotations
 
 import hashlib
-from collections.abc import Iterable
+from collections.abc import Iterable, Sequence
 from dataclasses import dataclass, field, replace
 from functools import cached_property
+from pathlib import Path
+from typing import TYPE_CHECKING
 
 import numpy as np
+from numpy.typing import ArrayLike
 
-from fitter.array_types import IntArray
+from fitter.array_types import BoolArray, IntArray
 from fitter.errors import InputError, InputErrors
 from fitter.sample.noise import Noise, read_only
 from fitter.sample.uncertainty.term import Term, combine
+
+if TYPE_CHECKING:
+    from fitter.sample.capsule import CapsuleSettings
+    from fitter.sample.settings import SampleSettings
 
 __all__ = ["DATA_KINDS", "DISTANCE_SCALES", "Sample"]
 
@@ -75,7 +82,7 @@ class Sample:
     sources: dict[str, str] = field(default_factory=dict)
     warnings: tuple[str, ...] = ()
 
-    def __post_init__(self):
+    def __post_init__(self) -> None:
         for key in ("redshift", "redshift_helio", "data", "calibrator_modulus"):
             object.__setattr__(self, key, read_only(getattr(self, key)))
         for key in ("group", "name"):
@@ -95,7 +102,7 @@ class Sample:
         return True
 
     @cached_property
-    def is_calibrator(self):
+    def is_calibrator(self) -> BoolArray:
         """(N,) bool."""
         return read_only(np.isfinite(self.calibrator_modulus), bool)
 
@@ -122,7 +129,7 @@ class Sample:
         return digest.hexdigest()
 
     @classmethod
-    def from_config(cls, settings, folder) -> Sample:
+    def from_config(cls, settings: CapsuleSettings | SampleSettings, folder: str | Path) -> Sample:
         """Read a sample.
 
         Parameters
@@ -138,31 +145,30 @@ class Sample:
             Everything that is wrong with the input, found in one pass.
         """
         from fitter.sample.assembly import assemble
+        from fitter.sample.capsule import CapsuleSettings, sample_from_capsule
 
-        if hasattr(settings, "capsule"):
-            from fitter.sample.capsule import sample_from_capsule
-
-            return sample_from_capsule(settings, folder)
-        return assemble(settings, folder)
+        if isinstance(settings, CapsuleSettings):
+            return sample_from_capsule(settings, Path(folder))
+        return assemble(settings, Path(folder))
 
     @classmethod
     def from_arrays(
         cls,
-        z,
-        mu,
+        z: ArrayLike,
+        mu: ArrayLike,
         *,
-        covariance=None,
-        precision=None,
-        sigma=None,
-        modes=None,
-        z_helio=None,
-        data_kind="distance_modulus",
-        calibrator_modulus=None,
-        group=None,
-        name=None,
-        distance_scale="relative",
-        intrinsic=None,
-        covariance_scale=None,
+        covariance: ArrayLike | None = None,
+        precision: ArrayLike | None = None,
+        sigma: ArrayLike | None = None,
+        modes: ArrayLike | None = None,
+        z_helio: ArrayLike | None = None,
+        data_kind: str = "distance_modulus",
+        calibrator_modulus: ArrayLike | None = None,
+        group: ArrayLike | None = None,
+        name: ArrayLike | None = None,
+        distance_scale: str = "relative",
+        intrinsic: dict[str, list[float]] | float | None = None,
+        covariance_scale: dict[str, list[float]] | float | None = None,
     ) -> Sample:
         """Make a sample of arrays.
 
@@ -213,7 +219,7 @@ class Sample:
         kept = tuple(term for term in self.terms if term.label not in labels)
         return replace(self, terms=kept, noise=combine(kept))
 
-    def select(self, mask) -> Sample:
+    def select(self, mask: BoolArray | IntArray | Sequence[int]) -> Sample:
         """Return some of the rows (boolean mask or indices, in the order given); the rest is marginalised.
 
         Raises

@@ -3,7 +3,7 @@
 from __future__ import annotations
 
 from collections import Counter
-from typing import Annotated, Any, Literal
+from typing import Annotated, Any, Literal, Self
 
 from pydantic import BaseModel, BeforeValidator, ConfigDict, Field, model_validator
 
@@ -11,6 +11,7 @@ from fitter.sample.uncertainty import AnyTerm
 from fitter.sample.uncertainty.base import ColumnRef, PathText, is_free
 from fitter.sample.uncertainty.covariance_scale import CovarianceScale
 from fitter.sample.uncertainty.intrinsic import Intrinsic
+from fitter.sample.uncertainty.zero_point import ZeroPoint
 
 __all__ = ["Columns", "Keep", "Rule", "RuleSettings", "SampleSettings"]
 
@@ -46,7 +47,7 @@ class Columns(_Section):
     name: ColumnRef | None = Field(None, description="Name of the supernova; checked for duplicates.")
 
     @model_validator(mode="after")
-    def _one_kind_of_data(self):
+    def _one_kind_of_data(self) -> Self:
         if (self.distance_modulus is None) == (self.magnitude is None):
             what = "both" if self.magnitude is not None else "neither; a survey without data is for `mufitter rehearse`"
             raise ValueError(f"map exactly one of `distance_modulus` and `magnitude`, not {what}")
@@ -65,7 +66,7 @@ class RuleSettings(_Section):
     others: Rule | None = Field(None, description="The rule for the groups that `group` does not name; they are all kept by default.")
 
     @model_validator(mode="after")
-    def _one_form(self):
+    def _one_form(self) -> Self:
         given = [f.alias or name for name, f in type(self).model_fields.items() if getattr(self, name) is not None]
         if len([g for g in given if g != "others"]) != 1 or ("others" in given and self.group is None):
             raise ValueError("a cut has exactly one of `range`, `in`, `not`, `group` (and `others` beside `group`)")
@@ -145,7 +146,7 @@ class SampleSettings(_Section):
         return given
 
     @model_validator(mode="after")
-    def _scale_fits_columns(self):
+    def _scale_fits_columns(self) -> Self:
         columns = self.columns
         if self.distance_scale == "calibrated" and columns.calibrator_modulus is None:
             raise ValueError("distance_scale: calibrated needs calibrators: map `calibrator_modulus` to the column of their moduli")
@@ -154,7 +155,7 @@ class SampleSettings(_Section):
         return self
 
     @model_validator(mode="after")
-    def _terms_go_together(self):
+    def _terms_go_together(self) -> Self:
         kinds = Counter(term.kind for term in self.uncertainty)
         beside = [kind for kind in ("sigma", "covariance") if kinds[kind]]
         if kinds["precision"] and beside:
@@ -163,7 +164,7 @@ class SampleSettings(_Section):
             if kinds[kind] > 1:
                 raise ValueError(f"there can be one {kind} term only")
         if not set(kinds) - {"covariance_scale", "intrinsic"} and not any(
-            t.kind == "intrinsic" and not is_free(t.intrinsic) for t in self.uncertainty
+            isinstance(t, Intrinsic) and not is_free(t.intrinsic) for t in self.uncertainty
         ):
             raise ValueError(
                 "nothing fixed says how far the data scatter: add at least one term such as {sigma: COLUMN} or {covariance: FILE}"
@@ -171,6 +172,6 @@ class SampleSettings(_Section):
         twice = [label for label, count in Counter(t.label for t in self.uncertainty if t.label).items() if count > 1]
         if twice:
             raise ValueError(f"two uncertainty terms have the label `{twice[0]}`: each needs its own")
-        if any(t.kind == "zero_point" and t.zero_point == "group" for t in self.uncertainty) and self.columns.group is None:
+        if any(isinstance(t, ZeroPoint) and t.zero_point == "group" for t in self.uncertainty) and self.columns.group is None:
             raise ValueError("zero_point: group needs `group` among the columns, or the name of a column of the table")
         return self

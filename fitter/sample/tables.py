@@ -6,14 +6,20 @@ Each format has a reader of its own in ``readers/`` that returns a `Table`.
 from __future__ import annotations
 
 import difflib
-from collections.abc import Sequence
+from collections.abc import Iterable, Sequence
 from dataclasses import dataclass, field
 from pathlib import Path
+from typing import TYPE_CHECKING, Any
 
 import numpy as np
+from numpy.typing import NDArray
 
+from fitter.array_types import FloatArray, IntArray
 from fitter.errors import InputError
 from fitter.sample.files import reading, sha256_of
+
+if TYPE_CHECKING:
+    from fitter.sample.readers.layout import TextOptions
 
 __all__ = ["Columns", "Table", "bordered_table", "read_numbers", "read_table", "sha256_of"]
 
@@ -38,7 +44,7 @@ class Columns:
     n: int
     file: str
 
-    def position(self, ref) -> int:
+    def position(self, ref: int | str) -> int:
         """Return the position, from 0, of a column given by name or position.
 
         Raises
@@ -66,7 +72,7 @@ class Columns:
             )  # fmt: skip
         raise InputError("there is no such column", file=self.file, column=ref, cure=self._available(ref))
 
-    def known(self, refs) -> list[int]:
+    def known(self, refs: Iterable[int | str]) -> list[int]:
         """Return the positions of those columns that exist."""
         out = []
         for ref in refs:
@@ -76,11 +82,11 @@ class Columns:
                 continue  # said when the column is asked for
         return out
 
-    def label(self, position: int):
+    def label(self, position: int) -> str | int:
         """Return the name of a column, or its position where it has none."""
         return self.names[position] if self.names is not None and self.names[position] else position
 
-    def _available(self, ref) -> str:
+    def _available(self, ref: int | str) -> str:
         if self.names is None:
             return f"Positions are 0 to {self.n - 1}"
         lower = {name.lower(): name for name in self.names}
@@ -120,7 +126,7 @@ class Table:
         """Number of rows."""
         return len(self.lines)
 
-    def numbers(self, ref):
+    def numbers(self, ref: int | str) -> FloatArray:
         """Return a column as (N,) numbers, NaN where a field is empty.
 
         Raises
@@ -133,13 +139,19 @@ class Table:
             raise self.problems[position]
         return self.floats[position]
 
-    def texts(self, ref):
+    def texts(self, ref: str | int) -> NDArray[np.str_]:
         """Return a column as (N,) words."""
         return self.words[self.columns.position(ref)]
 
 
 def read_table(
-    path, options=None, *, numbers: Sequence = (), texts: Sequence = (), required: Sequence = (), shown: str | None = None
+    path: Path,
+    options: TextOptions | None = None,
+    *,
+    numbers: Sequence = (),
+    texts: Sequence = (),
+    required: Sequence = (),
+    shown: str | None = None,
 ) -> Table:
     """Read the columns of a table that are asked for.
 
@@ -163,7 +175,7 @@ def read_table(
     return _read(Path(path), options, numbers=numbers, texts=texts, required=required, shown=shown or str(path))
 
 
-def _read(path: Path, options=None, **wanted) -> Table:
+def _read(path: Path, options: TextOptions | None = None, **wanted: Any) -> Table:
     """Dispatch to the reader of the format that the content shows."""
     from fitter.sample.readers.formats import format_of
 
@@ -183,7 +195,7 @@ def _read(path: Path, options=None, **wanted) -> Table:
     return read_astro(path, kind, **wanted)
 
 
-def bordered_table(path, data_kind: str, shown: str) -> Table:
+def bordered_table(path: Path, data_kind: str, shown: str) -> Table:
     """Read the redshifts and the data at the border of a FITS image, as columns 0 and 1.
 
     Raises
@@ -205,7 +217,7 @@ def bordered_table(path, data_kind: str, shown: str) -> Table:
     return table_of(("redshift", data_kind), len(data), lambda i: found[i], everything=True, shown=shown)
 
 
-def read_numbers(path, *, use: Sequence | None = None, shown: str | None = None):
+def read_numbers(path: Path, *, use: Sequence | None = None, shown: str | None = None) -> tuple[list[str | int], FloatArray, IntArray]:
     """Read a table that holds nothing but numbers, or some of its columns; also an (N, k) .npy array.
 
     Returns
@@ -228,8 +240,8 @@ def read_numbers(path, *, use: Sequence | None = None, shown: str | None = None)
 
         values = read_array(path, shown)
         values = values.reshape(len(values), -1)
-        positions = range(values.shape[1]) if use is None else Columns(None, values.shape[1], shown).known(use)
-        return list(positions), np.ascontiguousarray(values[:, list(positions)], dtype=float), np.arange(1, len(values) + 1)
+        positions = list(range(values.shape[1])) if use is None else Columns(None, values.shape[1], shown).known(use)
+        return [*positions], np.ascontiguousarray(values[:, positions], dtype=float), np.arange(1, len(values) + 1)
     table = _read(path, numbers=use or (), required=use or (), everything=use is None, shown=shown)
     refs = list(range(table.columns.n)) if use is None else list(use)
     refs = [r for r in refs if use is not None or table.columns.label(r) != "" or not np.isnan(table.floats[r]).all()]

@@ -3,13 +3,18 @@
 from __future__ import annotations
 
 from pathlib import Path
+from typing import TYPE_CHECKING
 
 import numpy as np
 
+from fitter.array_types import FloatArray
 from fitter.sample.recognise import Recognised, error_column
 from fitter.sample.sample import Sample
 from fitter.sample.settings import SampleSettings
 from fitter.sample.tables import Table, read_table
+
+if TYPE_CHECKING:
+    from fitter.sample.readers.layout import TextOptions
 
 __all__ = ["unused_errors"]
 
@@ -19,7 +24,7 @@ _FAR = 2.0  # and a row is news beyond that
 _AN_ERROR = (1e-6, 1e3)  # mag: what lies outside is no error of a measurement, and is not compared
 
 
-def unused_errors(settings: SampleSettings, table: Table, path: Path, options, sample: Sample) -> str | None:
+def unused_errors(settings: SampleSettings, table: Table, path: Path, options: TextOptions, sample: Sample) -> str | None:
     """Compare the errors of a matrix that stands alone with those that the table gives; return a warning, or None.
 
     Only where there is one matrix and no sigma term, and the table's header names a column of errors.
@@ -40,7 +45,7 @@ def unused_errors(settings: SampleSettings, table: Table, path: Path, options, s
     return _compared(name, matrices[0].label, ratio, sample)
 
 
-def _error_column(settings: SampleSettings, table: Table, path: Path, options):
+def _error_column(settings: SampleSettings, table: Table, path: Path, options: TextOptions) -> tuple[str | int, FloatArray] | None:
     names = table.columns.names or []
     data = getattr(settings.columns, settings.data_kind)
     everything = [p for p in range(len(names)) if names[p]]
@@ -53,7 +58,7 @@ def _error_column(settings: SampleSettings, table: Table, path: Path, options):
     return None if ref is None else (ref, again.numbers(ref))
 
 
-def _compared(name, label: str, ratio, sample: Sample) -> str | None:
+def _compared(name: str | int, label: str, ratio: FloatArray, sample: Sample) -> str | None:
     median = float(np.nanmedian(ratio))
     far = (ratio > _FAR * median) | (ratio < median / _FAR)
     if _CLOSE[0] < median < _CLOSE[1] and not far.any():

@@ -5,7 +5,9 @@ from __future__ import annotations
 from dataclasses import dataclass, field
 
 import numpy as np
+from numpy.typing import NDArray
 
+from fitter.array_types import BoolArray, FloatArray
 from fitter.errors import InputError
 from fitter.sample.uncertainty.term import Term
 
@@ -35,14 +37,14 @@ class Place:
     lines: np.ndarray
     columns: dict = field(default_factory=dict)
 
-    def error(self, problem: str, role: str, index: int, value, cure: str | None = None) -> InputError:
+    def error(self, problem: str, role: str, index: int, value: float | str, cure: str | None = None) -> InputError:
         """Return an error about one value."""
         return InputError(
             problem, file=self.file, row=int(self.lines[index]), column=self.columns.get(role, role), value=value, cure=cure
         )  # fmt: skip
 
 
-def check_finite(role: str, values, place: Place) -> list[InputError]:
+def check_finite(role: str, values: FloatArray, place: Place) -> list[InputError]:
     """NaN and infinite values."""
     bad = ~np.isfinite(values)
     if not bad.any():
@@ -57,7 +59,7 @@ def check_finite(role: str, values, place: Place) -> list[InputError]:
     ]  # fmt: skip
 
 
-def check_data(values, place: Place) -> list[InputError]:
+def check_data(values: FloatArray, place: Place) -> list[InputError]:
     """NaN, infinite, or nothing that a magnitude or a modulus can be."""
     problems = check_finite("data", values, place)
     bad = np.isfinite(values) & (np.abs(values) > _LARGEST_DATUM)
@@ -68,7 +70,7 @@ def check_data(values, place: Place) -> list[InputError]:
     return problems
 
 
-def check_redshift(role: str, values, place: Place) -> list[InputError]:
+def check_redshift(role: str, values: FloatArray, place: Place) -> list[InputError]:
     """NaN, infinite, or not above 0: a distance modulus diverges there."""
     problems = check_finite(role, values, place)
     bad = np.isfinite(values) & (values <= 0)
@@ -84,7 +86,9 @@ def check_redshift(role: str, values, place: Place) -> list[InputError]:
     return problems
 
 
-def check_duplicates(name, group, redshift, data, place: Place, allowed: bool) -> tuple[list[InputError], list[str]]:
+def check_duplicates(
+    name: NDArray[np.str_], group: NDArray[np.str_] | None, redshift: FloatArray, data: FloatArray, place: Place, allowed: bool
+) -> tuple[list[InputError], list[str]]:
     """Rows with the same name.
 
     Releases legitimately list a supernova once per survey that saw it. So the same name in different groups is only told of, and the
@@ -129,16 +133,17 @@ def check_duplicates(name, group, redshift, data, place: Place, allowed: bool) -
 def check_inverse(terms: list[Term]) -> list[InputError]:
     """A covariance that looks like an inverse, and the reverse, judged by its diagonal."""
     sigma = [term.noise.variance for term in terms if term.kind == "sigma"]
+    variance = np.sum(sigma, axis=0) if sigma else None
     problems = []
     for term in terms:
         matrix = term.noise.precision if term.kind == "precision" else term.noise.dense
         if matrix is None:
             continue
-        if term.kind == "covariance" and looks_inverse(np.diagonal(matrix), sum(sigma) if sigma else None):
+        if term.kind == "covariance" and looks_inverse(np.diagonal(matrix), variance):
             problems.append(
                 InputError(
                     f"this looks like an inverse covariance: its median diagonal element is {np.median(np.diagonal(matrix)):.3g}, "
-                    f"{_beside(np.diagonal(matrix), sum(sigma) if sigma else None)}",
+                    f"{_beside(np.diagonal(matrix), variance)}",
                     file=term.noise.source, cure="Use it as uncertainty: [{precision: FILE}], without a sigma term",
                 )
             )  # fmt: skip
@@ -154,22 +159,22 @@ def check_inverse(terms: list[Term]) -> list[InputError]:
     return problems
 
 
-def looks_inverse(diagonal, variance) -> bool:
+def looks_inverse(diagonal: FloatArray, variance: FloatArray | None) -> bool:
     """Whether a matrix is the inverse of a covariance: its diagonal is absurd as mag², or times σ² about 1."""
     if np.median(diagonal) > _LARGEST_VARIANCE:
         return True
     if variance is None or not np.all(variance > 0):
         return False
     product, ratio = np.median(diagonal * variance), np.median(diagonal / variance)
-    return 1 / 3 < product < 3 and not 0.1 < ratio < 10
+    return bool(1 / 3 < product < 3 and not 0.1 < ratio < 10)
 
 
-def _beside(diagonal, variance) -> str:
+def _beside(diagonal: FloatArray, variance: FloatArray | None) -> str:
     if variance is not None and np.all(variance > 0):
         return f"and times the square of the sigma column it is {np.median(diagonal * variance):.3g}"
     return f"an error of {np.sqrt(np.median(diagonal)):.3g} mag if it were a covariance"
 
 
-def _more(bad, what: str = "row") -> str:
+def _more(bad: BoolArray, what: str = "row") -> str:
     others = int(np.sum(bad)) - 1
     return f", here and in {others} more {what}{'s' if others > 1 else ''}" if others else ""

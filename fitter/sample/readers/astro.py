@@ -6,15 +6,21 @@ import io
 import math
 import struct
 import warnings
+from collections.abc import Iterable, Iterator, Sequence
 from contextlib import contextmanager
 from pathlib import Path
+from typing import TYPE_CHECKING, Any
 
 import numpy as np
 
+from fitter.array_types import FloatArray
 from fitter.errors import InputError
 from fitter.sample.files import open_binary, reading
 from fitter.sample.readers.formats import missing_extra, table_of
 from fitter.sample.tables import Table
+
+if TYPE_CHECKING:
+    from astropy.table import Table as AstropyTable
 
 __all__ = ["read_astro", "read_bordered", "read_image"]
 
@@ -28,7 +34,9 @@ _DAMAGED = (
 )  # fmt: skip
 
 
-def read_astro(path: Path, kind: str, *, numbers=(), texts=(), everything=False, shown: str) -> Table:
+def read_astro(
+    path: Path, kind: str, *, numbers: Sequence[str | int] = (), texts: Sequence[str | int] = (), everything: bool = False, shown: str
+) -> Table:
     """Read the columns of a table in one of these formats that are asked for; the parameters are those of `read_text`."""
     with _astropy(kind, shown):
         note = None
@@ -56,7 +64,7 @@ def read_image(path: Path, shown: str) -> np.ndarray:
     raise InputError("the FITS file holds no image of two dimensions", file=shown, cure="Is the matrix in another file?")
 
 
-def read_bordered(path: Path, shown: str):
+def read_bordered(path: Path, shown: str) -> tuple[FloatArray, FloatArray, FloatArray]:
     """Split a bordered image: redshifts in its first row, distances in its first column, a matrix inside.
 
     The corner where they meet is not used. An image that was turned round (distances in the first row) is told by its values: no
@@ -91,7 +99,7 @@ def _bytes(path: Path, shown: str) -> bytes:
 
 
 @contextmanager
-def _astropy(kind: str, shown: str):
+def _astropy(kind: str, shown: str) -> Iterator[None]:
     """Import astropy, hold its warnings back, and turn what it says of damaged files into messages."""
     try:
         from astropy.io.fits import VerifyError
@@ -114,7 +122,7 @@ def _astropy(kind: str, shown: str):
         ) from None  # fmt: skip
 
 
-def _fits_table(path: Path, wanted, shown: str):
+def _fits_table(path: Path, wanted: Iterable[str | int], shown: str) -> tuple[AstropyTable, str | None]:
     """The first table of a FITS file that has the columns asked for, or the first, and what to tell about the choice."""
     from astropy.io import fits
     from astropy.table import Table as AstropyTable
@@ -132,7 +140,7 @@ def _fits_table(path: Path, wanted, shown: str):
         return AstropyTable.read(hdus[chosen]), note
 
 
-def _plain(column):
+def _plain(column: Any) -> np.ma.MaskedArray[Any, Any]:
     """A column of astropy as a plain (masked) array; what has no simple values becomes words."""
     values = column.value if hasattr(column, "unit") and hasattr(column, "value") else column
     if hasattr(values, "unmasked"):

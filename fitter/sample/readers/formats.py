@@ -4,9 +4,12 @@ from __future__ import annotations
 
 from collections.abc import Callable, Sequence
 from pathlib import Path
+from typing import Any
 
 import numpy as np
+from numpy.typing import NDArray
 
+from fitter.array_types import FloatArray, IntArray
 from fitter.errors import InputError
 from fitter.sample.files import open_binary, reading
 from fitter.sample.readers.numbers import to_numbers
@@ -43,7 +46,15 @@ def missing_extra(what: str, extra: str, shown: str) -> InputError:
 
 
 def table_of(
-    names: Sequence[str], n: int, column: Callable[[int], np.ndarray], *, numbers=(), texts=(), everything=False, shown: str, note=None
+    names: Sequence[str],
+    n: int,
+    column: Callable[[int], np.ndarray],
+    *,
+    numbers: Sequence[str | int] = (),
+    texts: Sequence[str | int] = (),
+    everything: bool = False,
+    shown: str,
+    note: str | None = None,
 ) -> Table:
     """Make a `Table` of columns that are arrays already.
 
@@ -87,14 +98,14 @@ def table_of(
     return Table(columns, lines, floats, words, problems, note)
 
 
-def _numbers(values, lines, label, shown: str):
+def _numbers(values: NDArray[Any], lines: IntArray, label: str | int, shown: str) -> tuple[FloatArray, InputError | None]:
     """(N,) float64, NaN where there is no value, and what is wrong."""
     if values.dtype.kind in "fiub":
         return np.ma.filled(values.astype(np.float64), np.nan), None
     return to_numbers(_words(values), lines, label, shown)
 
 
-def _words(values) -> np.ndarray:
+def _words(values: NDArray[Any]) -> NDArray[np.str_]:
     missing = np.ma.getmaskarray(values)
     if values.dtype.kind == "f":
         out = [f"{v:.12g}" for v in np.ma.getdata(values).tolist()]
@@ -103,7 +114,7 @@ def _words(values) -> np.ndarray:
     return np.where(missing, "", np.array(out, dtype=str))
 
 
-def _word(value) -> str:
+def _word(value: object) -> str:
     if isinstance(value, bytes):
         return value.decode("utf-8", "replace").strip()
     return "" if value is None else str(value).strip()

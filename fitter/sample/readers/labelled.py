@@ -9,6 +9,7 @@ from pathlib import Path
 
 import numpy as np
 
+from fitter.array_types import FloatArray
 from fitter.errors import InputError
 from fitter.sample.files import open_binary
 from fitter.sample.readers.numbers import is_number, plain_number
@@ -20,7 +21,7 @@ _LONGEST_LINE = 1 << 23
 _FEWEST_COUNTED = 5  # 1 2 3 might be the first row of a matrix, but not 1 2 3 4 5
 
 
-def read_labelled(path: Path, sizes: Sequence[int], shown: str):
+def read_labelled(path: Path, sizes: Sequence[int], shown: str) -> tuple[FloatArray, list[str] | None] | None:
     """Read a labelled square matrix.
 
     Labels are words, or whole numbers that count up by one.
@@ -69,7 +70,7 @@ def _rows(path: Path) -> Iterator[tuple[int, list[str]]]:
                 yield number, [f.strip().strip("\"'") for f in (line.rstrip("\r\n").split(mark) if mark else line.split())]
 
 
-def _read(path: Path, n: int, header: list[str] | None, beside: bool, shown: str):
+def _read(path: Path, n: int, header: list[str] | None, beside: bool, shown: str) -> tuple[FloatArray, list[str]]:
     matrix, labels, count = np.empty((n, n)), [], 0
     for number, fields in islice(_rows(path), int(header is not None), None):
         if len(fields) != n + beside or count == n:

@@ -60,7 +60,7 @@ class Layout:
     """
 
     delimiter: str
-    names: tuple[str, ...] | None
+    names: Sequence[str] | None
     n_columns: int
     skip: np.ndarray
     lines: np.ndarray
@@ -234,7 +234,7 @@ def _plausibility(rows: Sequence[str], delimiter: str, tag: str | None) -> tuple
     return consistent, numbers / max(sum(counts), 1)
 
 
-def _header(scan: _Scan, options: TextOptions, delimiter: str, wanted: list[str], shown: str):
+def _header(scan: _Scan, options: TextOptions, delimiter: str, wanted: list[str], shown: str) -> tuple[list[str] | None, int]:
     """Return the names, or None, and whether the first data row turned out to be the header (1 or 0)."""
     if scan.header is not None:
         names = split_fields(scan.header, delimiter)
@@ -254,7 +254,7 @@ def _header(scan: _Scan, options: TextOptions, delimiter: str, wanted: list[str]
     return _commented_header(scan, options, delimiter, wanted), 0
 
 
-def _commented_header(scan: _Scan, options: TextOptions, delimiter: str, wanted: list[str]):
+def _commented_header(scan: _Scan, options: TextOptions, delimiter: str, wanted: list[str]) -> list[str] | None:
     """A comment above the data that has a word for each column: the one with the wanted names, else the last."""
     n_columns = _usual_length(scan.head, delimiter, options.row_tag)
     splits = [f for line in scan.comments for f in (split_fields(line, delimiter), line.replace(",", " ").split())]
@@ -268,7 +268,9 @@ def _commented_header(scan: _Scan, options: TextOptions, delimiter: str, wanted:
     return None
 
 
-def _names_for(names: list[str], n_columns: int, delimiter: str, scan: _Scan, wanted: list[str], shown: str):
+def _names_for(
+    names: list[str], n_columns: int, delimiter: str, scan: _Scan, wanted: list[str], shown: str
+) -> tuple[list[str] | None, str | None]:
     """Fit a header to the columns: return the names, or None, and what to tell about it.
 
     A spare delimiter at the end of either is harmless. Names beyond the last column are a matter for a warning.

@@ -3,9 +3,12 @@
 from __future__ import annotations
 
 import re
+from typing import Any
 
 import numpy as np
+from numpy.typing import NDArray
 
+from fitter.array_types import BoolArray, FloatArray, IntArray
 from fitter.errors import InputError
 
 __all__ = ["MISSING", "is_number", "plain_number", "to_numbers"]
@@ -32,7 +35,9 @@ def is_number(text: str, decimal_comma: bool = False) -> bool:
     return True
 
 
-def to_numbers(words, lines, label, shown: str):
+def to_numbers(
+    words: NDArray[Any] | NDArray[np.str_], lines: IntArray, label: str | int, shown: str
+) -> tuple[FloatArray, InputError | None]:
     """Convert words to numbers the long way; return them and what is wrong with the first that is none."""
     import pandas as pd
 
@@ -57,6 +62,6 @@ def _cure(word: str) -> str:
     return "Correct it, or leave the field empty and cut the row with `keep:` or `missing: drop`"
 
 
-def _count(wrong) -> str:
+def _count(wrong: BoolArray) -> str:
     others = int(wrong.sum()) - 1
     return f", here and in {others} more row{'s' if others > 1 else ''}" if others else ""

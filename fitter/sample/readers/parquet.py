@@ -2,9 +2,12 @@
 
 from __future__ import annotations
 
+from collections.abc import Sequence
 from pathlib import Path
+from typing import Any
 
 import numpy as np
+from numpy.typing import NDArray
 
 from fitter.errors import InputError
 from fitter.sample.files import reading
@@ -14,7 +17,9 @@ from fitter.sample.tables import Columns, Table
 __all__ = ["read_parquet"]
 
 
-def read_parquet(path: Path, *, numbers=(), texts=(), everything=False, shown: str) -> Table:
+def read_parquet(
+    path: Path, *, numbers: Sequence[str | int] = (), texts: Sequence[str | int] = (), everything: bool = False, shown: str
+) -> Table:
     """Read the columns of a Parquet table that are asked for; the parameters are those of `read_text`."""
     try:
         import pyarrow.parquet as parquet
@@ -31,7 +36,7 @@ def read_parquet(path: Path, *, numbers=(), texts=(), everything=False, shown: s
     except (ArrowException, ValueError) as problem:
         raise InputError(f"the Parquet file cannot be read: {str(problem)[:200]}", file=shown, cure="Fetch or write it again") from None
 
-    def column(position: int):
+    def column(position: int) -> NDArray[Any]:
         values = frame[names[position]]
         missing = values.isna().to_numpy()
         plain = values.to_numpy(dtype=float, na_value=np.nan) if values.dtype.kind in "fiub" else values.to_numpy(dtype=object)

@@ -3,7 +3,7 @@
 from __future__ import annotations
 
 import io
-from collections.abc import Sequence
+from collections.abc import Iterator, Sequence
 from pathlib import Path
 from typing import Literal
 
@@ -19,7 +19,14 @@ __all__ = ["read_text"]
 
 
 def read_text(
-    path: Path, options: TextOptions, *, numbers: Sequence = (), texts: Sequence = (), required: Sequence = (), everything=False, shown: str
+    path: Path,
+    options: TextOptions,
+    *,
+    numbers: Sequence = (),
+    texts: Sequence = (),
+    required: Sequence = (),
+    everything: bool = False,
+    shown: str,
 ) -> Table:
     """Read the columns of a text table that are asked for.
 
@@ -51,7 +58,9 @@ def read_text(
         return _read(path, layout, columns, sorted(set(as_numbers)), sorted(set(as_texts)), shown, options)
 
 
-def _read(path: Path, layout: Layout, columns: Columns, as_numbers, as_texts, shown: str, options: TextOptions) -> Table:
+def _read(
+    path: Path, layout: Layout, columns: Columns, as_numbers: list[int], as_texts: list[int], shown: str, options: TextOptions
+) -> Table:
     needed = sorted({*as_numbers, *as_texts})
     try:
         found = _parse(path, layout, options, as_numbers, needed)
@@ -69,12 +78,12 @@ def _read(path: Path, layout: Layout, columns: Columns, as_numbers, as_texts, sh
     return Table(columns, layout.lines, floats, words, problems, layout.note)
 
 
-def _word(value) -> str:
+def _word(value: object) -> str:
     """A field as a word; a column that is wanted as numbers too comes as those."""
     return value.strip() if isinstance(value, str) else f"{value:.12g}"
 
 
-def _rows(path: Path, layout: Layout, options: TextOptions):
+def _rows(path: Path, layout: Layout, options: TextOptions) -> Iterator[str]:
     """The data rows one by one, without their tag."""
     skip = np.zeros(len(layout.skip) + len(layout.lines), dtype=bool)
     skip[layout.skip] = True
@@ -113,7 +122,7 @@ def _gap(is_short: bool, delimiter: str) -> str:
     )
 
 
-def _parse(path: Path, layout: Layout, options: TextOptions, as_numbers, needed) -> dict[int, np.ndarray]:
+def _parse(path: Path, layout: Layout, options: TextOptions, as_numbers: list[int], needed: list[int]) -> dict[int, np.ndarray]:
     """Read the columns with pandas, numbers as float64; ValueError where a field is none."""
     import pandas as pd
 
@@ -145,7 +154,7 @@ def _parse(path: Path, layout: Layout, options: TextOptions, as_numbers, needed)
     return {p: frame[c].to_numpy() if p in as_numbers else frame[c].fillna("").to_numpy(dtype=object) for p, c in chosen.items()}
 
 
-def _split(path: Path, layout: Layout, options: TextOptions, needed) -> dict[int, np.ndarray]:
+def _split(path: Path, layout: Layout, options: TextOptions, needed: list[int]) -> dict[int, np.ndarray]:
     """Read the columns as words, line by line."""
     found: dict[int, list[str]] = {p: [] for p in needed}
     for text in _rows(path, layout, options):

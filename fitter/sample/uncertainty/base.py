@@ -15,6 +15,7 @@ from typing import Annotated, Any, ClassVar
 import numpy as np
 from pydantic import AfterValidator, BaseModel, ConfigDict, Field
 
+from fitter.array_types import FloatArray, IntArray
 from fitter.sample.noise import Noise
 from fitter.sample.uncertainty.term import Term
 
@@ -34,7 +35,7 @@ Prior = Annotated[dict[str, list[Annotated[float, Field(strict=True, allow_inf_n
 FreeOrFixed = Positive | Prior
 
 
-def is_free(value) -> bool:
+def is_free(value: object) -> bool:
     """Whether a setting is a prior, so that it is fitted, and not a number."""
     return isinstance(value, Mapping)
 
@@ -88,7 +89,7 @@ class Rows:
         """Return where a file of the config lies."""
         return self.folder / os.path.expanduser(given)
 
-    def noise(self, variance=None, rows=None, **parts) -> Noise:
+    def noise(self, variance: FloatArray | None = None, rows: IntArray | None = None, **parts: Any) -> Noise:
         """Return the share of a term, for the rows that are kept; ``variance`` is given for all rows."""
         kept = np.zeros(int(self.keep.sum())) if variance is None else np.asarray(variance, dtype=float)[self.keep]
         parts.setdefault("source", self.table)

@@ -8,6 +8,7 @@ from typing import ClassVar
 import numpy as np
 from pydantic import Field
 
+from fitter.array_types import FloatArray, IntArray
 from fitter.errors import InputError
 from fitter.sample.uncertainty.base import PathText, Rows, TermSettings
 from fitter.sample.uncertainty.term import Term
@@ -27,7 +28,7 @@ class MatrixSettings(TermSettings):
     def files(self) -> list[str]:
         return [getattr(self, self.kind)]
 
-    def read(self, rows: Rows):
+    def read(self, rows: Rows) -> tuple[FloatArray, IntArray]:
         """Return the matrix, symmetric, and the row of the file that each of its rows stands in.
 
         A matrix that already has the size of the cut table is taken as it is.

@@ -2,8 +2,9 @@
 
 from __future__ import annotations
 
+from collections.abc import Sequence
 from pathlib import Path
-from typing import Annotated, ClassVar
+from typing import Annotated, Any, ClassVar
 
 import numpy as np
 from pydantic import Field
@@ -28,7 +29,7 @@ class Modes(TermSettings):
     )
     use: Annotated[list[ColumnRef], Field(min_length=1)] | None = Field(None, description="Columns of that file to use; all by default.")
 
-    def columns(self):
+    def columns(self) -> dict[str, Any]:
         return {"numbers": list(self.modes)} if isinstance(self.modes, list) else {}
 
     def files(self) -> list[str]:
@@ -38,6 +39,7 @@ class Modes(TermSettings):
         return self.kind if isinstance(self.modes, list) else Path(self.modes.removesuffix(".gz")).stem
 
     def build(self, rows: Rows) -> Term:
+        names: Sequence[str | int]
         if isinstance(self.modes, list):
             names, shifts, lines = self.modes, np.column_stack([rows.numbers(c) for c in self.modes]), rows.lines
             place = rows.table

@@ -7,6 +7,7 @@ from typing import ClassVar
 import numpy as np
 from pydantic import Field
 
+from fitter.array_types import FloatArray
 from fitter.constants import C_KM_S, MAG_PER_LN
 from fitter.sample.uncertainty.base import Positive, Rows, TermSettings
 from fitter.sample.uncertainty.term import Term
@@ -43,7 +44,7 @@ class PeculiarVelocity(TermSettings):
         return self.term(rows.noise(sigma**2))
 
 
-def modulus_slope(z):
+def modulus_slope(z: FloatArray) -> FloatArray:
     """dμ/dz at a fixed heliocentric redshift, mag, in the fiducial model; z of shape (N,), above 0."""
     u = np.log1p(z)
     nodes, weights = np.polynomial.legendre.leggauss(_NODES)
@@ -54,5 +55,5 @@ def modulus_slope(z):
     return MAG_PER_LN / (_expansion(1 + z) * 0.5 * u * distance)
 
 
-def _expansion(one_plus_z):
+def _expansion(one_plus_z: FloatArray) -> FloatArray:
     return np.sqrt(FIDUCIAL_OMEGA_M * one_plus_z**3 + 1 - FIDUCIAL_OMEGA_M)

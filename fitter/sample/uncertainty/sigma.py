@@ -6,6 +6,7 @@ from typing import ClassVar
 
 from pydantic import Field
 
+from fitter.array_types import BoolArray
 from fitter.errors import InputError
 from fitter.sample.uncertainty.base import ColumnRef, Rows, TermSettings
 from fitter.sample.uncertainty.term import Term
@@ -23,7 +24,7 @@ class Sigma(TermSettings):
 
     sigma: ColumnRef = Field(description="Column of the one-sigma errors, mag.")
 
-    def columns(self):
+    def columns(self) -> dict[str, list[ColumnRef]]:
         return {"numbers": [self.sigma]}
 
     def build(self, rows: Rows) -> Term:
@@ -42,6 +43,6 @@ class Sigma(TermSettings):
         return self.term(rows.noise(sigma**2))
 
 
-def _others(bad) -> str:
+def _others(bad: BoolArray) -> str:
     count = int(bad.sum()) - 1
     return f", here and in {count} more {'rows' if count > 1 else 'row'}" if count else ""

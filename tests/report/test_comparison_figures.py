@@ -114,7 +114,7 @@ def test_narrow_contours_are_not_smeared_by_a_wide_companion():
 
 def test_a_run_keeps_its_colour_in_a_plane(runs):
     figure = plane_figure({"curved": runs["curved"], "flat": runs["flat"]}, "densities", colours={"flat": COLOURS[0], "curved": COLOURS[1]})
-    legend = figure.axes[0].get_legend()
+    (legend,) = figure.legends
     drawn = dict(zip([t.get_text() for t in legend.get_texts()], [h.get_color() for h in legend.legend_handles], strict=True))
     assert drawn == {"curved": COLOURS[1], "flat": COLOURS[0]}
 

@@ -84,8 +84,14 @@ def test_uncorrelated_data_show_an_empty_matrix(build):
 @pytest.mark.parametrize("width", ["single", "double"])
 @pytest.mark.parametrize(
     "group",
-    [None, GROUPS, np.array([f"survey_{i % 9}" for i in range(300)]), np.repeat(["a name too long for its margin", "b"], [297, 3])],
-)  # fmt: skip
+    [
+        None,
+        GROUPS,
+        np.repeat([f"s{i}" for i in range(8)], [230, 20, 15, 12, 9, 7, 4, 3]),
+        np.array([f"survey_{i % 9}" for i in range(300)]),
+        np.repeat(["a name too long for its margin", "b"], [297, 3]),
+    ],
+)
 def test_correlation_figure(build, width, group):
     sample = build.sample(group=group) if group is not None else build.sample()
     data = correlation_data(sample)
@@ -98,7 +104,7 @@ def test_correlation_figure(build, width, group):
     names, code = group_codes(group, 300)
     assert len(ax.texts) == len(names)
     for text, name, count in zip(ax.texts, names, np.bincount(code), strict=True):
-        assert text.get_text().startswith(name[:13]) and count
+        assert text.get_text().startswith(name[:12]) and count
     looks.assert_inside_canvas(figure)
     looks.assert_nothing_overlaps(figure)
 
@@ -117,7 +123,7 @@ def test_budget_adds_up_to_the_variance(build):
     for i in range(len(data.redshift)):
         members = index == i
         assert data.redshift[i] == pytest.approx(np.exp(np.log(z[members]).mean()))
-        assert data.variance[:, i].sum() == pytest.approx(variance[members].mean())
+        assert data.variance[:, i].sum() == pytest.approx(1 / np.mean(1 / variance[members]))
     assert data.labels == [term.label for term in fit.sample.terms]
 
 
@@ -133,7 +139,7 @@ def test_fitted_scatter_is_a_term_and_fitted_scale_multiplies_all(build):
 
 
 @pytest.mark.parametrize("width", ["single", "double"])
-@pytest.mark.parametrize("terms", [1, 3, 12])
+@pytest.mark.parametrize("terms", [2, 3, 12])
 def test_budget_figure(build, width, terms):
     fit = build.real("flat_lcdm", build.sample(distance_scale="relative"))
     data = budget_data(fit.log_posterior, fit.optimum.values)
@@ -149,6 +155,33 @@ def test_budget_figure(build, width, terms):
     looks.assert_inside_canvas(figure)
     looks.assert_nothing_overlaps(figure)
     assert all(label in budget_caption(data) for label in labels)
+
+
+def test_a_single_term_has_no_shares(build):
+    fit = build.real("flat_lcdm", build.sample(distance_scale="relative"))
+    data = budget_data(fit.log_posterior, fit.optimum.values)
+    data = replace(data, labels=["all"], variance=np.full((1, len(data.redshift)), 0.04))
+    (ax,) = draw_budget(data).axes
+    np.testing.assert_allclose(ax.patches[0].get_data().values, 0.2)
+    assert "one term, all" in budget_caption(data)
+
+
+def test_errors_that_say_nothing_do_not_hide_the_others(build):
+    """Some releases give a doubtful supernova an error of a hundred magnitudes instead of leaving it out."""
+    sample = build.sample(diagonal=True)
+    sigma = np.sqrt(sample.noise.variance)
+    sigma[::7] = 100.0
+    doubtful = Sample.from_arrays(sample.redshift, sample.data, sigma=sigma)
+    fit = build.real("flat_lcdm", doubtful)
+    assert np.sqrt(budget_data(fit.log_posterior, fit.optimum.values).variance.sum(axis=0)).max() < 0.25
+
+
+def test_names_of_narrow_surveys_stay_apart_beside_the_matrix():
+    from fitter.report.figures.covariance import _apart
+
+    placed = _apart(np.array([0.9, 1.86, 1.87, 1.88, 1.89]), 0.1, 2.0)
+    assert (np.diff(placed) > 0.28).all() and placed[-1] == 2.0
+    np.testing.assert_array_equal(_apart(np.array([0.3, 1.2]), 0.1, 2.0), [0.3, 1.2])
 
 
 def test_many_terms_are_summed_up(build):

@@ -60,7 +60,7 @@ def test_dark_energy_planes(build, plane):
     assert planes_of(fit.posterior) == [plane]
     figure = plane_figure({"one": fit.posterior, "two": fit.posterior}, plane, width="double")
     (ax,) = figure.axes
-    assert [t.get_text() for t in ax.get_legend().get_texts()] == ["one", "two"]
+    assert [t.get_text() for t in figure.legends[0].get_texts()] == ["one", "two"]
     if plane == "w":
         assert any(np.all(line.get_ydata() == -1) for line in ax.get_lines())
     else:

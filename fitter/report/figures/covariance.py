@@ -29,7 +29,8 @@ _FEW = 60  # up to so many supernovae each is a cell of its own
 _MOST_TERMS = 8
 _LARGEST = 20_000  # rows of a dense matrix that are looked at
 _BLOCK = 2_000
-_NAME_HEIGHT = 0.28  # inches that a survey's two lines need
+_NAME_HEIGHT = 0.29  # inches that a survey's two lines need
+_BELOW = 0.44  # inches under the matrix of correlations
 
 
 @dataclass(frozen=True)
@@ -139,7 +140,7 @@ def draw_correlation(data: CorrelationData, *, width: str | float = "single"):
     from matplotlib.ticker import MaxNLocator
 
     inches = min(width_inches(width), 5.2) if isinstance(width, str) else width_inches(width)
-    left, right, below, above = 0.92, 0.68, 0.44, 0.08
+    left, right, below, above = 0.95, 0.68, _BELOW, 0.08
     side = inches - left - right
     height = side + below + above
     figure = new_figure(inches, height=height)
@@ -166,18 +167,28 @@ def _name_surveys(ax, data: CorrelationData, side: float) -> None:
         ax.axvline(edge, color="black", lw=0.6)
     ax.set_xticks([])
     ax.set_yticks([])
-    room = -np.inf
-    for start, stop in zip(starts.tolist(), stops, strict=True):
-        position = max(side * 0.5 * (start + stop) / b, room)  # names of narrow blocks are pushed apart
-        place = {"transform": ax.transAxes, "ha": "right", "va": "center", "fontsize": 7.5, "linespacing": 1.0}
-        ax.text(-0.04, 1 - position / side, _survey_text(data, start, stop), **place)
-        room = position + _NAME_HEIGHT
+    wanted = np.array([side * 0.5 * (start + stop) / b for start, stop in zip(starts.tolist(), stops, strict=True)])
+    for i, position in enumerate(_apart(wanted, 0.5 * _NAME_HEIGHT, side + _BELOW - 0.5 * _NAME_HEIGHT - 0.02)):
+        place = {"transform": ax.transAxes, "ha": "right", "va": "center", "fontsize": 8, "linespacing": 1.0}
+        ax.text(-0.05, 1 - position / side, _survey_text(data, int(starts[i]), stops[i]), **place)
+        ends = [-0.04, -0.01], [1 - position / side, 1 - wanted[i] / side]
+        ax.plot(*ends, transform=ax.transAxes, color="black", lw=0.4, clip_on=False)
     several = len(starts) > 1
     ax.set_xlabel("Surveys in the same order,\nredshift rising in each" if several else "Redshift, rising", labelpad=4)
 
 
+def _apart(wanted: np.ndarray, low: float, high: float) -> np.ndarray:
+    """Move the positions of names, in rising order, so far that they do not meet, and keep them between two ends where that can be."""
+    placed = wanted.copy()
+    for i in range(len(placed)):
+        placed[i] = max(placed[i], low if i == 0 else placed[i - 1] + _NAME_HEIGHT)
+    for i in reversed(range(len(placed))):
+        placed[i] = min(placed[i], high if i == len(placed) - 1 else placed[i + 1] - _NAME_HEIGHT)
+    return placed
+
+
 def _survey_text(data: CorrelationData, start: int, stop: int) -> str:
-    name = short_name(str(data.group[start]))
+    name = short_name(str(data.group[start]), 13)
     return f"{name}\n{data.low[start]:.2g}–{data.high[stop - 1]:.2g}"
 
 
@@ -198,7 +209,7 @@ def correlation_caption(data: CorrelationData) -> str:
 
 @dataclass(frozen=True)
 class BudgetData:
-    """Mean variance of each uncertainty term in redshift bins.
+    """Variance of each uncertainty term in redshift bins, averaged with inverse-variance weights.
 
     Parameters
     ----------
@@ -238,7 +249,9 @@ def budget_data(log_posterior, values: Mapping[str, float]) -> BudgetData:
     present = np.unique(index)
     count = np.bincount(index, minlength=len(edges) - 1)[present]
     mean = lambda x: np.bincount(index, weights=x, minlength=len(edges) - 1)[present] / count  # noqa: E731
-    variance = scale2 * np.array([mean(v) for _, v in terms])
+    # Weighted as a fit weighs them: a supernova with an error of a hundred magnitudes says nothing, in this figure as well.
+    weight = 1.0 / np.sum([v for _, v in terms], axis=0)
+    variance = scale2 * np.array([mean(weight * v) for _, v in terms]) / mean(weight)
     labels, variance = _largest([label.replace("_", " ") for label, _ in terms], variance)
     # An empty bin gives its room to the neighbours.
     borders = np.r_[edges[0], np.sqrt(edges[present[:-1] + 1] * edges[present[1:]]), edges[-1]]
@@ -270,6 +283,8 @@ def draw_budget(data: BudgetData, *, width: str | float = "single"):
     from matplotlib.ticker import MaxNLocator
 
     inches = width_inches(width)
+    if len(data.labels) == 1:
+        return _draw_sigma(data, inches)
     columns = 2 if inches < 5 else 4
     legend = 0.05 + 0.15 * -(-len(data.labels) // columns)
     height = 0.5 + legend + (2.6 if inches < 5 else 3.2)
@@ -277,9 +292,7 @@ def draw_budget(data: BudgetData, *, width: str | float = "single"):
     upper, lower = figure.subplots(2, 1, sharex=True, height_ratios=[1, 2.2], gridspec_kw={"hspace": 0.06})
     figure.subplots_adjust(left=0.56 / inches, right=1 - 0.12 / inches, bottom=0.42 / height, top=1 - (0.04 + legend) / height)
     total = data.variance.sum(axis=0)
-    upper.stairs(np.sqrt(total), data.edges, color="black", lw=1.0, baseline=None)
-    upper.set_ylim(0, 1.15 * float(np.sqrt(total.max())))
-    upper.set_ylabel(r"$\sigma$  [mag]")
+    _sigma_panel(upper, data)
     upper.yaxis.set_major_locator(MaxNLocator(3, prune="lower"))
     below, patches = np.zeros(len(total)), []
     for i, share in enumerate(data.variance / total):
@@ -288,10 +301,7 @@ def draw_budget(data: BudgetData, *, width: str | float = "single"):
         below = below + share
     lower.set_ylim(0, 1)
     lower.set_ylabel("Share of the variance")
-    lower.set_xlabel("Redshift  $z$")
-    lower.set_xscale("log")
-    lower.set_xlim(data.edges[0], data.edges[-1])
-    redshift_ticks(lower)
+    _redshift_axis(lower, data)
     upper.tick_params(labelbottom=False, which="both")
     figure.align_ylabels([upper, lower])
     tight = {"handlelength": 1.0, "columnspacing": 1.0, "handletextpad": 0.4, "borderaxespad": 0.2, "labelspacing": 0.25}
@@ -299,11 +309,40 @@ def draw_budget(data: BudgetData, *, width: str | float = "single"):
     return figure
 
 
+def _sigma_panel(ax, data: BudgetData) -> None:
+    sigma = np.sqrt(data.variance.sum(axis=0))
+    ax.stairs(sigma, data.edges, color="black", lw=1.0, baseline=None)
+    ax.set_ylim(0, 1.15 * float(sigma.max()))
+    ax.set_ylabel(r"$\sigma$  [mag]")
+
+
+def _redshift_axis(ax, data: BudgetData) -> None:
+    ax.set_xlabel("Redshift  $z$")
+    ax.set_xscale("log")
+    ax.set_xlim(data.edges[0], data.edges[-1])
+    redshift_ticks(ax)
+
+
+def _draw_sigma(data: BudgetData, inches: float):
+    """The standard deviation alone: of one term there are no shares."""
+    figure = new_figure(inches, height=0.5 + (1.5 if inches < 5 else 1.9))
+    height = figure.get_figheight()
+    ax = figure.add_axes((0.56 / inches, 0.42 / height, 1 - 0.68 / inches, 1 - 0.52 / height))
+    _sigma_panel(ax, data)
+    _redshift_axis(ax, data)
+    return figure
+
+
 def budget_caption(data: BudgetData) -> str:
     """Return the caption of the budget figure."""
+    if len(data.labels) == 1:
+        return (
+            f"Standard deviation of a supernova in {data.variance.shape[1]} redshift bins: root of the inverse mean of the inverse "
+            f"variances. There is one term, {data.labels[0]}."
+        )
     return (
-        f"What the variance of the data is made of, in {data.variance.shape[1]} redshift bins: {', '.join(data.labels)}. Bottom: each "
-        "term's "
-        "mean variance over the sum; top: square root of the sum. Correlations between supernovae, which the share does not show, make the "
-        "systematic terms weigh more in the parameters than here."
+        f"What the variance of the data is made of, in {data.variance.shape[1]} redshift bins: {', '.join(data.labels)}. Means over the "
+        "supernovae of a bin are weighted by their inverse variances. Bottom: each term's mean variance over the sum; top: square root of "
+        "the sum. Correlations between supernovae, which the share does not show, make the systematic terms weigh more in the parameters "
+        "than here."
     )

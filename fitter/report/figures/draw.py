@@ -7,11 +7,13 @@ from dataclasses import dataclass
 from functools import cached_property
 from pathlib import Path
 
+import numpy as np
+
 from fitter.errors import InputError
 from fitter.report.comparison_figures import overlay_names
 from fitter.report.figures.chains import chains_caption, chains_figure
 from fitter.report.figures.corner import corner_caption, corner_figure, main_parameters
-from fitter.report.figures.covariance import budget_caption, correlation_caption, draw_budget, draw_correlation
+from fitter.report.figures.covariance import CorrelationData, budget_caption, correlation_caption, draw_budget, draw_correlation
 from fitter.report.figures.data import DATA_FILE, FigureData, read_figure_data
 from fitter.report.figures.history import draw_history, history_caption
 from fitter.report.figures.hubble import draw_hubble, hubble_caption
@@ -148,7 +150,9 @@ def _of_data(field: str, name: str, draw: Callable, caption: Callable, width: st
     def made(run: Drawable, how: FigureSettings) -> list[Drawing]:
         data = getattr(run.data, field)
         options = {"references": how.models} if field == "hubble" else {}
-        return [] if data is None else [Drawing(name, lambda w: draw(data, width=w or width, **options), caption(data))]
+        # Of uncorrelated errors there is no matrix to show.
+        empty = data is None or (isinstance(data, CorrelationData) and not np.nan_to_num(data.matrix).any())
+        return [] if empty else [Drawing(name, lambda w: draw(data, width=w or width, **options), caption(data))]
 
     return made
 
@@ -164,8 +168,9 @@ _OF_ONE: dict[str, Callable] = {
     "chains": _chains,
 }
 _NO_FLOW = "All of its supernovae are calibrators."
-_WHY_NONE = dict.fromkeys(("hubble", "history", "correlation", "budget"), _NO_FLOW) | {
+_WHY_NONE = dict.fromkeys(("hubble", "history", "budget"), _NO_FLOW) | {
     "corner": "None of its parameters varies.",
+    "correlation": "Its errors are uncorrelated, or all of its supernovae are calibrators.",
     "planes": f"They need two of its parameters: {'; '.join(f'{p.x} and {p.y}' for p in PLANES.values())}.",
     "residuals": _NO_FLOW,
     "chains": "It has no sampled parameter.",

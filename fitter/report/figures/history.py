@@ -10,7 +10,7 @@ import numpy as np
 from fitter.cosmology import get_model
 from fitter.cosmology.adaptive import log_distance_at
 from fitter.errors import InputError
-from fitter.report.figures.panels import runs_of
+from fitter.report.figures.panels import legend_layout, run_legend, runs_of
 from fitter.report.figures.style import COLOURS, in_style, new_figure, width_inches
 
 __all__ = ["HistoryData", "draw_history", "history_caption", "history_data"]
@@ -136,7 +136,7 @@ def draw_history(histories, *, width: str | float = "double"):
     wide = width_inches(width) > 5
     columns = {1: 1, 2: 2, 3: 3}.get(len(names), 2) if wide else 1
     rows = -(-len(names) // columns)
-    legend = 0.26 if len(runs) > 1 else 0.0
+    legend = legend_layout(list(runs), width_inches(width))[2] if len(runs) > 1 else 0.0
     # One panel as wide as two columns would be a strip.
     figure = new_figure(4.6 if width == "double" and len(names) == 1 else width, height=0.5 + legend + (2.0 if wide else 1.7) * rows)
     inches, height = figure.get_size_inches()
@@ -154,7 +154,7 @@ def draw_history(histories, *, width: str | float = "double"):
     for first in range(columns):
         figure.align_ylabels(axes.ravel()[: len(names)][first::columns])
     if len(runs) > 1:
-        _legend(figure, runs)
+        run_legend(figure, {label: COLOURS[i % len(COLOURS)] for i, label in enumerate(runs)}, inches)
     return figure
 
 
@@ -185,13 +185,6 @@ def _panel(ax, name: str, runs: Mapping[str, HistoryData]) -> None:
     ax.xaxis.set_major_locator(MaxNLocator(6, steps=[1, 2, 5, 10]))
     ax.yaxis.set_major_locator(MaxNLocator(5, steps=[1, 2, 5, 10], prune="both"))
     ax.set_ylabel(_LABELS[name])
-
-
-def _legend(figure, runs) -> None:
-    from matplotlib.lines import Line2D
-
-    handles = [Line2D([], [], color=COLOURS[i % len(COLOURS)], lw=2, label=label) for i, label in enumerate(runs)]
-    figure.legend(handles=handles, loc="upper center", ncols=len(handles), bbox_to_anchor=(0.5, 1.0))
 
 
 def history_caption(histories) -> str:

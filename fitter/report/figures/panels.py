@@ -137,6 +137,7 @@ def contours(ax, x, y, limits, colour, *, fill: bool = True, bins: int = _BINS) 
     """
     import corner
     from matplotlib.colors import to_rgba
+    from matplotlib.patches import Rectangle
 
     defined = np.isfinite(x) & np.isfinite(y)
     if not defined.all():
@@ -145,6 +146,7 @@ def contours(ax, x, y, limits, colour, *, fill: bool = True, bins: int = _BINS) 
         _segment(ax, x, y, colour)
         return
     shades = [to_rgba(colour, 0.0), to_rgba(colour, 0.28), to_rgba(colour, 0.62)]
+    before = len(ax.collections)
     # corner warns about thin samples through logging; a report's own warnings say so already.
     corner.hist2d(
         x,
@@ -165,6 +167,10 @@ def contours(ax, x, y, limits, colour, *, fill: bool = True, bins: int = _BINS) 
         new_fig=False,
         force_range=True,
     )
+    # corner closes contours beyond the range, where a prior allows nothing.
+    inside = Rectangle((limits[0][0], limits[1][0]), np.ptp(limits[0]), np.ptp(limits[1]), transform=ax.transData)
+    for drawn in ax.collections[before:]:
+        drawn.set_clip_path(inside)
 
 
 def _on_a_line(x, y) -> bool:

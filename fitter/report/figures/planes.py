@@ -9,11 +9,14 @@ import numpy as np
 
 from fitter.errors import InputError
 from fitter.report.facts import axis_label
-from fitter.report.figures.panels import contours, plot_range, runs_of, thinned
-from fitter.report.figures.style import COLOURS, GREY, LEVELS, in_style, new_figure
+from fitter.report.figures.panels import contours, legend_layout, plot_range, run_legend, runs_of, thinned
+from fitter.report.figures.style import COLOURS, GREY, LEVELS, in_style, new_figure, width_inches
 from fitter.report.prose import cite, symbol
 
 __all__ = ["PLANES", "no_big_bang", "plane_caption", "plane_figure", "planes_of", "recollapse"]
+
+_COVERED = 1e-3  # share of the draws that a label may cover: beyond the contours there are always some
+_PLACES = np.linspace(0.05, 0.95, 37)  # of a label, along the visible part of its line
 
 
 def no_big_bang(omega_m) -> np.ndarray:
@@ -123,8 +126,6 @@ def plane_figure(
     -------
     matplotlib.figure.Figure
     """
-    from matplotlib.lines import Line2D
-
     if plane not in PLANES:
         raise InputError("unknown plane", value=plane, cure=f"Use one of {', '.join(PLANES)}.")
     chosen, runs = PLANES[plane], runs_of(posteriors)
@@ -134,31 +135,31 @@ def plane_figure(
     tables = [(thinned(p, chosen.x), thinned(p, chosen.y)) for p in runs.values()]
     colours = colours or {label: COLOURS[i % len(COLOURS)] for i, label in enumerate(runs)}
     limits = tuple(_limits([t[i] for t in tables], chosen.show[i]) for i in (0, 1))
-    figure = new_figure(width, 0.9)
-    inches, height = figure.get_size_inches()
-    ax = figure.add_axes([0.52 / inches, 0.42 / height, 1 - 0.70 / inches, 1 - 0.54 / height])
+    inches = width_inches(width)
+    above = legend_layout(list(runs), inches)[2] if len(runs) > 1 else 0.0
+    height = 0.9 * inches + above
+    figure = new_figure(inches, height=height)
+    ax = figure.add_axes((0.52 / inches, 0.42 / height, 1 - 0.70 / inches, 1 - (0.54 + above) / height))
     for label, (x, y) in zip(runs, tables, strict=True):
         contours(ax, x, y, tuple(plot_range([c]) for c in (x, y)), colours[label], bins=60)
     ax.set_xlim(*limits[0])
     ax.set_ylim(*limits[1])
     ax.set_xlabel(axis_label(chosen.x))
     ax.set_ylabel(axis_label(chosen.y))
-    _draw_lines(ax, chosen, limits)
+    _draw_lines(ax, chosen, limits, np.concatenate([np.stack(t) for t in tables], axis=1))
     if reference:
         ax.plot(reference[chosen.x], reference[chosen.y], marker="+", color="black", ms=7, mew=1.2, zorder=6)
     if len(runs) > 1:
-        handles = [Line2D([], [], color=colours[label], lw=2, label=label) for label in runs]
-        ax.legend(handles=handles, loc="upper right")
+        run_legend(figure, {label: colours[label] for label in runs}, inches)
     return figure
 
 
 def _limits(columns, show) -> tuple[float, float]:
-    low, high = plot_range(columns)
-    margin = 0.04 * (max(high, show[1]) - min(low, show[0]))
-    return (low - margin if low < show[0] and show[0] != 0 else min(low, show[0])), (high + margin if high > show[1] else show[1])
+    low, high = plot_range(columns)  # with a margin, unless a prior's edge is there: that stands on the frame
+    return min(low, show[0]), max(high, show[1])
 
 
-def _draw_lines(ax, plane: Plane, limits) -> None:
+def _draw_lines(ax, plane: Plane, limits, draws) -> None:
     x = np.linspace(limits[0][0], limits[0][1], 400)
     if plane.shade is not None:
         edge = plane.shade(x)
@@ -174,33 +175,38 @@ def _draw_lines(ax, plane: Plane, limits) -> None:
         if line.y is not None:
             y = line.y(x)
             ax.plot(x, y, **style)
-            _label_along(ax, line, x, y, limits)
+            _label_along(ax, line, x, y, limits, draws)
 
 
-def _label_along(ax, line: Line, x, y, limits) -> None:
-    """Write the label along the visible part of its line, turned with it."""
+def _label_along(ax, line: Line, x, y, limits, draws) -> None:
+    """Write the label along the visible part of its line, turned with it, where it covers least of the posterior."""
     from matplotlib.patheffects import withStroke
 
     visible = np.flatnonzero((y >= limits[1][0]) & (y <= limits[1][1]))
     if not line.label or len(visible) < 20:
         return
-    i = visible[int(line.where * (len(visible) - 1))]
-    j = min(i + 5, len(x) - 1)
-    (x0, y0), (x1, y1) = ax.transData.transform([(x[i], y[i]), (x[j], y[j])])
     halo = [withStroke(linewidth=1.6, foreground="white")]  # legible where contours run beneath
-    ax.annotate(
-        line.label,
-        (x[i], y[i]),
-        xytext=(0, -2 if line.below else 2),
-        textcoords="offset points",
-        rotation=float(np.degrees(np.arctan2(y1 - y0, x1 - x0))),
-        rotation_mode="anchor",
-        ha="center",
-        va="top" if line.below else "bottom",
-        fontsize=8,
-        zorder=5,
-        path_effects=halo,
-    )
+    style = {"rotation_mode": "anchor", "ha": "center", "va": "top" if line.below else "bottom", "fontsize": 8, "zorder": 5}
+    label = ax.annotate(line.label, (0, 0), xytext=(0, -2 if line.below else 2), textcoords="offset points", path_effects=halo, **style)
+    points = ax.transData.transform(draws[:, np.isfinite(draws).all(axis=0)].T)
+    frame = ax.get_window_extent()
+
+    def put(where: float) -> None:
+        i = visible[int(where * (len(visible) - 1))]
+        j = min(i + 5, len(x) - 1)
+        (x0, y0), (x1, y1) = ax.transData.transform([(x[i], y[i]), (x[j], y[j])])
+        label.xy = x[i], y[i]
+        label.set_rotation(float(np.degrees(np.arctan2(y1 - y0, x1 - x0))))
+
+    def cost(where: float) -> tuple[float, float]:
+        put(where)
+        box = label.get_window_extent()
+        if not (frame.x0 < box.x0 and box.x1 < frame.x1 and frame.y0 < box.y0 and box.y1 < frame.y1):
+            return np.inf, 0.0
+        covered = float(((points > box.min) & (points < box.max)).all(axis=1).mean())
+        return (covered if covered > _COVERED else 0.0), abs(where - line.where)
+
+    put(min((line.where, *_PLACES), key=cost))
 
 
 def plane_caption(plane: str, labels=()) -> str:

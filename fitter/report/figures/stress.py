@@ -3,13 +3,14 @@
 from __future__ import annotations
 
 from fitter.report.facts import axis_label, parameter
-from fitter.report.figures.style import COLOURS, GREY, in_style, new_figure
+from fitter.report.figures.style import COLOURS, in_style, new_figure
 from fitter.study.scenarios import KINDS
 from fitter.study.stress import FLAG
 
 __all__ = ["stress_caption", "stress_figure"]
 
 _ROW = 0.158  # inches
+_FAINT = "#6b6b6b"
 _WIDEST = 8.0  # of the fit's own errors: what moves further is drawn as an arrow
 
 
@@ -29,8 +30,8 @@ def stress_figure(result: dict, name: str):
     matplotlib.figure.Figure
     """
     rows = _rows(result, name)
-    figure = new_figure("double", height=_ROW * len(rows) + 0.75)
-    axes = figure.add_axes((0.30, 0.48 / figure.get_figheight(), 0.56, 1 - 0.56 / figure.get_figheight()))
+    figure = new_figure("double", height=_ROW * len(rows) + 0.85)
+    axes = figure.add_axes((0.30, 0.48 / figure.get_figheight(), 0.56, 1 - 0.66 / figure.get_figheight()))
     base = result["baseline"]["parameters"][name]
     axes.axvspan(base["low68"], base["high68"], color=COLOURS[0], alpha=0.13, linewidth=0)
     axes.axvline(base["median"], color=COLOURS[0], linewidth=0.8)
@@ -38,7 +39,7 @@ def stress_figure(result: dict, name: str):
     for i, row in enumerate(rows):
         _draw_row(axes, -i, row, low, high)
     axes.set(xlim=(low, high), ylim=(-len(rows) + 0.4, 0.6), yticks=[], xlabel=_label(result, name))
-    axes.text(1.02, 0.75, "shift / expected", transform=axes.get_yaxis_transform(), fontsize=7, color="black", va="center")
+    axes.text(1.02, 0.75, "shift / expected", transform=axes.get_yaxis_transform(), fontsize=8, color="black", va="bottom")
     return figure
 
 
@@ -49,7 +50,7 @@ def stress_caption(result: dict, name: str) -> str:
         f"{parameter(name).meaning[:1].upper()}{parameter(name).meaning[1:]} under every change of the fit: medians with 68.3 % intervals. "
         f"Line and band: the fit itself. Right: shift of the median over the scatter expected of it, √|σ² − σ²(all)| (Gratton & Challinor "
         f"2020), where less information went in; orange beyond {FLAG}; in brackets the shift over the fit's own error, where no scatter "
-        f"is expected. Open and filled: a mode shifted by −1σ and +1σ. Arrows: beyond the frame.{blinded}"
+        f"is expected. Open and filled: a mode shifted by −1σ and +1σ. Arrows: it goes on beyond the frame.{blinded}"
     )
 
 
@@ -91,6 +92,9 @@ def _draw_row(axes, y: float, row: dict, low: float, high: float) -> None:
         if low < facts["median"] < high:
             ends = max(facts["low68"], low), min(facts["high68"], high)
             axes.plot(ends, [y + offset] * 2, color=colour, linewidth=0.9, solid_capstyle="butt")
+            for beyond, edge, marker in ((facts["low68"] < low, low, "<"), (facts["high68"] > high, high, ">")):
+                if beyond:
+                    axes.plot(edge + (0.008 if marker == "<" else -0.008) * (high - low), y + offset, marker, color=colour, markersize=3.0)
             axes.plot(facts["median"], y + offset, "o", color=colour, markersize=2.8, markerfacecolor=colour if filled else "white")
         else:
             above = facts["median"] >= high
@@ -102,11 +106,12 @@ def _draw_row(axes, y: float, row: dict, low: float, high: float) -> None:
     text = f"{round(facts['significance'], 1) + 0.0:+.1f}" if judged else f"({round(facts['shift_in_sigma'], 1) + 0.0:+.1f})"
     axes.text(
         1.02, y, text.replace("-", "−"), transform=axes.get_yaxis_transform(), va="center", fontsize=8,
-        color=COLOURS[1] if facts["flagged"] else "black" if judged else GREY,
+        color=COLOURS[1] if facts["flagged"] else "black" if judged else _FAINT,
     )  # fmt: skip
 
 
 def _short(label: str, longest: int = 34) -> str:
+    label = label.replace("_", " ")
     return label if len(label) <= longest else label[: longest - 1] + "…"
 
 

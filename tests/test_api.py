@@ -203,6 +203,16 @@ def test_bad_keywords_have_the_messages_of_a_config(sample):
         fit(model="flat_lcdm")
 
 
+def test_a_config_of_arrays_alone_is_refused(result):
+    from fitter.studies import stress
+
+    _, config = load_run(result.run_folder)
+    with pytest.raises(InputError, match="came as arrays"):
+        fit(config, run_folder=False)
+    with pytest.raises(InputError, match="came as arrays"):
+        stress(config)
+
+
 def test_an_interruption_too_early_to_summarise_keeps_the_checkpoint(sample, tmp_path, monkeypatch):
     from dataclasses import replace
 

@@ -70,6 +70,10 @@ def _range(redshift) -> str:
     return f"{redshift.min():.4g} ≤ z ≤ {redshift.max():.4g}"
 
 
+def _percent(share: float | None) -> str:
+    return f"{'?' if share is None else format(100 * share, '.1f'):>5} %"
+
+
 def _terms(sample) -> list[str]:
     from fitter.sample.examination import budget
 
@@ -78,7 +82,7 @@ def _terms(sample) -> list[str]:
         return ["Uncertainties: an inverse covariance, too large to be taken apart here"]
     lines = [f"Uncertainties, median σ in mag and {SHARE}:"]
     width = max(len("together"), *(len(part.label) for part in parts))
-    lines += [f"  {part.label:<{width}}  {part.sigma:.4f}  {100 * part.share:5.1f} %  ({part.kind})" for part in parts]
+    lines += [f"  {part.label:<{width}}  {part.sigma:.4f}  {_percent(part.share)}  ({part.kind})" for part in parts]
     if len(parts) > 1:
         total = np.sqrt(np.median(sum(term.variance for term in sample.terms)))
         lines.append(f"  {'together':<{width}}  {total:.4f}")

@@ -3,9 +3,12 @@
 from __future__ import annotations
 
 from dataclasses import dataclass
-from typing import Any
+from typing import TYPE_CHECKING, Any
 
 import numpy as np
+
+if TYPE_CHECKING:
+    from fitter.sample.sample import Sample
 
 __all__ = ["SHARE", "Budget", "error_budget"]
 
@@ -35,7 +38,7 @@ class Budget:
         return {"label": self.label, "kind": self.kind, "median_sigma": self.sigma, "share": self.share}
 
 
-def error_budget(sample) -> list[Budget]:
+def error_budget(sample: Sample) -> list[Budget]:
     """Return the part of each fixed term of a sample, in the order of the config; the shares add to 1."""
     variances = [term.variance for term in sample.terms]
     # The variances of single supernovae are not in a capsule, their shares are.

@@ -96,7 +96,7 @@ class Cholesky:
         out = lapack.dtfsm(1.0, self._packed, flat, transr="N", side="L", uplo="L", trans="N", diag="N")
         return out.reshape(x.shape)
 
-    def inverse_times(self, x):
+    def inverse_times(self, x: FloatArray) -> FloatArray:
         """A⁻¹ x for x of shape (N,) or (N, m)."""
         from scipy.linalg import lapack
 

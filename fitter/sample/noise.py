@@ -184,7 +184,7 @@ class Noise:
         return base - spread @ np.linalg.solve(capacitance, self.modes.T @ base)
 
     @cached_property
-    def _woodbury(self):
+    def _woodbury(self) -> tuple[FloatArray, FloatArray]:
         spread = self._base_inverse(self.modes)
         return spread, np.eye(len(self.mode_names)) + self.modes.T @ spread
 

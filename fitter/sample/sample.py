@@ -129,13 +129,13 @@ class Sample:
         return digest.hexdigest()
 
     @classmethod
-    def from_config(cls, settings: CapsuleSettings | SampleSettings, folder: str | Path) -> Sample:
+    def from_config(cls, settings: CapsuleSettings | SampleSettings | None, folder: str | Path) -> Sample:
         """Read a sample.
 
         Parameters
         ----------
-        settings : SampleSettings
-            The ``sample:`` section of a config.
+        settings : SampleSettings, CapsuleSettings or None
+            The ``sample:`` section of a config; None is refused.
         folder : path-like
             Paths in the settings are relative to it.
 
@@ -147,6 +147,10 @@ class Sample:
         from fitter.sample.assembly import assemble
         from fitter.sample.capsule import CapsuleSettings, sample_from_capsule
 
+        if settings is None:
+            raise InputError(
+                "this config names no data: they came as arrays from Python", cure="Give it a `sample:`, or fit the arrays again"
+            )
         if isinstance(settings, CapsuleSettings):
             return sample_from_capsule(settings, Path(folder))
         return assemble(settings, Path(folder))

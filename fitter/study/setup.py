@@ -4,6 +4,7 @@ from __future__ import annotations
 
 from dataclasses import dataclass, field, replace
 
+from fitter.cosmology import Model
 from fitter.likelihood.posterior import LogPosterior
 from fitter.sample.sample import Sample
 
@@ -26,7 +27,7 @@ class FitSetup:
     """
 
     sample: Sample
-    model: object
+    model: Model | str
     parameters: dict = field(default_factory=dict)
     radiation: bool = False
     hidden: dict[str, float] = field(default_factory=dict)

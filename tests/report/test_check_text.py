@@ -10,7 +10,7 @@ import pytest
 
 from fitter import Sample, fit
 from fitter.checking import check
-from fitter.report.check_text import check_text
+from fitter.report.check_text import _percent, check_text
 from fitter.report.page import page_text
 from fitter.sample.budget import SHARE
 from fitter.sample.examination import budget, condition_number, correlations, outliers, repeated_rows
@@ -137,3 +137,8 @@ def test_rows_that_stand_twice():
     z, data = np.append(Z, Z[7]), np.append(MU, MU[7])
     assert repeated_rows(Sample.from_arrays(z, data, sigma=0.12)) == [(8, N + 1)]
     assert repeated_rows(Sample.from_arrays(Z, MU, sigma=0.12)) == []
+
+
+def test_a_share_that_is_not_known_is_a_question_mark():
+    assert _percent(0.125) == " 12.5 %"
+    assert _percent(None) == "    ? %"

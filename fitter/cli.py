@@ -132,11 +132,10 @@ def _fit(
     allow_code: AllowCode = False,
 ) -> int:
     """Fit a model to a sample: posterior, summary and figures in a run folder."""
-    if replace and resume:
-        raise InputError("--replace starts anew, --resume continues: choose one of them")
-    from fitter.api import fit, load_config
+    _refuse_both(replace, resume)
+    from fitter.api import fit
 
-    settings = load_config(config, allow_code=allow_code)
+    settings = _loaded(config, allow_code)
     if seed is not None:
         settings = settings.changed({"sampling.seed": seed})
     target = run_folder or settings.default_run_folder()
@@ -148,6 +147,21 @@ def _fit(
         return 0
     _say(f"mufitter: not converged. {result.summary()['sampling'].get('advice') or ''}".rstrip())
     return NOT_CONVERGED
+
+
+def _loaded(path: Path, allow_code: bool):
+    """The config; where it is wrong, with all that is wrong with its files too."""
+    from fitter.config.load import load_config
+
+    try:
+        return load_config(path, allow_code=allow_code)
+    except InputError:
+        from fitter.checking import check
+
+        problems = check(path, allow_code=allow_code).problems
+        if not problems:
+            raise
+        raise InputErrors(problems) from None
 
 
 def _print_result(result, as_json: bool, quiet: bool) -> None:
@@ -179,11 +193,13 @@ def _compare(
         Path | None, typer.Option(help="Where everything goes.", show_default="what the config says, or runs/comparison")
     ] = None,
     replace: Annotated[bool, typer.Option("--replace", help="Replace an earlier comparison there.")] = False,
+    resume: Annotated[bool, typer.Option("--resume", help="Continue an interrupted comparison; finished variants are kept.")] = False,
     json_: Annotated[bool, typer.Option("--json", help="Print comparison.json to stdout instead of the table.")] = False,
     quiet: Annotated[bool, typer.Option("--quiet", "-q", help="No progress and no table, only warnings and errors.")] = False,
     allow_code: AllowCode = False,
 ) -> int:
     """Set models, priors or data side by side: which one do the data want?"""
+    _refuse_both(replace, resume)
     from fitter.comparing import compare
 
     one = what[0] if len(what) == 1 and not what[0].is_dir() else what
@@ -195,12 +211,21 @@ def _compare(
         "average": average or None,
         "run_folder": run_folder,
         "replace": replace,
+        "resume": resume,
     }
     result = compare(one, **options, allow_code=allow_code, tell=tell)
     _print_comparison(result, json_, quiet)
     if not quiet:
         _say(f"Written to {result.run_folder}")
-    return 0 if result.converged else NOT_CONVERGED
+    if result.converged:
+        return 0
+    _say("mufitter: not every variant has converged. Raise sampling.max_steps in the config and compare again with --replace")
+    return NOT_CONVERGED
+
+
+def _refuse_both(replace: bool, resume: bool) -> None:
+    if replace and resume:
+        raise InputError("--replace starts anew, --resume continues: choose one of them")
 
 
 def _print_comparison(result, as_json: bool, quiet: bool) -> None:

@@ -86,6 +86,7 @@ def compare(
     average: bool | None = None,
     run_folder: str | Path | Literal[False] | None = None,
     replace: bool = False,
+    resume: bool = False,
     allow_code: bool = False,
     tell: Report | None = None,
 ) -> Comparison:
@@ -107,6 +108,8 @@ def compare(
         Where everything goes. False writes nothing, and is for finished runs only.
     replace : bool
         Whether an earlier comparison there may be replaced.
+    resume : bool
+        Go on with an interrupted comparison of variants: those that are finished are kept, the others continued.
     allow_code : bool
         Whether the file of a model of one's own may be run.
     tell : callable, optional
@@ -126,13 +129,16 @@ def compare(
     if isinstance(what, Config | str | Path):
         if names is not None:
             raise InputError("the names of variants stand in the config", value=list(names), cure="Give names for finished runs only")
-        return _compare_variants(what, options, run_folder, replace, allow_code, tell or (lambda _: None))
+        place = _Place(run_folder, replace, resume)
+        return _compare_variants(what, options, place, allow_code, tell or (lambda _: None))
+    if resume:
+        raise InputError("finished runs are compared in a moment, there is nothing to continue", cure="Leave --resume out")
     entries = [_entry_of_run(path, allow_code) for path in what]
     entries = _with_different_names(entries, [Path(p) for p in what]) if names is None else _renamed(entries, list(names))
     report = _report(entries, options, DEFAULT_SEED)
     if run_folder is False:
         return Comparison(report, tuple(entries))
-    folder = _target(run_folder or Path("runs") / "comparison", replace)
+    folder = _Place(run_folder or Path("runs") / "comparison", replace).open_for(None)
     folder.open()
     try:
         _write(report, entries, folder.path)
@@ -141,10 +147,24 @@ def compare(
         folder.leave()
 
 
-def _target(path: str | Path, replaced: bool) -> RunFolder:
-    folder = RunFolder(Path(path).expanduser(), replace=replaced)
-    folder.check_target()
-    return folder
+@dataclass(frozen=True)
+class _Place:
+    """Where a comparison goes, and what becomes of an earlier one there."""
+
+    run_folder: str | Path | Literal[False] | None
+    replace: bool = False
+    resume: bool = False
+
+    def open_for(self, config: Config | None) -> RunFolder:
+        """The folder, not yet opened."""
+        if self.run_folder is False:
+            raise InputError("the fits of a comparison need a folder", cure="Give run_folder a path")
+        default = config.default_run_folder() if config is not None else Path()
+        folder = RunFolder(Path(self.run_folder or default).expanduser(), replace=self.replace)
+        if self.resume and folder.earlier == folder.target:
+            raise InputError("the comparison there is finished", file=folder.target, cure="Make it again with --replace")
+        folder.check_target()
+        return folder
 
 
 def _check_scale(scale: str | None) -> None:
@@ -169,20 +189,23 @@ def _report(entries: list[Entry], options: dict, seed: int) -> dict:
 # ---------------------------------------------------------------------- variants of a config
 
 
-def _compare_variants(what, options: dict, run_folder, replace: bool, allow_code: bool, tell: Report) -> Comparison:
+def _compare_variants(what, options: dict, place: _Place, allow_code: bool, tell: Report) -> Comparison:
     config, _ = _settings(what, {}, allow_code)
     variants = expand(config)
-    if run_folder is False:
-        raise InputError("the fits of a comparison need a folder", cure="Give run_folder a path")
-    folder = _target(run_folder or config.default_run_folder(), replace)
+    folder = place.open_for(config)
     samples = samples_of(variants)
-    for variant, sample in zip(variants, samples, strict=True):
-        raise_all(input_problems(variant.config, sample))
-        likelihood_of(variant.config, sample)  # what is wrong with one of them is told before any is fitted
+    work = (variants, samples, folder.path / "variants", folder.target / "variants")
+    for i in range(len(variants)):  # what is wrong with one of them is told before any is fitted
+        job, target = _job(i, *work)
+        raise_all(input_problems(job.config, job.sample))
+        if place.resume and target.earlier is not None:
+            job.require_same_run(target.earlier)
+    if place.resume:
+        _refuse_others(variants, folder.path / "variants")
     given = config.compare.model_dump()
-    folder.open()
+    folder.open(resume=place.resume)
     try:
-        runs = _fit_all(variants, samples, folder.path / "variants", folder.target / "variants", tell)
+        runs = _fit_all(work, place.resume, tell)
         entries = [
             _entry(v.name, run, lambda v=v, sample=sample: likelihood_of(v.config, sample))
             for v, run, sample in zip(variants, runs, samples, strict=True)
@@ -203,18 +226,37 @@ def _start_worker(*work) -> None:
     _work = work
 
 
-def _fit_one(i: int) -> None:
-    variants, samples, folder, final, processes = _work
+def _job(i: int, variants: list[Variant], samples: list[Sample], folder: Path, final: Path) -> tuple[_Job, RunFolder]:
+    """The fit of one variant, and its folder."""
     variant = variants[i]
     config = variant.config.model_copy(update={"run_folder": _said(final / variant.folder)})
     target = RunFolder(folder / variant.folder)
-    job = _Job.prepare(config, samples[i], target, False)
+    return _Job.prepare(config, samples[i], target, False), target
+
+
+def _refuse_others(variants: list[Variant], folder: Path) -> None:
+    """Refuse to go on with a comparison of other variants."""
+    ours = {v.folder for v in variants}
+    others = sorted(p.name for p in folder.glob("[!.]*") if p.name.removesuffix(".unfinished") not in ours)
+    if others:
+        problem = f"the interrupted comparison has variants that the config does not have: {', '.join(others)}"
+        raise InputError(problem, file=folder, cure="Restore them in the config, or start again with --replace")
+
+
+def _fit_one(i: int) -> bool:
+    """Fit one variant, or take it as it is where it is finished; whether there was something to do."""
+    *work, resume, processes = _work
+    job, target = _job(i, *work)
     job.processes = processes
-    target.open()
+    if resume and target.earlier == target.target and job.finished_run() is not None:
+        return False
+    resume = resume and target.earlier is not None
+    target.open(resume=resume)
     try:
-        job.run()
+        job.run(resume=resume)
     finally:
         target.leave()
+    return True
 
 
 def _said(path: Path) -> str:
@@ -223,18 +265,19 @@ def _said(path: Path) -> str:
     return path.relative_to(here).as_posix() if path.is_relative_to(here) else str(path)
 
 
-def _fit_all(variants: list[Variant], samples: list[Sample], folder: Path, final: Path, tell: Report) -> list:
+def _fit_all(work: tuple, resume: bool, tell: Report) -> list:
     """Fit every variant, several at a time; return the runs, read back."""
     import multiprocessing
 
+    variants, _, folder, _ = work
     cores = available_cores()
     workers = min(cores, len(variants))
-    work = (variants, samples, folder, final, max(1, cores // workers))
+    work = (*work, resume, max(1, cores // workers))
+    said = lambda i, new, done: tell(f"{variants[i].name} {'is' if new else 'was'} done, {done} of {len(variants)}")  # noqa: E731
     if workers == 1:
         _start_worker(*work)
-        for i, variant in enumerate(variants):
-            _fit_one(i)
-            tell(f"{variant.name} is done, {i + 1} of {len(variants)}")
+        for i in range(len(variants)):
+            said(i, _fit_one(i), i + 1)
     else:
         method = "fork" if "fork" in multiprocessing.get_all_start_methods() else None
         context = multiprocessing.get_context(method)
@@ -243,8 +286,7 @@ def _fit_all(variants: list[Variant], samples: list[Sample], folder: Path, final
             order = sorted(range(len(variants)), key=lambda i: -len(_sampled(variants[i])))
             pending = {pool.submit(_fit_one, i): i for i in order}
             for done, future in enumerate(as_completed(pending), 1):
-                future.result()
-                tell(f"{variants[pending[future]].name} is done, {done} of {len(variants)}")
+                said(pending[future], future.result(), done)
     return [read_run(folder / v.folder) for v in variants]
 
 

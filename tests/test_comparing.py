@@ -205,3 +205,63 @@ def test_what_is_wrong_is_told_before_anything_is_fitted(folder, tmp_path):
     with pytest.raises(InputError, match="leave none"):
         compare(tmp_path / "config.yaml", run_folder=tmp_path / "out")
     assert not list(tmp_path.glob("out*"))
+
+
+def test_an_interrupted_comparison_goes_on(comparison, folder, tmp_path, monkeypatch):
+    """What was finished is kept as it is, the rest is fitted, and the outcome is that of a comparison without a break."""
+    from fitter import comparing
+
+    monkeypatch.setattr(comparing, "available_cores", lambda: 1)
+    fit_one, fitted = comparing._fit_one, []
+
+    def breaking(i):
+        if i == 2 and len(fitted) < 3:
+            fitted.append("break")
+            raise KeyboardInterrupt
+        fitted.append(i)
+        return fit_one(i)
+
+    monkeypatch.setattr(comparing, "_fit_one", breaking)
+    with pytest.raises(KeyboardInterrupt):
+        compare(folder / "config.yaml", run_folder=tmp_path / "out")
+    kept = tmp_path / "out.unfinished/variants"
+    assert {p.name for p in kept.iterdir()} == {"1", "2_curved"}
+    before = {p: p.stat().st_mtime_ns for p in kept.glob("*/chain.h5")}
+    with pytest.raises(InputError, match="Continue it with --resume"):
+        compare(folder / "config.yaml", run_folder=tmp_path / "out")
+    said = []
+    found = compare(folder / "config.yaml", run_folder=tmp_path / "out", resume=True, tell=said.append)
+    assert [line.split(",")[0] for line in said] == ["Λ was done", "curved was done", "free w is done", "no lensing is done"]
+    out = tmp_path / "out/variants"
+    assert {out / p.relative_to(kept): t for p, t in before.items()} == {p: p.stat().st_mtime_ns for p in out.glob("[12]*/chain.h5")}
+    assert found.report == comparison.report
+    with pytest.raises(InputError, match="the comparison there is finished"):
+        compare(folder / "config.yaml", run_folder=tmp_path / "out", resume=True)
+
+
+def test_a_comparison_of_other_settings_is_not_continued(folder, tmp_path, monkeypatch):
+    from fitter import comparing
+
+    def stopped(*_):
+        raise KeyboardInterrupt
+
+    monkeypatch.setattr(comparing, "available_cores", lambda: 1)
+    monkeypatch.setattr(comparing, "_write", stopped)
+    base = CONFIG | {"sampling": {"target_ess": 200, "walkers": 16, "replicas": 2, "seed": 1}, "variants": CONFIG["variants"][:2]}
+    config = tmp_path / "config.yaml"
+    base |= {"sample": CONFIG["sample"] | {"table": str(folder / "table.csv")}, "parameters": {"omega_m": {"uniform": [0, 1]}}}
+    config.write_text(yaml.safe_dump(base, allow_unicode=True))
+    with pytest.raises(KeyboardInterrupt):
+        compare(config, run_folder=tmp_path / "out")
+    config.write_text(yaml.safe_dump(base | {"parameters": {"omega_m": {"uniform": [0.1, 1]}}}, allow_unicode=True))
+    with pytest.raises(InputError, match="the earlier run is of other settings or data"):
+        compare(config, run_folder=tmp_path / "out", resume=True)
+    others = [base["variants"][0], {"name": "bent", "model": "curved_lcdm"}]
+    config.write_text(yaml.safe_dump(base | {"variants": others}, allow_unicode=True))
+    with pytest.raises(InputError, match="variants that the config does not have: 2_curved"):
+        compare(config, run_folder=tmp_path / "out", resume=True)
+    assert (tmp_path / "out.unfinished/variants/2_curved/chain.h5").exists()
+    both = CliRunner().invoke(cli.app, ["compare", str(config), "--replace", "--resume"])
+    assert both.exit_code == 2 and "choose one" in both.stderr
+    runs = CliRunner().invoke(cli.app, ["compare", str(tmp_path), str(tmp_path), "--resume"])
+    assert runs.exit_code == 2 and "nothing to continue" in runs.stderr

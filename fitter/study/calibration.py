@@ -9,6 +9,7 @@ References
 from __future__ import annotations
 
 import math
+from collections.abc import Sequence
 
 import numpy as np
 
@@ -19,7 +20,7 @@ _INTERVALS = {"68": ("low68", "high68", 0.8413 - 0.1587), "95": ("low95", "high9
 _ALARM = 0.01  # probability of any false alarm in a whole rehearsal
 
 
-def calibrate(fits: list[dict], names, dof: int) -> dict:
+def calibrate(fits: list[dict], names: Sequence[str], dof: int) -> dict:
     """Judge mock fits.
 
     Parameters

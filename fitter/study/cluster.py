@@ -14,7 +14,7 @@ _CONNECT_SECONDS = 10
 _BARREN_ROUNDS = 4
 
 
-def on_cluster(tasks: Tasks, waiting, address: str) -> Iterator[tuple[str, Any]]:
+def on_cluster(tasks: Tasks, waiting: dict[str, Any], address: str) -> Iterator[tuple[str, Any]]:
     """Run tasks on the workers of a scheduler; what they share is sent once to each worker.
 
     A task whose worker dies runs again elsewhere; what was shared is sent anew where every worker that held it is gone.
@@ -34,7 +34,7 @@ def on_cluster(tasks: Tasks, waiting, address: str) -> Iterator[tuple[str, Any]]
         client.close()
 
 
-def _client(address: str):
+def _client(address: str) -> Any:
     try:
         from distributed import Client
     except ImportError:
@@ -51,7 +51,7 @@ def _client(address: str):
     return client
 
 
-def _round(client, tasks: Tasks, waiting, lost) -> Iterator[tuple[str, Any]]:
+def _round(client: Any, tasks: Tasks, waiting: dict[str, Any], lost: dict[str, int]) -> Iterator[tuple[str, Any]]:
     """Submit all that waits and yield what ends well; what is lost stays in `waiting`."""
     from concurrent.futures import CancelledError
 

@@ -9,11 +9,18 @@ References
 from __future__ import annotations
 
 import math
+from typing import TYPE_CHECKING
 
 import numpy as np
 
+from fitter.array_types import FloatArray
 from fitter.study.influence import identity, noise_at
 from fitter.study.whitened import Whitened
+
+if TYPE_CHECKING:
+    from fitter.inference.optimum import Optimum
+    from fitter.likelihood.posterior import LogPosterior
+    from fitter.sample.sample import Sample
 
 __all__ = ["anderson_darling", "goodness"]
 
@@ -21,7 +28,7 @@ _STEP = 0.05  # of a Hessian error: derivatives of the distance modulus
 _EXPECTED_OUTLIERS = 0.05  # by chance in the whole sample, beyond the limit of the list
 
 
-def goodness(log_posterior, optimum) -> dict:
+def goodness(log_posterior: LogPosterior, optimum: Optimum) -> dict:
     """Test the residuals of the best fit.
 
     Parameters
@@ -64,7 +71,7 @@ def two_sided_p(chi2: float, dof: int) -> float | None:
     return float(min(1.0, 2 * min(gammainc(0.5 * dof, 0.5 * chi2), gammaincc(0.5 * dof, 0.5 * chi2))))
 
 
-def anderson_darling(x) -> tuple[float, float]:
+def anderson_darling(x: FloatArray) -> tuple[float, float]:
     """A² of a sample against a Gaussian of its own mean and width, and its p-value [1]_."""
     from scipy.special import log_ndtr
 
@@ -84,12 +91,12 @@ def anderson_darling(x) -> tuple[float, float]:
     return float(a), float(p)
 
 
-def _shape(x):
+def _shape(x: FloatArray) -> tuple[float, float]:
     y = (x - x.mean()) / x.std()
     return float((y**3).mean()), float((y**4).mean() - 3)
 
 
-def _derivatives(log_posterior, optimum) -> np.ndarray:
+def _derivatives(log_posterior: LogPosterior, optimum: Optimum) -> FloatArray:
     """Derivatives of the expected data by the cosmological parameters at the optimum, (N, n)."""
     columns = []
     for i, error in enumerate(optimum.errors):
@@ -105,7 +112,7 @@ def _derivatives(log_posterior, optimum) -> np.ndarray:
     return np.column_stack(usable) if usable else np.zeros((log_posterior.n_data, 0))
 
 
-def _trends(sample, frame, white, scale) -> list[dict]:
+def _trends(sample: Sample, frame: Whitened, white: FloatArray, scale: float) -> list[dict]:
     """Score tests: the amplitude of each template that the residuals would take, everything fitted floating with it."""
     free = ~np.asarray(sample.is_calibrator)
     templates = {"slope in ln(1 + z)": np.where(free, np.log1p(sample.redshift), 0.0)}
@@ -127,7 +134,7 @@ def _trends(sample, frame, white, scale) -> list[dict]:
     return found
 
 
-def _outliers(sample, frame, white, scale) -> dict:
+def _outliers(sample: Sample, frame: Whitened, white: FloatArray, scale: float) -> dict:
     """Supernovae whose deletion residual [2]_ chance would hardly give in a sample of this size."""
     from scipy.special import ndtri
 

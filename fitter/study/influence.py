@@ -11,10 +11,18 @@ References
 
 from __future__ import annotations
 
+from typing import TYPE_CHECKING
+
 import numpy as np
 
-from fitter.study.refit import resample
+from fitter.array_types import FloatArray
+from fitter.study.refit import Refit, resample
 from fitter.study.whitened import Whitened
+
+if TYPE_CHECKING:
+    from fitter.likelihood.posterior import LogPosterior
+    from fitter.sample.noise import Noise
+    from fitter.sample.sample import Sample
 
 __all__ = ["influence", "noise_at"]
 
@@ -24,7 +32,7 @@ _LISTED = 10
 _TRUSTED = 0.2  # share of the points that must still count, else the shift is only a lower bound
 
 
-def noise_at(log_posterior, values: dict[str, float]):
+def noise_at(log_posterior: LogPosterior, values: dict[str, float]) -> tuple[Noise, float]:
     """The covariance of a fit, modes apart, with the best intrinsic scatter where that is free; and the best factor on it."""
     noise = log_posterior.design.noise
     if "intrinsic_scatter" in log_posterior.names:
@@ -33,7 +41,7 @@ def noise_at(log_posterior, values: dict[str, float]):
     return noise, scale
 
 
-def influence(log_posterior, fitted, seed: np.random.SeedSequence) -> dict:
+def influence(log_posterior: LogPosterior, fitted: Refit, seed: np.random.SeedSequence) -> dict:
     """Shift of every parameter when one supernova is left out.
 
     Parameters
@@ -62,7 +70,7 @@ def influence(log_posterior, fitted, seed: np.random.SeedSequence) -> dict:
     return {"largest": largest, "rms": dict(zip(log_posterior.names, rms.tolist(), strict=True)), "points": len(theta)}
 
 
-def identity(sample, i: int) -> dict:
+def identity(sample: Sample, i: int) -> dict:
     """What tells a supernova from the others."""
     return {
         "row": int(sample.row[i]),
@@ -72,7 +80,7 @@ def identity(sample, i: int) -> dict:
     }
 
 
-def shifts(log_posterior, theta, values: dict[str, float]):
+def shifts(log_posterior: LogPosterior, theta: FloatArray, values: dict[str, float]) -> tuple[FloatArray, FloatArray]:
     """Shift of the posterior mean without each datum, (N, n), and the effective share of the points, (N,).
 
     Parameters

@@ -11,13 +11,19 @@ References
 from __future__ import annotations
 
 from dataclasses import dataclass
+from typing import TYPE_CHECKING
 
 import numpy as np
+from numpy.typing import ArrayLike
 
+from fitter.array_types import FloatArray
 from fitter.inference.mixture import StudentMixture, fit_mixture
 from fitter.inference.optimum import Optimum, find_optimum
 from fitter.inference.quadrature import GridPosterior, integrate
 from fitter.inference.seeds import child_seed
+
+if TYPE_CHECKING:
+    from fitter.likelihood.posterior import LogPosterior
 
 __all__ = ["LEVELS", "Refit", "WeightedDraws", "refit", "resample"]
 
@@ -43,8 +49,8 @@ class WeightedDraws:
     """
 
     names: tuple[str, ...]
-    theta: np.ndarray
-    weight: np.ndarray
+    theta: FloatArray
+    weight: FloatArray
     method = "adaptive importance sampling"
 
     @property
@@ -52,16 +58,16 @@ class WeightedDraws:
         """Number of equally weighted draws that would be as good (Kish)."""
         return float(1.0 / (self.weight @ self.weight))
 
-    def points(self):
+    def points(self) -> tuple[FloatArray, FloatArray]:
         """The draws and their weights."""
         return self.theta, self.weight
 
-    def cdf(self, name: str, x) -> np.ndarray:
+    def cdf(self, name: str, x: ArrayLike) -> FloatArray:
         """Marginal cumulative distribution at x, (M,)."""
         value, below = self._sorted(name)
         return np.interp(np.atleast_1d(x), value, below, left=0.0, right=1.0)
 
-    def quantile(self, name: str, p) -> np.ndarray:
+    def quantile(self, name: str, p: ArrayLike) -> FloatArray:
         """Marginal quantiles, (M,)."""
         value, below = self._sorted(name)
         return np.interp(np.atleast_1d(p), below, value)
@@ -74,7 +80,7 @@ class WeightedDraws:
         """Marginal standard deviation."""
         return float(np.sqrt(self.weight @ (self.theta[:, self.names.index(name)] - self.mean(name)) ** 2))
 
-    def _sorted(self, name):
+    def _sorted(self, name: str) -> tuple[FloatArray, FloatArray]:
         value = self.theta[:, self.names.index(name)]
         order = np.argsort(value, kind="stable")
         weight = self.weight[order]
@@ -114,7 +120,7 @@ class Refit:
         return {"parameters": parameters, "chi2": float(self.optimum.chi2), "method": m.method, "error": self.error}
 
 
-def refit(log_posterior, seed: np.random.SeedSequence) -> Refit:
+def refit(log_posterior: LogPosterior, seed: np.random.SeedSequence) -> Refit:
     """Fit without a chain.
 
     Parameters
@@ -131,17 +137,17 @@ def refit(log_posterior, seed: np.random.SeedSequence) -> Refit:
     return Refit(optimum, draws, float(1.0 / np.sqrt(draws.effective)))
 
 
-def resample(marginals, size: int, seed: np.random.SeedSequence) -> np.ndarray:
+def resample(marginals: GridPosterior | WeightedDraws, size: int, seed: np.random.SeedSequence) -> FloatArray:
     """Return about equally likely points of a posterior, (size, d), by systematic resampling of its nodes or draws."""
     theta, weight = marginals.points()
     at = (np.arange(size) + np.random.default_rng(seed).random()) / size
     return theta[np.minimum(np.searchsorted(np.cumsum(weight), at), len(weight) - 1)]
 
 
-def _adaptive(log_posterior, optimum, rng) -> WeightedDraws:
+def _adaptive(log_posterior: LogPosterior, optimum: Optimum, rng: np.random.Generator) -> WeightedDraws:
     """Draw, fit a mixture to what the weights leave, draw again; the last and largest set again where too few of it count."""
     factor = np.linalg.cholesky(1.5 * optimum.covariance)
-    mixture = StudentMixture(np.ones(1), optimum.theta[None], factor[None], np.linalg.inv(factor)[None], 4.0)
+    mixture = StudentMixture.of_factors(np.ones(1), optimum.theta[None], factor[None], 4.0)
 
     def draw(size: int) -> WeightedDraws:
         theta = mixture.draw(rng, size)
@@ -164,7 +170,7 @@ def _adaptive(log_posterior, optimum, rng) -> WeightedDraws:
     return best
 
 
-def _weights(log_posterior, theta, mixture):
+def _weights(log_posterior: LogPosterior, theta: FloatArray, mixture: StudentMixture) -> FloatArray:
     log_weight = np.concatenate([log_posterior(theta[i : i + _BATCH]) for i in range(0, len(theta), _BATCH)])
     log_weight = log_weight - mixture.log_density(theta)
     weight = np.exp(log_weight - log_weight.max())

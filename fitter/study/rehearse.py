@@ -11,16 +11,23 @@ References
 from __future__ import annotations
 
 from dataclasses import dataclass
+from typing import TYPE_CHECKING, Any
 
 import numpy as np
 
+from fitter.array_types import FloatArray
 from fitter.errors import InputError
 from fitter.inference.optimum import find_optimum
 from fitter.inference.seeds import child_seed
+from fitter.inference.settings import SamplingSettings
+from fitter.likelihood.posterior import LogPosterior
 from fitter.study.calibration import calibrate
 from fitter.study.refit import LEVELS, Refit, WeightedDraws, refit
 from fitter.study.setup import FitSetup
 from fitter.study.tasks import Tasks, call, run_tasks
+
+if TYPE_CHECKING:
+    pass
 
 __all__ = ["METHODS", "SCHEMA", "Rehearsal", "rehearse"]
 
@@ -55,7 +62,7 @@ class Rehearsal:
     truth: dict[str, float] | None
     mocks: int
     method: str = "quick"
-    sampling: object | None = None
+    sampling: SamplingSettings | None = None
 
 
 def best_truth(setup: FitSetup, seed: np.random.SeedSequence) -> dict[str, float]:
@@ -64,7 +71,7 @@ def best_truth(setup: FitSetup, seed: np.random.SeedSequence) -> dict[str, float
     return {name: optimum.values[name] for name in setup.posterior().names}
 
 
-def rehearse(rehearsal: Rehearsal, *, seed: np.random.SeedSequence, **running) -> dict:
+def rehearse(rehearsal: Rehearsal, *, seed: np.random.SeedSequence, **running: Any) -> dict:
     """Draw and fit mocks.
 
     Parameters
@@ -108,7 +115,7 @@ def rehearse(rehearsal: Rehearsal, *, seed: np.random.SeedSequence, **running) -
     return result | calibrate(fits, posterior.names, posterior.n_data - posterior.n_parameters)
 
 
-def _check(rehearsal: Rehearsal, source) -> None:
+def _check(rehearsal: Rehearsal, source: LogPosterior) -> None:
     fit, drawn = rehearsal.fit.sample, rehearsal.source.sample
     if fit.n != drawn.n or not np.array_equal(fit.redshift, drawn.redshift):
         raise InputError(
@@ -127,7 +134,7 @@ def _check(rehearsal: Rehearsal, source) -> None:
         raise InputError("the truth is outside the prior, or no possible model", value=rehearsal.truth, cure="Choose another")
 
 
-def _fit_batch(shared: tuple[Rehearsal, np.random.SeedSequence], argument: tuple[int, int], _) -> list[dict]:
+def _fit_batch(shared: tuple[Rehearsal, np.random.SeedSequence], argument: tuple[int, int], _: object) -> list[dict]:
     """Draw and fit mocks number start … stop − 1."""
     rehearsal, seed = shared
     source, fit = rehearsal.source.posterior(), rehearsal.fit.posterior()
@@ -140,7 +147,7 @@ def _fit_batch(shared: tuple[Rehearsal, np.random.SeedSequence], argument: tuple
     ]
 
 
-def _draw(source, truth, rng):
+def _draw(source: LogPosterior, truth: dict[str, float] | None, rng: np.random.Generator) -> tuple[FloatArray, FloatArray]:
     """One truth and its data; models that cannot be are not drawn, as they are not in the posterior either."""
     if truth is not None:
         theta = np.array([truth[name] for name in source.names])
@@ -152,8 +159,10 @@ def _draw(source, truth, rng):
     raise InputError(f"not one of {_TRIES} draws from the priors is a possible model", cure="Narrow them, or give --truth")
 
 
-def _fit_one(rehearsal: Rehearsal, posterior, truth: dict[str, float], seed) -> dict:
-    fitted = _sampled(posterior, rehearsal.sampling, seed) if rehearsal.method == "sampler" else refit(posterior, seed)
+def _fit_one(rehearsal: Rehearsal, posterior: LogPosterior, truth: dict[str, float], seed: np.random.SeedSequence) -> dict:
+    fitted = (
+        _sampled(posterior, rehearsal.sampling or SamplingSettings(), seed) if rehearsal.method == "sampler" else refit(posterior, seed)
+    )
     marginals = fitted.marginals
     parameters = {}
     for name in posterior.names:
@@ -165,7 +174,7 @@ def _fit_one(rehearsal: Rehearsal, posterior, truth: dict[str, float], seed) -> 
     return {"parameters": parameters, "chi2": float(fitted.optimum.chi2), "error": fitted.error}
 
 
-def _sampled(posterior, settings, seed) -> Refit:
+def _sampled(posterior: LogPosterior, settings: SamplingSettings, seed: np.random.SeedSequence) -> Refit:
     """The fit as `mufitter fit` makes it."""
     from fitter.inference.sampling import sample_posterior
 

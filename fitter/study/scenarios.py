@@ -2,17 +2,22 @@
 
 from __future__ import annotations
 
-from collections.abc import Iterator
+from collections.abc import Iterator, Sequence
 from dataclasses import dataclass, replace
+from typing import TYPE_CHECKING, Any
 
 import numpy as np
 
+from fitter.array_types import BoolArray
 from fitter.errors import InputError
 from fitter.likelihood.priors import LogUniform, Normal, Prior, TruncatedNormal, Uniform
 from fitter.parameters import ZERO_POINT, parameter
 from fitter.sample.noise import Noise
 from fitter.sample.uncertainty.term import Term, combine
 from fitter.study.setup import FitSetup
+
+if TYPE_CHECKING:
+    from fitter.sample.sample import Sample
 
 __all__ = ["KINDS", "STATISTICAL", "Scenario", "changed", "scenarios"]
 
@@ -86,15 +91,15 @@ def scenarios(setup: FitSetup, centres: dict[str, float]) -> list[Scenario]:
 # ---------------------------------------------------------------------- which supernovae
 
 
-def _free(sample):
+def _free(sample: Sample) -> BoolArray:
     return ~np.asarray(sample.is_calibrator)
 
 
-def _groups(sample) -> list[str]:
+def _groups(sample: Sample) -> list[str]:
     return [] if sample.group is None else [str(g) for g in dict.fromkeys(sample.group[_free(sample)])]
 
 
-def _subsamples(sample) -> Iterator[Scenario]:
+def _subsamples(sample: Sample) -> Iterator[Scenario]:
     groups = _groups(sample)
     free = _free(sample)
     for group in groups if len(groups) > 1 else ():
@@ -105,7 +110,7 @@ def _subsamples(sample) -> Iterator[Scenario]:
             yield Scenario(f"only {group}", "subsample", f"only {group}", "only_group", group, nested=True)
 
 
-def _cuts(sample) -> Iterator[Scenario]:
+def _cuts(sample: Sample) -> Iterator[Scenario]:
     z = sample.redshift[_free(sample)]
     for side, fractions in (("above", _LOW_FRACTIONS), ("below", _HIGH_FRACTIONS)):
         for fraction in fractions:
@@ -115,14 +120,14 @@ def _cuts(sample) -> Iterator[Scenario]:
                 yield Scenario(f"z {sign} {limit:g}", "cut", f"z {sign} {limit:g}", side, limit, nested=True)
 
 
-def _select(setup, keep):
+def _select(setup: FitSetup, keep: BoolArray) -> FitSetup:
     return setup.with_sample(setup.sample.select(keep | ~_free(setup.sample)))
 
 
 # ---------------------------------------------------------------------- which errors
 
 
-def _offsets(sample) -> Iterator[Scenario]:
+def _offsets(sample: Sample) -> Iterator[Scenario]:
     free = _free(sample)
     middle = float(f"{np.median(sample.redshift[free]):.3g}")
     yield Scenario("offset low-high", "offset", f"free offset of z ≤ {middle:g}", "offset_below", middle, nested=True)
@@ -131,7 +136,7 @@ def _offsets(sample) -> Iterator[Scenario]:
         yield Scenario(f"offset {group}", "offset", f"free offset of {group}", "offset_group", group, nested=True)
 
 
-def _terms(sample) -> Iterator[Scenario]:
+def _terms(sample: Sample) -> Iterator[Scenario]:
     if len(sample.terms) < 2:
         return
     for term in sample.terms:
@@ -141,7 +146,7 @@ def _terms(sample) -> Iterator[Scenario]:
         yield Scenario("statistical only", "term", "statistical only", "without_terms", systematic)
 
 
-def _modes(sample) -> Iterator[Scenario]:
+def _modes(sample: Sample) -> Iterator[Scenario]:
     names = sample.noise.mode_names
     for i in range(min(len(names), _MOST_MODES)):
         for sign in (1, -1):
@@ -149,19 +154,19 @@ def _modes(sample) -> Iterator[Scenario]:
             yield Scenario(f"mode {i} {said}", "mode", f"{_mode_label(names, i)} {said}1σ", "shift_mode", (i, sign))
 
 
-def _mode_label(names, i) -> str:
+def _mode_label(names: Sequence[str], i: int) -> str:
     name = names[i].removeprefix(ZERO_POINT)
     return name if names.count(names[i]) == 1 else f"{name} ({i + 1})"
 
 
-def _with_offset(setup, indicator, name):
+def _with_offset(setup: FitSetup, indicator: BoolArray, name: str) -> FitSetup:
     n = setup.sample.n
     noise = Noise(np.zeros(n), modes=_FREE_OFFSET * indicator[:, None].astype(float), mode_names=(f"{ZERO_POINT}{name}",))
     terms = (*setup.sample.terms, Term(f"free offset of {name}", "zero_point", noise))
     return setup.with_sample(replace(setup.sample, terms=terms, noise=combine(terms)))
 
 
-def _shift_mode(setup, argument):
+def _shift_mode(setup: FitSetup, argument: tuple[int, float]) -> FitSetup:
     i, sign = argument
     return setup.with_sample(replace(setup.sample, data=setup.sample.data + sign * setup.sample.noise.modes[:, i]))
 
@@ -169,7 +174,7 @@ def _shift_mode(setup, argument):
 # ---------------------------------------------------------------------- which assumptions
 
 
-def _priors(setup, centres) -> Iterator[Scenario]:
+def _priors(setup: FitSetup, centres: dict[str, float]) -> Iterator[Scenario]:
     posterior_priors = dict(_sampled_priors(setup))
     for name, centre in centres.items():
         prior = posterior_priors.get(name)
@@ -179,7 +184,7 @@ def _priors(setup, centres) -> Iterator[Scenario]:
                 yield Scenario(f"prior {name} {said}", "prior", f"prior of {parameter(name).plain} {said}", "prior", (name, scaled.spec()))
 
 
-def _sampled_priors(setup):
+def _sampled_priors(setup: FitSetup) -> Iterator[tuple[str, Prior]]:
     from fitter.likelihood.priors import parse_prior
 
     for name, spec in setup.parameters.items():
@@ -200,7 +205,7 @@ def _scaled(prior: Prior, centre: float, factor: float) -> Prior | None:
     return None
 
 
-def _stretched(low, high, centre, factor):
+def _stretched(low: float, high: float, centre: float, factor: float) -> tuple[float, float]:
     half = 0.5 * factor * (high - low)
     if factor < 1:
         middle = min(max(centre, low + half), high - half)
@@ -209,7 +214,7 @@ def _stretched(low, high, centre, factor):
     return (low, low + 2 * half) if low == 0 else (middle - half, middle + half)
 
 
-def _assumptions(setup) -> Iterator[Scenario]:
+def _assumptions(setup: FitSetup) -> Iterator[Scenario]:
     said = "off" if setup.radiation else "on"
     yield Scenario("radiation", "model", f"radiation {said}", "radiation", not setup.radiation)
     if setup.sample.intrinsic_prior is None:
@@ -218,7 +223,7 @@ def _assumptions(setup) -> Iterator[Scenario]:
         yield Scenario("scale", "model", "scale of the covariance free", "free_scale", {"log_uniform": [0.5, 2.0]})
 
 
-def _free_scatter(setup, prior):
+def _free_scatter(setup: FitSetup, prior: dict[str, Any]) -> FitSetup:
     sample = setup.sample
     fixed = [t.label for t in sample.terms if t.kind == "intrinsic"]
     # Without another term that scatters every supernova there would be no covariance left at a scatter of zero.
@@ -227,7 +232,7 @@ def _free_scatter(setup, prior):
     return setup.with_sample(replace(sample, intrinsic_prior=prior))
 
 
-def _without_terms(setup, labels):
+def _without_terms(setup: FitSetup, labels: Sequence[str]) -> FitSetup:
     if len(labels) == len(setup.sample.terms):
         raise InputError("no uncertainty term would be left")
     return setup.with_sample(setup.sample.without(labels))

@@ -12,8 +12,9 @@ References
 from __future__ import annotations
 
 import math
-from collections.abc import Iterable
+from collections.abc import Collection, Iterable, Iterator
 from dataclasses import replace
+from typing import TYPE_CHECKING, Any
 
 import numpy as np
 
@@ -26,6 +27,9 @@ from fitter.study.refit import Refit, refit
 from fitter.study.scenarios import Scenario, changed, scenarios
 from fitter.study.setup import FitSetup
 from fitter.study.tasks import Tasks, call, run_tasks
+
+if TYPE_CHECKING:
+    from fitter.likelihood.priors import Prior
 
 __all__ = ["FLAG", "SCHEMA", "stress"]
 
@@ -41,7 +45,7 @@ _BASELINE, _REFITS = 0, 1
 _TOGETHER = 20  # shifted data vectors in one task, on one factorisation
 
 
-def stress(setup: FitSetup, *, seed: np.random.SeedSequence, blind=(), **running) -> dict:
+def stress(setup: FitSetup, *, seed: np.random.SeedSequence, blind: Collection[str] = (), **running: Any) -> dict:
     """Refit under every change of `scenarios`.
 
     Parameters
@@ -84,7 +88,7 @@ def stress(setup: FitSetup, *, seed: np.random.SeedSequence, blind=(), **running
     return result
 
 
-def _residual_tests(log_posterior, base: Refit, seed) -> dict:
+def _residual_tests(log_posterior: LogPosterior, base: Refit, seed: np.random.SeedSequence) -> dict:
     single = influence(log_posterior, base, child_seed(seed, 2)) if log_posterior.design.n <= 20_000 else None
     return {"influence": single, "goodness": goodness(log_posterior, base.optimum)}
 
@@ -98,7 +102,7 @@ def _batches(changes: list[Scenario]) -> dict[str, tuple[Scenario, ...]]:
     return batches
 
 
-def _refit_batch(setup: FitSetup, batch: tuple[Scenario, ...], seed) -> dict:
+def _refit_batch(setup: FitSetup, batch: tuple[Scenario, ...], seed: np.random.SeedSequence) -> dict:
     """Fit the changes of one task; what cannot be fitted says why."""
     posteriors: Iterable[LogPosterior | None]
     if batch[0].change == "shift_mode":
@@ -109,7 +113,7 @@ def _refit_batch(setup: FitSetup, batch: tuple[Scenario, ...], seed) -> dict:
     return {c.key: _refit_one(setup, c, p, child_seed(seed, i)) for i, (c, p) in enumerate(zip(batch, posteriors, strict=True))}
 
 
-def _refit_one(setup, change, log_posterior, seed) -> dict:
+def _refit_one(setup: FitSetup, change: Scenario, log_posterior: LogPosterior | None, seed: np.random.SeedSequence) -> dict:
     try:
         log_posterior = log_posterior or changed(setup, change).posterior()
         fitted = refit(log_posterior, seed)
@@ -119,7 +123,7 @@ def _refit_one(setup, change, log_posterior, seed) -> dict:
     return {"n": log_posterior.n_data, "offsets": values, **fitted.facts(setup.hidden)}
 
 
-def _width(prior) -> float:
+def _width(prior: Prior) -> float:
     """Half the width of the central 68 % of a prior."""
     return 0.5 * float(prior.quantile(0.8413) - prior.quantile(0.1587))
 
@@ -173,7 +177,7 @@ def _error_budget(baseline: dict, variants: list[dict]) -> dict:
 # ---------------------------------------------------------------------- verdict
 
 
-def _tested(result: dict):
+def _tested(result: dict) -> Iterator[tuple[str, str | None, float]]:
     """Every test: (label, parameter or None, significance)."""
     for row in result["variants"]:
         for name, facts in row["parameters"].items():
@@ -188,7 +192,12 @@ def _count_tests(result: dict) -> dict:
 
     tested = list(_tested(result))
     chance = float(2 * ndtr(-FLAG))
-    found = {"n": len(tested), "flagged": sum(abs(s) > FLAG for *_, s in tested), "expected_by_chance": chance * len(tested), "worst": None}
+    found: dict[str, Any] = {
+        "n": len(tested),
+        "flagged": sum(abs(s) > FLAG for *_, s in tested),
+        "expected_by_chance": chance * len(tested),
+        "worst": None,
+    }
     if tested:
         label, name, worst = max(tested, key=lambda t: abs(t[2]))
         local = float(2 * ndtr(-abs(worst)))
@@ -221,7 +230,7 @@ def _verdict(result: dict) -> list[str]:
     return said
 
 
-def _trend_sentences(trends) -> list[str]:
+def _trend_sentences(trends: list[dict[str, Any]]) -> list[str]:
     beyond = sorted((t for t in trends if abs(t["significance"]) > FLAG), key=lambda t: -abs(t["significance"]))
     said = []
     for t in beyond:

@@ -10,16 +10,18 @@ import hashlib
 import json
 import os
 from collections.abc import Callable, Iterator, Mapping
-from concurrent.futures import FIRST_COMPLETED, ProcessPoolExecutor, wait
+from concurrent.futures import FIRST_COMPLETED, Future, ProcessPoolExecutor, wait
 from concurrent.futures.process import BrokenProcessPool
 from dataclasses import dataclass
 from pathlib import Path
-from typing import Any
+from typing import IO, Any, TypeVar
 
 import numpy as np
 
 from fitter.errors import InputError, MufitterError
 from fitter.inference.seeds import child_seed
+
+Result = TypeVar("Result")
 
 __all__ = ["Lost", "Store", "Tasks", "call", "give_up", "require_scheduler", "run_tasks", "task_seed"]
 
@@ -63,7 +65,7 @@ class Store:
         Identifies config, data and task; lines with another one are not taken.
     """
 
-    def __init__(self, path: Path, fingerprint: str):
+    def __init__(self, path: Path, fingerprint: str) -> None:
         self.path, self.fingerprint = Path(path), fingerprint
 
     def read(self) -> dict[str, Any]:
@@ -92,7 +94,7 @@ class Store:
             os.fsync(stream.fileno())
 
     @staticmethod
-    def _ends_whole(stream) -> bool:
+    def _ends_whole(stream: IO[bytes]) -> bool:
         stream.seek(-1, os.SEEK_END)
         return stream.read(1) == b"\n"
 
@@ -151,7 +153,7 @@ def run_tasks(
     return {key: finished[key] for key in tasks.arguments}
 
 
-def _results(tasks: Tasks, waiting, processes, scheduler) -> Iterator[tuple[str, Any]]:
+def _results(tasks: Tasks, waiting: dict[str, Any], processes: int | None, scheduler: str | None) -> Iterator[tuple[str, Any]]:
     from fitter.inference.replicas import available_cores
 
     if not waiting:
@@ -164,7 +166,7 @@ def _results(tasks: Tasks, waiting, processes, scheduler) -> Iterator[tuple[str,
     return _here(tasks, waiting) if processes == 1 else _in_processes(tasks, waiting, processes)
 
 
-def call(function, shared, argument, seed):
+def call(function: Callable[[Any, Any, Any], Result], shared: Any, argument: Any, seed: np.random.SeedSequence | None) -> Result:
     """Run one task with one BLAS thread: more would fight over the cores, and change the last digits."""
     from threadpoolctl import threadpool_limits
 
@@ -172,12 +174,12 @@ def call(function, shared, argument, seed):
         return function(shared, argument, seed)
 
 
-def _here(tasks: Tasks, waiting) -> Iterator[tuple[str, Any]]:
+def _here(tasks: Tasks, waiting: dict[str, Any]) -> Iterator[tuple[str, Any]]:
     for key, argument in waiting.items():
         yield key, call(tasks.function, tasks.shared, argument, task_seed(tasks.seed, key))
 
 
-def _in_processes(tasks: Tasks, waiting, processes: int) -> Iterator[tuple[str, Any]]:
+def _in_processes(tasks: Tasks, waiting: dict[str, Any], processes: int) -> Iterator[tuple[str, Any]]:
     waiting, lost = dict(waiting), dict.fromkeys(waiting, 0)
     while waiting:
         running: dict = {}
@@ -192,8 +194,15 @@ def _in_processes(tasks: Tasks, waiting, processes: int) -> Iterator[tuple[str, 
             give_up(lost)
 
 
-def _drain(pool, todo, waiting, running, seed, processes):
-    def submit():
+def _drain(
+    pool: ProcessPoolExecutor,
+    todo: Iterator[tuple[str, Any]],
+    waiting: dict[str, Any],
+    running: dict[Future[Any], str],
+    seed: np.random.SeedSequence,
+    processes: int,
+) -> Iterator[tuple[str, Any]]:
+    def submit() -> None:
         for key, argument in todo:
             running[pool.submit(_call_shared, argument, task_seed(seed, key))] = key
             return
@@ -216,12 +225,14 @@ def give_up(lost: dict[str, int]) -> None:
         raise Lost(f"the worker died {_ATTEMPTS} times in the task {hopeless[0]!r}: is there enough memory for it?")
 
 
-def _receive(function, shared) -> None:
+def _receive(function: Callable[..., Any], shared: Any) -> None:
     global _shared
     _shared = (function, shared)
 
 
-def _call_shared(argument, seed):
+def _call_shared(argument: Any, seed: np.random.SeedSequence) -> Any:
+    if _shared is None:
+        raise RuntimeError("this worker was given nothing to work on")
     function, shared = _shared
     return call(function, shared, argument, seed)
 

@@ -61,6 +61,7 @@ SURVEYS = (
     Survey("ombrevale", "OV", 370, (0.080, 0.780), (0.06, 0.15), 0.006, ((12.0, -3.0), (83.0, 21.0), (201.0, -38.0), (317.0, 8.0))),
     Survey("kestrithal", "KT", 160, (0.450, 1.600), (0.09, 0.20), 0.009, ((64.0, -51.0), (222.0, 33.0))),
 )
+PLANNED = Survey("quillmoor", "QM", 300, (0.050, 1.900), (0.05, 0.12), 0.005)
 CALIBRATORS = Survey("calibrators", "CA", 20, (0.0015, 0.0080), (0.04, 0.07), 0.0)
 
 
@@ -275,6 +276,24 @@ def _tables(survey, both, truth, magnitude, known, anchor_error) -> tuple[Table,
     return absolute, Table(columns)
 
 
+def planned() -> Table:
+    """A survey to come: redshifts and the measurement errors hoped for, nothing observed, so nothing drawn."""
+    share = (np.arange(PLANNED.size) + 0.5) / PLANNED.size
+    # The bulk in the middle of the range: quantiles of a triangle.
+    spread = np.where(share < 0.5, np.sqrt(share / 2), 1 - np.sqrt((1 - share) / 2))
+    near, far = PLANNED.redshift
+    low, high = PLANNED.sigma
+    z = np.round(near + (far - near) * spread, 3)
+    return Table(
+        {
+            "name": np.array([f"{PLANNED.tag}-{i + 1:03d}" for i in range(PLANNED.size)]),
+            "field": np.where(z > 1.0, "deep", "wide"),
+            "z": z,
+            "sigma": np.round(low + (high - low) * spread, 3),
+        }
+    )
+
+
 DIGITS = {"ra": 3, "dec": 3, "z": 6, "z_helio": 6}
 
 
@@ -314,6 +333,7 @@ def files(demo: Demo) -> dict[str, bytes]:
         "calibrated.csv": csv_text(demo.calibrated.columns),
         "calibrated_modes_calibration.csv": csv_text(demo.calibrated_modes["calibration"]),
         "calibrated_modes_dust.csv": csv_text(demo.calibrated_modes["dust"]),
+        "planned.csv": csv_text(planned().columns),
     }
     return {name: text.encode() if isinstance(text, str) else text for name, text in contents.items()}
 

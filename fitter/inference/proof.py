@@ -127,4 +127,4 @@ def _differences(other: GridPosterior | WeightedPosterior, draws: FloatArray, na
     for x, f in zip(points, other.cdf(name, points), strict=True):
         share = np.searchsorted(flat, x, side="right") / len(flat)
         # Not the ESS of the tail itself: where that is lower, the tail is what has not been sampled.
-        yield abs(float(f) - share), float(_TAIL_SIGMAS * np.sqrt(max(f * (1 - f), 1e-6) / ess) + other.cdf_error)
+        yield float(abs(f - share)), float(_TAIL_SIGMAS * np.sqrt(max(f * (1 - f), 1e-6) / ess) + other.cdf_error)

@@ -47,6 +47,15 @@ def place(tmp_path_factory):
     content["sampling"], content["variants"] = QUICK, content["variants"][:3]
     content["parameters"] = {name: prior for name, prior in content["parameters"].items() if name not in ("w0", "wa")}
     variants.write_text(yaml.safe_dump(content, allow_unicode=True, sort_keys=False), encoding="utf-8")
+    blinded = folder / "configs/blinded.yaml"
+    blinded.write_text(re.sub(r"(?m)^sampling:.*$", f"sampling: {QUICK}", blinded.read_text(encoding="utf-8")), encoding="utf-8")
+    marked = [
+        "made by hand",
+        "NAMES: ID z mu note",
+        *(f"SN: 2031{chr(97 + i % 26)} {r.split(',')[0]} {r.split(',')[2]} x" for i, r in enumerate(rows[:26])),
+    ]
+    (folder / "marked.txt").write_text("\n".join([*marked, "END:"]) + "\n")
+    np.savez(folder / "inverse.npz", inverse=np.eye(26) / 0.0225)
     return folder
 
 
@@ -62,14 +71,17 @@ def test_every_command(place, monkeypatch):
         if words[0] == "start":
             # Then the reader writes a config; ours is short of breath.
             (place / "mine.yaml").write_text(CONFIGS[0] + f"sampling: {QUICK}\n", encoding="utf-8")
-        if words[0] == "fit":
+        if words[:2] == ["fit", "mine.yaml"]:
             fit("mine.yaml", model="flat_lcdm", parameters={}, title="flat ΛCDM", run_folder="runs/flat_lcdm")
             for name, run in (("a", "mine"), ("b", "flat_lcdm"), ("flat_wcdm", "mine")):
                 shutil.copytree(place / "runs" / run, place / "runs" / name)
-    assert {"start", "check", "fit", "compare", "figures", "tables", "export", "paper", "capsule"} <= set(done)
-    (place / "again.yaml").write_text(CONFIGS[1])
-    assert check("again.yaml").problems == ()
-    assert len(CONFIGS) == 2
+    assert {"start", "check", "fit", "compare", "figures", "tables", "export", "paper", "capsule", "rehearse", "unblind"} <= set(done)
+    assert len(CONFIGS) == 3
+    for i, n in ((1, 24), (2, None)):
+        (place / "again.yaml").write_text(CONFIGS[i], encoding="utf-8")
+        assert check("again.yaml").problems == ()
+        again = fit("again.yaml", run_folder=False, sampling=QUICK)
+        assert again.converged and again.sample.n == (n or 40)
     files = [
         name for cell in re.findall(r"^\| ([\w./, ]+) \|", README, flags=re.M) for name in cell.split(", ") if re.search(r"\.\w+$|/$", name)
     ]

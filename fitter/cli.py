@@ -166,15 +166,16 @@ def _loaded(path: Path, allow_code: bool):
 
 def _print_result(result, as_json: bool, quiet: bool) -> None:
     from fitter.report.summary import summary_json
-    from fitter.report.terminal import terminal_summary
+    from fitter.report.terminal import terminal_summary, told_apart
 
     if as_json:
         sys.stdout.write(summary_json(result.summary()))
     elif not quiet:
         sys.stdout.write(terminal_summary(result.summary(), stream=sys.stdout))
     if as_json or quiet:
-        for text in result.warnings:
-            _say(f"Warning: {text}")
+        for kind, texts in zip(("Warning", "Caution"), told_apart(result.summary()), strict=True):
+            for text in texts:
+                _say(f"{kind}: {text}")
     sys.stdout.flush()
 
 
@@ -202,7 +203,7 @@ def _compare(
     _refuse_both(replace, resume)
     from fitter.comparing import compare
 
-    one = what[0] if len(what) == 1 and not what[0].is_dir() else what
+    one = _loaded(what[0], allow_code) if len(what) == 1 and not what[0].is_dir() else what
     tell = None if quiet else lambda text: _say(f"  {text}")
     options: dict[str, Any] = {
         "names": name or None,

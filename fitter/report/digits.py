@@ -5,9 +5,10 @@ from __future__ import annotations
 import math
 from dataclasses import dataclass
 
-__all__ = ["Figures", "figures_for", "plain_number", "superscript"]
+__all__ = ["Figures", "evidence_digits", "figures_for", "plain_number", "superscript"]
 
 _SUPERSCRIPTS = str.maketrans("-0123456789", "⁻⁰¹²³⁴⁵⁶⁷⁸⁹")
+_EVIDENCE_DECIMALS = 4
 _LARGEST_PLAIN, _SMALLEST_PLAIN = 5, -4  # powers of ten beyond which a common exponent is pulled out
 
 
@@ -141,3 +142,22 @@ def plain_number(x: float | None, significant: int = 4) -> str:
     if x is None or not math.isfinite(x):
         return "—"
     return f"{x:.{significant}g}"
+
+
+def evidence_digits(value: float, error: float) -> tuple[str, str]:
+    """Return ln Z and its numerical error in the digits that they deserve.
+
+    Parameters
+    ----------
+    value : float
+    error : float
+        Standard error, > 0; below 1e-4 only that is said: an error estimate of 1e-9 claims more than it knows.
+
+    Returns
+    -------
+    value, error : str
+        The error is empty where it is below 1e-4.
+    """
+    decimals = min(max(1 - _magnitude(error), 0), _EVIDENCE_DECIMALS)
+    said = "" if error < 10.0**-_EVIDENCE_DECIMALS else f"{error:.{decimals}f}"
+    return f"{value:.{decimals}f}".replace("-", "−"), said

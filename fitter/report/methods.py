@@ -7,7 +7,7 @@ from math import ceil, isfinite
 from fitter.cosmology import MODELS
 from fitter.inference.intervals import interval_words
 from fitter.report.citations import SHORT, bibliography
-from fitter.report.digits import figures_for, plain_number
+from fitter.report.digits import evidence_digits, plain_number
 from fitter.report.prose import CHI2, cite, cited, latex, listed, math, model_text, plain, redshift_range, symbol, with_unit
 
 __all__ = ["METHODS_FILES", "methods", "methods_files"]
@@ -320,9 +320,10 @@ def _evidence(summary: dict) -> list[str]:
         return []
     if not error:
         return [f"The evidence is {_LN_Z} = {plain_number(value, 6).replace('-', '−')} under the priors above."]
-    digits = figures_for(value, value - error, value + error)
-    number = math(rf"\ln Z = {digits.latex()}", f"ln Z = {digits.plain()}")
-    return [f"The evidence is {number} under the priors above."]
+    digits, said = evidence_digits(value, error)
+    bounded = rf" \pm {said}" if said else ""
+    number = math(rf"\ln Z = {digits.replace('−', '-')}{bounded}", f"ln Z = {digits}" + (f" ± {said}" if said else ""))
+    return [f"The evidence is {number} under the priors above{'' if said else ', with a numerical error below 0.0001'}."]
 
 
 def _fit(summary: dict) -> list[str]:

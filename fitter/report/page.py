@@ -19,7 +19,7 @@ from fitter.report.facts import parameter, unit_text
 from fitter.report.prose import plain
 from fitter.report.summary import summary_csv
 from fitter.report.tables import parameter_table
-from fitter.report.terminal import best_text, cell_text, data_line, information_lines, median_head, profile_text
+from fitter.report.terminal import best_text, cell_text, data_line, information_lines, median_head, profile_text, told_apart
 from fitter.sample.budget import SHARE
 
 __all__ = ["PAGE", "Picture", "fit_html", "page_text", "picture_of", "verdict"]
@@ -75,6 +75,9 @@ def verdict(summary: dict) -> tuple[str, str, str]:
         return "mind", f"Computed soundly, but {cause}", reasons
     if agrees is None:
         return "mind", "Converged, without a second opinion", reasons
+    told, _ = told_apart(summary)
+    if told:
+        return "mind", f"Computed soundly, but {'a warning says' if len(told) == 1 else 'warnings say'} what to mind", reasons
     return "good", "Sound", reasons
 
 
@@ -110,7 +113,7 @@ def page_text(summary: dict, config: str, pictures: Mapping[str, Picture]) -> st
         generator=_e(f"mufitter {version}"),
         data=_e(data_line(summary).strip()),
         verdict=f'<div class="verdict {kind}"><strong>{_e(headline)}.</strong> {_e(reasons)}</div>',
-        warnings=_warnings(summary["warnings"]) + _hidden(summary),
+        warnings=_warnings(*told_apart(summary)) + _hidden(summary),
         links="".join(f'<li><a href="#{key}">{_e(name)}</a></li>' for key, (name, _) in shown.items()),
         sections="".join(
             f'<section id="{key}" aria-labelledby="{key}-h"><h2 id="{key}-h">{_e(name)}</h2>{body}</section>\n'
@@ -133,12 +136,12 @@ def fit_html(summary: dict) -> str:
         for name, facts in summary["parameters"].items()
     ]
     rows = "".join("<tr>" + "".join(f'<td style="text-align:left">{cell}</td>' for cell in row) + "</tr>" for row in cells)
-    warnings = "".join(f"<li>{_e(text)}</li>" for text in summary["warnings"])
+    told, cautions = told_apart(summary)
     return (
         f"<div><strong>{_e(summary['title'] or summary['model'])}</strong>, {_e(data_line(summary).strip())}"
         f'<p><strong style="border-left:.3em solid {colour};padding-left:.5em">{_e(headline)}.</strong> {_e(reasons)}</p>'
         f"<table><thead><tr><th></th><th>{_e(median_head(summary))}</th><th></th></tr></thead><tbody>{rows}</tbody></table>"
-        + (f"<details><summary>Warnings ({len(summary['warnings'])})</summary><ul>{warnings}</ul></details>" if warnings else "")
+        + "".join(_folded(name, texts) for name, texts in (("Warnings", told), ("Cautions", cautions)))
         + "</div>"
     )
 
@@ -153,11 +156,21 @@ def _symbol(name: str) -> str:
     return re.sub(r"^(Ω|[A-Za-z])([mkΛ]|DE|\d)$", r"\1<sub>\2</sub>", text)
 
 
-def _warnings(texts: list[str]) -> str:
+def _folded(name: str, texts: list[str]) -> str:
     if not texts:
-        return "<p>There is nothing to warn of.</p>"
-    label = "A warning" if len(texts) == 1 else f"{len(texts)} warnings, the gravest first"
-    return f'<p><strong>{label}</strong></p><ul class="warnings">{"".join(f"<li>{_e(text)}</li>" for text in texts)}</ul>'
+        return ""
+    return f"<details><summary>{name} ({len(texts)})</summary><ul>{''.join(f'<li>{_e(text)}</li>' for text in texts)}</ul></details>"
+
+
+def _warnings(told: list[str], cautions: list[str]) -> str:
+    """What this run calls for, and apart from it what every run of its kind must say."""
+    label = "A warning" if len(told) == 1 else f"{len(told)} warnings, the gravest first"
+    text = "<p>Nothing in this run calls for a warning.</p>"
+    if told:
+        text = f'<p><strong>{label}</strong></p><ul class="warnings">{"".join(f"<li>{_e(one)}</li>" for one in told)}</ul>'
+    if cautions:
+        text += f"<p><strong>To be said with every such fit</strong></p><ul>{''.join(f'<li>{_e(one)}</li>' for one in cautions)}</ul>"
+    return text
 
 
 def _hidden(summary: dict) -> str:

@@ -65,7 +65,7 @@ def summarise(log_posterior, posterior, optimum, extras: Extras | None = None) -
         JSON-safe, with the keys schema, title, model, radiation, sample, parameters, intervals, best_fit, profile,
         information, sampling, cross_check, warnings.
     """
-    from fitter.report.warnings import practitioner_warnings
+    from fitter.report.warnings import practitioner_warnings, standing_cautions
 
     extras = extras or Extras()
     best = best_values(log_posterior, posterior, optimum)
@@ -90,6 +90,7 @@ def summarise(log_posterior, posterior, optimum, extras: Extras | None = None) -
     }
     summary = json_safe(summary)
     summary["warnings"] = practitioner_warnings(summary, log_posterior)
+    summary["cautions"] = standing_cautions(summary)
     return summary
 
 
@@ -275,11 +276,12 @@ def _cell(value) -> str:
 
 def summary_markdown(summary: dict) -> str:
     """Return the summary as a Markdown page."""
-    from fitter.report.tables import parameter_table
-    from fitter.report.terminal import facts_lines
+    from fitter.report.tables import full_markdown
+    from fitter.report.terminal import facts_lines, told_apart
 
-    lines = [f"# {summary['title'] or summary['model']}", "", parameter_table(summary, "markdown"), ""]
+    lines = [f"# {summary['title'] or summary['model']}", "", full_markdown(summary), ""]
     lines += [f"- {line}" for line in facts_lines(summary)]
-    if summary["warnings"]:
-        lines += ["", "## Warnings", "", *(f"- {text}" for text in summary["warnings"])]
+    for heading, texts in zip(("Warnings", "Cautions"), told_apart(summary), strict=True):
+        if texts:
+            lines += ["", f"## {heading}", "", *(f"- {text}" for text in texts)]
     return "\n".join(lines) + "\n"

@@ -12,7 +12,7 @@ from fitter.report.facts import parameter, unit_text
 from fitter.report.prose import CHI2, ascii_formula, latex, latex_text, listed, math, model_text, plain, redshift_range, symbol
 from fitter.report.terminal import best_text, cell_text, median_head
 
-__all__ = ["TABLE_FORMATS", "caption", "caption_text", "fit_table", "latex_float", "latex_text", "parameter_table"]
+__all__ = ["TABLE_FORMATS", "caption", "caption_text", "fit_table", "full_markdown", "latex_float", "latex_text", "parameter_table"]
 
 _RULES = {"booktabs": (r"\toprule", r"\midrule", r"\bottomrule"), "latex": (r"\hline", r"\hline", r"\hline")}
 TABLE_FORMATS = ("booktabs", "latex", "markdown", "csv")
@@ -108,6 +108,19 @@ def _undefined(summary: dict) -> str:
     return f" Undefined, and left out of the values, are {listed(said)} of the posterior." if said else ""
 
 
+def full_markdown(summary: dict) -> str:
+    """Return a Markdown table of one fit with moments and both intervals, for the summary of a run."""
+    rows = [["parameter", median_head(summary), "95 %", "mean", "sd", "best fit", "kind"]]
+    for name, facts in summary["parameters"].items():
+        if facts["median"] is None:
+            rows.append([f"{parameter(name).plain}{unit_text(name)}", *["—"] * 5, facts["kind"]])
+            continue
+        low, high, mean = (figures_for(facts[k], width=facts["sd"]).plain() for k in ("low95", "high95", "mean"))
+        cells = [cell_text(facts), f"{low} to {high}", mean, plain_number(facts["sd"], 2), best_text(facts), facts["kind"]]
+        rows.append([f"{parameter(name).plain}{unit_text(name)}", *cells])
+    return _ruled(rows)
+
+
 def _markdown(summaries: list[dict], names: list[str]) -> str:
     if len(summaries) == 1:
         rows = [["parameter", median_head(summaries[0]), "best fit", "kind"]]
@@ -116,7 +129,12 @@ def _markdown(summaries: list[dict], names: list[str]) -> str:
     else:
         rows = [["parameter", *(plain(s["title"] or s["model"]) for s in summaries)]]
         rows += [[f"{parameter(n).plain}{unit_text(n)}", *(_cell(s, n, cell_text) for s in summaries)] for n in names]
-    rows.insert(1, ["---"] * len(rows[0]))
+    return _ruled(rows)
+
+
+def _ruled(rows: list[list[str]]) -> str:
+    """Return rows as a Markdown table, the first of them its head."""
+    rows = [rows[0], ["---"] * len(rows[0]), *rows[1:]]
     return "\n".join("| " + " | ".join(cell.replace("|", r"\|") for cell in row) + " |" for row in rows)
 
 

@@ -6,10 +6,10 @@ import os
 import textwrap
 import unicodedata
 
-from fitter.report.digits import figures_for, plain_number
+from fitter.report.digits import evidence_digits, figures_for, plain_number
 from fitter.report.facts import parameter, unit_text
 
-__all__ = ["facts_lines", "terminal_summary", "wants_colour"]
+__all__ = ["facts_lines", "terminal_summary", "told_apart", "wants_colour"]
 
 _WIDTH = 100
 _BOLD, _YELLOW, _PLAIN = "\x1b[1m", "\x1b[33m", "\x1b[0m"
@@ -39,11 +39,18 @@ def terminal_summary(summary: dict, *, stream=None, width: int = _WIDTH) -> str:
     lines.append("")
     for line in facts_lines(summary):
         lines += _wrap(line, width)
-    if summary["warnings"]:
-        lines += ["", _paint("Warnings" if len(summary["warnings"]) > 1 else "Warning", _BOLD, colour)]
-        for text in summary["warnings"]:
-            lines += [_paint(line, _YELLOW, colour) for line in _wrap(text, width, mark="  ! ")]
+    told, cautions = told_apart(summary)
+    for texts, heading, mark, code in ((told, "Warning", "  ! ", _YELLOW), (cautions, "Caution", "  - ", _PLAIN)):
+        if texts:
+            lines += ["", _paint(heading + "s" * (len(texts) > 1), _BOLD, colour)]
+            lines += [_paint(line, code, colour) for text in texts for line in _wrap(text, width, mark=mark)]
     return "\n".join(lines) + "\n"
+
+
+def told_apart(summary: dict) -> tuple[list[str], list[str]]:
+    """Return the warnings that this run has called for, and the cautions that hold for every run of its kind."""
+    cautions = summary.get("cautions") or []
+    return [text for text in summary["warnings"] if text not in cautions], list(cautions)
 
 
 def facts_lines(summary: dict) -> list[str]:
@@ -180,7 +187,9 @@ def information_lines(information: dict) -> list[str]:
     lines = [f"{', '.join(said)} ({information['k']} parameters counted: {', '.join(information['k_names'])})"] if said else []
     log_evidence, error = information.get("log_evidence"), information.get("log_evidence_error")
     if log_evidence is not None:
-        digits = figures_for(log_evidence, width=error) if error else None
-        value = digits.plain() if digits else plain_number(log_evidence, 6)
-        lines.append(f"Evidence: ln Z = {value}" + (f" ± {plain_number(error, 2)}" if error else ""))
+        if error:
+            digits, accuracy = evidence_digits(log_evidence, error)
+            lines.append(f"Evidence: ln Z = {digits}" + (f" ± {accuracy}" if accuracy else ", numerical error < 0.0001"))
+        else:
+            lines.append(f"Evidence: ln Z = {plain_number(log_evidence, 6)}")
     return lines

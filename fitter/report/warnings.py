@@ -5,7 +5,7 @@ from __future__ import annotations
 from fitter.report.digits import figures_for, plain_number
 from fitter.report.facts import parameter
 
-__all__ = ["practitioner_warnings"]
+__all__ = ["practitioner_warnings", "standing_cautions"]
 
 _LEANS = 0.135  # density at a prior's edge over the peak: the edge stands within 2σ of it
 _PRIOR_DOMINATED = 0.9  # posterior width over prior width
@@ -16,12 +16,13 @@ _MOSTLY = 0.5
 _FEW_CALIBRATORS = 5
 _MANY = 100
 _BEYOND = 1e-3  # share of draws beyond a capsule's order
+_RESUME = "continue this run with `mufitter fit CONFIG --resume`"
 _NOISE_PARAMETERS = ("intrinsic_scatter", "covariance_scale")
 _CANNOT_BE_NEGATIVE = ("omega_m", "intrinsic_scatter", "covariance_scale")
 
 
 def practitioner_warnings(summary: dict, log_posterior) -> list[str]:
-    """Return the warnings that the facts of a fit call for, the gravest first.
+    """Return the warnings that the facts of a fit call for, the gravest first, and last the cautions that always hold.
 
     Parameters
     ----------
@@ -37,8 +38,13 @@ def practitioner_warnings(summary: dict, log_posterior) -> list[str]:
     texts = _cross_check(summary) + _convergence(summary) + _chi2(summary)
     texts += _prior_edges(summary, log_posterior) + _prior_share(summary)
     texts += _capsule(summary) + _scale(summary)
-    texts += _covariance(log_posterior.sample) + _model(summary, log_posterior.model) + _evidence(summary)
-    return texts + [str(text) for text in log_posterior.sample.warnings]
+    texts += _covariance(log_posterior.sample) + _model(summary, log_posterior.model)
+    return texts + [str(text) for text in log_posterior.sample.warnings] + standing_cautions(summary)
+
+
+def standing_cautions(summary: dict) -> list[str]:
+    """Return what holds for every fit of this kind, whatever came out: where H0 comes from, and what evidences depend on."""
+    return _zero_point(summary) + _evidence(summary)
 
 
 def _cross_check(summary: dict) -> list[str]:
@@ -55,17 +61,21 @@ def _cross_check(summary: dict) -> list[str]:
 
 def _convergence(summary: dict) -> list[str]:
     sampling, texts = summary.get("sampling") or {}, []
+    interrupted = sampling.get("reason") == "interrupted"
     if sampling.get("converged") is False:
         reason = sampling.get("reason")
         because = f" ({str(reason).rstrip('.')})" if reason else ""
-        texts.append(f"Not converged{because}: raise sampling.max_steps, or continue this run with --resume.")
+        if interrupted:
+            texts.append(f"Interrupted before it converged: {_RESUME}.")
+        else:
+            texts.append(f"Not converged{because}: raise sampling.max_steps, then {_RESUME}.")
     sampled = {n: p for n, p in summary["parameters"].items() if p.get("ess") is not None}
     few = {n: p["ess"] for n, p in sampled.items() if p["ess"] < _FEW}
     if few:
         worst = min(few, key=lambda name: few[name])
         texts.append(
             f"Too few independent samples: {few[worst]:.0f} for {parameter(worst).plain}, at least {_FEW} are needed for intervals. "
-            "Raise sampling.target_ess or sampling.max_steps."
+            + (f"{_RESUME[0].upper()}{_RESUME[1:]}." if interrupted else "Raise sampling.target_ess or sampling.max_steps.")
         )
     apart = {n: p["rhat"] for n, p in sampled.items() if p.get("rhat") is not None and p["rhat"] > _RHAT}
     if apart:
@@ -153,26 +163,26 @@ def _prior_share(summary: dict) -> list[str]:
 
 
 def _scale(summary: dict) -> list[str]:
-    sample, parameters = summary["sample"], summary["parameters"]
-    scale = sample["distance_scale"]
-    if scale == "relative":
-        return [
-            "No H0: the distance scale is relative, so H0 and the absolute magnitude are one offset, marginalised. For "
-            "an H0, give moduli on "
-            "an absolute scale, or calibrators (sample.distance_scale)."
-        ] * ("H0" not in parameters)
-    if "H0" not in parameters:
+    sample = summary["sample"]
+    if "H0" not in summary["parameters"] or sample["distance_scale"] != "calibrated" or sample["n_calibrators"] >= _FEW_CALIBRATORS:
         return []
-    if scale == "calibrated" and sample["n_calibrators"] < _FEW_CALIBRATORS:
+    return [
+        f"H0 rests on only {sample['n_calibrators']} calibrators: one of them moves it noticeably. Repeat the fit leaving each out in turn."
+    ]
+
+
+def _zero_point(summary: dict) -> list[str]:
+    """Where H0 comes from, or why there is none."""
+    scale, has_h0 = summary["sample"]["distance_scale"], "H0" in summary["parameters"]
+    if scale == "relative" and not has_h0:
         return [
-            f"H0 rests on only {sample['n_calibrators']} calibrators: one of them moves it noticeably. "
-            "Repeat the fit leaving each out in turn."
+            "No H0: the distance scale is relative, so H0 and the absolute magnitude are one offset, marginalised. For an H0, give moduli "
+            "on an absolute scale, or calibrators (sample.distance_scale)."
         ]
-    if scale == "absolute":
+    if scale == "absolute" and has_h0:
         return [
-            "H0 rests on the zero point of the given moduli: its value is that of the anchor behind them, and its "
-            "error is only right if the "
-            "covariance holds the anchor's (1 % in H0 is 0.0216 mag common to all). Name the anchor when quoting it."
+            "H0 rests on the zero point of the given moduli: its value is that of the anchor behind them, and its error is only right if "
+            "the covariance holds the anchor's (1 % in H0 is 0.0216 mag common to all). Name the anchor when quoting it."
         ]
     return []
 

@@ -4,7 +4,7 @@ import pytest
 from hypothesis import given
 from hypothesis import strategies as st
 
-from fitter.report.digits import Figures, figures_for, last_place, superscript
+from fitter.report.digits import Figures, evidence_digits, figures_for, last_place, superscript
 
 
 @pytest.mark.parametrize(
@@ -50,3 +50,18 @@ def test_rounding_moves_nothing_by_more_than_a_tenth_of_the_width(value, up, dow
     assert abs(float(figures.value) * scale - value) <= slack
     assert abs(float(figures.plus) * scale - up) <= slack
     assert abs(float(figures.minus) * scale - down) <= slack
+
+
+@pytest.mark.parametrize(
+    ("value", "error", "expected"),
+    [
+        (380.4365843497, 2.4e-09, ("380.4366", "")),
+        (393.82736, 0.00022, ("393.8274", "0.0002")),
+        (377.59224, 0.0024, ("377.5922", "0.0024")),
+        (-850.2134, 0.011, ("−850.213", "0.011")),
+        (-850.2134, 0.3, ("−850.21", "0.30")),
+        (-850.2134, 12.0, ("−850", "12")),
+    ],
+)
+def test_an_evidence_claims_no_more_than_four_decimals(value, error, expected):
+    assert evidence_digits(value, error) == expected

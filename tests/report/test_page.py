@@ -11,7 +11,7 @@ import numpy as np
 import pytest
 
 from fitter import InputError, Sample, fit
-from fitter.report.page import page_text, verdict
+from fitter.report.page import fit_html, page_text, verdict
 from fitter.report.terminal import cell_text
 from fitter.sharing import write_page
 
@@ -104,8 +104,15 @@ def test_verdicts(run):
         found = verdict(summary)
         assert found[0] == kind and words in found[1], (section, change)
         assert words in page_text(summary, "", {})
-    bare = {**copy.deepcopy(good), "cross_check": None, "provenance": {}, "sample": {**good["sample"], "terms": []}, "warnings": []}
-    assert "nothing to warn of" in page_text(bare, "", {})
+    bare = {
+        **copy.deepcopy(good),
+        "cross_check": None,
+        "provenance": {},
+        "sample": {**good["sample"], "terms": []},
+        "warnings": [],
+        "cautions": [],
+    }
+    assert "Nothing in this run calls for a warning" in page_text(bare, "", {})
 
 
 def test_a_blinded_page_shows_no_value(run, tmp_path):
@@ -154,3 +161,16 @@ def _probe(page, folder, width, options):
     dom = _browse(folder, [f"--window-size={width},900", "--virtual-time-budget=4000", *options, "--dump-dom", file.as_uri()])
     (found,) = re.findall(r"<title>PROBE(.*?)END</title>", dom)
     return json.loads(html.unescape(found))
+
+
+def test_no_plain_praise_stands_above_a_warning(run):
+    summary = copy.deepcopy(run.summary())
+    assert summary["cautions"] and summary["warnings"] == summary["cautions"]  # nothing but what is always said
+    assert verdict(summary)[:2] == ("good", "Sound") and "To be said with every such fit" in page_text(summary, "", {})
+    summary["warnings"].insert(0, "χ²/dof is low: the errors look too large.")
+    assert verdict(summary)[:2] == ("mind", "Computed soundly, but a warning says what to mind")
+    shown = page_text(summary, "", {})
+    assert "Sound." not in shown
+    assert shown.index("A warning") < shown.index("the errors look too large") < shown.index("To be said with every such fit")
+    folded = fit_html(summary)
+    assert "Warnings (1)" in folded and f"Cautions ({len(summary['cautions'])})" in folded

@@ -156,4 +156,10 @@ def test_markdown_says_the_same(fit):
     assert text.startswith("# Invented survey\n")
     assert "| Ωm | 0.300 ± 0.030 |" in text
     assert "χ²/dof = 300.00 / 297" in text
-    assert "## Warnings" in text
+    assert "## Warnings" not in text and "## Cautions" in text  # nothing but where H0 comes from
+    head, row = (next(line for line in text.splitlines() if line.startswith(start)) for start in ("| parameter", "| Ωm"))
+    cells = dict(zip(head.split(" | "), row.split(" | "), strict=True))
+    facts = fit.summary()["parameters"]["omega_m"]
+    assert float(cells["mean"]) == pytest.approx(facts["mean"], abs=5e-4) and float(cells["sd"]) == pytest.approx(facts["sd"], rel=0.05)
+    low, high = map(float, cells["95 %"].split(" to "))
+    assert (low, high) == (pytest.approx(facts["low95"], abs=5e-4), pytest.approx(facts["high95"], abs=5e-4))

@@ -62,3 +62,20 @@ def test_undefined_share_is_said(build):
     text = terminal_summary(build.fit(mean=(0.3, 0.1, 70.0), sd=(0.03, 0.01, 0.5)).summary())
     row = next(line for line in text.splitlines() if line.strip().startswith("z_acc"))
     assert "—" in row and "undefined in 100 % of draws" in row
+
+
+def test_tiny_errors_of_the_evidence_are_not_printed(summary):
+    information = {**summary["information"], "log_evidence": 380.4365843497, "log_evidence_error": 2.4e-9}
+    text = terminal_summary({**summary, "information": information})
+    assert "ln Z = 380.4366, numerical error < 0.0001" in text
+
+
+def test_cautions_stand_apart_from_warnings(summary):
+    assert summary["cautions"] and set(summary["cautions"]) <= set(summary["warnings"])
+    text = terminal_summary({**summary, "warnings": ["Something is wrong with this run.", *summary["cautions"]]})
+    lines = text.splitlines()
+    warned, cautioned = (next(i for i, line in enumerate(lines) if line.startswith(word)) for word in ("Warning", "Caution"))
+    assert lines[warned + 1] == "  ! Something is wrong with this run." and warned < cautioned
+    assert lines[cautioned + 1].startswith("  - ") and not any(line.startswith("  !") for line in lines[cautioned:])
+    old = {key: value for key, value in summary.items() if key != "cautions"}  # a run of an earlier version
+    assert "Caution" not in terminal_summary(old) and "  ! " in terminal_summary(old)

@@ -3,7 +3,7 @@
 import numpy as np
 import pytest
 
-from fitter.report.warnings import practitioner_warnings
+from fitter.report.warnings import practitioner_warnings, standing_cautions
 
 QUIET = {"distance_scale": "absolute"}
 
@@ -170,3 +170,23 @@ def test_evidence_depends_on_priors(build):
 
 def test_the_samples_own_warnings_pass_through(build):
     assert "lensing was added twice" in texts(build.fit(build.sample(warnings=("lensing was added twice",))))
+
+
+def test_an_interrupted_run_is_to_be_resumed(build):
+    warned = texts(build.fit(sampling={"converged": False, "reason": "interrupted"}))
+    assert "mufitter fit CONFIG --resume" in one(warned, "Interrupted")
+    none(warned, "max_steps")
+    short = texts(build.fit(sampling={"converged": False, "reason": "max_steps"}))
+    assert "raise sampling.max_steps" in one(short, "Not converged") and "--resume" in one(short, "Not converged")
+
+
+def test_cautions_are_what_holds_for_every_fit_of_the_kind(fit):
+    summary = fit.summary(evidence={"log_evidence": -850.2, "log_evidence_error": 0.01})
+    assert [text.split(":")[0] for text in summary["cautions"]] == [
+        "H0 rests on the zero point of the given moduli",
+        "The evidence depends on the widths of the priors",
+    ]
+    assert summary["warnings"][-2:] == summary["cautions"]
+    relative = {"sample": {"distance_scale": "relative"}, "parameters": {}, "information": {"log_evidence": None}}
+    (only,) = standing_cautions(relative)
+    assert only.startswith("No H0")

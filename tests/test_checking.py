@@ -85,3 +85,11 @@ def test_a_survey_to_come_has_problems_too(config):
     config.write_text(CONFIG.replace("distance_modulus", "distance_modulos"))
     (problem,) = check(config).problems
     assert "Did you mean `distance_modulus`?" in str(problem)
+
+
+@pytest.mark.parametrize("command", ["fit", "compare"])
+def test_a_fit_that_is_refused_tells_of_the_files_too(config, command):
+    config.write_text(CONFIG.replace("title", "titel").replace("sigma: err", "sigma: error"))
+    done = CliRunner().invoke(cli.app, [command, str(config)])
+    assert done.exit_code == 2 and "2 problems" in done.stderr
+    assert "Did you mean `title`?" in done.stderr and "column error: there is no such column" in done.stderr

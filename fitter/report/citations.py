@@ -31,7 +31,6 @@ _WORKS: dict[str, tuple[str, str, dict[str, str]]] = {
             "volume": "13",
             "pages": "907--929",
             "year": "2004",
-            "doi": "10.1198/106186004X12803",
         },
     ),
     "TerBraak2006": (
@@ -119,7 +118,6 @@ _WORKS: dict[str, tuple[str, str, dict[str, str]]] = {
             "volume": "380",
             "pages": "6--18",
             "year": "2001",
-            "doi": "10.1051/0004-6361:20011398",
         },
     ),
     "Chevallier2001": (

@@ -115,8 +115,8 @@ def full_markdown(summary: dict) -> str:
         if facts["median"] is None:
             rows.append([f"{parameter(name).plain}{unit_text(name)}", *["—"] * 5, facts["kind"]])
             continue
-        low, high, mean = (figures_for(facts[k], width=facts["sd"]).plain() for k in ("low95", "high95", "mean"))
-        cells = [cell_text(facts), f"{low} to {high}", mean, plain_number(facts["sd"], 2), best_text(facts), facts["kind"]]
+        low, high, mean, sd = (figures_for(facts[k], width=facts["sd"]).plain() for k in ("low95", "high95", "mean", "sd"))
+        cells = [cell_text(facts), f"{low} to {high}", mean, sd, best_text(facts), facts["kind"]]
         rows.append([f"{parameter(name).plain}{unit_text(name)}", *cells])
     return _ruled(rows)
 

@@ -37,6 +37,8 @@ def test_posterior(name, model, release, release_config, reference, direct_sum):
     result = fit(release_config(name), model=model, parameters=parameters, run_folder=False)
     summary = result.summary()
     assert result.converged
+    assert summary["cross_check"]["agrees"], summary["cross_check"]
+    assert summary["evidence"]["methods_agree"], summary["evidence"]
     _check_minimum(result, expected, direct_sum(release(name)))
     for key in expected["priors"]:
         found, wanted = summary["parameters"][key], expected[key]
@@ -47,6 +49,13 @@ def test_posterior(name, model, release, release_config, reference, direct_sum):
         for level, q in (("low95", "q2.5"), ("high95", "q97.5")):
             error = np.sqrt(0.025 * 0.975 / found["ess"]) / 0.0540 * wanted["std"]
             assert found[level] == pytest.approx(wanted[q], abs=4 * error + GRID_ERROR.get(key, 0.001) + 0.02 * wanted["std"]), key
+
+
+def test_four_nonlinear_parameters_prove_themselves(release_config):
+    result = fit(release_config("pantheon2018_binned"), model="curved_w0wa", run_folder=False)
+    summary = result.summary()
+    assert len(result.chains.names) == 4 and result.converged
+    assert summary["cross_check"]["agrees"], summary["cross_check"]
 
 
 def test_one_parameter_against_quadrature(release_config):

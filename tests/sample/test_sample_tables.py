@@ -208,7 +208,9 @@ def test_short_rows_that_lack_a_needed_field(write):
     path = write("name,z,mu,e,host\na,0.1,38,0.1\nb,0.2,0.1\nc,0.3,41,0.1,30\n")
     with pytest.raises(InputError) as caught:
         read_table(path, numbers=("z", "mu", "e", "host"), required=("z", "mu", "e"), shown="t.csv")
-    assert str(caught.value).startswith("t.csv, row 3: this line has 3 fields, the header has 5 (found 'b,0.2,0.1'). Leave the field empty")
+    assert str(caught.value).startswith(
+        "t.csv, row 3: this line has 3 fields, the header has 5 (found 'b,0.2,0.1'). Fill in what is missing"
+    )
     # The same line is no obstacle where what it lacks is not needed; a quoted comma is no delimiter.
     assert read_table(path, numbers=("z",), required=("z",)).n == 3
     path = write('name,z,mu\n"a, b",0.1\nc,0.3,41\n')

@@ -118,7 +118,9 @@ def _gap(is_short: bool, delimiter: str) -> str:
     if not is_short:
         return "Remove what is too much, or put text that holds the delimiter in quotes"
     return (
-        "Write `nan` where there is no value" if delimiter == WHITESPACE else f"Leave the field empty, between two {delimiter!r}, to say so"
+        "Fill in what is missing, or write `nan` for it"
+        if delimiter == WHITESPACE
+        else f"Fill in what is missing, or leave its field empty: two {delimiter!r} in a row"
     )
 
 

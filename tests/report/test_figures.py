@@ -16,7 +16,7 @@ from fitter.report.figures.corner import corner_caption, corner_figure, inner_ti
 from fitter.report.figures.groups import group_colour
 from fitter.report.figures.hubble import beyond_panel, hubble_caption, hubble_data, hubble_figure, reference_distance
 from fitter.report.figures.panels import contours, density, plot_range, thinned
-from fitter.report.figures.style import DOUBLE, LEVELS, SINGLE, new_figure, save_figure, styled, width_inches
+from fitter.report.figures.style import COLOURS, DOUBLE, LEVELS, SINGLE, new_figure, save_figure, styled, width_inches
 from fitter.report.prose import plain
 
 _spec = importlib.util.spec_from_file_location("looks", Path(__file__).with_name("looks.py"))
@@ -59,6 +59,33 @@ def test_widths():
     for bad in ("triple", 0.1, 99):
         with pytest.raises(InputError):
             width_inches(bad)
+
+
+# What colours look like without one kind of cone, in linear RGB (Machado, Oliveira & Fernandes 2009, severity 1).
+SIGHTS = {
+    "full": np.eye(3),
+    "protan": [[0.152286, 1.052583, -0.204868], [0.114503, 0.786281, 0.099216], [-0.003882, -0.048116, 1.051998]],
+    "deutan": [[0.367322, 0.860646, -0.227968], [0.280085, 0.672501, 0.047413], [-0.011820, 0.042940, 0.968881]],
+    "tritan": [[1.255528, -0.076749, -0.178779], [-0.078411, 0.930809, 0.147602], [0.004733, 0.691367, 0.303900]],
+}
+SRGB_TO_XYZ = np.array([[0.4124, 0.3576, 0.1805], [0.2126, 0.7152, 0.0722], [0.0193, 0.1192, 0.9505]])
+
+
+def cielab(colours, sight):
+    """CIE 1976 L*a*b* of sRGB colours as someone sees them."""
+    rgb = np.array([matplotlib.colors.to_rgb(c) for c in colours])
+    linear = np.where(rgb <= 0.04045, rgb / 12.92, ((rgb + 0.055) / 1.055) ** 2.4)
+    xyz = np.clip(linear @ np.array(sight).T, 0, 1) @ SRGB_TO_XYZ.T / (0.9505, 1.0, 1.0890)
+    f = np.where(xyz > 0.008856, np.cbrt(xyz), 7.787 * xyz + 16 / 116)
+    return np.stack([116 * f[:, 1] - 16, 500 * (f[:, 0] - f[:, 1]), 200 * (f[:, 1] - f[:, 2])], axis=1)
+
+
+@pytest.mark.parametrize("kind", list(SIGHTS))
+def test_any_two_runs_can_be_told_apart(kind):
+    lab = cielab(COLOURS, SIGHTS[kind])
+    apart = np.linalg.norm(lab[:, None] - lab, axis=2)[np.triu_indices(len(COLOURS), 1)]
+    assert apart.min() > 25  # 2.3 is just noticeable side by side; thin lines far apart need ten times that
+    assert lab[:, 0].max() < 75  # a line on white paper
 
 
 def test_saved_files_embed_fonts_repeat_bit_for_bit_and_leave_nothing_behind(fit, tmp_path):

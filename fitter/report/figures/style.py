@@ -32,8 +32,8 @@ __all__ = [
 
 SINGLE, DOUBLE = 3.5, 7.1  # inches: one and two journal columns
 LEVELS = (0.683, 0.954)  # probability inside the contours
-# Distinct in hue and in lightness, so that they survive colour blindness and a grey printer.
-COLOURS = ("#1f4e9c", "#d9730d", "#2a9d8f", "#a23b72", "#7a5c00", "#5b5f97")
+# Chosen so that any two stay apart for every kind of colour blindness (a test says how far), and neighbours on a grey printer.
+COLOURS = ("#1f4e9c", "#d9730d", "#57b5a6", "#59093b", "#9898d9", "#735f3f")
 GREY = "#8c8c8c"
 _active = ContextVar("style in force", default=False)
 _RESOLUTION = 200  # dots per inch of the PNG

@@ -3,14 +3,10 @@
 from __future__ import annotations
 
 from collections.abc import Callable
-from typing import TYPE_CHECKING
 
 import numpy as np
 
 from fitter.array_types import BoolArray, FloatArray
-
-if TYPE_CHECKING:
-    pass
 
 Density = Callable[[FloatArray], FloatArray]
 

@@ -19,6 +19,7 @@ __all__ = ["ProfileInterval", "profile_intervals", "profile_likelihood"]
 
 
 _NO_LIMIT = 1e3  # standard deviations from the best value
+_CLIMBS = 4  # peaks, each higher than the one before, that the search may come upon
 
 
 @dataclass(frozen=True)
@@ -36,7 +37,7 @@ class ProfileInterval:
         The interval; a bound of the prior where it is reached first, infinite where the likelihood sets no limit (a thousand
         standard deviations away Δχ² is still below `delta`).
     low_at_edge, high_at_edge : bool
-        Whether it is.
+        Whether it is a bound of the prior.
     """
 
     name: str
@@ -77,7 +78,8 @@ def profile_intervals(
 ) -> tuple[ProfileInterval, ...]:
     """Profile-likelihood intervals of every sampled parameter.
 
-    The prior only gives the bounds: the likelihood is profiled, not the posterior.
+    The priors of the sampled parameters only give the bounds: the likelihood is profiled, not the posterior. What is
+    marginalised analytically (systematic shifts, an absolute magnitude with a normal prior) is part of the likelihood and keeps its own.
 
     Parameters
     ----------
@@ -96,7 +98,13 @@ def profile_intervals(
         profile = _Profile(log_posterior, optimum)
         n = len(log_posterior.names)
         sides = [(i, delta, side) for i in range(n) for delta in deltas for side in (-1, 1)]
-        ends, edges = _crossings(profile, sides)
+        for _ in range(_CLIMBS):
+            height = profile.height
+            ends, edges = _crossings(profile, sides)
+            if profile.height <= height + 1e-6:
+                break
+            # A higher peak was met on the way, which moves every end.
+            profile.climb()
     out = []
     for k in range(0, len(sides), 2):
         i, delta, _ = sides[k]
@@ -115,9 +123,14 @@ class _Profile:
         self.function = _InsidePrior(log_posterior, self.low, self.high)
         self.scale = np.sqrt(np.diag(optimum.covariance))
         self.covariance = optimum.covariance
-        best, height = maximise(self.function, optimum.theta[None], self.scale, self.low, self.high)
+        self.best, self.known = optimum.theta, np.empty((0, len(optimum.theta)))
+        self.climb()
+
+    def climb(self) -> None:
+        """Climb from the best known point to the top of its peak."""
+        best, height = maximise(self.function, self.best[None], self.scale, self.low, self.high)
         self.best, self.height = best[0], float(height[0])
-        self.known = self.best[None]
+        self.known = np.concatenate([self.known, best])
 
     def at(self, index: IntArray, values: FloatArray) -> tuple[FloatArray, FloatArray]:
         """Maximise with parameter ``index[k]`` held at ``values[k]``: points (V, n) and −2 ln L (V,)."""

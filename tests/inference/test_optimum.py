@@ -88,6 +88,20 @@ def test_profile_without_a_limit(doubles):
     assert (x1.low, x1.high, x1.low_at_edge, x1.high_at_edge) == (-np.inf, np.inf, False, False)
 
 
+def test_profile_of_a_higher_peak_that_the_prior_disfavours(doubles):
+    # Likelihood peaks at 0 and, e² times as high, at 4; the prior has the posterior's maximum at the lower one.
+    target = doubles.Double(lambda t: np.logaddexp(-0.5 * t[:, 0] ** 2, 2 - 0.5 * (t[:, 0] - 4) ** 2), [(-np.inf, np.inf)])
+    target.priors = (Normal(0.0, 0.7),)
+    target.log_prior = lambda t: target.priors[0].log_density(t[:, 0])
+    optimum = find_optimum(target, SEED)
+    assert abs(optimum.theta[0]) < 1
+    for interval in profile_intervals(target, optimum):
+        top = target.function(np.array([[interval.best]]))[0]
+        ends = target.function(np.array([[interval.low], [interval.high]]))
+        assert interval.best == pytest.approx(4, abs=0.01)
+        np.testing.assert_allclose(2 * (top - ends), interval.delta, rtol=1e-5)
+
+
 def test_profile_stops_at_the_prior(doubles):
     target = doubles.hard_edges()
     wide = [i for i in profile_intervals(target, find_optimum(target, SEED)) if i.delta == 4]

@@ -333,6 +333,9 @@ class _Job:
         if self.config.sampling.target_ess > sampling.get("target_ess", np.inf):
             problem = f"the run there has ended with a target_ess of {sampling['target_ess']}, it cannot be continued"
             raise InputError(problem, file=self._place.target, cure="Make a longer one with --replace")
+        if self.config.intervals != (made := run.summary.get("intervals", "equal_tailed")):
+            problem = f"the run there has ended with {made.replace('_', '-')} intervals, it cannot be continued with others"
+            raise InputError(problem, file=self._place.target, cure="Make it again with --replace")
         optimum = self._optimum()
         if self.hidden and run.summary.get("blinded"):
             optimum = blind_optimum(optimum, self.log_posterior.names, self.hidden)

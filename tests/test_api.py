@@ -161,6 +161,8 @@ def test_resuming_a_finished_run_returns_it(result, sample):
     np.testing.assert_array_equal(again.chains.chain, result.chains.chain)
     with pytest.raises(InputError, match="ended with a target_ess of 400.*--replace"):
         fit(**settings, sampling={**SAMPLING, "target_ess": 10**6})
+    with pytest.raises(InputError, match="ended with equal-tailed intervals.*--replace"):
+        fit(**settings, sampling=SAMPLING, intervals="highest_density")
     with pytest.raises(InputError, match="of other settings or data: sampling.seed: 20261201 → 3"):
         fit(**settings, sampling={**SAMPLING, "seed": 3})
     assert not result.run_folder.with_name("run.unfinished").exists()

@@ -16,6 +16,7 @@ __all__ = ["Document", "parse_yaml", "read_yaml"]
 MAX_BYTES = 1_000_000
 MAX_VALUES = 100_000
 MAX_DEPTH = 50
+_NO_TEXT = re.compile("[\0\ud800-\udfff]")
 
 Key = str | int
 
@@ -151,10 +152,14 @@ class _Walk:
                 items.append(self.value(item, (*keys, i)))
             return items
         try:
-            return self.loader.construct_object(node, deep=True)
+            value = self.loader.construct_object(node, deep=True)
         except (ValueError, OverflowError):
             problem = "this value does not fit its YAML tag"
             raise InputError(problem, file=self.path, row=node.start_mark.line + 1, value=_shorten(node.value)) from None
+        if isinstance(value, str) and _NO_TEXT.search(value):
+            # Escapes can write what the reader refuses to read, and no path or file can hold it.
+            raise InputError("a character that no text can hold", file=self.path, row=node.start_mark.line + 1, value=_shorten(value))
+        return value
 
     def _mapping(self, node: yaml.MappingNode, keys: tuple[Key, ...]) -> dict:
         result: dict = {}

@@ -58,6 +58,8 @@ def test_a_key_given_twice_is_refused_with_both_lines():
         ("z mu sigma\n0.1 38 0.1\n", 1, "list of `key: value` lines"),
         ("? [a]\n: 1\n", 1, "a key must be a word"),
         ("a: 1\nb: \x01\n", 2, "control character"),
+        ('a: 1\nb: "x\\0y"\n', 2, "no text can hold"),
+        ('a: 1\n"b\\uD800": 2\n', 2, "no text can hold"),
     ],
 )
 def test_what_is_no_config_is_refused(text, row, words):

@@ -65,6 +65,12 @@ def test_a_wrong_key_or_reference_does_not_hide_the_variants(config):
         assert words in found
 
 
+def test_a_label_that_no_term_has_is_told_once(config):
+    config.write_text(CONFIG + "variants:\n  - {name: a}\n  - {name: b, without: [dust]}\n")
+    (problem,) = check(config).problems
+    assert f"{config}, row 9, key variants.1.without: no uncertainty term has this label (found 'dust')" in str(problem)
+
+
 def test_a_survey_to_come(config):
     config.write_text(CONFIG.replace(", distance_modulus: mu", ""))
     found = check(config)

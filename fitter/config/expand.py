@@ -88,7 +88,7 @@ def expand_as_far_as_possible(config: Config) -> tuple[list[Variant], list[Input
             found, _, more = validate(document, config.folder, allow_code=config._allow_code)
             wrong += more
         problems += wrong
-        if found is not None and complete is not None:
+        if found is not None and complete is not None and not wrong:
             name = config.variants[i].name
             variants.append(Variant(name, folder_name(i, name), found, tuple(without), complete))
     unused = [n for n in config.document.data.get("parameters") or {} if n not in used]

@@ -3,12 +3,20 @@
 from __future__ import annotations
 
 from collections.abc import Sequence
+from typing import TYPE_CHECKING
 
 import numpy as np
 
+from fitter.array_types import FloatArray, ObjectArray
 from fitter.errors import InputError
 from fitter.report.facts import axis_label
 from fitter.report.figures.style import COLOURS, in_style, new_figure, width_inches
+
+if TYPE_CHECKING:
+    from matplotlib.axes import Axes
+    from matplotlib.figure import Figure
+
+    from fitter.inference.posterior import Posterior
 
 __all__ = ["chains_caption", "chains_figure"]
 
@@ -19,7 +27,7 @@ _WALKERS = 64  # of each replica, for the autocorrelation
 
 
 @in_style
-def chains_figure(posterior, names: Sequence[str] | None = None, *, width: str | float = "double"):
+def chains_figure(posterior: Posterior, names: Sequence[str] | None = None, *, width: str | float = "double") -> Figure:
     """Draw, for each parameter, the trace of every replica, its running mean and autocorrelation, and R̂ against length.
 
     Parameters
@@ -59,7 +67,7 @@ def chains_figure(posterior, names: Sequence[str] | None = None, *, width: str |
 _TITLES = ("One walker each", "Running mean", "Autocorrelation", r"$\hat{R} - 1$")
 
 
-def _dress(axes, wide: bool) -> None:
+def _dress(axes: ObjectArray, wide: bool) -> None:
     """Titles over the columns, or over each panel where they stand in pairs; numbers only where they are not repeated."""
     for row in axes if not wide else axes[:1]:
         for ax, title in zip(row, _TITLES, strict=True):
@@ -76,14 +84,14 @@ def _dress(axes, wide: bool) -> None:
     axes[0, 0].figure.align_ylabels(axes[:, 0])
 
 
-def _trace(ax, draws) -> None:
+def _trace(ax: Axes, draws: FloatArray) -> None:
     stride = max(1, draws.shape[1] // _STEPS_DRAWN)
     steps = np.arange(0, draws.shape[1], stride)
     for i, replica in enumerate(draws):
         ax.plot(steps, replica[::stride, 0], color=COLOURS[i % len(COLOURS)], lw=0.5, alpha=0.8)
 
 
-def _running_mean(ax, draws) -> None:
+def _running_mean(ax: Axes, draws: FloatArray) -> None:
     """Mean of all walkers so far; undefined draws are left out."""
     stride = max(1, draws.shape[1] // _STEPS_DRAWN)
     steps = np.arange(0, draws.shape[1], stride)
@@ -92,12 +100,12 @@ def _running_mean(ax, draws) -> None:
         total = np.cumsum(np.where(defined, replica, 0.0).sum(axis=1))
         count = np.maximum(np.cumsum(defined.sum(axis=1)), 1)
         ax.plot(steps, (total / count)[::stride], color=COLOURS[i % len(COLOURS)], lw=0.9)
-    mean, sd = np.nanmean(draws), np.nanstd(draws)
+    mean, sd = float(np.nanmean(draws)), float(np.nanstd(draws))
     ax.axhline(mean, color="black", lw=0.6, ls=":")
     ax.set_ylim(mean - 0.6 * sd, mean + 0.6 * sd)
 
 
-def _autocorrelation(ax, draws) -> None:
+def _autocorrelation(ax: Axes, draws: FloatArray) -> None:
     """Autocorrelation of each replica, averaged over its walkers, well beyond the lag where it has died away."""
     middle = np.nanmedian(draws)
     curves = [autocorrelation(np.where(np.isfinite(replica), replica, middle)[:, :_WALKERS]) for replica in draws]
@@ -130,7 +138,7 @@ def autocorrelation(walkers: np.ndarray) -> np.ndarray:
     return covariance / covariance[0] if covariance[0] > 0 else np.eye(1, steps)[0]
 
 
-def _rhat(ax, draws) -> None:
+def _rhat(ax: Axes, draws: FloatArray) -> None:
     from fitter.inference.diagnostics import split_rhat
 
     lengths = np.unique(np.linspace(draws.shape[1] / _LENGTHS, draws.shape[1], _LENGTHS).astype(int))
@@ -146,7 +154,7 @@ def _rhat(ax, draws) -> None:
     ax.set_ylim(5e-6, max(0.05, 2 * max(values, default=1.0) - 2))
 
 
-def chains_caption(posterior) -> str:
+def chains_caption(posterior: Posterior) -> str:
     """Return the caption of the chains figure."""
     replicas, steps, walkers = posterior.log_posterior.shape
     return (

@@ -4,9 +4,11 @@ from __future__ import annotations
 
 from collections.abc import Mapping, Sequence
 from dataclasses import replace
+from typing import TYPE_CHECKING
 
 import numpy as np
 
+from fitter.array_types import FloatArray, ObjectArray
 from fitter.errors import InputError
 from fitter.report.digits import figures_for
 from fitter.report.facts import axis_label, parameter
@@ -24,6 +26,12 @@ from fitter.report.figures.panels import (
 from fitter.report.figures.style import COLOURS, LEVELS, SINGLE, in_style, new_figure, width_inches
 from fitter.report.prose import listed, symbol, with_unit
 
+if TYPE_CHECKING:
+    from matplotlib.axis import XAxis, YAxis
+    from matplotlib.figure import Figure
+
+    from fitter.inference.posterior import Posterior
+
 __all__ = ["corner_caption", "corner_figure", "main_parameters"]
 
 # Of the derived parameters, those that say something beside the sampled ones; the rest follow from them.
@@ -37,7 +45,7 @@ _TITLE_SIZES = (9, 8)
 _LISTED_SIZE, _LISTED_LINE = 8, 0.165  # points, inches
 
 
-def main_parameters(posterior) -> list[str]:
+def main_parameters(posterior: Posterior) -> list[str]:
     """Names for the corner plot: sampled, marginalised, and the main derived ones.
 
     Left out: what hardly varies, and a derived parameter that repeats another of them (in flat space Ω_Λ is 1 − Ω_m: its panel
@@ -51,14 +59,14 @@ def main_parameters(posterior) -> list[str]:
     return names[:_MOST_PANELS]
 
 
-def _repeats(posterior, name: str, other: str) -> bool:
+def _repeats(posterior: Posterior, name: str, other: str) -> bool:
     """Whether one parameter is a linear function of another."""
     a, b = (thinned(posterior, n, most=5000) for n in (name, other))
     both = np.isfinite(a) & np.isfinite(b)
     return both.sum() > 2 and abs(np.corrcoef(a[both], b[both])[0, 1]) > LINE
 
 
-def _varies(posterior, name: str) -> bool:
+def _varies(posterior: Posterior, name: str) -> bool:
     draws = posterior.draws(name)
     draws = draws[np.isfinite(draws)]
     return draws.size > 1 and float(np.ptp(draws)) > 1e-10 * max(1e-300, float(np.abs(draws).max()))
@@ -66,13 +74,13 @@ def _varies(posterior, name: str) -> bool:
 
 @in_style
 def corner_figure(
-    posteriors,
+    posteriors: Posterior | Mapping[str, Posterior],
     names: Sequence[str] | None = None,
     *,
     width: str | float = "double",
     reference: Mapping[str, float] | None = None,
     labels: Mapping[str, str] | None = None,
-):
+) -> Figure:
     """Draw the corner plot of one fit, or of several over each other.
 
     Parameters
@@ -115,7 +123,7 @@ def corner_figure(
     return figure
 
 
-def corner_caption(posteriors, names: Sequence[str] | None = None) -> str:
+def corner_caption(posteriors: Posterior | Mapping[str, Posterior], names: Sequence[str] | None = None) -> str:
     """Return the caption of the corner plot."""
     runs = runs_of(posteriors)
     names = list(names) if names is not None else main_parameters(next(iter(runs.values())))
@@ -143,12 +151,12 @@ def _check(names: Sequence[str], runs: Mapping) -> None:
         raise InputError("a corner plot needs a parameter that varies")
 
 
-def _columns(posterior, names: Sequence[str]) -> dict[str, np.ndarray]:
+def _columns(posterior: Posterior, names: Sequence[str]) -> dict[str, np.ndarray]:
     present = [n for n in names if n in posterior.kinds and _varies(posterior, n)]
     return {n: thinned(posterior, n) for n in present}
 
 
-def _grid(k: int, width: str | float):
+def _grid(k: int, width: str | float) -> tuple[Figure, ObjectArray]:
     """Make only the panels of the lower triangle."""
     inches = width_inches(width)
     most = SINGLE if k == 1 else _LEFT + _RIGHT + 1.9 * k
@@ -161,7 +169,7 @@ def _grid(k: int, width: str | float):
     return figure, axes
 
 
-def _place(figure, axes, left: float, bottom: float, top: float) -> None:
+def _place(figure: Figure, axes: ObjectArray, left: float, bottom: float, top: float) -> None:
     """Give the panels the room that these margins (inches) leave of the figure's width; the height follows."""
     k, inches = len(axes), figure.get_figwidth()
     panel = (inches - left - _RIGHT - _GAP * (k - 1)) / k
@@ -174,12 +182,21 @@ def _place(figure, axes, left: float, bottom: float, top: float) -> None:
             axes[row, column].set_position((x / inches, y / height, panel / inches, tall / height))
 
 
-def _panel_inches(axes) -> float:
+def _panel_inches(axes: ObjectArray) -> float:
     return float(axes[0, 0].get_position().width * axes[0, 0].figure.get_figwidth())
 
 
-def _draw_run(axes, names, table, limits, scale, colour, *, alone: bool) -> None:
-    scaled = {n: tuple(v * scale[n] for v in limits[n]) for n in names}
+def _draw_run(
+    axes: ObjectArray,
+    names: Sequence[str],
+    table: Mapping[str, FloatArray],
+    limits: Mapping[str, tuple[float, float]],
+    scale: Mapping[str, float],
+    colour: str,
+    *,
+    alone: bool,
+) -> None:
+    scaled = {n: (limits[n][0] * scale[n], limits[n][1] * scale[n]) for n in names}
     for row, y in enumerate(names):
         if y not in table:
             continue
@@ -192,7 +209,13 @@ def _draw_run(axes, names, table, limits, scale, colour, *, alone: bool) -> None
                 contours(axes[row, column], table[x] * scale[x], draws, own, colour)
 
 
-def _dress(axes, names, limits, scale, labels) -> None:
+def _dress(
+    axes: ObjectArray,
+    names: Sequence[str],
+    limits: Mapping[str, tuple[float, float]],
+    scale: Mapping[str, float],
+    labels: Mapping[str, str],
+) -> None:
     """Limits, ticks and labels; numbers only along the left and the bottom."""
     k = len(names)
     small, turn = _panel_inches(axes) < _SMALL_PANEL, 45 if _panel_inches(axes) < _TURNED else 0
@@ -239,7 +262,7 @@ def inner_ticks(limits: tuple[float, float], scale: float = 1.0, wanted: int = 4
     return ticks
 
 
-def _align(axes) -> None:
+def _align(axes: ObjectArray) -> None:
     """Put the labels of a row or column on one line just beyond the longest number, and the margins where that needs them."""
     from matplotlib.transforms import ScaledTranslation
 
@@ -259,7 +282,7 @@ def _align(axes) -> None:
     _place(figure, axes, beside + wide + _EDGE if k > 1 else _RIGHT, below + deep + _EDGE, _TOP)
 
 
-def _reach(axis_of, figure) -> float:
+def _reach(axis_of: Sequence[XAxis | YAxis], figure: Figure) -> float:
     """How far tick labels stretch out from their axes, inches."""
     reach = [0.0]
     for axis in axis_of:
@@ -271,14 +294,14 @@ def _reach(axis_of, figure) -> float:
     return max(reach) / float(figure.dpi)
 
 
-def _draw_intervals(axes, names, posterior, scale) -> None:
+def _draw_intervals(axes: ObjectArray, names: Sequence[str], posterior: Posterior, scale: Mapping[str, float]) -> None:
     for i, name in enumerate(names):
         interval = posterior.interval(name)
         for x in (interval.low, np.nanmedian(posterior.draws(name)), interval.high):
             axes[i, i].axvline(x * scale[name], color=COLOURS[0], ls=(0, (4, 3)), lw=0.6)
 
 
-def _interval_texts(names, posterior, labels) -> list[str]:
+def _interval_texts(names: Sequence[str], posterior: Posterior, labels: Mapping[str, str]) -> list[str]:
     """Median and 68 % of each parameter, in the digits its width deserves."""
     texts = []
     for name in names:
@@ -291,7 +314,7 @@ def _interval_texts(names, posterior, labels) -> list[str]:
     return texts
 
 
-def _say_intervals(figure, axes, texts: Sequence[str]) -> None:
+def _say_intervals(figure: Figure, axes: ObjectArray, texts: Sequence[str]) -> None:
     """Write the intervals over their panels, or all of them into the empty corner where a panel is too narrow."""
     k, room = len(texts), (_panel_inches(axes) + _GAP) * figure.dpi
     for size in _TITLE_SIZES:
@@ -310,7 +333,7 @@ def _say_intervals(figure, axes, texts: Sequence[str]) -> None:
         figure.text(1 - _RIGHT / inches, y, text, ha="right", va="baseline", fontsize=_LISTED_SIZE)
 
 
-def _legend(figure, axes, labels: Sequence[str]) -> None:
+def _legend(figure: Figure, axes: ObjectArray, labels: Sequence[str]) -> None:
     """Write the legend into the empty corner, or along the top of a panel that stands alone."""
     colours = {label: COLOURS[i % len(COLOURS)] for i, label in enumerate(labels)}
     k, inches = len(axes), figure.get_figwidth()
@@ -324,7 +347,7 @@ def _legend(figure, axes, labels: Sequence[str]) -> None:
     run_legend(figure, colours, min(room, 3.0), loc="upper right", bbox_to_anchor=(1.0, 1.0))
 
 
-def _mark(axes, names, reference, scale) -> None:
+def _mark(axes: ObjectArray, names: Sequence[str], reference: Mapping[str, float], scale: Mapping[str, float]) -> None:
     for row, y in enumerate(names):
         for column, x in enumerate(names[: row + 1]):
             ax = axes[row, column]

@@ -4,6 +4,7 @@ from __future__ import annotations
 
 import textwrap
 from collections.abc import Mapping, Sequence
+from typing import TYPE_CHECKING
 
 import numpy as np
 
@@ -13,6 +14,10 @@ from fitter.report.facts import axis_label
 from fitter.report.figures.corner import inner_ticks
 from fitter.report.figures.style import COLOURS, GREY, in_style, new_figure, width_inches
 from fitter.report.prose import listed, symbol
+
+if TYPE_CHECKING:
+    from matplotlib.axes import Axes
+    from matplotlib.figure import Figure
 
 __all__ = ["forest_caption", "forest_figure", "forest_names"]
 
@@ -25,7 +30,7 @@ _LONGEST_NAME = 26
 def forest_names(report: Mapping) -> list[str]:
     """Parameters that two fits or more have with a posterior of some width; of derived ones only q0 and the curvature."""
 
-    def drawn(name):
+    def drawn(name: str) -> list[dict]:
         facts = [v["parameters"].get(name) for v in report["variants"]]
         return [f for f in facts if f and f["sd"] and (f["kind"] != "derived" or name in ("q0", "omega_k"))]
 
@@ -34,7 +39,7 @@ def forest_names(report: Mapping) -> list[str]:
 
 
 @in_style
-def forest_figure(report: dict, names: Sequence[str] | None = None, *, width: str | float = "double"):
+def forest_figure(report: dict, names: Sequence[str] | None = None, *, width: str | float = "double") -> Figure:
     """Draw medians with 68.3 and 95 % intervals, a row for each fit and a panel for each parameter.
 
     Parameters
@@ -58,7 +63,7 @@ def forest_figure(report: dict, names: Sequence[str] | None = None, *, width: st
     height = _BOTTOM + rows + _TOP
     figure = new_figure(inches, height=height)
     for i, name in enumerate(names):
-        box = [(left + i * (panel + _GAP)) / inches, _BOTTOM / height, panel / inches, rows / height]
+        box = ((left + i * (panel + _GAP)) / inches, _BOTTOM / height, panel / inches, rows / height)
         ax = figure.add_axes(box)
         _draw_panel(ax, report, name)
         ax.set_yticks(range(len(variants)), labels if i == 0 else [""] * len(variants), linespacing=1.0)
@@ -75,7 +80,7 @@ def _two_lines(name: str) -> str:
     return "\n".join(lines if len(lines) <= 2 else ["… " + lines[-2], lines[-1]])
 
 
-def _draw_panel(ax, report: dict, name: str) -> None:
+def _draw_panel(ax: Axes, report: dict, name: str) -> None:
     ends = []
     for row, variant in enumerate(report["variants"]):
         colour = COLOURS[row % len(COLOURS)]

@@ -3,12 +3,19 @@
 from __future__ import annotations
 
 import textwrap
-from collections.abc import Mapping, Sequence
-from typing import TypeVar
+from collections.abc import Iterable, Mapping, Sequence
+from typing import TYPE_CHECKING, Any, TypeVar
 
 import numpy as np
 
+from fitter.array_types import FloatArray
 from fitter.report.figures.style import LEVELS
+
+if TYPE_CHECKING:
+    from matplotlib.axes import Axes
+    from matplotlib.figure import Figure
+
+    from fitter.inference.posterior import Posterior
 
 __all__ = [
     "common_exponent",
@@ -39,7 +46,7 @@ def runs_of(posteriors: Run | Mapping[str, Run]) -> dict[str, Run]:
     return dict(posteriors) if isinstance(posteriors, Mapping) else {"": posteriors}
 
 
-def thinned(posterior, name: str, most: int = _MOST_DRAWS) -> np.ndarray:
+def thinned(posterior: Posterior, name: str, most: int = _MOST_DRAWS) -> np.ndarray:
     """Return one parameter's draws, evenly thinned, the same ones for every parameter.
 
     Parameters
@@ -60,7 +67,7 @@ def thinned(posterior, name: str, most: int = _MOST_DRAWS) -> np.ndarray:
     return draws[:, ::stride, :].reshape(-1)
 
 
-def plot_range(columns, share: float = 0.9985) -> tuple[float, float]:
+def plot_range(columns: Iterable[FloatArray], share: float = 0.9985) -> tuple[float, float]:
     """Range that shows the given share of every run's draws of one parameter, with a margin.
 
     A posterior cut by its prior is drawn with its edge on the frame.
@@ -114,7 +121,7 @@ def density(draws: np.ndarray, limits: tuple[float, float], bins: int = 120) -> 
     return 0.5 * (edges[1:] + edges[:-1]), smooth / max(smooth.max(), 1e-300)
 
 
-def draw_density(ax, draws, limits, colour, *, fill: bool = False) -> None:
+def draw_density(ax: Axes, draws: FloatArray, limits: tuple[float, float], colour: str, *, fill: bool = False) -> None:
     """Draw a marginal density."""
     x, y = density(draws, limits)
     ax.plot(x, y, color=colour)
@@ -122,7 +129,9 @@ def draw_density(ax, draws, limits, colour, *, fill: bool = False) -> None:
         ax.fill_between(x, y, color=colour, alpha=0.12, linewidth=0)
 
 
-def contours(ax, x, y, limits, colour, *, fill: bool = True, bins: int = _BINS) -> None:
+def contours(
+    ax: Axes, x: FloatArray, y: FloatArray, limits: Sequence[tuple[float, float]], colour: str, *, fill: bool = True, bins: int = _BINS
+) -> None:
     """Draw the smallest regions that hold 68.3 and 95.4 % of the draws.
 
     Parameters
@@ -173,12 +182,12 @@ def contours(ax, x, y, limits, colour, *, fill: bool = True, bins: int = _BINS) 
         drawn.set_clip_path(inside)
 
 
-def _on_a_line(x, y) -> bool:
+def _on_a_line(x: FloatArray, y: FloatArray) -> bool:
     """Whether one parameter follows from the other, as Ω_Λ from Ω_m in flat space: there is no region to draw."""
     return x.size > 2 and x.std() > 0 and y.std() > 0 and abs(np.corrcoef(x, y)[0, 1]) > LINE
 
 
-def _segment(ax, x, y, colour) -> None:
+def _segment(ax: Axes, x: FloatArray, y: FloatArray, colour: str) -> None:
     """Draw the pieces of the line that hold 68.3 and 95.4 % of the draws, as wide as the one is likelier than the other."""
     slope, offset = np.polyfit(x, y, 1)
     for level, width in zip(LEVELS[::-1], (1.4, 3.2), strict=True):
@@ -186,7 +195,7 @@ def _segment(ax, x, y, colour) -> None:
         ax.plot(ends, offset + slope * ends, color=colour, lw=width, alpha=0.75, solid_capstyle="butt", zorder=3)
 
 
-def redshift_ticks(ax) -> None:
+def redshift_ticks(ax: Axes) -> None:
     """Put plain numbers (1, 2, 5 in each decade) on a logarithmic redshift axis whose limits are set."""
     from matplotlib.ticker import FuncFormatter, NullFormatter
 
@@ -208,7 +217,7 @@ def legend_layout(labels: Sequence[str], inches: float) -> tuple[list[str], int,
     return labels, columns, 0.14 + _LINE_HEIGHT * lines
 
 
-def run_legend(figure, colours: Mapping[str, str], inches: float, **where) -> None:
+def run_legend(figure: Figure, colours: Mapping[str, str], inches: float, **where: Any) -> None:
     """Draw the legend of several runs, by default along the top of the figure, in the room that :func:`legend_layout` gives.
 
     Parameters

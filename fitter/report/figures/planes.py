@@ -2,16 +2,25 @@
 
 from __future__ import annotations
 
-from collections.abc import Callable, Mapping
+from collections.abc import Callable, Mapping, Sequence
 from dataclasses import dataclass
+from typing import TYPE_CHECKING, Any
 
 import numpy as np
 
+from fitter.array_types import FloatArray
 from fitter.errors import InputError
 from fitter.report.facts import axis_label
 from fitter.report.figures.panels import contours, legend_layout, plot_range, run_legend, runs_of, thinned
 from fitter.report.figures.style import COLOURS, GREY, LEVELS, in_style, new_figure, width_inches
 from fitter.report.prose import cite, symbol
+
+if TYPE_CHECKING:
+    from matplotlib.axes import Axes
+    from matplotlib.figure import Figure
+    from numpy.typing import ArrayLike
+
+    from fitter.inference.posterior import Posterior
 
 __all__ = ["PLANES", "no_big_bang", "plane_caption", "plane_figure", "planes_of", "recollapse"]
 
@@ -19,7 +28,7 @@ _COVERED = 1e-3  # share of the draws that a label may cover: beyond the contour
 _PLACES = np.linspace(0.05, 0.95, 37)  # of a label, along the visible part of its line
 
 
-def no_big_bang(omega_m) -> np.ndarray:
+def no_big_bang(omega_m: ArrayLike) -> np.ndarray:
     """Ω_Λ at and above which there was no big bang (Carroll, Press & Turner 1992, eq. 11).
 
     Parameters
@@ -35,7 +44,7 @@ def no_big_bang(omega_m) -> np.ndarray:
         return np.where(m > 0, 4 * m * root**3, 1.0)
 
 
-def recollapse(omega_m) -> np.ndarray:
+def recollapse(omega_m: ArrayLike) -> np.ndarray:
     """Ω_Λ below which the expansion ends in a recollapse (Carroll, Press & Turner 1992, eq. 12)."""
     m = np.asarray(omega_m, dtype=float)
     with np.errstate(invalid="ignore", divide="ignore"):
@@ -95,20 +104,20 @@ PLANES = {
 }
 
 
-def planes_of(posterior) -> list[str]:
+def planes_of(posterior: Posterior) -> list[str]:
     """Names of the planes that a fit can be drawn in."""
     return [name for name, plane in PLANES.items() if {plane.x, plane.y} <= set(posterior.kinds) and posterior.kinds[plane.y] == "sampled"]
 
 
 @in_style
 def plane_figure(
-    posteriors,
+    posteriors: Posterior | Mapping[str, Posterior],
     plane: str,
     *,
     width: str | float = "single",
     reference: Mapping[str, float] | None = None,
     colours: Mapping[str, str] | None = None,
-):
+) -> Figure:
     """Draw 68.3 and 95.4 % contours in one of the planes.
 
     Parameters
@@ -154,12 +163,12 @@ def plane_figure(
     return figure
 
 
-def _limits(columns, show) -> tuple[float, float]:
+def _limits(columns: Sequence[FloatArray], show: tuple[float, float]) -> tuple[float, float]:
     low, high = plot_range(columns)  # with a margin, unless a prior's edge is there: that stands on the frame
     return min(low, show[0]), max(high, show[1])
 
 
-def _draw_lines(ax, plane: Plane, limits, draws) -> None:
+def _draw_lines(ax: Axes, plane: Plane, limits: Sequence[tuple[float, float]], draws: FloatArray) -> None:
     x = np.linspace(limits[0][0], limits[0][1], 400)
     if plane.shade is not None:
         edge = plane.shade(x)
@@ -169,7 +178,7 @@ def _draw_lines(ax, plane: Plane, limits, draws) -> None:
         if edge[0] < top:
             ax.text(0.03, 0.965, plane.shade_label, transform=ax.transAxes, ha="left", va="top", fontsize=8)
     for line in plane.lines:
-        style = {"color": "black", "lw": 0.8, "dashes": line.dashes, "zorder": 4}
+        style: dict[str, Any] = {"color": "black", "lw": 0.8, "dashes": line.dashes, "zorder": 4}
         if line.at is not None:
             ax.axvline(line.at, **style)
         if line.y is not None:
@@ -178,7 +187,7 @@ def _draw_lines(ax, plane: Plane, limits, draws) -> None:
             _label_along(ax, line, x, y, limits, draws)
 
 
-def _label_along(ax, line: Line, x, y, limits, draws) -> None:
+def _label_along(ax: Axes, line: Line, x: FloatArray, y: FloatArray, limits: Sequence[tuple[float, float]], draws: FloatArray) -> None:
     """Write the label along the visible part of its line, turned with it, where it covers least of the posterior."""
     from matplotlib.patheffects import withStroke
 
@@ -186,7 +195,7 @@ def _label_along(ax, line: Line, x, y, limits, draws) -> None:
     if not line.label or len(visible) < 20:
         return
     halo = [withStroke(linewidth=1.6, foreground="white")]  # legible where contours run beneath
-    style = {"rotation_mode": "anchor", "ha": "center", "va": "top" if line.below else "bottom", "fontsize": 8, "zorder": 5}
+    style: dict[str, Any] = {"rotation_mode": "anchor", "ha": "center", "va": "top" if line.below else "bottom", "fontsize": 8, "zorder": 5}
     label = ax.annotate(line.label, (0, 0), xytext=(0, -2 if line.below else 2), textcoords="offset points", path_effects=halo, **style)
     points = ax.transData.transform(draws[:, np.isfinite(draws).all(axis=0)].T)
     frame = ax.get_window_extent()
@@ -209,7 +218,7 @@ def _label_along(ax, line: Line, x, y, limits, draws) -> None:
     put(min((line.where, *_PLACES), key=cost))
 
 
-def plane_caption(plane: str, labels=()) -> str:
+def plane_caption(plane: str, labels: Sequence[str] = ()) -> str:
     """Return the caption of a plane."""
     chosen = PLANES[plane]
     text = f"{symbol(chosen.y)} against {symbol(chosen.x)}. The contours are the smallest regions that hold {100 * LEVELS[0]:.1f} % and "

@@ -5,15 +5,19 @@ from __future__ import annotations
 import io
 import os
 import tempfile
-from collections.abc import Mapping, Sequence
+from collections.abc import Callable, Iterator, Mapping, Sequence
 from contextlib import contextmanager, nullcontext
 from contextvars import ContextVar
 from functools import partial, wraps
 from pathlib import Path
+from typing import TYPE_CHECKING, Any, BinaryIO, ParamSpec
 
 from fitter.errors import InputError
 from fitter.report.citations import SHORT
 from fitter.report.prose import plain
+
+if TYPE_CHECKING:
+    from matplotlib.figure import Figure
 
 __all__ = [
     "COLOURS",
@@ -36,6 +40,7 @@ LEVELS = (0.683, 0.954)  # probability inside the contours
 COLOURS = ("#1f4e9c", "#d9730d", "#57b5a6", "#59093b", "#9898d9", "#735f3f")
 GREY = "#8c8c8c"
 _active = ContextVar("style in force", default=False)
+_P = ParamSpec("_P")
 _RESOLUTION = 200  # dots per inch of the PNG
 
 STYLE: dict[str, object] = {
@@ -72,7 +77,7 @@ STYLE: dict[str, object] = {
 
 
 @contextmanager
-def styled(style: str | Path | Mapping | None = None):
+def styled(style: str | Path | Mapping | None = None) -> Iterator[None]:
     """Draw and save figures in the house style while this context is open.
 
     Parameters
@@ -96,11 +101,11 @@ def styled(style: str | Path | Mapping | None = None):
         _active.reset(token)
 
 
-def in_style(draw):
+def in_style(draw: Callable[_P, Figure]) -> Callable[_P, Figure]:
     """Decorate a function that returns a Figure: it draws in the house style unless a style is in force already."""
 
     @wraps(draw)
-    def drawn(*args, **options):
+    def drawn(*args: _P.args, **options: _P.kwargs) -> Figure:
         if _active.get():
             return draw(*args, **options)
         with styled():
@@ -149,7 +154,7 @@ def width_inches(width: str | float) -> float:
     return float(width)
 
 
-def new_figure(width: str | float = "single", ratio: float = 0.75, *, height: float | None = None):
+def new_figure(width: str | float = "single", ratio: float = 0.75, *, height: float | None = None) -> Figure:
     """Return an empty Figure of a printed width; no window, no display, no global state.
 
     Parameters
@@ -167,7 +172,9 @@ def new_figure(width: str | float = "single", ratio: float = 0.75, *, height: fl
     return Figure(figsize=(inches, height if height is not None else ratio * inches))
 
 
-def save_figure(figure, path: Path, caption: str = "", *, formats: Sequence[str] = ("pdf", "png"), style=None) -> list[Path]:
+def save_figure(
+    figure: Figure, path: Path, caption: str = "", *, formats: Sequence[str] = ("pdf", "png"), style: str | Path | Mapping | None = None
+) -> list[Path]:
     """Write a figure in each format, and its caption as text beside it, each atomically.
 
     Parameters
@@ -196,7 +203,7 @@ def save_figure(figure, path: Path, caption: str = "", *, formats: Sequence[str]
             # No creation date: the same fit gives the same file.
             metadata = {"pdf": {"CreationDate": None}, "svg": {"Date": None}}.get(fmt)
             target = path.with_name(f"{path.name}.{fmt}")
-            _atomically(target, lambda f, fmt=fmt, m=metadata: figure.savefig(f, format=fmt, dpi=_RESOLUTION, metadata=m))
+            _atomically(target, partial(figure.savefig, format=fmt, dpi=_RESOLUTION, metadata=metadata))
             written.append(target)
     if caption:
         target = path.with_name(f"{path.name}.txt")
@@ -205,7 +212,7 @@ def save_figure(figure, path: Path, caption: str = "", *, formats: Sequence[str]
     return written
 
 
-def _atomically(target: Path, write) -> None:
+def _atomically(target: Path, write: Callable[[BinaryIO], object]) -> None:
     """Write to a temporary file in the same folder, then rename."""
     descriptor, temporary = tempfile.mkstemp(prefix=f".{target.name}.", dir=target.parent)
     try:
@@ -227,13 +234,14 @@ def _umask() -> int:
     return mask
 
 
-def shown_in_notebooks(figure):
+def shown_in_notebooks(figure: Figure) -> Figure:
     """Let a notebook show a figure that pyplot does not know of; returns the figure."""
-    figure._repr_png_ = partial(_png, figure)
+    with_picture: Any = figure  # matplotlib declares no such method
+    with_picture._repr_png_ = partial(_png, figure)
     return figure
 
 
-def _png(figure) -> bytes:
+def _png(figure: Figure) -> bytes:
     stream = io.BytesIO()
     figure.savefig(stream, format="png", dpi=110)
     return stream.getvalue()

@@ -3,8 +3,14 @@
 from __future__ import annotations
 
 from dataclasses import dataclass
+from typing import TYPE_CHECKING
 
 import numpy as np
+
+from fitter.array_types import BoolArray, FloatArray, IntArray
+
+if TYPE_CHECKING:
+    from fitter.sample.noise import Noise
 
 __all__ = ["BinnedMeans", "binned_means", "redshift_edges"]
 
@@ -53,7 +59,9 @@ def redshift_edges(redshift: np.ndarray, bins: int | None = None) -> np.ndarray:
     return edges
 
 
-def binned_means(noise, residual, redshift, edges, *, scale: float = 1.0, apart=None) -> BinnedMeans:
+def binned_means(
+    noise: Noise, residual: FloatArray, redshift: FloatArray, edges: FloatArray, *, scale: float = 1.0, apart: BoolArray | None = None
+) -> BinnedMeans:
     """Generalised least squares mean of the residuals in each bin.
 
     Parameters
@@ -96,7 +104,7 @@ def binned_means(noise, residual, redshift, edges, *, scale: float = 1.0, apart=
     return BinnedMeans(np.exp(log_z[keep]), solution[:b][keep], covariance, count[keep])
 
 
-def _normal_matrix(noise, residual, column, b: int) -> np.ndarray:
+def _normal_matrix(noise: Noise, residual: FloatArray, column: IntArray, b: int) -> np.ndarray:
     """[X U r]ᵀ S⁻¹ [X U r], summed over blocks of rows where S is diagonal."""
     n = len(residual)
     blocks = [slice(i, min(i + _BLOCK, n)) for i in range(0, n, _BLOCK)] if noise.is_diagonal else [slice(None)]

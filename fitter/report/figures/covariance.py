@@ -4,14 +4,24 @@ from __future__ import annotations
 
 from collections.abc import Mapping
 from dataclasses import dataclass
+from typing import TYPE_CHECKING, Any
 
 import numpy as np
 
+from fitter.array_types import FloatArray, IntArray
 from fitter.report.figures.binned import redshift_edges
 from fitter.report.figures.groups import group_codes, short_name
 from fitter.report.figures.panels import redshift_ticks
 from fitter.report.figures.style import COLOURS, in_style, new_figure, width_inches
 from fitter.report.information import noise_parameter, noise_scale
+
+if TYPE_CHECKING:
+    from matplotlib.axes import Axes
+    from matplotlib.figure import Figure
+
+    from fitter.likelihood.posterior import LogPosterior
+    from fitter.sample.noise import Noise
+    from fitter.sample.sample import Sample
 
 __all__ = [
     "BudgetData",
@@ -55,7 +65,7 @@ class CorrelationData:
     count: np.ndarray
 
 
-def correlation_data(sample, noise=None) -> CorrelationData:
+def correlation_data(sample: Sample, noise: Noise | None = None) -> CorrelationData:
     """Work out the mean correlations, survey by survey, each in order of redshift.
 
     Parameters
@@ -93,7 +103,7 @@ def correlation_data(sample, noise=None) -> CorrelationData:
     return CorrelationData(matrix, np.array(names), low, high, count)
 
 
-def _cells(sample) -> tuple[np.ndarray, list[str], int]:
+def _cells(sample: Sample) -> tuple[np.ndarray, list[str], int]:
     """Cell of each row (−1 for calibrators), the survey of each cell, and their number."""
     flow = np.flatnonzero(~np.asarray(sample.is_calibrator))
     group = None if sample.group is None else np.asarray(sample.group)[flow]
@@ -110,7 +120,7 @@ def _cells(sample) -> tuple[np.ndarray, list[str], int]:
     return cell, of_cell, len(of_cell)
 
 
-def _dense_sums(dense, sigma, cell, b: int) -> np.ndarray:
+def _dense_sums(dense: FloatArray, sigma: FloatArray, cell: IntArray, b: int) -> np.ndarray:
     """Sum of dense_ij / (σi σj) over the members of every two cells, in blocks of rows."""
     members = np.zeros((len(cell), b))
     members[np.flatnonzero(cell >= 0), cell[cell >= 0]] = 1.0
@@ -123,7 +133,7 @@ def _dense_sums(dense, sigma, cell, b: int) -> np.ndarray:
 
 
 @in_style
-def draw_correlation(data: CorrelationData, *, width: str | float = "single"):
+def draw_correlation(data: CorrelationData, *, width: str | float = "single") -> Figure:
     """Draw the matrix of mean correlations, with the surveys named along it.
 
     Parameters
@@ -144,21 +154,21 @@ def draw_correlation(data: CorrelationData, *, width: str | float = "single"):
     side = inches - left - right
     height = side + below + above
     figure = new_figure(inches, height=height)
-    ax = figure.add_axes([left / inches, below / height, side / inches, side / height])
+    ax = figure.add_axes((left / inches, below / height, side / inches, side / height))
     finite = np.abs(data.matrix[np.isfinite(data.matrix)])
     reach = float(finite.max()) if finite.size and finite.max() > 0 else 1.0
     lowest = -reach if np.nanmin(data.matrix, initial=0.0) < -0.02 * reach else 0.0
     # White is zero, red positive, blue negative, whatever the range.
     half = ListedColormap(colormaps["RdBu_r"](np.linspace(0.5 if lowest == 0 else 0.0, 1.0, 256)))
     image = ax.imshow(data.matrix, cmap=half, vmin=lowest, vmax=reach, interpolation="nearest", origin="upper")
-    bar = figure.colorbar(image, cax=figure.add_axes([(left + side + 0.07) / inches, below / height, 0.1 / inches, side / height]))
+    bar = figure.colorbar(image, cax=figure.add_axes(((left + side + 0.07) / inches, below / height, 0.1 / inches, side / height)))
     bar.set_label("Mean correlation", labelpad=2)
     bar.ax.yaxis.set_major_locator(MaxNLocator(5))
     _name_surveys(ax, data, side)
     return figure
 
 
-def _name_surveys(ax, data: CorrelationData, side: float) -> None:
+def _name_surveys(ax: Axes, data: CorrelationData, side: float) -> None:
     b = len(data.group)
     starts = np.flatnonzero(np.r_[True, data.group[1:] != data.group[:-1]])
     stops = [*starts[1:].tolist(), b]
@@ -169,7 +179,7 @@ def _name_surveys(ax, data: CorrelationData, side: float) -> None:
     ax.set_yticks([])
     wanted = np.array([side * 0.5 * (start + stop) / b for start, stop in zip(starts.tolist(), stops, strict=True)])
     for i, position in enumerate(_apart(wanted, 0.5 * _NAME_HEIGHT, side + _BELOW - 0.5 * _NAME_HEIGHT - 0.02)):
-        place = {"transform": ax.transAxes, "ha": "right", "va": "center", "fontsize": 8, "linespacing": 1.0}
+        place: dict[str, Any] = {"transform": ax.transAxes, "ha": "right", "va": "center", "fontsize": 8, "linespacing": 1.0}
         ax.text(-0.05, 1 - position / side, _survey_text(data, int(starts[i]), stops[i]), **place)
         ends = [-0.04, -0.01], [1 - position / side, 1 - wanted[i] / side]
         ax.plot(*ends, transform=ax.transAxes, color="black", lw=0.4, clip_on=False)
@@ -227,7 +237,7 @@ class BudgetData:
     variance: np.ndarray
 
 
-def budget_data(log_posterior, values: Mapping[str, float]) -> BudgetData:
+def budget_data(log_posterior: LogPosterior, values: Mapping[str, float]) -> BudgetData:
     """Work out what the variance of the data is made of, bin by bin.
 
     Parameters
@@ -268,7 +278,7 @@ def _largest(labels: list[str], variance: np.ndarray) -> tuple[list[str], np.nda
 
 
 @in_style
-def draw_budget(data: BudgetData, *, width: str | float = "single"):
+def draw_budget(data: BudgetData, *, width: str | float = "single") -> Figure:
     """Draw the share of each term against redshift, and above it the whole standard deviation.
 
     Parameters
@@ -309,21 +319,21 @@ def draw_budget(data: BudgetData, *, width: str | float = "single"):
     return figure
 
 
-def _sigma_panel(ax, data: BudgetData) -> None:
+def _sigma_panel(ax: Axes, data: BudgetData) -> None:
     sigma = np.sqrt(data.variance.sum(axis=0))
     ax.stairs(sigma, data.edges, color="black", lw=1.0, baseline=None)
     ax.set_ylim(0, 1.15 * float(sigma.max()))
     ax.set_ylabel(r"$\sigma$  [mag]")
 
 
-def _redshift_axis(ax, data: BudgetData) -> None:
+def _redshift_axis(ax: Axes, data: BudgetData) -> None:
     ax.set_xlabel("Redshift  $z$")
     ax.set_xscale("log")
     ax.set_xlim(data.edges[0], data.edges[-1])
     redshift_ticks(ax)
 
 
-def _draw_sigma(data: BudgetData, inches: float):
+def _draw_sigma(data: BudgetData, inches: float) -> Figure:
     """The standard deviation alone: of one term there are no shares."""
     figure = new_figure(inches, height=0.5 + (1.5 if inches < 5 else 1.9))
     height = figure.get_figheight()

@@ -12,7 +12,7 @@ MOST_GROUPS = 6
 _OTHERS = "#555555"
 
 
-def group_codes(group, n: int) -> tuple[list[str], np.ndarray]:
+def group_codes(group: np.ndarray | None, n: int) -> tuple[list[str], np.ndarray]:
     """Return the names of the largest groups, the rest as ``others``, and the (n,) position in that list of each row.
 
     Parameters

@@ -4,14 +4,24 @@ from __future__ import annotations
 
 from collections.abc import Mapping
 from dataclasses import dataclass, field
+from typing import TYPE_CHECKING
 
 import numpy as np
 
+from fitter.array_types import FloatArray
 from fitter.cosmology import get_model
 from fitter.cosmology.adaptive import log_distance_at
 from fitter.errors import InputError
 from fitter.report.figures.panels import legend_layout, run_legend, runs_of
 from fitter.report.figures.style import COLOURS, in_style, new_figure, width_inches
+
+if TYPE_CHECKING:
+    from matplotlib.axes import Axes
+    from matplotlib.figure import Figure
+
+    from fitter.cosmology import Model
+    from fitter.inference.posterior import Posterior
+    from fitter.likelihood.posterior import LogPosterior
 
 __all__ = ["HistoryData", "draw_history", "history_caption", "history_data"]
 
@@ -52,7 +62,7 @@ class HistoryData:
     undefined: float = 0.0
 
 
-def history_data(log_posterior, posterior) -> HistoryData:
+def history_data(log_posterior: LogPosterior, posterior: Posterior) -> HistoryData:
     """Work out the history of the expansion over the redshifts of the data.
 
     Parameters
@@ -83,7 +93,7 @@ def history_data(log_posterior, posterior) -> HistoryData:
     return HistoryData(z, {name: np.nanquantile(bands[name], PROBABILITIES, axis=0) for name in order}, began, undefined)
 
 
-def expansion(model, z, own, omega_r):
+def expansion(model: Model, z: FloatArray, own: FloatArray, omega_r: float | FloatArray) -> tuple[FloatArray, FloatArray]:
     """E² and q = −1 + ½ d ln E² / d ln(1+z) of a model, (W, m) each.
 
     Parameters
@@ -100,13 +110,13 @@ def expansion(model, z, own, omega_r):
     return e2, -1 + 0.5 * slope / e2
 
 
-def _distance(log_posterior, own, omega_r, z) -> np.ndarray:
+def _distance(log_posterior: LogPosterior, own: FloatArray, omega_r: float | FloatArray, z: FloatArray) -> np.ndarray:
     """Distance moduli minus those of flat ΛCDM with the same H0, (W, m)."""
     reference = log_distance_at(get_model("flat_lcdm"), np.array([[REFERENCE_OMEGA_M]]), z, float(np.mean(omega_r)))
     return log_distance_at(log_posterior.model, own, z, omega_r) - reference
 
 
-def _began(posterior) -> tuple[np.ndarray | None, float]:
+def _began(posterior: Posterior) -> tuple[np.ndarray | None, float]:
     if "z_acceleration" not in posterior.kinds:
         return None, 0.0
     draws = np.asarray(posterior.draws("z_acceleration"), dtype=float)
@@ -117,7 +127,7 @@ def _began(posterior) -> tuple[np.ndarray | None, float]:
 
 
 @in_style
-def draw_history(histories, *, width: str | float = "double"):
+def draw_history(histories: HistoryData | Mapping[str, HistoryData], *, width: str | float = "double") -> Figure:
     """Draw the bands of one fit, or of several over each other.
 
     Parameters
@@ -158,7 +168,7 @@ def draw_history(histories, *, width: str | float = "double"):
     return figure
 
 
-def _panel(ax, name: str, runs: Mapping[str, HistoryData]) -> None:
+def _panel(ax: Axes, name: str, runs: Mapping[str, HistoryData]) -> None:
     from matplotlib.ticker import MaxNLocator
 
     ends = []
@@ -187,7 +197,7 @@ def _panel(ax, name: str, runs: Mapping[str, HistoryData]) -> None:
     ax.set_ylabel(_LABELS[name])
 
 
-def history_caption(histories) -> str:
+def history_caption(histories: HistoryData | Mapping[str, HistoryData]) -> str:
     """Return the caption of the history figure."""
     runs = runs_of(histories)
     names = {name for run in runs.values() for name in run.bands}

@@ -2,17 +2,28 @@
 
 from __future__ import annotations
 
-from collections.abc import Sequence
+from collections.abc import Iterator, Sequence
 from dataclasses import dataclass
+from typing import TYPE_CHECKING, Any
 
 import numpy as np
 
+from fitter.array_types import BoolArray, FloatArray
 from fitter.errors import InputError
 from fitter.report.figures.binned import BinnedMeans, binned_means, redshift_edges
 from fitter.report.figures.groups import MOST_GROUPS, group_codes, group_colour, short_name
 from fitter.report.figures.panels import redshift_ticks
 from fitter.report.figures.style import COLOURS, GREY, in_style, new_figure, width_inches
 from fitter.report.information import fitted_noise, noise_scale
+
+if TYPE_CHECKING:
+    from matplotlib.axes import Axes
+    from matplotlib.figure import Figure
+
+    from fitter.inference.optimum import Optimum
+    from fitter.inference.posterior import Posterior
+    from fitter.likelihood.posterior import LogPosterior
+    from fitter.sample.sample import Sample
 
 __all__ = ["REFERENCES", "HubbleData", "draw_hubble", "hubble_caption", "hubble_data", "hubble_figure"]
 
@@ -65,7 +76,9 @@ class HubbleData:
     n: int
 
 
-def hubble_data(log_posterior, optimum, posterior=None, *, bins: int | None = None) -> HubbleData:
+def hubble_data(
+    log_posterior: LogPosterior, optimum: Optimum, posterior: Posterior | None = None, *, bins: int | None = None
+) -> HubbleData:
     """Work out what the Hubble diagram shows.
 
     Parameters
@@ -108,7 +121,7 @@ def hubble_data(log_posterior, optimum, posterior=None, *, bins: int | None = No
     )
 
 
-def _axis(sample, zero_point: float) -> tuple[str, float]:
+def _axis(sample: Sample, zero_point: float) -> tuple[str, float]:
     """Label of the upper axis, and what is taken off the data to get there."""
     if sample.distance_scale == "relative":
         if sample.data_kind == "magnitude":
@@ -119,12 +132,12 @@ def _axis(sample, zero_point: float) -> tuple[str, float]:
     return r"Distance modulus  $\mu$  [mag]", zero_point
 
 
-def _predicted(log_posterior, theta, z) -> np.ndarray:
+def _predicted(log_posterior: LogPosterior, theta: FloatArray, z: FloatArray) -> np.ndarray:
     """What the data would be at these redshifts without noise, mag."""
     return log_posterior.distance_modulus(theta[None], z)[0] + log_posterior.zero_point(theta)
 
 
-def _band(log_posterior, posterior, theta, z) -> np.ndarray:
+def _band(log_posterior: LogPosterior, posterior: Posterior | None, theta: FloatArray, z: FloatArray) -> np.ndarray:
     """Central 95.4 % of the predictions of posterior draws, minus the best fit, (2, m)."""
     if posterior is None:
         return np.zeros((2, len(z)))
@@ -136,7 +149,9 @@ def _band(log_posterior, posterior, theta, z) -> np.ndarray:
     return np.stack([low, high]) - _predicted(log_posterior, theta, z)
 
 
-def hubble_figure(log_posterior, optimum, posterior=None, *, bins: int | None = None, **how):
+def hubble_figure(
+    log_posterior: LogPosterior, optimum: Optimum, posterior: Posterior | None = None, *, bins: int | None = None, **how: Any
+) -> Figure:
     """Draw the Hubble diagram of a fit with residuals from the best fit.
 
     Parameters
@@ -154,7 +169,9 @@ def hubble_figure(log_posterior, optimum, posterior=None, *, bins: int | None = 
 
 
 @in_style
-def draw_hubble(data: HubbleData, *, width: str | float = "double", references: Sequence[str] = ("no_dark_energy", "matter_only")):
+def draw_hubble(
+    data: HubbleData, *, width: str | float = "double", references: Sequence[str] = ("no_dark_energy", "matter_only")
+) -> Figure:
     """Draw a Hubble diagram from what :func:`hubble_data` worked out.
 
     Parameters
@@ -187,9 +204,9 @@ def draw_hubble(data: HubbleData, *, width: str | float = "double", references: 
     return figure
 
 
-def _draw_points(upper, lower, data: HubbleData) -> None:
+def _draw_points(upper: Axes, lower: Axes, data: HubbleData) -> None:
     if data.error is not None:
-        style = {"fmt": "o", "ms": 2.6, "lw": 0.8, "color": COLOURS[0], "zorder": 4}
+        style: dict[str, Any] = {"fmt": "o", "ms": 2.6, "lw": 0.8, "color": COLOURS[0], "zorder": 4}
         upper.errorbar(data.redshift, data.shown, data.error, label="data", **style)
         lower.errorbar(data.redshift, data.residual, data.error, **style)
         return
@@ -202,7 +219,7 @@ def _draw_points(upper, lower, data: HubbleData) -> None:
         lower.plot(data.redshift[members], data.residual[members], **style)
 
 
-def _groups(data: HubbleData):
+def _groups(data: HubbleData) -> Iterator[tuple[str, str, BoolArray]]:
     """Yield label, colour and members: by survey where there are a few of them, coloured as in the other figures."""
     names, code = group_codes(data.group, len(data.redshift))
     if not 2 <= len(names) <= MOST_GROUPS:
@@ -212,21 +229,21 @@ def _groups(data: HubbleData):
         yield short_name(name), group_colour(i), code == i
 
 
-def _draw_model(upper, lower, data: HubbleData) -> None:
+def _draw_model(upper: Axes, lower: Axes, data: HubbleData) -> None:
     upper.plot(data.curve_redshift, data.curve, color="black", lw=0.9, zorder=3, label="best fit")
     lower.axhline(0.0, color="black", lw=0.9, zorder=3)
     if data.band.any():
-        shade = {"color": "black", "alpha": 0.16, "lw": 0, "zorder": 2}
+        shade: dict[str, Any] = {"color": "black", "alpha": 0.16, "lw": 0, "zorder": 2}
         lower.fill_between(data.curve_redshift, *data.band, **shade)
         upper.fill_between([], [], [], label="posterior, 95.4 %", **shade)  # it would be thinner than the line here: the legend needs it
 
 
-def _draw_bins(upper, lower, data: HubbleData) -> None:
+def _draw_bins(upper: Axes, lower: Axes, data: HubbleData) -> None:
     if data.bins is None:
         return
     bins = data.bins
     at_model = np.interp(np.log(bins.redshift), np.log(data.curve_redshift), data.curve)
-    style = {"fmt": "s", "ms": 3.4, "lw": 1.0, "color": "black", "mec": "white", "mew": 0.4, "zorder": 5}
+    style: dict[str, Any] = {"fmt": "s", "ms": 3.4, "lw": 1.0, "color": "black", "mec": "white", "mew": 0.4, "zorder": 5}
     upper.errorbar(bins.redshift, at_model + bins.mean, bins.error, label="binned", **style)
     lower.errorbar(bins.redshift, bins.mean, bins.error, **style)
 
@@ -237,14 +254,14 @@ def reference_distance(name: str, z: np.ndarray, omega_m: float | None) -> np.nd
     return z * (1 + z * (1 - q) / (np.sqrt(1 + 2 * q * z) + 1 + q * z))
 
 
-def _draw_references(upper, lower, data: HubbleData, references: Sequence[str]) -> list:
+def _draw_references(upper: Axes, lower: Axes, data: HubbleData, references: Sequence[str]) -> list:
     """Draw the reference models in both panels; return the lines of the upper one for the legend."""
     z, lines = data.curve_redshift, []
     for name, dashes in zip(references, ((5, 2), (1, 1.5), (5, 2, 1, 2)), strict=False):
         if name == "no_dark_energy" and data.omega_m is None:
             continue
         modulus = 5 * np.log10(reference_distance(name, z, data.omega_m)) + data.intercept
-        style = {"color": "black", "lw": 0.8, "dashes": dashes, "zorder": 2, "label": REFERENCES[name]}
+        style: dict[str, Any] = {"color": "black", "lw": 0.8, "dashes": dashes, "zorder": 2, "label": REFERENCES[name]}
         lines += upper.plot(z, modulus, **style)
         lower.plot(z, modulus - data.curve, **style)
     return lines
@@ -264,7 +281,7 @@ def beyond_panel(data: HubbleData) -> np.ndarray:
     return np.abs(data.residual) > _reach(data)
 
 
-def _mark_beyond(lower, data: HubbleData) -> None:
+def _mark_beyond(lower: Axes, data: HubbleData) -> None:
     """Mark residuals outside the panel by triangles at its edge."""
     beyond, edge = beyond_panel(data), 0.965 * _reach(data)
     for _, colour, members in _groups(data):
@@ -289,7 +306,7 @@ def _off_the_seam(limits: tuple[float, float], wanted: int) -> list[float]:
     return ticks
 
 
-def _dress(figure, upper, lower, data: HubbleData) -> None:
+def _dress(figure: Figure, upper: Axes, lower: Axes, data: HubbleData) -> None:
     upper.set_xscale("log")
     lower.set_xlim(data.curve_redshift[0], data.curve_redshift[-1])
     reach = _reach(data)

@@ -3,20 +3,30 @@
 from __future__ import annotations
 
 from dataclasses import dataclass
+from typing import TYPE_CHECKING, Any
 
 import numpy as np
 
+from fitter.array_types import IntArray
 from fitter.report.figures.groups import group_codes, group_colour, short_name
 from fitter.report.figures.panels import redshift_ticks
 from fitter.report.figures.style import COLOURS, in_style, new_figure, width_inches
 from fitter.report.information import fitted_noise, noise_scale
+
+if TYPE_CHECKING:
+    from matplotlib.axes import Axes
+    from matplotlib.figure import Figure
+
+    from fitter.inference.optimum import Optimum
+    from fitter.likelihood.posterior import LogPosterior
+    from fitter.sample.noise import Noise
 
 __all__ = ["ResidualData", "decorrelated", "draw_residuals", "residual_data", "residuals_caption", "residuals_figure"]
 
 _MOST_POINTS = 20_000
 
 
-def decorrelated(noise, residual: np.ndarray, scale: float = 1.0) -> np.ndarray:
+def decorrelated(noise: Noise, residual: np.ndarray, scale: float = 1.0) -> np.ndarray:
     """Return residuals made independent and of unit variance: z with |z|² = rᵀC⁻¹r.
 
     Parameters
@@ -76,7 +86,7 @@ class ResidualData:
     edges: np.ndarray
 
 
-def residual_data(log_posterior, optimum) -> ResidualData:
+def residual_data(log_posterior: LogPosterior, optimum: Optimum) -> ResidualData:
     """Work out pulls and decorrelated residuals at the best fit.
 
     Parameters
@@ -111,20 +121,20 @@ def residual_data(log_posterior, optimum) -> ResidualData:
     )
 
 
-def _evenly(code, groups: int) -> np.ndarray:
+def _evenly(code: IntArray, groups: int) -> np.ndarray:
     """Rows to draw: all, or of each group an even share."""
     rows = [np.flatnonzero(code == i) for i in range(groups)]
     stride = max(1, -(-len(code) // _MOST_POINTS))
     return np.concatenate([r[::stride] for r in rows])
 
 
-def residuals_figure(log_posterior, optimum, *, width: str | float = "double"):
+def residuals_figure(log_posterior: LogPosterior, optimum: Optimum, *, width: str | float = "double") -> Figure:
     """Draw the residuals of a fit: :func:`draw_residuals` of :func:`residual_data`."""
     return draw_residuals(residual_data(log_posterior, optimum), width=width)
 
 
 @in_style
-def draw_residuals(data: ResidualData, *, width: str | float = "double"):
+def draw_residuals(data: ResidualData, *, width: str | float = "double") -> Figure:
     """Draw the pulls against redshift, and the decorrelated residuals against the normal they should follow.
 
     Parameters
@@ -148,10 +158,10 @@ def draw_residuals(data: ResidualData, *, width: str | float = "double"):
     return figure
 
 
-def _against_redshift(ax, data: ResidualData) -> None:
+def _against_redshift(ax: Axes, data: ResidualData) -> None:
     for i in range(len(data.names)):
         rows = data.code == i
-        style = {"ls": "", "marker": "o", "ms": 1.8, "mew": 0, "alpha": 0.6, "rasterized": data.n > 2000}
+        style: dict[str, Any] = {"ls": "", "marker": "o", "ms": 1.8, "mew": 0, "alpha": 0.6, "rasterized": data.n > 2000}
         ax.plot(data.redshift[rows], data.pull[rows], color=group_colour(i), **style)
     ax.set_xscale("log")
     for level in (-2, 0, 2):
@@ -161,7 +171,7 @@ def _against_redshift(ax, data: ResidualData) -> None:
     ax.set_ylabel(r"Pull  $r/\sigma$")
 
 
-def _by_group(ax, data: ResidualData) -> None:
+def _by_group(ax: Axes, data: ResidualData) -> None:
     for i, (low, median, high) in enumerate(data.quantiles):
         ax.errorbar(median, i, xerr=[[median - low], [high - median]], fmt="s", color=group_colour(i), ms=4, lw=1.2, capsize=2)
         # Names stand inside the panel: their length must not decide the layout.
@@ -175,7 +185,7 @@ def _by_group(ax, data: ResidualData) -> None:
     ax.set_xlabel(r"Pull  $r/\sigma$: median and central 68.3 %")
 
 
-def _histogram(ax, data: ResidualData) -> None:
+def _histogram(ax: Axes, data: ResidualData) -> None:
     ax.bar(data.edges[:-1], data.density, np.diff(data.edges), align="edge", color=COLOURS[0], alpha=0.35)
     x = np.linspace(data.edges[0], data.edges[-1], 300)
     ax.plot(x, np.exp(-(x**2) / 2) / np.sqrt(2 * np.pi), color="black", lw=0.9)
@@ -184,7 +194,7 @@ def _histogram(ax, data: ResidualData) -> None:
     ax.set_ylabel("Density")
 
 
-def _quantiles(ax, data: ResidualData) -> None:
+def _quantiles(ax: Axes, data: ResidualData) -> None:
     from scipy.special import betaincinv, ndtri
 
     n, rank = data.n, data.rank

@@ -7,6 +7,7 @@ import types
 import typing
 from dataclasses import dataclass, fields, is_dataclass
 from pathlib import Path
+from typing import TYPE_CHECKING, Any, TypeVar
 
 import numpy as np
 
@@ -18,10 +19,19 @@ from fitter.report.figures.residuals import ResidualData, residual_data
 from fitter.report.hdf5 import writing_hdf5
 from fitter.report.information import fitted_noise
 
+if TYPE_CHECKING:
+    import h5py
+    from _typeshed import DataclassInstance
+
+    from fitter.inference.optimum import Optimum
+    from fitter.inference.posterior import Posterior
+    from fitter.likelihood.posterior import LogPosterior
+
 __all__ = ["DATA_FILE", "FigureData", "collect", "read_figure_data", "write_figure_data"]
 
 DATA_FILE = "figures_data.h5"
 _FORMAT = "mufitter figures 1"
+_Stored = TypeVar("_Stored", bound="DataclassInstance")
 _CURE = "Make the run again with `mufitter fit CONFIG --replace`"
 
 
@@ -36,7 +46,7 @@ class FigureData:
     budget: BudgetData | None
 
 
-def collect(log_posterior, optimum, posterior) -> FigureData:
+def collect(log_posterior: LogPosterior, optimum: Optimum, posterior: Posterior) -> FigureData:
     """Work out what the figures of a fit show.
 
     Parameters
@@ -89,7 +99,7 @@ def read_figure_data(path: str | Path) -> FigureData:
         raise InputError(f"the figures' data are damaged or cut short: {error}", file=path, cure=_CURE) from None
 
 
-def _store(group, value) -> None:
+def _store(group: h5py.Group, value: Any) -> None:
     """Write the fields of a dataclass: arrays as datasets, the rest as attributes in JSON, what is None not at all."""
     for field in fields(value):
         item = getattr(value, field.name)
@@ -108,13 +118,13 @@ def _store(group, value) -> None:
             group.create_dataset(field.name, data=json.dumps(item.tolist() if isinstance(item, np.ndarray) else item))
 
 
-def _load(kind, group):
+def _load(kind: type[_Stored], group: h5py.Group) -> _Stored:
     """Read a dataclass back, by the types of its fields."""
     types_of = typing.get_type_hints(kind)
     return kind(**{field.name: _item(types_of[field.name], group, field.name) for field in fields(kind)})
 
 
-def _item(kind, group, name: str):
+def _item(kind: Any, group: h5py.Group, name: str) -> Any:
     options = typing.get_args(kind) if isinstance(kind, types.UnionType) else (kind,)
     if name not in group:
         if type(None) not in options:
@@ -122,7 +132,7 @@ def _item(kind, group, name: str):
         return None
     kind = next(option for option in options if option is not type(None))
     stored = group[name]
-    if is_dataclass(kind):
+    if isinstance(kind, type) and is_dataclass(kind):
         return _load(kind, stored)
     if typing.get_origin(kind) is dict:
         return {key: data[()] for key, data in stored.items()}

@@ -6,6 +6,7 @@ from collections.abc import Callable, Mapping, Sequence
 from dataclasses import dataclass
 from functools import cached_property
 from pathlib import Path
+from typing import TYPE_CHECKING
 
 import numpy as np
 
@@ -23,6 +24,9 @@ from fitter.report.figures.settings import FIGURES, FigureSettings
 from fitter.report.figures.style import save_figure, styled
 from fitter.report.page import Picture, picture_of
 
+if TYPE_CHECKING:
+    from fitter.inference.posterior import Posterior
+
 __all__ = ["OVERLAID", "Drawable", "drawings", "overlays", "save_drawings"]
 
 OVERLAID = ("corner", "planes", "history")  # figures that several runs can share
@@ -39,7 +43,7 @@ class Drawable:
         What its figures show, or the run folder to read that from when a figure asks for it.
     """
 
-    posterior: object
+    posterior: Posterior
     source: FigureData | Path
 
     @cached_property
@@ -114,14 +118,14 @@ def _known(names: Sequence[str], known: Sequence[str]) -> list[str]:
     return list(dict.fromkeys(names))
 
 
-def _corner(posteriors, how: FigureSettings, names) -> Drawing:
+def _corner(posteriors: Posterior | Mapping[str, Posterior], how: FigureSettings, names: Sequence[str] | None) -> Drawing:
     mark = how.mark or None
     return Drawing(
         "corner", lambda w: corner_figure(posteriors, names, width=w or "double", reference=mark), corner_caption(posteriors, names)
     )
 
 
-def _plane(posteriors, plane: str, how: FigureSettings) -> Drawing:
+def _plane(posteriors: Posterior | Mapping[str, Posterior], plane: str, how: FigureSettings) -> Drawing:
     chosen = PLANES[plane]
     mark = how.mark if {chosen.x, chosen.y} <= set(how.mark) else None
     labels = list(posteriors) if isinstance(posteriors, Mapping) else []

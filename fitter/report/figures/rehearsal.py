@@ -2,11 +2,17 @@
 
 from __future__ import annotations
 
+from typing import TYPE_CHECKING
+
 import numpy as np
 
 from fitter.report.facts import parameter
 from fitter.report.figures.style import COLOURS, GREY, in_style, new_figure
 from fitter.study.calibration import BINS
+
+if TYPE_CHECKING:
+    from matplotlib.axes import Axes
+    from matplotlib.figure import Figure
 
 __all__ = ["rehearsal_caption", "rehearsal_figure"]
 
@@ -15,7 +21,7 @@ _BANDS = ((0.683, 0.35), (0.954, 0.18))  # probability and opacity
 
 
 @in_style
-def rehearsal_figure(result: dict):
+def rehearsal_figure(result: dict) -> Figure:
     """Return one rank histogram a parameter, and the distribution of χ².
 
     Parameters
@@ -57,7 +63,7 @@ def _margins(across: int, down: int) -> dict:
     }  # fmt: skip
 
 
-def _ranks(axes, ranks: dict, mocks: int, name: str) -> None:
+def _ranks(axes: Axes, ranks: dict, mocks: int, name: str) -> None:
     from scipy.special import bdtrik
 
     edges = np.linspace(0, 1, BINS + 1)
@@ -70,7 +76,7 @@ def _ranks(axes, ranks: dict, mocks: int, name: str) -> None:
     axes.text(0.05, 0.93, f"$p$ = {ranks['ks_p_value']:.2g}", transform=axes.transAxes, va="top", fontsize=8)
 
 
-def _chi2(axes, chi2: np.ndarray, dof: int) -> None:
+def _chi2(axes: Axes, chi2: np.ndarray, dof: int) -> None:
     from scipy.special import gammaln
 
     spread = 4 * np.sqrt(2 * dof)

@@ -37,12 +37,12 @@ class FigureSettings(BaseModel):
 
     @field_validator("only", "formats", "parameters", "models", mode="before")
     @classmethod
-    def _one_is_a_list(cls, value):
+    def _one_is_a_list(cls, value: object) -> object:
         return [value] if isinstance(value, str) else value
 
     @field_validator("width")
     @classmethod
-    def _printable(cls, value):
+    def _printable(cls, value: str | float | None) -> str | float | None:
         if isinstance(value, float) and not 1 <= value <= 30:
             raise ValueError("a width must lie between 1 and 30 inches")
         return value

@@ -2,10 +2,16 @@
 
 from __future__ import annotations
 
+from typing import TYPE_CHECKING
+
 from fitter.report.facts import axis_label, parameter
 from fitter.report.figures.style import COLOURS, in_style, new_figure
 from fitter.study.scenarios import KINDS
 from fitter.study.stress import FLAG
+
+if TYPE_CHECKING:
+    from matplotlib.axes import Axes
+    from matplotlib.figure import Figure
 
 __all__ = ["stress_caption", "stress_figure"]
 
@@ -15,7 +21,7 @@ _WIDEST = 8.0  # of the fit's own errors: what moves further is drawn as an arro
 
 
 @in_style
-def stress_figure(result: dict, name: str):
+def stress_figure(result: dict, name: str) -> Figure:
     """Return the forest plot of one parameter.
 
     Parameters
@@ -78,7 +84,7 @@ def _limits(base: dict, rows: list[dict]) -> tuple[float, float]:
     return base["median"] - reach, base["median"] + reach
 
 
-def _draw_row(axes, y: float, row: dict, low: float, high: float) -> None:
+def _draw_row(axes: Axes, y: float, row: dict, low: float, high: float) -> None:
     from matplotlib.transforms import blended_transform_factory
 
     if "heading" in row:

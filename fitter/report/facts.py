@@ -4,10 +4,11 @@ from __future__ import annotations
 
 import dataclasses
 import math
-from collections.abc import Mapping
+from collections.abc import Iterator, Mapping
 from contextlib import contextmanager
 from contextvars import ContextVar
 from pathlib import Path
+from typing import Any
 
 import numpy as np
 
@@ -23,7 +24,7 @@ _labels: ContextVar[Mapping[str, str]] = ContextVar("symbols in force instead of
 
 
 @contextmanager
-def relabelled(labels: Mapping[str, str] | None):
+def relabelled(labels: Mapping[str, str] | None) -> Iterator[None]:
     """Use other LaTeX symbols than the declared ones, in every figure, table and text, while this context is open.
 
     Parameters
@@ -110,7 +111,7 @@ def edge_density(draws: np.ndarray, low: float, high: float) -> tuple[float, flo
     return float(ends[0]) if touches[0] else 0.0, float(ends[1]) if touches[1] else 0.0
 
 
-def json_safe(value):
+def json_safe(value: Any) -> Any:
     """Return a copy made of plain Python, with null where a number is not finite.
 
     Parameters

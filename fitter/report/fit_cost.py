@@ -5,8 +5,13 @@ from __future__ import annotations
 import os
 import time
 from dataclasses import dataclass
+from typing import TYPE_CHECKING
 
 import numpy as np
+
+if TYPE_CHECKING:
+    from fitter.inference.settings import SamplingSettings
+    from fitter.likelihood.posterior import LogPosterior
 
 __all__ = ["Cost", "expected_cost"]
 
@@ -27,7 +32,7 @@ class Cost:
     evaluation: float
 
 
-def expected_cost(log_posterior, sampling) -> Cost:
+def expected_cost(log_posterior: LogPosterior, sampling: SamplingSettings) -> Cost:
     """Estimate what a fit costs; right within a factor of about three.
 
     Parameters

@@ -9,12 +9,15 @@ from typing import TYPE_CHECKING
 import numpy as np
 
 if TYPE_CHECKING:
+    from fitter.inference.optimum import Optimum
+    from fitter.inference.posterior import Posterior
     from fitter.likelihood.posterior import LogPosterior
+    from fitter.sample.noise import Noise
 
 __all__ = ["deviance_draws", "information_criteria"]
 
 
-def deviance_draws(log_posterior, posterior, optimum) -> np.ndarray:
+def deviance_draws(log_posterior: LogPosterior, posterior: Posterior, optimum: Optimum) -> np.ndarray:
     """Deviance of every draw, D = −2 ln L, on the scale where the best fit has its χ².
 
     Parameters
@@ -34,7 +37,7 @@ def deviance_draws(log_posterior, posterior, optimum) -> np.ndarray:
     return best_deviance(log_posterior, optimum) - 2.0 * (log_likelihood - best)
 
 
-def best_deviance(log_posterior, optimum) -> float:
+def best_deviance(log_posterior: LogPosterior, optimum: Optimum) -> float:
     """Deviance at the best fit: χ², plus what a fitted scatter or scale adds to ln det C.
 
     The change of ln det C is taken from the sample's own covariance, so that a fit with a free scatter can be
@@ -53,7 +56,7 @@ def noise_parameter(log_posterior: LogPosterior, values: Mapping[str, float], na
     return default if value is None else float(value)
 
 
-def fitted_noise(log_posterior, values: dict):
+def fitted_noise(log_posterior: LogPosterior, values: dict) -> Noise:
     """Return the sample's noise with the intrinsic scatter of these values added (the scale is apart)."""
     scatter = noise_parameter(log_posterior, values, "intrinsic_scatter", 0.0)
     noise = log_posterior.sample.noise
@@ -65,7 +68,7 @@ def noise_scale(log_posterior: LogPosterior, values: Mapping[str, float]) -> flo
     return noise_parameter(log_posterior, values, "covariance_scale", 1.0)
 
 
-def full_log_det(noise) -> float:
+def full_log_det(noise: Noise) -> float:
     """ln det of the whole covariance, the systematic modes included (matrix determinant lemma)."""
     modes = noise.modes
     if modes.shape[1] == 0:
@@ -74,7 +77,7 @@ def full_log_det(noise) -> float:
     return float(noise.log_det + np.linalg.slogdet(np.eye(modes.shape[1]) + white.T @ white)[1])
 
 
-def information_criteria(log_posterior, posterior, optimum, evidence: dict) -> dict:
+def information_criteria(log_posterior: LogPosterior, posterior: Posterior, optimum: Optimum, evidence: dict) -> dict:
     """AIC, AICc, BIC and DIC of a fit.
 
     Parameters
@@ -115,7 +118,7 @@ def information_criteria(log_posterior, posterior, optimum, evidence: dict) -> d
     }
 
 
-def _counted(log_posterior, k: int) -> list[str]:
+def _counted(log_posterior: LogPosterior, k: int) -> list[str]:
     """Names of the k parameters counted: the sampled ones, and the zero point where it is marginalised."""
     names = list(log_posterior.names)
     if k > len(names):
@@ -123,7 +126,7 @@ def _counted(log_posterior, k: int) -> list[str]:
     return names
 
 
-def _dic(log_posterior, posterior, optimum) -> tuple[float | None, float | None]:
+def _dic(log_posterior: LogPosterior, posterior: Posterior, optimum: Optimum) -> tuple[float | None, float | None]:
     """Effective number of parameters, and DIC.
 
     DIC is None where the posterior mean is no likely point (a curved, long posterior): p_D is negative there and means nothing.

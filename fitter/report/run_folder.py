@@ -12,11 +12,14 @@ from contextlib import contextmanager
 from dataclasses import dataclass
 from functools import cached_property
 from pathlib import Path
-from typing import TextIO
+from typing import TYPE_CHECKING, TextIO
 
 from fitter.errors import InputError
 from fitter.parameters import declare_again
 from fitter.report.summary import SCHEMA
+
+if TYPE_CHECKING:
+    from fitter.inference.posterior import Posterior
 
 __all__ = ["Run", "RunFolder", "is_run_folder", "read_run", "write_atomic", "writing"]
 
@@ -103,7 +106,7 @@ class RunFolder:
         Whether an earlier run there may be replaced.
     """
 
-    def __init__(self, target: str | Path, *, replace: bool = False):
+    def __init__(self, target: str | Path, *, replace: bool = False) -> None:
         # A link to a run folder on another disk stays a link.
         self.target = Path(target).resolve()
         self.path = self.target.with_name(self.target.name + ".unfinished")
@@ -285,7 +288,7 @@ class Run:
         return self.folder / "config.yaml"
 
     @cached_property
-    def posterior(self):
+    def posterior(self) -> Posterior:
         """The draws, read from chain.h5 on first use; raises InputError if that is damaged."""
         from fitter.report.chain_file import read_chain
 

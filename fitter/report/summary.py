@@ -7,6 +7,7 @@ import io
 import json
 from collections.abc import Iterable
 from dataclasses import dataclass, field
+from typing import TYPE_CHECKING
 
 import numpy as np
 
@@ -15,6 +16,13 @@ from fitter.inference.profile import ProfileInterval
 from fitter.report.facts import edge_density, json_safe, parameter
 from fitter.report.information import information_criteria, noise_scale
 from fitter.sample.budget import error_budget
+
+if TYPE_CHECKING:
+    from fitter.inference.optimum import Optimum
+    from fitter.inference.posterior import Posterior
+    from fitter.likelihood.posterior import LogPosterior
+    from fitter.likelihood.priors import Prior
+    from fitter.sample.sample import Sample
 
 __all__ = ["SCHEMA", "Extras", "summarise", "summary_csv", "summary_json", "summary_markdown"]
 
@@ -49,7 +57,7 @@ class Extras:
     profile: tuple[ProfileInterval, ...] = ()
 
 
-def summarise(log_posterior, posterior, optimum, extras: Extras | None = None) -> dict:
+def summarise(log_posterior: LogPosterior, posterior: Posterior, optimum: Optimum, extras: Extras | None = None) -> dict:
     """Summarise a fit.
 
     Parameters
@@ -94,7 +102,7 @@ def summarise(log_posterior, posterior, optimum, extras: Extras | None = None) -
     return summary
 
 
-def best_values(log_posterior, posterior, optimum) -> dict[str, float]:
+def best_values(log_posterior: LogPosterior, posterior: Posterior, optimum: Optimum) -> dict[str, float]:
     """Values of every parameter at the best fit: sampled, marginalised, derived."""
     theta = np.atleast_2d(np.asarray(optimum.theta, dtype=float))
     values = dict(zip(log_posterior.names, theta[0].tolist(), strict=True))
@@ -104,7 +112,7 @@ def best_values(log_posterior, posterior, optimum) -> dict[str, float]:
     return {name: values[name] for name in posterior.kinds if name in values}
 
 
-def _sample_facts(sample) -> dict:
+def _sample_facts(sample: Sample) -> dict:
     in_flow = sample.redshift[~np.asarray(sample.is_calibrator)]
     redshift = in_flow if in_flow.size else sample.redshift
     return {
@@ -121,7 +129,7 @@ def _sample_facts(sample) -> dict:
     }
 
 
-def group_counts(sample) -> dict[str, int]:
+def group_counts(sample: Sample) -> dict[str, int]:
     """Data of each survey, the largest first; empty where there are too many to list."""
     if sample.group is None:
         return {}
@@ -131,7 +139,7 @@ def group_counts(sample) -> dict[str, int]:
     return {str(names[i]): int(counts[i]) for i in np.argsort(-counts, kind="stable")}
 
 
-def _best_fit(log_posterior, optimum, best: dict) -> dict:
+def _best_fit(log_posterior: LogPosterior, optimum: Optimum, best: dict) -> dict:
     dof = int(log_posterior.n_data) - int(log_posterior.n_parameters)
     return {
         "chi2": float(optimum.chi2),
@@ -164,7 +172,7 @@ def chi2_p_value(chi2: float, dof: int) -> float | None:
     return float(gammaincc(0.5 * dof, 0.5 * chi2))
 
 
-def _parameter_facts(log_posterior, posterior, name: str, best: float | None) -> dict:
+def _parameter_facts(log_posterior: LogPosterior, posterior: Posterior, name: str, best: float | None) -> dict:
     """Moments, quantiles and Monte Carlo accuracy of one parameter.
 
     Draws where a derived parameter does not exist (a universe that never accelerates has no such redshift) are
@@ -198,7 +206,7 @@ def _moments(values: np.ndarray, intervals: str) -> dict:
     return facts
 
 
-def _accuracy(posterior, name: str, defined: np.ndarray, sd: float | None) -> dict:
+def _accuracy(posterior: Posterior, name: str, defined: np.ndarray, sd: float | None) -> dict:
     """Effective sample size, R̂, and the Monte Carlo error of the mean, sd/√ess.
 
     What decided on the end of sampling is taken over. The rest is judged by a thinned chain: R̂ and the bulk ESS change little,
@@ -231,7 +239,7 @@ def _diagnose(draws: np.ndarray, defined: np.ndarray, sd: float) -> tuple[float,
     return float(ess_bulk(draws)), float(split_rhat(draws))
 
 
-def _edge_facts(draws: np.ndarray, prior, facts: dict) -> dict:
+def _edge_facts(draws: np.ndarray, prior: Prior, facts: dict) -> dict:
     """Density at the prior's edges, and a one-sided 95 % limit where the peak stands against one."""
     at_low, at_high = edge_density(draws, prior.low, prior.high)
     more: dict[str, object] = {"density_at_prior_edge": [at_low, at_high]}
@@ -270,7 +278,7 @@ def summary_csv(summary: dict) -> str:
     return out.getvalue()
 
 
-def _cell(value) -> str:
+def _cell(value: object) -> str:
     return "" if value is None else repr(value) if isinstance(value, float) else str(value)
 
 

@@ -2,8 +2,16 @@
 
 from __future__ import annotations
 
+from typing import TYPE_CHECKING
+
 from fitter.report.digits import figures_for, plain_number
 from fitter.report.facts import parameter
+
+if TYPE_CHECKING:
+    from fitter.cosmology import Model
+    from fitter.likelihood.posterior import LogPosterior
+    from fitter.likelihood.priors import Prior
+    from fitter.sample.sample import Sample
 
 __all__ = ["practitioner_warnings", "standing_cautions"]
 
@@ -21,7 +29,7 @@ _NOISE_PARAMETERS = ("intrinsic_scatter", "covariance_scale")
 _CANNOT_BE_NEGATIVE = ("omega_m", "intrinsic_scatter", "covariance_scale")
 
 
-def practitioner_warnings(summary: dict, log_posterior) -> list[str]:
+def practitioner_warnings(summary: dict, log_posterior: LogPosterior) -> list[str]:
     """Return the warnings that the facts of a fit call for, the gravest first, and last the cautions that always hold.
 
     Parameters
@@ -114,7 +122,7 @@ def _chi2(summary: dict) -> list[str]:
     return []
 
 
-def _prior_edges(summary: dict, log_posterior) -> list[str]:
+def _prior_edges(summary: dict, log_posterior: LogPosterior) -> list[str]:
     texts = []
     for name, prior in zip(log_posterior.names, log_posterior.priors, strict=True):
         facts = summary["parameters"][name]
@@ -143,7 +151,7 @@ def _edge_text(name: str, symbol: str, bound: float, edge: str, facts: dict) -> 
     return f"{said}: {widen}{f'; or {quote}' if quote else ''}."
 
 
-def _dominated(prior, facts: dict) -> bool:
+def _dominated(prior: Prior, facts: dict) -> bool:
     """Whether the central 68 % of the posterior is about as wide as the prior's."""
     if facts.get("low68") is None:
         return False
@@ -187,7 +195,7 @@ def _zero_point(summary: dict) -> list[str]:
     return []
 
 
-def _model(summary: dict, model) -> list[str]:
+def _model(summary: dict, model: Model) -> list[str]:
     """What the model itself says of data that reach this far."""
     return list(model.advice(summary["sample"]["redshift_max"])) if hasattr(model, "advice") else []
 
@@ -204,7 +212,7 @@ def _capsule(summary: dict) -> list[str]:
     ]
 
 
-def _covariance(sample) -> list[str]:
+def _covariance(sample: Sample) -> list[str]:
     noise = sample.noise
     if not noise.is_diagonal or noise.modes.shape[1] or sample.n < _MANY:
         return []

@@ -15,11 +15,18 @@ import hashlib
 import hmac
 from collections.abc import Iterable, Mapping, Sequence
 from dataclasses import replace
+from typing import TYPE_CHECKING, Any
 
 import numpy as np
 
 from fitter.errors import InputError
 from fitter.parameters import parameter
+
+if TYPE_CHECKING:
+    from fitter.inference.optimum import Optimum
+    from fitter.inference.posterior import Posterior
+    from fitter.likelihood.posterior import LogPosterior
+    from fitter.sample.sample import Sample
 
 __all__ = [
     "NOT_HIDDEN", "blind_optimum", "blind_posterior", "blind_summary", "comparable", "data_key", "hidden_labels", "hidden_names",
@@ -33,7 +40,7 @@ _SMALLEST = 0.2  # of the half width of the default prior: an offset that could 
 _LOCATIONS = ("mean", "median", "low68", "high68", "low95", "high95", "best")
 
 
-def hidden_names(blind: bool | Iterable[str], log_posterior) -> tuple[str, ...]:
+def hidden_names(blind: bool | Iterable[str], log_posterior: LogPosterior) -> tuple[str, ...]:
     """Return the sampled parameters that a config's ``blind`` hides.
 
     Raises
@@ -50,9 +57,9 @@ def hidden_names(blind: bool | Iterable[str], log_posterior) -> tuple[str, ...]:
     return tuple(dict.fromkeys(blind))
 
 
-def data_key(sample, table: str | None) -> str:
+def data_key(sample: Sample, table: str | None) -> str:
     """Return what the offsets depend on: the table's SHA-256, or that of the sample where its data came as arrays."""
-    return sample.sources.get(table) or sample.sha256
+    return (sample.sources.get(table) if table is not None else None) or sample.sha256
 
 
 def offsets(key: str, names: Iterable[str]) -> dict[str, float]:
@@ -80,7 +87,7 @@ def veil_key(key: str) -> bytes:
     return hmac.new(key.encode(), b"mufitter veil", hashlib.sha256).digest()
 
 
-def comparable(summary: dict, posterior):
+def comparable(summary: dict, posterior: Posterior) -> tuple[dict[str, Any], Posterior]:
     """Return summary and posterior of a blinded run with only what keeps its meaning beside another: the sampled parameters."""
     names = [n for n, facts in summary["parameters"].items() if facts["kind"] == "sampled"]
     kinds = {n: kind for n, kind in posterior.kinds.items() if kind == "sampled"}
@@ -107,7 +114,7 @@ def hidden_labels(hidden: Iterable[str]) -> dict[str, str]:
     return {name: parameter(name).latex + r"+\mathrm{hidden}" for name in hidden}
 
 
-def blind_posterior(posterior, hidden: Mapping[str, float]):
+def blind_posterior(posterior: Posterior, hidden: Mapping[str, float]) -> Posterior:
     """Return the draws with the hidden offsets added; derived and marginalised ones less their own median."""
     if not hidden:
         return posterior
@@ -116,22 +123,22 @@ def blind_posterior(posterior, hidden: Mapping[str, float]):
     return replace(posterior, chain=chain, extra=extra, sampling={**posterior.sampling, "blinded": sorted(hidden)})
 
 
-def true_chain(posterior, hidden: Mapping[str, float]) -> np.ndarray:
+def true_chain(posterior: Posterior, hidden: Mapping[str, float]) -> np.ndarray:
     """Return the chain of a blinded run without its offsets."""
     return posterior.chain - _row(posterior.names, hidden)
 
 
-def blind_optimum(optimum, names, hidden: Mapping[str, float]):
+def blind_optimum(optimum: Optimum, names: Sequence[str], hidden: Mapping[str, float]) -> Optimum:
     """Return the optimum with the offsets added and everything marginalised left out."""
     values = {name: optimum.values[name] + hidden.get(name, 0.0) for name in names}
     return replace(optimum, theta=optimum.theta + _row(names, hidden), values=values)
 
 
-def _row(names, hidden) -> np.ndarray:
+def _row(names: Sequence[str], hidden: Mapping[str, float]) -> np.ndarray:
     return np.array([hidden.get(name, 0.0) for name in names])
 
 
-def blind_summary(summary: dict, hidden: Mapping[str, float], log_posterior, key: str) -> dict:
+def blind_summary(summary: dict, hidden: Mapping[str, float], log_posterior: LogPosterior, key: str) -> dict:
     """Return the summary of a fit with central values hidden; `key` is that of the offsets, of which a hash is kept."""
     from fitter.report.warnings import practitioner_warnings
 

@@ -2,17 +2,26 @@
 
 from __future__ import annotations
 
+from typing import TYPE_CHECKING
+
 import numpy as np
 
+from fitter.array_types import FloatArray
 from fitter.report.facts import parameter
 from fitter.sample.budget import SHARE
+from fitter.sample.capsule import CapsuleSample
+
+if TYPE_CHECKING:
+    from fitter.config.settings import Config
+    from fitter.likelihood.posterior import LogPosterior
+    from fitter.sample.sample import Sample
 
 __all__ = ["check_text"]
 
 _SHOWN = 5  # examples of a kind
 
 
-def check_text(config, sample, log_posterior, *, planned: bool = False) -> str:
+def check_text(config: Config | None, sample: Sample | None, log_posterior: LogPosterior | None, *, planned: bool = False) -> str:
     """Return what is known of a fit as readable text.
 
     Parameters
@@ -28,7 +37,9 @@ def check_text(config, sample, log_posterior, *, planned: bool = False) -> str:
     if config is not None and config.title:
         lines.append(config.title)
     if sample is not None:
-        lines += _data(sample, planned) + _of_rows(sample, planned) if sample.has_rows else _data(sample) + _capsule(sample)
+        lines += (
+            _data(sample) + _capsule(sample) if isinstance(sample, CapsuleSample) else _data(sample, planned) + _of_rows(sample, planned)
+        )
     if config is not None:
         lines.append(f"Model: {config.cosmology.name}, {'with' if config.radiation else 'no'} radiation")
     if config is not None and config.variants:
@@ -36,23 +47,23 @@ def check_text(config, sample, log_posterior, *, planned: bool = False) -> str:
             f"Variants, compared with {config.compare.reference or config.variants[0].name}: {', '.join(v.name for v in config.variants)}"
         )
     if log_posterior is not None:
-        lines += _parameters(log_posterior) + ([] if planned else _cost(config, log_posterior))
+        lines += _parameters(log_posterior) + ([] if planned or config is None else _cost(config, log_posterior))
     if sample is not None and sample.warnings:
         lines += ["Warnings:", *(f"  ! {text}" for text in sample.warnings)]
     return "\n".join(lines)
 
 
-def _capsule(sample) -> list[str]:
+def _capsule(sample: CapsuleSample) -> list[str]:
     c = sample.capsule
     title = f", {c.title}" if c.title else ""
     return [f"A capsule of order {c.order}: the likelihood of {c.n:,} supernovae{title}, no single rows"]
 
 
-def _of_rows(sample, planned: bool) -> list[str]:
+def _of_rows(sample: Sample, planned: bool) -> list[str]:
     return _terms(sample) + _covariance(sample) + ([] if planned else _oddities(sample))
 
 
-def _data(sample, planned: bool = False) -> list[str]:
+def _data(sample: Sample, planned: bool = False) -> list[str]:
     kind = "no moduli or magnitudes" if planned else sample.data_kind.replace("_", " ")
     lines = ["A survey to come: `mufitter rehearse` draws its data and fits them; there is nothing to fit yet."] if planned else []
     lines.append(f"Data: {sample.n:,} rows, {kind}, distance scale {sample.distance_scale}, {_range(sample.redshift)}")
@@ -66,7 +77,7 @@ def _data(sample, planned: bool = False) -> list[str]:
     return lines
 
 
-def _range(redshift) -> str:
+def _range(redshift: FloatArray) -> str:
     return f"{redshift.min():.4g} ≤ z ≤ {redshift.max():.4g}"
 
 
@@ -74,7 +85,7 @@ def _percent(share: float | None) -> str:
     return f"{'?' if share is None else format(100 * share, '.1f'):>5} %"
 
 
-def _terms(sample) -> list[str]:
+def _terms(sample: Sample) -> list[str]:
     from fitter.sample.examination import budget
 
     parts = budget(sample)
@@ -92,7 +103,7 @@ def _terms(sample) -> list[str]:
     return lines
 
 
-def _covariance(sample) -> list[str]:
+def _covariance(sample: Sample) -> list[str]:
     """Condition number and correlations."""
     from fitter.sample.examination import EIGENVALUES_OF, condition_number, correlations
 
@@ -109,7 +120,7 @@ def _covariance(sample) -> list[str]:
     return [*lines, text + (f" [{found.n:,} rows looked at]" if found.n < sample.n else "")]
 
 
-def _oddities(sample) -> list[str]:
+def _oddities(sample: Sample) -> list[str]:
     """Outliers and rows that stand twice."""
     from fitter.sample.examination import BEYOND, outliers, repeated_rows
 
@@ -119,7 +130,7 @@ def _oddities(sample) -> list[str]:
     lines = [f"Rows beyond {BEYOND:g} σ of a smooth curve: {len(found) or 'none'}{expected}"]
     lines += [f"  row {o.row} {o.name}: {o.residual:+.3f} mag, {o.pull:+.1f} σ" for o in found[:_SHOWN]]
     lines += [f"  and {len(found) - _SHOWN} more"] if len(found) > _SHOWN else []
-    weak = [] if sample.noise.precision is not None and sample.n > 6000 else sample.noise.total_variance
+    weak = np.empty(0) if sample.noise.precision is not None and sample.n > 6000 else sample.noise.total_variance
     heavy = int(np.sum(weak > 100 * np.median(weak))) if len(weak) else 0
     lines += [f"Rows with errors above ten times the median, which say nothing: {heavy:,}"] if heavy else []
     twice = repeated_rows(sample)
@@ -130,7 +141,7 @@ def _oddities(sample) -> list[str]:
     return lines
 
 
-def _cost(config, log_posterior) -> list[str]:
+def _cost(config: Config, log_posterior: LogPosterior) -> list[str]:
     from fitter.report.fit_cost import expected_cost
 
     cost = expected_cost(log_posterior, config.sampling)
@@ -150,7 +161,7 @@ def _duration(seconds: float) -> str:
     return f"{seconds / 60:.0f} minutes" if seconds < 5400 else f"{seconds / 3600:.1f} hours"
 
 
-def _parameters(log_posterior) -> list[str]:
+def _parameters(log_posterior: LogPosterior) -> list[str]:
     lines = ["Parameters:"]
     width = max(len(name) for name in (*log_posterior.names, *log_posterior.fixed, *log_posterior.marginalised))
     for name, prior in zip(log_posterior.names, log_posterior.priors, strict=True):

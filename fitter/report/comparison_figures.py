@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+from collections.abc import Iterable
 from pathlib import Path
 
 __all__ = ["draw_comparison", "overlay_names"]
@@ -51,7 +52,7 @@ def draw_comparison(report: dict, posteriors: dict, folder: Path) -> list[Path]:
     shown = dict(list(posteriors.items())[:_MOST_RUNS])
     left_out = f" Not drawn, for want of colours: {', '.join(list(posteriors)[_MOST_RUNS:])}." if len(posteriors) > _MOST_RUNS else ""
 
-    def note(drawn):
+    def note(drawn: Iterable[str]) -> str:
         other = [v["name"] for v in report["variants"] if v["delta"] is None and v["name"] in drawn]
         return left_out + (f" Other data than {report['reference']}: {', '.join(other)}." if other else "")
 

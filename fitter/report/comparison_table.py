@@ -6,8 +6,8 @@ import csv
 import io
 import math
 import textwrap
-from collections.abc import Mapping
-from typing import Any
+from collections.abc import Callable, Mapping
+from typing import Any, TextIO
 
 from fitter.inference.intervals import interval_words
 from fitter.report.digits import plain_number
@@ -35,7 +35,7 @@ def main_names(report: Mapping[str, Any]) -> list[str]:
     return free + [n for n in _DERIVED if kinds.get(n) == "derived"]
 
 
-def _value(variant: dict, name: str, form=cell_text, fixed="{} (fixed)") -> str:
+def _value(variant: dict, name: str, form: Callable[[dict], str] = cell_text, fixed: str = "{} (fixed)") -> str:
     if name in variant["parameters"]:
         return form(variant["parameters"][name])
     if name in variant["fixed"]:
@@ -94,7 +94,7 @@ def _rows(report: dict) -> list[list[str]]:
     return rows
 
 
-def comparison_text(report: dict, *, stream=None, width: int = 100) -> str:
+def comparison_text(report: dict, *, stream: TextIO | None = None, width: int = 100) -> str:
     """Return a comparison for the terminal."""
     bold, plain = ("\x1b[1m", "\x1b[0m") if stream is not None and wants_colour(stream) else ("", "")
     header, rows = ["", *(v["name"] for v in report["variants"])], _rows(report)

@@ -94,7 +94,9 @@ def _fixed(x: float, place: int) -> str:
     return f"{rounded + 0.0 if rounded else 0.0:.{max(0, -place)}f}"
 
 
-def figures_for(value: float | None, low: float | None = None, high: float | None = None, *, width=None, mcse=None) -> Figures:
+def figures_for(
+    value: float | None, low: float | None = None, high: float | None = None, *, width: float | None = None, mcse: float | None = None
+) -> Figures:
     """Round a value and the ends of its interval to the digits they deserve.
 
     Parameters

@@ -5,6 +5,7 @@ from __future__ import annotations
 import os
 import textwrap
 import unicodedata
+from typing import TextIO
 
 from fitter.report.digits import evidence_digits, figures_for, plain_number
 from fitter.report.facts import parameter, unit_text
@@ -16,12 +17,12 @@ _BOLD, _YELLOW, _PLAIN = "\x1b[1m", "\x1b[33m", "\x1b[0m"
 _KINDS = {"sampled": "", "marginalised": "marginalised analytically", "derived": "derived"}
 
 
-def wants_colour(stream) -> bool:
+def wants_colour(stream: TextIO) -> bool:
     """Return whether a stream is a terminal whose user has not asked for no colour (NO_COLOR)."""
     return bool(getattr(stream, "isatty", lambda: False)()) and not os.environ.get("NO_COLOR") and os.environ.get("TERM") != "dumb"
 
 
-def terminal_summary(summary: dict, *, stream=None, width: int = _WIDTH) -> str:
+def terminal_summary(summary: dict, *, stream: TextIO | None = None, width: int = _WIDTH) -> str:
     """Return the readable summary of a fit.
 
     Parameters

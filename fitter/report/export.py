@@ -4,11 +4,17 @@ from __future__ import annotations
 
 import os
 from pathlib import Path
+from typing import TYPE_CHECKING
 
 import numpy as np
 
 from fitter.errors import InputError
 from fitter.report.figures.panels import density, plot_range
+
+if TYPE_CHECKING:
+    import pandas as pd
+
+    from fitter.inference.posterior import Posterior
 
 __all__ = ["EXPORT_FORMATS", "densities_table", "export", "posterior_table"]
 
@@ -16,7 +22,7 @@ EXPORT_FORMATS = ("csv", "parquet")
 _DIGITS = 10
 
 
-def posterior_table(posterior, draws: int | None = None):
+def posterior_table(posterior: Posterior, draws: int | None = None) -> pd.DataFrame:
     """Return equal-weight draws of every parameter, evenly thinned, whole steps at a time.
 
     Parameters
@@ -43,7 +49,7 @@ def posterior_table(posterior, draws: int | None = None):
     return pd.DataFrame(columns | {"log_posterior": posterior.log_posterior.reshape(-1)[rows]})
 
 
-def densities_table(posterior, points: int = 200):
+def densities_table(posterior: Posterior, points: int = 200) -> pd.DataFrame:
     """Return the marginal density of every parameter that varies, normalised to one over the range given.
 
     Parameters
@@ -70,7 +76,7 @@ def densities_table(posterior, points: int = 200):
     return pd.concat(parts, ignore_index=True) if parts else pd.DataFrame(columns=["parameter", "value", "density"])
 
 
-def export(posterior, folder: Path, fmt: str = "csv", draws: int | None = None) -> list[Path]:
+def export(posterior: Posterior, folder: Path, fmt: str = "csv", draws: int | None = None) -> list[Path]:
     """Write posterior and densities, as CSV or Parquet.
 
     Parameters
@@ -105,7 +111,7 @@ def export(posterior, folder: Path, fmt: str = "csv", draws: int | None = None) 
     return written
 
 
-def _write(table, path: Path, fmt: str) -> None:
+def _write(table: pd.DataFrame, path: Path, fmt: str) -> None:
     if fmt == "csv":
         table.to_csv(path, index=False, float_format=f"%.{_DIGITS}g")
     else:

@@ -2,7 +2,9 @@
 
 from __future__ import annotations
 
+from collections.abc import Sequence
 from math import ceil, isfinite
+from typing import Any
 
 from fitter.cosmology import MODELS
 from fitter.inference.intervals import interval_words
@@ -126,7 +128,7 @@ def _bare(name: str) -> str:
     return parameter(name).latex
 
 
-def _numbers(terms) -> dict[str, str]:
+def _numbers(terms: Sequence[dict[str, Any]] | None) -> dict[str, str]:
     """What a config says of a term beyond its label, by label as `fitter.sample` numbers them."""
     said: dict[str, str] = {}
     seen: dict[str, int] = {}

@@ -13,6 +13,7 @@ from collections.abc import Mapping
 from importlib import resources
 from pathlib import Path
 from string import Template
+from typing import TYPE_CHECKING
 
 from fitter.report.digits import figures_for, plain_number
 from fitter.report.facts import parameter, unit_text
@@ -21,6 +22,9 @@ from fitter.report.summary import summary_csv
 from fitter.report.tables import parameter_table
 from fitter.report.terminal import best_text, cell_text, data_line, information_lines, median_head, profile_text, told_apart
 from fitter.sample.budget import SHARE
+
+if TYPE_CHECKING:
+    from matplotlib.figure import Figure
 
 __all__ = ["PAGE", "Picture", "fit_html", "page_text", "picture_of", "verdict"]
 
@@ -36,7 +40,7 @@ Picture = tuple[str, str]
 """An SVG and its caption."""
 
 
-def picture_of(figure, caption: str) -> Picture:
+def picture_of(figure: Figure, caption: str) -> Picture:
     """Return a matplotlib figure as SVG, letters as outlines, with its caption in plain text."""
     import matplotlib as mpl
 
@@ -146,7 +150,7 @@ def fit_html(summary: dict) -> str:
     )
 
 
-def _e(text) -> str:
+def _e(text: object) -> str:
     return html.escape(str(text))
 
 

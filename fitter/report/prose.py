@@ -8,6 +8,7 @@ from __future__ import annotations
 
 import re
 import unicodedata
+from collections.abc import Iterable
 
 from fitter.report.facts import parameter
 
@@ -96,7 +97,7 @@ def model_text(name: str) -> str:
     return word + math(tex, unicode)
 
 
-def listed(words) -> str:
+def listed(words: Iterable[str]) -> str:
     """Join words with commas and a last ``and``."""
     words = list(words)
     return words[0] if len(words) == 1 else f"{', '.join(words[:-1])} and {words[-1]}" if words else ""

@@ -4,7 +4,7 @@ from __future__ import annotations
 
 import csv
 import io
-from collections.abc import Sequence
+from collections.abc import Callable, Sequence
 
 from fitter.inference.intervals import interval_words
 from fitter.report.digits import figures_for, plain_number
@@ -155,7 +155,7 @@ def _csv(summaries: list[dict], names: list[str]) -> str:
     return out.getvalue()
 
 
-def _cell(summary: dict, name: str, form) -> str:
+def _cell(summary: dict, name: str, form: Callable[[dict], str]) -> str:
     facts = summary["parameters"].get(name)
     return "—" if facts is None else form(facts)
 
@@ -212,11 +212,11 @@ FIT_CAPTION = (
 )
 
 
-def _number(x, significant: int) -> str:
+def _number(x: float | None, significant: int) -> str:
     return "—" if x is None else plain_number(x, significant)
 
 
-def _decimals(x) -> str:
+def _decimals(x: float | None) -> str:
     return "—" if x is None else f"{x:.2f}"
 
 

@@ -44,6 +44,9 @@ def assemble_arrays(
     if distance_scale != "calibrated":
         take["calibrator_modulus"] = np.full(n, np.nan)
     terms = _terms(n, given, intrinsic, problems)
+    if not (terms or problems.found):
+        cure = "Give covariance, precision or sigma"
+        problems.found.append(InputError("there is no uncertainty term: nothing says how far the data scatter", cure=cure))
     rest = {
         "data_kind": data_kind,
         "distance_scale": distance_scale,
@@ -81,8 +84,10 @@ def _numbers(values: ArrayLike, key: str, n: int | None, problems: Problems) -> 
         problems.found.append(InputError(f"{key} must be an array of numbers: {problem}"))
         return np.full(n or 1, np.nan)
     if numbers.ndim != 1 or (n is not None and len(numbers) != n):
-        expected = "one number per supernova" + (f", {n}" if n is not None else "")
-        problems.found.append(InputError(f"{key} must have {expected}", value=numbers.shape))
+        if numbers.ndim == 1:
+            problems.found.append(InputError(f"{key} must have one number per supernova: it has {len(numbers)}, and mu {n}"))
+        else:
+            problems.found.append(InputError(f"{key} must have one axis, a number per supernova", value=numbers.shape))
         return np.full(n or 1, np.nan)
     return numbers
 

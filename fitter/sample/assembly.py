@@ -160,6 +160,8 @@ class _Observed:
                 return self.numbers(ref)
             self.unreadable.add(role)
         elif role == "redshift_helio":
+            if "redshift" in self.unreadable:
+                self.unreadable.add(role)  # or it would be missing in every row
             return self.values["redshift"]
         return np.full(self.table.n, np.nan)
 
@@ -329,7 +331,15 @@ def _check(
             problems += check_redshift(role, take[role], place)
     if "data" not in skip:
         problems += check_data(take["data"], place)
-    if distance_scale == "calibrated" and "calibrator_modulus" not in skip and not np.isfinite(take["calibrator_modulus"]).any():
+    calibrator = np.isfinite(take["calibrator_modulus"])
+    if distance_scale == "calibrated" and calibrator.size and calibrator.all():
+        problems.append(
+            InputError(
+                f"all {len(calibrator)} rows are calibrators: no other supernova is left to compare with them", file=place.file,
+                column=place.columns.get("calibrator_modulus"), cure="Widen the cuts, or check the column: other rows have none",
+            )
+        )  # fmt: skip
+    if distance_scale == "calibrated" and "calibrator_modulus" not in skip and not calibrator.any():
         problems.append(
             InputError(
                 "distance_scale: calibrated needs at least one row with a calibrator modulus, and none has one", file=place.file,

@@ -171,7 +171,7 @@ def read_capsule(path: str | Path, shown: str | None = None) -> Capsule:
     return capsule
 
 
-@dataclass(frozen=True, eq=False)
+@dataclass(frozen=True, eq=False, repr=False)
 class CapsuleSample(Sample):
     """A sample known only through its compressed likelihood.
 

@@ -27,7 +27,7 @@ DATA_KINDS = ("distance_modulus", "magnitude")
 DISTANCE_SCALES = ("relative", "absolute", "calibrated")
 
 
-@dataclass(frozen=True, eq=False)
+@dataclass(frozen=True, eq=False, repr=False)
 class Sample:
     """N supernovae with their redshifts, distances and the covariance of these.
 
@@ -90,6 +90,15 @@ class Sample:
                 object.__setattr__(self, key, read_only(getattr(self, key), None))
         row = self.row if np.size(self.row) else np.arange(1, self.n + 1)
         object.__setattr__(self, "row", read_only(row, int))
+
+    def __repr__(self) -> str:
+        what = self.data_kind.replace("_", " ")
+        calibrators = f", {self.n_calibrators} calibrators" if self.n_calibrators else ""
+        low, high = (f"{z:.3g}" for z in (self.redshift.min(), self.redshift.max()))
+        return (
+            f"Sample({self.n} supernovae{calibrators}, {low} ≤ z ≤ {high}, {what}, {self.distance_scale} scale, "
+            f"uncertainties: {', '.join(self.labels)})"
+        )
 
     @property
     def n(self) -> int:

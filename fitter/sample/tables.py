@@ -6,6 +6,7 @@ Each format has a reader of its own in ``readers/`` that returns a `Table`.
 from __future__ import annotations
 
 import difflib
+import re
 from collections.abc import Iterable, Sequence
 from dataclasses import dataclass, field
 from pathlib import Path
@@ -89,12 +90,20 @@ class Columns:
     def _available(self, ref: int | str) -> str:
         if self.names is None:
             return f"Positions are 0 to {self.n - 1}"
-        lower = {name.lower(): name for name in self.names}
-        near = difflib.get_close_matches(str(ref).lower(), lower, n=1)
-        hint = f"Did you mean {lower[near[0]]}? " if near else ""
+        near = _nearest(str(ref), self.names)
+        hint = f"Did you mean {near}? " if near else ""
         names = list(self.names)
         more = f" and {len(names) - _NAMES_SHOWN} more" if len(names) > _NAMES_SHOWN else ""
         return f"{hint}The columns are: {', '.join(names[:_NAMES_SHOWN])}{more}"
+
+
+def _nearest(ref: str, names: Sequence[str]) -> str | None:
+    """The name that a wrong one most likely stands for: `zCMB` for `z_cmb` and for `z_CMBframe`, `mu_er` for `mu_err`."""
+    plain = {re.sub(r"[\W_]", "", name.lower()): name for name in names}
+    wanted = re.sub(r"[\W_]", "", ref.lower())
+    begins = [name for key, name in plain.items() if len(wanted) > 1 and key.startswith(wanted)]
+    near = difflib.get_close_matches(wanted, plain, n=1)
+    return plain.get(wanted) or (begins[0] if len(begins) == 1 else plain[near[0]] if near else None)
 
 
 @dataclass(frozen=True, eq=False)

@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+import re
 from dataclasses import dataclass, field
 
 import numpy as np
@@ -17,6 +18,9 @@ _LARGEST_REDSHIFT = 1100.0  # nothing is seen from beyond the last scattering
 _LARGEST_DATUM = 1000.0  # mag
 _WILD_REDSHIFT = 0.01  # two redshifts of one supernova cannot differ by so much
 _LARGEST_VARIANCE = 4.0  # mag²: nobody's median distance error is above 2 mag
+_MOST_NAMES = 100_000  # compared in a tenth of a second
+_BLANKS = re.compile(r"(?<!\d)[\s_-]+|[\s_-]+(?!\d)")  # those between two digits tell numbers apart
+_SN = re.compile(r"^sn(?=\d)")
 _SAID = 3  # how many examples a message gives
 
 
@@ -104,8 +108,9 @@ def check_duplicates(
     order = np.argsort(name, kind="stable") if group is None else np.lexsort((group, name))
     same = (name[order][1:] == name[order][:-1]) & (name[order][1:] != "")
     first, second = order[:-1][same], order[1:][same]
+    alike = _written_differently(name)
     if not len(first):
-        return [], []
+        return [], alike
     differ = (redshift[first] != redshift[second]) | (data[first] != data[second])
     wild = np.abs(redshift[first] - redshift[second]) > _WILD_REDSHIFT
     across = np.zeros(len(first), dtype=bool) if group is None else group[first] != group[second]
@@ -115,7 +120,8 @@ def check_duplicates(
         listed = ", ".join(names[:_SAID]) + (f" and {len(names) - _SAID} more" if len(names) > _SAID else "")
         return [], [
             f"{len(names)} supernovae stand in more than one row ({listed}). Each row counts as independent unless the covariance says "
-            "otherwise; `keep: {one_per: COLUMN}` keeps the best of each."
+            "otherwise; `keep: {one_per: COLUMN}` keeps the best of each.",
+            *alike,
         ]
     index = int(np.argmax(wrong))
     a, b = int(first[index]), int(second[index])
@@ -128,6 +134,21 @@ def check_duplicates(
         str(name[b]), f"Correct it, {cure}keep one row each with `keep: {{one_per: COLUMN}}`, or accept it with `duplicates: allow`",
     )  # fmt: skip
     return [problem], []
+
+
+def _written_differently(name: NDArray[np.str_]) -> list[str]:
+    """Say which names are the same but for capitals, blanks and a leading SN; they count as different supernovae."""
+    if len(name) > _MOST_NAMES:
+        return []
+    forms: dict[str, list[str]] = {}
+    for written in dict.fromkeys(name.tolist()):
+        forms.setdefault(_SN.sub("", _BLANKS.sub("", written.casefold())), []).append(written)
+    pairs = [" and ".join(several) for key, several in forms.items() if key and len(several) > 1]
+    if not pairs:
+        return []
+    listed = ", ".join(pairs[:_SAID]) + (f", and {len(pairs) - _SAID} more" if len(pairs) > _SAID else "")
+    said = "is one name" if len(pairs) == 1 else f"are {len(pairs)} names"
+    return [f"Is this {said} written in two ways? {listed}. They count as different supernovae; write them alike if they are the same."]
 
 
 def check_inverse(terms: list[Term]) -> list[InputError]:

@@ -208,6 +208,22 @@ def test_calibrated_without_a_calibrator(load):
     assert error.column == "host" and "at least one row" in str(error)
 
 
+def test_calibrators_alone_say_nothing(load):
+    columns = {"redshift": "z", "magnitude": "mu", "calibrator_modulus": "host"}
+    rows = table(host={0: 34.0, 1: 35.0})
+    cut = {"redshift": [3, None]}  # calibrators are spared by cuts in redshift
+    error = refusal(load, columns, rows, distance_scale="calibrated", keep=cut)
+    assert error.column == "host" and "all 2 rows are calibrators" in str(error) and "Widen the cuts" in error.cure
+
+
+@pytest.mark.parametrize("bad", [{"z": {4: "0,05"}}, {}])
+def test_an_unreadable_redshift_is_the_only_problem(load, bad):
+    """Rows without it are not said to be missing, nor calibrators to have been cut."""
+    columns = {"redshift": "z" if bad else "zcmb", "magnitude": "mu", "calibrator_modulus": "host"}
+    error = refusal(load, columns, table(host={0: 34.0}, **bad), distance_scale="calibrated", missing="drop")
+    assert error.column == columns["redshift"] and not isinstance(error, InputErrors)
+
+
 # ------------------------------------------------------------------ refused: duplicates
 
 NAMED = {"name": "name", "redshift": "z", "distance_modulus": "mu"}
@@ -234,6 +250,12 @@ def test_one_name_in_two_surveys(load):
     rows["survey"][7], rows["z"][7] = "b", Z[3] + 0.02
     error = refusal(load, GROUPED, rows)
     assert f"redshift {Z[3]:g} and {Z[3] + 0.02:g}" in str(error) and "map `group`" not in error.cure
+
+
+def test_one_name_written_in_two_ways(load):
+    rows = table(name={3: "SN 2031ab", 7: "2031AB", 8: "1_23", 9: "12_3"})
+    (said,) = [w for w in load(NAMED, rows).warnings if "written in two ways" in w]
+    assert "Is this one name written in two ways? SN 2031ab and 2031AB." in said
 
 
 def test_the_same_row_twice_is_told(load):
@@ -313,19 +335,19 @@ def test_covariance_given_as_an_inverse(load, tmp_path):
 @pytest.mark.parametrize(
     ("changes", "words"),
     [
-        ({"z": Z[:-1]}, r"z must have one number per supernova, 20 \(found \(19,\)\)"),
-        ({"z": np.ones((N, 2))}, "z must have one number per supernova"),
+        ({"z": Z[:-1]}, "z must have one number per supernova: it has 19, and mu 20"),
+        ({"z": np.ones((N, 2))}, r"z must have one axis, a number per supernova \(found \(20, 2\)\)"),
         ({"mu": ["x"] * N}, "mu must be an array of numbers"),
         ({"mu": []}, "there are no supernovae"),
         ({"z": np.where(Z > 0.5, np.nan, Z)}, "row 11, column z: there is no value.*in 9 more rows"),
         ({"z": Z - 0.05}, "row 1, column z: redshift must be above 0"),
-        ({"sigma": SIGMA[:3]}, "sigma must have one number per supernova, 20"),
+        ({"sigma": SIGMA[:3]}, "sigma must have one number per supernova: it has 3, and mu 20"),
         ({"sigma": -0.1}, "row 1, column sigma: an error must be"),
         ({"covariance": np.eye(3)}, "the covariance is 3 × 3, but there are 20 supernovae"),
         ({"covariance": np.triu(np.ones((N, N)))}, "the covariance is not symmetric"),
         ({"covariance": np.full((N, N), np.nan)}, "row 1, column 1: the covariance holds a value"),
         ({"precision": np.eye(N)}, "a precision stands alone"),
-        ({"sigma": None}, "no uncertainty term"),
+        ({"sigma": None}, "no uncertainty term.*Give covariance, precision or sigma"),
         ({"modes": np.ones((3, 2))}, "modes must be finite numbers, one row per supernova"),
         ({"distance_scale": "relativ"}, "distance_scale must be one of relative"),
         ({"data_kind": "mag"}, "data_kind must be one of"),
@@ -336,6 +358,12 @@ def test_bad_arrays(changes, words):
     given = {"z": Z, "mu": MU, "sigma": SIGMA} | changes
     with pytest.raises(InputError, match=words):
         Sample.from_arrays(**given)
+
+
+def test_a_sample_is_shown_in_one_line():
+    sample = Sample.from_arrays(Z, MU, sigma=SIGMA, intrinsic=0.1)
+    shown = f"Sample(20 supernovae, {Z.min():.3g} ≤ z ≤ {Z.max():.3g}, distance modulus, relative scale, uncertainties: sigma, intrinsic)"
+    assert repr(sample) == shown
 
 
 def test_constant_sigma():

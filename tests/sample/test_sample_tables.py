@@ -179,6 +179,7 @@ def test_missing_file_names_the_nearest(tmp_path):
 def test_missing_column_names_the_nearest(write):
     error = failure(write("name,zCMB,mu\na,0.1,38\nb,0.2,40\n"), ask="zcmb", numbers=("zcmb", "mu"))
     assert error.column == "zcmb" and "Did you mean zCMB?" in error.cure and "name, zCMB, mu" in error.cure
+    assert "Did you mean z_CMBframe?" in failure(write("name,z_CMBframe,mu\na,0.1,38\n"), ask="zCMB", numbers=("zCMB",)).cure
     error = failure(write("0.1 38\n0.2 40\n"), ask=5, numbers=(5,))
     assert error.column == 5 and "Positions are 0 to 1" in error.cure
     error = failure(write("0.1 38\n0.2 40\n"))

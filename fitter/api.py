@@ -10,14 +10,13 @@ from dataclasses import dataclass, field, replace
 from datetime import UTC, datetime
 from functools import cached_property
 from pathlib import Path
-from types import SimpleNamespace
 from typing import TYPE_CHECKING, Any, Literal
 
 import numpy as np
 
 from fitter.checking import Check, check, likelihood_of
 from fitter.config.figures import figure_problems
-from fitter.config.load import config_from_mapping, load_config, placing, raise_all, valid, validate
+from fitter.config.load import SaidOfData, config_from_mapping, load_config, placing, raise_all, valid, validate
 from fitter.config.settings import Config
 from fitter.config.write import as_run, config_hash, config_text, differences, input_problems
 from fitter.config.yaml_file import read_yaml
@@ -39,6 +38,8 @@ from fitter.report.run_folder import Run, RunFolder, read_run, write_atomic, wri
 from fitter.sample.sample import Sample
 
 if TYPE_CHECKING:
+    from types import TracebackType
+
     import pandas as pd
     from matplotlib.figure import Figure
 
@@ -258,7 +259,9 @@ def fit(
         folder.leave()
 
 
-def _settings(config, settings: dict[str, Any], allow_code: bool = False) -> tuple[Config, Sample | None]:
+def _settings(
+    config: Config | Mapping[str, Any] | str | Path | None, settings: dict[str, Any], allow_code: bool = False
+) -> tuple[Config, Sample | None]:
     """Bring a path, mapping, Config and keywords to one Config, and the Sample if it was given as an object."""
     if isinstance(config, str | Path):
         config = load_config(config, allow_code=allow_code)
@@ -520,7 +523,7 @@ def _draw_blinded(result: Fit, folder: Path) -> dict[str, Picture]:
 class _RunLog(AbstractContextManager):
     """Writes the log of a run to a file, the traceback too if it fails."""
 
-    def __init__(self, path: Path):
+    def __init__(self, path: Path) -> None:
         self.path = path
 
     def __enter__(self) -> _RunLog:
@@ -533,9 +536,9 @@ class _RunLog(AbstractContextManager):
         _log.propagate = False
         return self
 
-    def __exit__(self, kind, error, traceback) -> None:
+    def __exit__(self, kind: type[BaseException] | None, error: BaseException | None, traceback: TracebackType | None) -> None:
         if error is not None:
-            _log.error("stopped", exc_info=(kind, error, traceback))
+            _log.error("stopped", exc_info=error)
         _log.removeHandler(self._handler)
         _log.setLevel(self._level)
         _log.propagate = self._propagate
@@ -547,7 +550,7 @@ def load_run(path: str | Path, *, allow_code: bool = False) -> tuple[Run, Config
     run = read_run(path)
     document = read_yaml(run.config_file)
     # A fit of arrays has no sample section; what the parameters depend on stands in the summary.
-    arrays = None if "sample" in document.data else SimpleNamespace(**run.summary["sample"])
+    arrays = None if "sample" in document.data else SaidOfData(run.summary["sample"]["distance_scale"], run.summary["sample"]["data_kind"])
     config, _, problems = validate(document, run.folder, arrays, allow_code=allow_code)
     return run, valid(config, problems)
 

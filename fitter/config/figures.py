@@ -2,14 +2,22 @@
 
 from __future__ import annotations
 
+from collections.abc import Sequence
+from typing import TYPE_CHECKING
+
 from fitter.config.problems import nearest
+from fitter.config.yaml_file import Key
 from fitter.errors import InputError
 from fitter.parameters import PARAMETERS, ZERO_POINT
+
+if TYPE_CHECKING:
+    from fitter.config.settings import Config
+    from fitter.likelihood.posterior import LogPosterior
 
 __all__ = ["figure_problems"]
 
 
-def figure_problems(config, log_posterior) -> list[InputError]:
+def figure_problems(config: Config, log_posterior: LogPosterior) -> list[InputError]:
     """Return what is wrong with the sections on figures and labels.
 
     Parameters
@@ -32,13 +40,13 @@ def figure_problems(config, log_posterior) -> list[InputError]:
     return problems + _label_problems(config) + _style_problems(config)
 
 
-def _unknown(config, keys, name: str, known, problem: str) -> InputError:
+def _unknown(config: Config, keys: tuple[Key, ...], name: str, known: Sequence[str], problem: str) -> InputError:
     near = nearest(name, known)
     cure = f"Did you mean `{near}`?" if near else f"The parameters are {', '.join(dict.fromkeys(known))}"
     return config.document.error(problem, keys, value=name, cure=cure)
 
 
-def _label_problems(config) -> list[InputError]:
+def _label_problems(config: Config) -> list[InputError]:
     """Symbols that cannot be set: matplotlib is asked, which takes a moment, only if there are any."""
     if not config.labels:
         return []
@@ -54,7 +62,7 @@ def _label_problems(config) -> list[InputError]:
     return problems
 
 
-def _style_problems(config) -> list[InputError]:
+def _style_problems(config: Config) -> list[InputError]:
     if config.style_file is None:
         return []
     from fitter.report.figures.style import styled

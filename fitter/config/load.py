@@ -5,9 +5,9 @@ from __future__ import annotations
 import os
 from collections.abc import Iterator, Mapping
 from contextlib import contextmanager
+from dataclasses import dataclass
 from pathlib import Path
-from types import SimpleNamespace
-from typing import Any
+from typing import TYPE_CHECKING, Any, Protocol
 
 from pydantic import TypeAdapter, ValidationError
 
@@ -18,10 +18,14 @@ from fitter.config.settings import Config, SampleSettings
 from fitter.config.yaml_file import Document, read_yaml
 from fitter.cosmology import Model
 from fitter.errors import InputError, InputErrors
-from fitter.sample.capsule import AnySample, CapsuleSettings, read_capsule
+from fitter.sample.capsule import AnySample, Capsule, CapsuleSettings, read_capsule
 from fitter.sample.glance import glance
 
+if TYPE_CHECKING:
+    from fitter.sample.sample import Sample
+
 __all__ = [
+    "SaidOfData",
     "config_from_mapping",
     "load_config",
     "described",
@@ -32,6 +36,24 @@ __all__ = [
     "valid",
     "validate",
 ]
+
+
+class KindOfData(Protocol):
+    """Whatever says which kind of data a sample holds: the sample itself, its settings, a capsule."""
+
+    @property
+    def distance_scale(self) -> str: ...
+
+    @property
+    def data_kind(self) -> str: ...
+
+
+@dataclass(frozen=True)
+class SaidOfData:
+    """The kind of data, where nothing else of a sample is at hand."""
+
+    distance_scale: str
+    data_kind: str
 
 
 def load_config(path: str | Path, *, allow_code: bool = False) -> Config:
@@ -60,7 +82,9 @@ def load_config(path: str | Path, *, allow_code: bool = False) -> Config:
     return valid(config, problems)
 
 
-def config_from_mapping(data: Mapping[str, Any], *, folder: str | Path = ".", sample=None, allow_code: bool = False) -> Config:
+def config_from_mapping(
+    data: Mapping[str, Any], *, folder: str | Path = ".", sample: Sample | None = None, allow_code: bool = False
+) -> Config:
     """Validate settings given in Python.
 
     Parameters
@@ -99,7 +123,7 @@ def raise_all(problems: list[InputError]) -> None:
 
 
 def validate(
-    document: Document, folder: Path, arrays=None, *, allow_code: bool = False
+    document: Document, folder: Path, arrays: KindOfData | None = None, *, allow_code: bool = False
 ) -> tuple[Config | None, SampleSettings | CapsuleSettings | None, list[InputError]]:
     """Validate a document.
 
@@ -168,7 +192,7 @@ def _sample_settings(reading: Reading) -> SampleSettings | CapsuleSettings | Non
         return None
 
 
-def _said_of_data(reading: Reading) -> SimpleNamespace | None:
+def _said_of_data(reading: Reading) -> SaidOfData | None:
     """Distance scale and kind of data of a sample that is not right as a whole; None where these are in doubt themselves."""
     sample = reading.document.data.get("sample")
     if not isinstance(sample, dict) or not isinstance(sample.get("columns"), dict) or "capsule" in sample:
@@ -176,10 +200,10 @@ def _said_of_data(reading: Reading) -> SimpleNamespace | None:
     if not (reading.is_whole("sample", "distance_scale") and reading.is_whole("sample", "columns")):
         return None
     kind = "magnitude" if "magnitude" in sample["columns"] else "distance_modulus"
-    return SimpleNamespace(distance_scale=sample.get("distance_scale", "relative"), data_kind=kind)
+    return SaidOfData(sample.get("distance_scale", "relative"), kind)
 
 
-def described(sample, folder: Path):
+def described(sample: SampleSettings | CapsuleSettings | None, folder: Path) -> SampleSettings | Capsule | None:
     """What says which kind of data a sample holds: its settings, or the contents of a capsule; None where that cannot be read."""
     if not isinstance(sample, CapsuleSettings):
         return sample
@@ -189,7 +213,7 @@ def described(sample, folder: Path):
         return None  # said again, with its place, when the sample is read
 
 
-def _parameter_problems(document: Document, model: Model | None, sample) -> list[InputError]:
+def _parameter_problems(document: Document, model: Model | None, sample: KindOfData | None) -> list[InputError]:
     given, variants = document.data.get("parameters") or {}, document.data.get("variants")
     if not isinstance(given, dict):
         return []
@@ -197,13 +221,7 @@ def _parameter_problems(document: Document, model: Model | None, sample) -> list
     # The parameters of a base are checked with each variant, whose model may be another.
     if model is None or sample is None or variants:
         return [] if any(isinstance(m, dict) for m in models) else loose_problems(given, document)
-    return parameter_problems(given, model, sample.distance_scale, document, _data_kind(sample))
-
-
-def _data_kind(sample) -> str:
-    if hasattr(sample, "data_kind"):
-        return sample.data_kind
-    return "magnitude" if getattr(sample.columns, "magnitude", None) is not None else "distance_modulus"
+    return parameter_problems(given, model, sample.distance_scale, document, sample.data_kind)
 
 
 @contextmanager

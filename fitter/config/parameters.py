@@ -146,7 +146,7 @@ def _why_no_density(name: str, model: str, known: list[str]) -> tuple[str, str]:
     return f"the dark-energy density of {model} is called {other}", f"Write `{other}` instead"
 
 
-def _value_problem(name: str, value, default: dict | None, document: Document) -> InputError | None:
+def _value_problem(name: str, value: object, default: dict | None, document: Document) -> InputError | None:
     keys = ("parameters", name)
     example = default if default and default != FLAT else {"normal": [-19.25, 0.03]}
     ((kind, numbers),) = example.items()

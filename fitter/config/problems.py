@@ -7,6 +7,7 @@ import re
 import types
 import typing
 from collections.abc import Iterable
+from typing import Any
 
 from pydantic import BaseModel, ValidationError
 
@@ -78,7 +79,7 @@ def problems_of(error: ValidationError, model: type[BaseModel], document: Docume
     return sorted(problems, key=lambda p: p.row or 0)
 
 
-def by_place(error: ValidationError, data) -> dict[tuple[Key, ...], list[dict]]:
+def by_place(error: ValidationError, data: object) -> dict[tuple[Key, ...], list[dict]]:
     """Return pydantic's entries by the path, in the data that were validated, of what they complain of."""
     found = _one_branch_each([(e, *_place(tuple(e["loc"]), data, e["type"])) for e in error.errors(include_url=False)])
     grouped: dict[tuple[Key, ...], list] = {}
@@ -119,19 +120,19 @@ def _fields(model: type[BaseModel]) -> dict:
     return {f.alias or name: f for name, f in model.model_fields.items()}
 
 
-def _models_in(annotation) -> list[type[BaseModel]]:
+def _models_in(annotation: object) -> list[type[BaseModel]]:
     if isinstance(annotation, type) and not isinstance(annotation, types.GenericAlias) and issubclass(annotation, BaseModel):
         return [annotation]
     return [m for part in typing.get_args(annotation) for m in _models_in(part)]
 
 
-def _at(data, keys: tuple[Key, ...]):
+def _at(data: Any, keys: tuple[Key, ...]) -> Any:
     for key in keys:
         data = data[key]
     return data
 
 
-def _place(loc: tuple[Key, ...], data, kind: str) -> tuple[tuple[Key, ...], tuple]:
+def _place(loc: tuple[Key, ...], data: Any, kind: str) -> tuple[tuple[Key, ...], tuple]:
     """Split pydantic's location into the path in the file and the (path, name) of the union branches."""
     if not loc:
         return (), ()
@@ -241,7 +242,7 @@ def _expected(entry: dict) -> str:
     return _EXPECTED.get(kind.split("_")[0], entry["msg"][:1].lower() + entry["msg"][1:])
 
 
-def _cure(kind: str, value) -> str | None:
+def _cure(kind: str, value: object) -> str | None:
     if kind == "string_type" and isinstance(value, int | float):
         return f'Put it in quotes: "{value}"'
     if not isinstance(value, str):
@@ -251,6 +252,6 @@ def _cure(kind: str, value) -> str | None:
     return None
 
 
-def _brief(value):
+def _brief(value: object) -> object:
     text = repr(value)
     return value if len(text) <= 80 else text[:79] + "…"

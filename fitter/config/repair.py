@@ -7,6 +7,7 @@ from __future__ import annotations
 
 import copy
 from dataclasses import dataclass, field, replace
+from typing import Any
 
 from pydantic import ValidationError
 
@@ -107,7 +108,7 @@ def _mend(reading: Reading, error: ValidationError) -> bool:
     return changed
 
 
-def _at(data, place: tuple[Key, ...]):
+def _at(data: Any, place: tuple[Key, ...]) -> Any:
     for key in place:
         data = data[key]
     return data

@@ -78,7 +78,7 @@ def _collect(model: type[BaseModel], prefix: str, found: dict[str, list[FieldInf
             _collect(inner, f"{prefix}COLUMN.", found, (*seen, inner))
 
 
-def _models(annotation) -> list[type[BaseModel]]:
+def _models(annotation: object) -> list[type[BaseModel]]:
     if isinstance(annotation, type) and not isinstance(annotation, types.GenericAlias) and issubclass(annotation, BaseModel):
         return [annotation]
     return [m for part in typing.get_args(annotation) for m in _models(part)]

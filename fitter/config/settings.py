@@ -5,7 +5,7 @@ from __future__ import annotations
 import os
 from collections.abc import Mapping
 from pathlib import Path
-from typing import Annotated, Any, Literal
+from typing import TYPE_CHECKING, Annotated, Any, Literal
 
 from pydantic import BaseModel, BeforeValidator, ConfigDict, Field, PrivateAttr, WithJsonSchema
 
@@ -20,10 +20,13 @@ from fitter.report.figures.settings import FigureSettings, Labels
 from fitter.sample.capsule import AnySample
 from fitter.sample.settings import SampleSettings
 
+if TYPE_CHECKING:
+    from fitter.sample.sample import Sample
+
 __all__ = ["Config", "SampleSettings"]
 
 
-def _empty_is_default(value):
+def _empty_is_default(value: object) -> object:
     return {} if value is None else value
 
 
@@ -131,7 +134,7 @@ class Config(BaseModel):
         """Path → SHA-256 of the file of a model of one's own; empty for a built-in model."""
         return model_source(self.model, self.folder)
 
-    def complete_parameters(self, sample) -> dict[str, dict | float]:
+    def complete_parameters(self, sample: Sample) -> dict[str, dict | float]:
         """Return every parameter of the fit of a `Sample` with its prior or fixed value."""
         return complete_parameters(self.parameters, self.cosmology, sample.distance_scale, sample.data_kind)
 

@@ -5,11 +5,13 @@ from __future__ import annotations
 import json
 import os
 import re
+from collections.abc import Sequence
 from dataclasses import dataclass, field
 from pathlib import Path
 
 import numpy as np
 
+from fitter.array_types import FloatArray
 from fitter.errors import InputError
 from fitter.sample.matrices import read_matrix
 from fitter.sample.recognise import Recognised, recognise
@@ -39,7 +41,7 @@ class Start:
     doubts: list[str] = field(default_factory=list)
 
 
-def start(table: str | Path, folder: str | Path, matrices=()) -> Start:
+def start(table: str | Path, folder: str | Path, matrices: Sequence[str | Path] = ()) -> Start:
     """Look at a table and matrices and write a config for them.
 
     Parameters
@@ -102,7 +104,7 @@ def _require(found: Recognised, table: str) -> None:
 class _Draft:
     """The sections of the config, made one after the other."""
 
-    def __init__(self, found: Recognised, folder: Path):
+    def __init__(self, found: Recognised, folder: Path) -> None:
         self.found, self.folder = found, folder
         self.guesses: list[str] = []
         self.data = found.data
@@ -113,7 +115,7 @@ class _Draft:
         if found.roles.get("redshift_helio") == found.roles["redshift"]:
             self.used.remove("redshift_helio")
 
-    def relative(self, path) -> str:
+    def relative(self, path: str | Path) -> str:
         """A path as the config writes it."""
         # A link to the folder leads elsewhere with `..` than its name says.
         return _quoted(os.path.relpath(os.path.abspath(path), os.path.realpath(self.folder)).replace(os.sep, "/"))
@@ -183,7 +185,7 @@ class _Draft:
         out.append("    # - {intrinsic: {uniform: [0, 0.5]}}   # where the errors do not hold the intrinsic scatter: it is then fitted")
         return out
 
-    def _kind(self, diagonal, sigma, path: Path) -> tuple[str, bool]:
+    def _kind(self, diagonal: FloatArray, sigma: FloatArray | None, path: Path) -> tuple[str, bool]:
         """Covariance or precision, and whether it holds the errors of the sigma column already."""
         variance = None if sigma is None else sigma**2
         if looks_inverse(diagonal, variance):
@@ -205,7 +207,7 @@ class _Draft:
         return ["  distance_scale: relative     # `absolute` where the moduli are anchored: then H0 is fitted too"]
 
 
-def _quoted(value) -> str:
+def _quoted(value: object) -> str:
     """A name or path as YAML reads it back."""
     text = str(value)
     if isinstance(value, int) or (re.fullmatch(r"[A-Za-z_./][\w./+ -]*", text) and not _RESERVED.match(text) and text == text.strip()):

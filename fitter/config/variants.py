@@ -40,7 +40,7 @@ class CompareSettings(_Section):
 
     @field_validator("scale", mode="before")
     @classmethod
-    def _plain(cls, value):
+    def _plain(cls, value: object) -> object:
         return value.lower().replace("-", "_").replace(" ", "_") if isinstance(value, str) else value
 
 

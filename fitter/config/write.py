@@ -7,13 +7,16 @@ import json
 import os
 from collections.abc import Callable
 from pathlib import Path
-from typing import Any
+from typing import TYPE_CHECKING, Any
 
 import yaml
 
 from fitter.config.settings import Config
 from fitter.config.yaml_file import _Loader
 from fitter.errors import InputError
+
+if TYPE_CHECKING:
+    from fitter.sample.sample import Sample
 
 __all__ = ["as_run", "config_hash", "config_text", "differences", "input_problems"]
 
@@ -22,7 +25,7 @@ _PATH_KEYS = ("table", "capsule", "covariance", "precision", "modes")
 _FREE_TO_CHANGE = ("title", "run_folder", "intervals", "sampling.max_steps", "sampling.target_ess")
 
 
-def as_run(config: Config, sample, target: Path) -> dict[str, Any]:
+def as_run(config: Config, sample: Sample, target: Path) -> dict[str, Any]:
     """Return the complete settings of a run.
 
     Parameters
@@ -141,7 +144,7 @@ def _deciding(settings: dict[str, Any]) -> dict[str, Any]:
     return {k: v for k, v in flat.items() if k not in _FREE_TO_CHANGE}
 
 
-def _flatten(value, key: str, flat: dict[str, Any]) -> None:
+def _flatten(value: object, key: str, flat: dict[str, Any]) -> None:
     if isinstance(value, dict):
         for name, inner in value.items():
             _flatten(inner, f"{key}.{name}" if key else name, flat)
@@ -149,7 +152,7 @@ def _flatten(value, key: str, flat: dict[str, Any]) -> None:
         flat[key] = value
 
 
-def input_problems(config: Config, sample) -> list[InputError]:
+def input_problems(config: Config, sample: Sample) -> list[InputError]:
     """Return which inputs are no longer the files that `inputs:` recorded."""
     found = {_resolved(config, path): sha for path, sha in {**sample.sources, **config.model_sources}.items()}
     problems = []

@@ -6,6 +6,7 @@ import difflib
 import re
 from dataclasses import dataclass, field
 from pathlib import Path
+from typing import Any
 
 import yaml
 
@@ -46,7 +47,7 @@ class Document:
                 return self.lines[keys[:length]]
         return None
 
-    def error(self, problem: str, keys: tuple[Key, ...] = (), *, value=None, cure: str | None = None) -> InputError:
+    def error(self, problem: str, keys: tuple[Key, ...] = (), *, value: object = None, cure: str | None = None) -> InputError:
         """Return an InputError that names the file, the row and the dotted key."""
         key = ".".join(str(k) for k in keys) or None
         return InputError(problem, file=self.path, row=self.line(keys), key=key, value=value, cure=cure)
@@ -130,13 +131,13 @@ def parse_yaml(text: str, path: Path | None = None) -> Document:
 class _Walk:
     """Turns YAML nodes into Python objects, noting lines and keys given twice."""
 
-    def __init__(self, loader: _Loader, path: Path | None):
+    def __init__(self, loader: _Loader, path: Path | None) -> None:
         self.loader, self.path = loader, path
         self.lines: dict[tuple[Key, ...], int] = {}
         self.problems: list[InputError] = []
         self.count = 0
 
-    def value(self, node: yaml.Node, keys: tuple[Key, ...]):
+    def value(self, node: yaml.Node, keys: tuple[Key, ...]) -> Any:
         self.count += 1
         # Aliases let a few lines stand for billions of values, or for themselves.
         if self.count > MAX_VALUES or len(keys) > MAX_DEPTH:
@@ -242,6 +243,6 @@ def _tag_error(path: Path | None, row: int | None, value: str) -> InputError:
     return InputError("a YAML tag that a config cannot have", file=path, row=row, value=value, cure="Remove the word that begins with `!`")
 
 
-def _shorten(value, length: int = 60) -> str:
+def _shorten(value: object, length: int = 60) -> str:
     text = str(value)
     return text if len(text) <= length else text[: length - 1] + "…"

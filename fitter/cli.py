@@ -7,12 +7,18 @@ import os
 import sys
 from collections.abc import Callable
 from pathlib import Path
-from typing import Annotated, Any, TextIO
+from typing import TYPE_CHECKING, Annotated, Any, TextIO
 
 import typer
 
 from fitter.commands import blinding, paper, share, start
 from fitter.errors import InputError, InputErrors, MufitterError
+
+if TYPE_CHECKING:
+    from fitter.api import Fit
+    from fitter.comparing import Comparison
+    from fitter.config.settings import Config
+    from fitter.studies import Study
 
 __all__ = ["app", "main"]
 
@@ -44,7 +50,7 @@ def _reported(command: Callable[..., int | None]) -> Callable[..., None]:
     """Let a command end with the exit code that it returns, and turn exceptions into messages on stderr and exit codes."""
 
     @functools.wraps(command)
-    def wrapped(*arguments, **options):
+    def wrapped(*arguments: Any, **options: Any) -> None:
         code: int | None = 0
         try:
             code = command(*arguments, **options)
@@ -149,7 +155,7 @@ def _fit(
     return NOT_CONVERGED
 
 
-def _loaded(path: Path, allow_code: bool):
+def _loaded(path: Path, allow_code: bool) -> Config:
     """The config; where it is wrong, with all that is wrong with its files too."""
     from fitter.config.load import load_config
 
@@ -164,7 +170,7 @@ def _loaded(path: Path, allow_code: bool):
         raise InputErrors(problems) from None
 
 
-def _print_result(result, as_json: bool, quiet: bool) -> None:
+def _print_result(result: Fit, as_json: bool, quiet: bool) -> None:
     from fitter.report.summary import summary_json
     from fitter.report.terminal import terminal_summary, told_apart
 
@@ -229,7 +235,7 @@ def _refuse_both(replace: bool, resume: bool) -> None:
         raise InputError("--replace starts anew, --resume continues: choose one of them")
 
 
-def _print_comparison(result, as_json: bool, quiet: bool) -> None:
+def _print_comparison(result: Comparison, as_json: bool, quiet: bool) -> None:
     import json
 
     from fitter.report.comparison_table import comparison_text
@@ -315,7 +321,7 @@ def _counting(quiet: bool) -> Callable[[int, int], None] | None:
     return show
 
 
-def _print_study(study, as_json: bool, quiet: bool) -> None:
+def _print_study(study: Study, as_json: bool, quiet: bool) -> None:
     import json
 
     if as_json:

@@ -8,8 +8,9 @@ import os
 from collections.abc import Callable, Sequence
 from concurrent.futures import ProcessPoolExecutor, as_completed
 from dataclasses import dataclass, replace
+from functools import partial
 from pathlib import Path
-from typing import Any, Literal
+from typing import TYPE_CHECKING, Any, Literal
 
 import numpy as np
 
@@ -28,6 +29,10 @@ from fitter.report.facts import relabelled
 from fitter.report.run_folder import RunFolder, read_run, write_atomic, writing
 from fitter.sample.sample import Sample
 from fitter.study.entry import Entry
+
+if TYPE_CHECKING:
+    from fitter.likelihood.posterior import LogPosterior
+    from fitter.report.run_folder import Run
 
 __all__ = ["Comparison", "compare"]
 
@@ -189,7 +194,7 @@ def _report(entries: list[Entry], options: dict, seed: int) -> dict:
 # ---------------------------------------------------------------------- variants of a config
 
 
-def _compare_variants(what, options: dict, place: _Place, allow_code: bool, tell: Report) -> Comparison:
+def _compare_variants(what: Config | str | Path, options: dict, place: _Place, allow_code: bool, tell: Report) -> Comparison:
     config, _ = _settings(what, {}, allow_code)
     variants = expand(config)
     folder = place.open_for(config)
@@ -207,8 +212,7 @@ def _compare_variants(what, options: dict, place: _Place, allow_code: bool, tell
     try:
         runs = _fit_all(work, place.resume, tell)
         entries = [
-            _entry(v.name, run, lambda v=v, sample=sample: likelihood_of(v.config, sample))
-            for v, run, sample in zip(variants, runs, samples, strict=True)
+            _entry(v.name, run, partial(likelihood_of, v.config, sample)) for v, run, sample in zip(variants, runs, samples, strict=True)
         ]
         report = _report(entries, given | options, config.sampling.seed)
         _write(report, entries, folder.path)
@@ -220,7 +224,7 @@ def _compare_variants(what, options: dict, place: _Place, allow_code: bool, tell
 _work: tuple = ()
 
 
-def _start_worker(*work) -> None:
+def _start_worker(*work: Any) -> None:
     """Keep the samples in the worker: with forked processes they are shared, not copied."""
     global _work
     _work = work
@@ -316,14 +320,14 @@ def _entry_of_run(path: str | Path, allow_code: bool) -> Entry:
     return _entry(name, run, lambda: _rebuilt(run, path, allow_code))
 
 
-def _entry(name: str, run, likelihood: Callable) -> Entry:
+def _entry(name: str, run: Run, likelihood: Callable[[], LogPosterior | None]) -> Entry:
     """A fit to compare; of a blinded one the sampled parameters, shifted alike in all, and nothing that knows their place."""
     if run.summary.get("blinded"):
         return Entry(name, *comparable(run.summary, run.posterior))
     return Entry(name, run.summary, run.posterior, likelihood())
 
 
-def _rebuilt(run, path, allow_code: bool):
+def _rebuilt(run: Run, path: str | Path, allow_code: bool) -> LogPosterior | None:
     """The log-posterior of a run, where its data can be read again and are what they were."""
     try:
         _, config = load_run(path, allow_code=allow_code)

@@ -5,7 +5,7 @@ from __future__ import annotations
 from collections.abc import Callable
 from dataclasses import dataclass
 from pathlib import Path
-from typing import Any, Literal
+from typing import TYPE_CHECKING, Any, Literal
 
 import numpy as np
 
@@ -22,6 +22,9 @@ from fitter.report.run_folder import RunFolder, write_atomic, writing
 from fitter.sample.sample import Sample
 from fitter.study.setup import FitSetup
 from fitter.study.tasks import Store
+
+if TYPE_CHECKING:
+    from fitter.study.rehearse import Rehearsal
 
 __all__ = ["MockOptions", "Place", "Study", "parse_truth", "rehearse", "stress"]
 
@@ -194,7 +197,7 @@ def parse_truth(text: str | None) -> str | dict[str, float] | None:
     return found
 
 
-def _rehearsal(job: StudyJob, source: StudyJob, options: MockOptions):
+def _rehearsal(job: StudyJob, source: StudyJob, options: MockOptions) -> Rehearsal:
     from fitter.study.rehearse import Rehearsal, best_truth
 
     truth, hidden = options.truth, bool(job.blind or source.blind)

@@ -3,13 +3,17 @@
 from __future__ import annotations
 
 import sys
-from collections.abc import Callable
+from collections.abc import Callable, Sequence
 from pathlib import Path
-from typing import Annotated
+from typing import TYPE_CHECKING, Annotated
 
 import typer
 
 from fitter.errors import InputError
+
+if TYPE_CHECKING:
+    from fitter.report.figures.settings import FigureSettings
+    from fitter.report.paper import PaperRun
 
 __all__ = ["register"]
 
@@ -56,7 +60,7 @@ def figures(
     """Draw again from run folders, without fitting; several runs are laid over each other."""
     from fitter.report.facts import relabelled
     from fitter.report.figures.draw import drawings, overlays, save_drawings
-    from fitter.report.paper import run_labels
+    from fitter.report.paper import drawable_of, run_labels
     from fitter.report.prose import plain
     from fitter.report.run_folder import writing
 
@@ -69,10 +73,10 @@ def figures(
         names, how = _while_hidden(read, names, how)
     with relabelled(labels):
         if len(read) == 1:
-            found = drawings(read[0].drawable, names, how)
+            found = drawings(drawable_of(read[0]), names, how)
         else:
             called = [plain(label) for label in run_labels(read)]
-            found = overlays({label: run.drawable for label, run in zip(called, read, strict=True)}, names, how)
+            found = overlays({label: drawable_of(run) for label, run in zip(called, read, strict=True)}, names, how)
         files = [f"{one.name}.{kind}" for one in found for kind in (*how.formats, "txt")]
         _refuse_taken(folder, files if to is not None and not replace else [])
         with writing(folder):
@@ -118,6 +122,7 @@ def export(
 ) -> None:
     """Write equal-weight draws of the posterior, and every marginal density, as plain tables."""
     from fitter.report.export import export as write
+    from fitter.report.paper import drawable_of
     from fitter.report.run_folder import writing
 
     read = _open(run)
@@ -125,7 +130,7 @@ def export(
     _refuse_taken(folder, [f"posterior.{format_}", f"densities.{format_}"] if to is not None and not replace else [])
     with writing(folder):
         folder.mkdir(parents=True, exist_ok=True)
-        _tell(write(read.drawable.posterior, folder, format_, draws))
+        _tell(write(drawable_of(read).posterior, folder, format_, draws))
 
 
 def paper(
@@ -153,7 +158,7 @@ def paper(
 # ------------------------------------------------------------------------------------ what they share
 
 
-def _read(path: Path):
+def _read(path: Path) -> PaperRun:
     """A run folder as a manuscript needs it; the inputs and the model of the fit are not read."""
     from fitter.config.yaml_file import read_yaml
     from fitter.report.figures.draw import Drawable
@@ -165,7 +170,7 @@ def _read(path: Path):
     return PaperRun(run.folder.resolve(), run.summary, settings, Drawable(run.posterior, run.folder))
 
 
-def _open(path: Path):
+def _open(path: Path) -> PaperRun:
     """A run folder whose values are not hidden."""
     run = _read(path)
     if run.summary.get("blinded"):
@@ -173,19 +178,21 @@ def _open(path: Path):
     return run
 
 
-def _while_hidden(runs, names: list[str] | None, how):
+def _while_hidden(runs: Sequence[PaperRun], names: list[str] | None, how: FigureSettings) -> tuple[list[str], FigureSettings]:
     """Figures of runs with hidden values, and their settings: any but these would show where the values are."""
+    from fitter.report.paper import drawable_of
+
     allowed = ("corner", "chains") if len(runs) == 1 else ("corner",)
     for name in names or ():
         if name not in allowed:
             cure = "Show them first with `mufitter unblind`"
             raise InputError(f"`{name}` would show values of this run that are hidden", file=runs[0].folder, cure=cure)
-    sampled = list(dict.fromkeys(n for run in runs for n in run.drawable.posterior.names))
+    sampled = list(dict.fromkeys(n for run in runs for n in drawable_of(run).posterior.names))
     chosen = [n for n in how.parameters or sampled if n in sampled]
     return list(names or allowed), how.model_copy(update={"parameters": chosen or sampled, "mark": {}})
 
 
-def _looks(runs, given: dict):
+def _looks(runs: Sequence[PaperRun], given: dict) -> tuple[FigureSettings, dict[str, str], Path | None]:
     """Settings, labels and style sheet: those of the first run, with the options laid over them."""
     from pydantic import ValidationError
 
@@ -235,7 +242,7 @@ def _numbers(text: str | None) -> dict[str, float] | None:
     return found or None
 
 
-def _target(to: Path | None, runs, name: str) -> Path:
+def _target(to: Path | None, runs: Sequence[PaperRun], name: str) -> Path:
     if to is not None:
         return to
     if len(runs) > 1:

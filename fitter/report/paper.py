@@ -18,7 +18,7 @@ from fitter.report.prose import cited, latex, latex_text, listed, model_text, pl
 from fitter.report.run_folder import write_atomic
 from fitter.report.tables import FIT_CAPTION, caption_text, fit_table, latex_float, parameter_table
 
-__all__ = ["PaperRun", "TABLE_FILES", "paper_files", "run_labels", "table_files", "write_paper"]
+__all__ = ["PaperRun", "TABLE_FILES", "drawable_of", "paper_files", "run_labels", "table_files", "write_paper"]
 
 MARKER = ".mufitter-paper.json"
 _SUFFIX = {"booktabs": ".tex", "latex": "_plain.tex", "csv": ".csv", "markdown": ".md"}
@@ -148,7 +148,8 @@ def _written_before(folder: Path) -> dict[str, str]:
         return {}
 
 
-def _drawable(run: PaperRun) -> Drawable:
+def drawable_of(run: PaperRun) -> Drawable:
+    """Return what the figures of a run need."""
     if run.drawable is None:
         raise ValueError(f"the run {run.folder} was read without what its figures show")
     return run.drawable
@@ -156,13 +157,13 @@ def _drawable(run: PaperRun) -> Drawable:
 
 def _figures(runs: Sequence[PaperRun], how: FigureSettings) -> list[Drawing]:
     """All figures of the main run, the planes that only others have, and the overlays that several share."""
-    found = {one.name: one for one in drawings(_drawable(runs[0]), how=how)}
+    found = {one.name: one for one in drawings(drawable_of(runs[0]), how=how)}
     for run in runs[1:]:
-        for one in drawings(_drawable(run), ["planes"], how, strict=False):
+        for one in drawings(drawable_of(run), ["planes"], how, strict=False):
             found.setdefault(one.name, one)
     if len(runs) > 1:
         labels = [plain(label) for label in run_labels(runs)]
-        shared = {label: _drawable(run) for label, run in zip(labels, runs, strict=True)}
+        shared = {label: drawable_of(run) for label, run in zip(labels, runs, strict=True)}
         for one in overlays(shared, how=how):
             if one.name == "history":
                 found["history_runs"] = type(one)("history_runs", one.make, one.caption)

@@ -48,7 +48,7 @@ _HOMES = {
 }
 
 
-def __getattr__(name: str):
+def __getattr__(name: str) -> object:
     if name not in _HOMES:
         raise AttributeError(f"module {__name__!r} has no attribute {name!r}")
     from importlib import import_module

@@ -4,6 +4,9 @@ Exact by definition (SI 2019, IAU 2012/2015) or CODATA 2022.
 """
 
 import math
+from typing import TypeVar
+
+from fitter.array_types import FloatArray
 
 __all__ = [
     "BOLTZMANN",
@@ -32,13 +35,15 @@ T_CMB = 2.7255  # K, Fixsen 2009, ApJ 707, 916
 N_EFF = 3.046  # effective number of massless neutrinos, Mangano et al. 2005
 MAG_PER_LN = 5.0 / math.log(10.0)  # magnitudes per unit of ln(distance)
 
+_Rate = TypeVar("_Rate", float, FloatArray)
 
-def hubble_si(h0):
+
+def hubble_si(h0: _Rate) -> _Rate:
     """Expansion rate in 1/s from km/s/Mpc."""
     return h0 * 1e3 / MPC_M
 
 
-def critical_density(h0):
+def critical_density(h0: _Rate) -> _Rate:
     """Critical density, kg/m³, for an expansion rate in km/s/Mpc."""
     return 3 * hubble_si(h0) ** 2 / (8 * math.pi * GRAVITY)
 

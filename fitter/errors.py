@@ -3,6 +3,10 @@
 from __future__ import annotations
 
 from collections.abc import Sequence
+from typing import TYPE_CHECKING, Any
+
+if TYPE_CHECKING:
+    from os import PathLike
 
 __all__ = ["InputError", "InputErrors", "MufitterError"]
 
@@ -36,12 +40,22 @@ class InputError(MufitterError):
 
     exit_code = 2
 
-    def __init__(self, problem: str, *, file=None, row=None, column=None, key=None, value=None, cure=None):
+    def __init__(
+        self,
+        problem: str,
+        *,
+        file: str | PathLike[str] | None = None,
+        row: int | None = None,
+        column: str | int | None = None,
+        key: str | None = None,
+        value: object = None,
+        cure: str | None = None,
+    ) -> None:
         self.problem, self.file, self.row = problem, file, row
         self.column, self.key, self.value, self.cure = column, key, value, cure
         super().__init__(str(self))
 
-    def __reduce__(self):
+    def __reduce__(self) -> tuple[Any, ...]:
         # Keyword-only arguments do not survive the default pickling of exceptions,
         # and these errors cross process borders.
         where = {k: getattr(self, k) for k in ("file", "row", "column", "key", "value", "cure")}
@@ -60,16 +74,16 @@ class InputError(MufitterError):
         return text
 
 
-def _rebuild(kind, problem, where):
+def _rebuild(kind: type[InputError], problem: str, where: dict[str, Any]) -> InputError:
     return kind(problem, **where)
 
 
 class InputErrors(InputError):
     """Several input errors found in one pass; ``errors`` holds them in order."""
 
-    def __init__(self, errors: Sequence[InputError]):
+    def __init__(self, errors: Sequence[InputError]) -> None:
         self.errors = tuple(errors)
         super().__init__("\n".join(str(e) for e in self.errors))
 
-    def __reduce__(self):
+    def __reduce__(self) -> tuple[Any, ...]:
         return type(self), (self.errors,)

@@ -2,7 +2,7 @@
 
 from __future__ import annotations
 
-from collections.abc import Iterable, Mapping
+from collections.abc import Iterable, Mapping, Sequence
 from dataclasses import asdict, dataclass, replace
 
 from fitter.errors import InputError
@@ -40,7 +40,7 @@ class Parameter:
     default_prior: dict | None = None
     latex_unit: str = ""
 
-    def with_prior(self, **prior) -> Parameter:
+    def with_prior(self, **prior: Sequence[float]) -> Parameter:
         """Return the same parameter with another default prior."""
         return replace(self, default_prior=prior)
 

@@ -147,8 +147,8 @@ def _written_differently(name: NDArray[np.str_]) -> list[str]:
     if not pairs:
         return []
     listed = ", ".join(pairs[:_SAID]) + (f", and {len(pairs) - _SAID} more" if len(pairs) > _SAID else "")
-    said = "is one name" if len(pairs) == 1 else f"are {len(pairs)} names"
-    return [f"Is this {said} written in two ways? {listed}. They count as different supernovae; write them alike if they are the same."]
+    asked = "Is this one name" if len(pairs) == 1 else f"Are these {len(pairs)} names"
+    return [f"{asked} written in two ways? {listed}. They count as different supernovae; write them alike if they are the same."]
 
 
 def check_inverse(terms: list[Term]) -> list[InputError]:

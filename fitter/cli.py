@@ -359,7 +359,9 @@ def _schema() -> None:
 @app.command("explain")
 @_reported
 def _explain(
-    key: Annotated[str, typer.Argument(metavar="KEY", help="A key of the config, a parameter, a model or a prior.", show_default=False)],
+    key: Annotated[
+        str | None, typer.Argument(metavar="KEY", help="A key, parameter, model or prior.", show_default="what there is")
+    ] = None,
 ) -> None:
     """Say what a key means: unit, default, example."""
     from fitter.config.schema import explain

@@ -8,7 +8,7 @@ from typing import TYPE_CHECKING, Any
 if TYPE_CHECKING:
     from os import PathLike
 
-__all__ = ["InputError", "InputErrors", "MufitterError"]
+__all__ = ["InputError", "InputErrors", "MufitterError", "in_yaml"]
 
 
 class MufitterError(Exception):
@@ -68,10 +68,17 @@ class InputError(MufitterError):
         place += [f"key {self.key}"] if self.key is not None else []
         text = f"{', '.join(place)}: {self.problem}" if place else self.problem
         if self.value is not None:
-            text += f" (found {self.value!r})"
+            text += f" (found {in_yaml(self.value)})"
         if self.cure is not None:
             text += f". {self.cure}"
         return text
+
+
+def in_yaml(value: object) -> str:
+    """Write a value as a config would hold it where that is not what Python writes: a prior as ``{uniform: [0, 1]}``."""
+    if isinstance(value, dict):
+        return "{" + ", ".join(f"{key}: {in_yaml(inner)}" for key, inner in value.items()) + "}"
+    return repr(value)
 
 
 def _rebuild(kind: type[InputError], problem: str, where: dict[str, Any]) -> InputError:

@@ -258,7 +258,11 @@ def test_the_schema_describes_the_config():
         ("H0", ["H0 (H0), a parameter", "expansion rate today", "unit: km/s/Mpc", "{uniform: [40, 100]}"]),
         ("age_gyr", ["derived, it cannot be set", "unit: Gyr"]),
         ("w0", ["free in: flat_w0wa, curved_w0wa"]),
-        ("curved_lcdm", ["curved_lcdm, a model", "omega_lambda: "]),
+        ("curved_lcdm", ["curved_lcdm, a model", "cosmological constant.\n", "omega_lambda: {uniform: [-0.5, 2]}"]),
+        ("z_acc", ["z_acceleration (z_acc), a parameter"]),
+        ("Ω_m", ["omega_m (Ωm), a parameter"]),
+        ("sample.columns", ["keys: redshift, redshift_helio, "]),
+        ("H0", ["H0, a parameter"]),
         ("truncated_normal", ["truncated_normal: [mean, sd, low, high]"]),
         ("distance_scale", ["sample.distance_scale", "one of: relative, absolute, calibrated", "default: relative"]),
         ("sigma", ["Column of the one-sigma errors", "zero point"]),
@@ -270,4 +274,11 @@ def test_explanations(key, words):
     found = CliRunner().invoke(cli.app, ["explain", key])
     assert found.exit_code == 0
     for word in words:
+        assert word in found.stdout
+
+
+def test_what_there_is_to_explain():
+    found = CliRunner().invoke(cli.app, ["explain"])
+    assert found.exit_code == 0
+    for word in ("Sections:   title, sample", "flat_lcdm", "omega_m", "log_uniform"):
         assert word in found.stdout

@@ -4,6 +4,7 @@ from __future__ import annotations
 
 import types
 import typing
+from collections.abc import Iterable
 
 from pydantic import BaseModel
 from pydantic.fields import FieldInfo
@@ -12,7 +13,7 @@ from fitter.config.examples import EXAMPLES
 from fitter.config.problems import nearest
 from fitter.config.settings import Config
 from fitter.cosmology import MODELS
-from fitter.errors import InputError
+from fitter.errors import InputError, in_yaml
 from fitter.likelihood.priors import PRIORS
 from fitter.parameters import PARAMETERS
 
@@ -30,13 +31,14 @@ def config_schema() -> dict:
     return {"$schema": "https://json-schema.org/draft/2020-12/schema", **schema, "title": "mufitter config"}
 
 
-def explain(key: str) -> str:
+def explain(key: str | None = None) -> str:
     """Return what a key, parameter, model or prior means, its unit, default and an example.
 
     Parameters
     ----------
-    key : str
-        A dotted key (``sampling.seed``), its last part, or a name used as a value.
+    key : str, optional
+        A dotted key (``sampling.seed``), its last part, a name used as a value, or a parameter's symbol (``z_acc``). What there is
+        to explain by default.
 
     Raises
     ------
@@ -44,7 +46,12 @@ def explain(key: str) -> str:
         An unknown key; the nearest known one is named.
     """
     fields = _all_fields()
-    texts = [_field_text(path, field) for path, several in fields.items() if key in (path, path.split(".")[-1]) for field in several]
+    if key is None:
+        return _overview(fields)
+    key = _symbols().get(key.replace("_", ""), key)
+    texts = [
+        _field_text(path, field, fields) for path, several in fields.items() if key in (path, path.split(".")[-1]) for field in several
+    ]
     texts += [_parameter_text(key.split(".")[-1])] if key.split(".")[-1] in PARAMETERS else []
     texts += [_model_text(key)] if key in MODELS else []
     texts += [_prior_text(key)] if key in PRIORS else []
@@ -55,6 +62,20 @@ def explain(key: str) -> str:
         cure = f"Did you mean `{near}`?" if near else f"The sections are {top}"
         raise InputError("there is no such key", value=key, cure=cure)
     return "\n\n".join(texts)
+
+
+def _overview(fields: dict[str, list[FieldInfo]]) -> str:
+    """What there is to explain."""
+    sections = [path for path in fields if "." not in path]
+    lines = [f"{'Sections:':<12}{', '.join(sections)}", f"{'Models:':<12}{', '.join(MODELS)}"]
+    lines += [f"{'Parameters:':<12}{', '.join(PARAMETERS)}", f"{'Priors:':<12}{', '.join(PRIORS)}"]
+    return "\n".join([*lines, "A key inside a section is written with a dot, or alone: sample.columns, seed."])
+
+
+def _symbols() -> dict[str, str]:
+    """Symbol, as tables and terminal show it, without underscores → parameter; symbols that two share are left out."""
+    shown = [p.plain.replace("_", "") for p in PARAMETERS.values()]
+    return {s: name for s, name in zip(shown, PARAMETERS, strict=True) if shown.count(s) == 1 and s not in PARAMETERS}
 
 
 def _all_fields() -> dict[str, list[FieldInfo]]:
@@ -84,7 +105,7 @@ def _models(annotation: object) -> list[type[BaseModel]]:
     return [m for part in typing.get_args(annotation) for m in _models(part)]
 
 
-def _field_text(path: str, field: FieldInfo) -> str:
+def _field_text(path: str, field: FieldInfo, fields: Iterable[str]) -> str:
     lines = [path, f"  {field.description or 'see the README'}"]
     if field.is_required():
         lines.append("  required")
@@ -93,6 +114,9 @@ def _field_text(path: str, field: FieldInfo) -> str:
     choices = _choices(field)
     if choices:
         lines.append(f"  one of: {', '.join(choices)}")
+    inside = [other[len(path) + 1 :] for other in fields if other.startswith(f"{path}.") and "." not in other[len(path) + 1 :]]
+    if inside:
+        lines.append(f"  keys: {', '.join(inside)}")
     if path in EXAMPLES:
         lines.append(f"  example: {EXAMPLES[path]}")
     return "\n".join(lines)
@@ -106,7 +130,8 @@ def _choices(field: FieldInfo) -> list[str]:
 
 def _parameter_text(name: str) -> str:
     p = PARAMETERS[name]
-    lines = [f"{name} ({p.plain}), a parameter", f"  {p.meaning}"]
+    symbol = f" ({p.plain})" if p.plain != name else ""
+    lines = [f"{name}{symbol}, a parameter", f"  {p.meaning}"]
     lines.append(f"  unit: {p.unit}" if p.unit else "  without unit")
     models = [m for m, c in MODELS.items() if any(q.name == name for q in c.parameters)]
     if models:
@@ -123,8 +148,12 @@ def _parameter_text(name: str) -> str:
 
 def _model_text(name: str) -> str:
     model = MODELS[name]
-    lines = [f"{name}, a model", f"  {(model.__doc__ or '').strip().splitlines()[0]}", "  parameters and their default priors:"]
-    lines += [f"    {p.name}: {p.default_prior}   {p.meaning}" for p in model.parameters]
+    # What stands after it in a docstring is the order of theta, for developers.
+    said = (model.__doc__ or "").strip().splitlines()[0].split(": theta")[0].rstrip(".")
+    lines = [f"{name}, a model", f"  {said}.", "  parameters and their default priors:"]
+    priors = [f"{p.name}: {in_yaml(p.default_prior)}" for p in model.parameters]
+    width = max(map(len, priors))
+    lines += [f"    {prior:<{width}}   {p.meaning}" for prior, p in zip(priors, model.parameters, strict=True)]
     return "\n".join(lines)
 
 

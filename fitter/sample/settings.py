@@ -41,7 +41,8 @@ class Columns(_Section):
     magnitude: ColumnRef | None = Field(None, description="Standardised magnitude, mag; instead of distance_modulus.")
     calibrator_modulus: ColumnRef | None = Field(
         None,
-        description="Distance modulus of the host known from elsewhere, mag; empty, NaN or not above 0 where the row is no calibrator.",
+        description="Distance modulus of the host known from elsewhere, mag; empty, NaN or not above 0 where the row is no calibrator. "
+        "Its error belongs to the uncertainty of the row.",
     )
     group: ColumnRef | None = Field(None, description="Group that a supernova belongs to, e.g. its survey.")
     name: ColumnRef | None = Field(None, description="Name of the supernova; checked for duplicates.")

@@ -359,9 +359,7 @@ def _schema() -> None:
 @app.command("explain")
 @_reported
 def _explain(
-    key: Annotated[
-        str | None, typer.Argument(metavar="KEY", help="A key, parameter, model or prior.", show_default="what there is")
-    ] = None,
+    key: Annotated[str | None, typer.Argument(metavar="KEY", help="Key, parameter, model or prior.", show_default="what there is")] = None,
 ) -> None:
     """Say what a key means: unit, default, example."""
     from fitter.config.schema import explain

@@ -11,6 +11,7 @@ if TYPE_CHECKING:
     from fitter.config.load import load_config
     from fitter.config.settings import Config
     from fitter.errors import InputError, InputErrors, MufitterError
+    from fitter.report.run_folder import read_run
     from fitter.sample.sample import Sample
 
 __version__ = "0.1.0"
@@ -29,6 +30,7 @@ __all__ = [
     "compare",
     "fit",
     "load_config",
+    "read_run",
 ]
 
 # Loaded on first use (PEP 562), so that `mufitter --help` does not wait for numpy and friends.
@@ -45,6 +47,7 @@ _HOMES = {
     "compare": "fitter.comparing",
     "fit": "fitter.api",
     "load_config": "fitter.config.load",
+    "read_run": "fitter.report.run_folder",
 }
 
 

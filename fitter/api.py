@@ -66,7 +66,7 @@ _log = logging.getLogger("fitter")
 _OPTIMUM, _SAMPLING, _PROOF = 1, 2, 3
 
 
-@dataclass(frozen=True)
+@dataclass(frozen=True, repr=False)
 class Fit:
     """A finished fit.
 
@@ -161,6 +161,15 @@ class Fit:
         from fitter.report.terminal import terminal_summary
 
         return terminal_summary(self._summary)
+
+    def __repr__(self) -> str:
+        from fitter.report.facts import parameter, relabelled
+        from fitter.report.terminal import cell_text
+
+        facts, said = self._summary["parameters"], self._summary
+        with relabelled(self.config.labels):
+            values = "; ".join(f"{parameter(n).plain} {cell_text(facts[n])}" for n in self.chains.names if n in facts)
+        return f"Fit({said['model']}, {said['sample']['n']} supernovae: {values}{'' if self.converged else '; not converged'})"
 
     def to_arviz(self) -> Any:
         """Return the draws for ArviZ: each walker is a chain, its steps are the draws.

@@ -1,7 +1,8 @@
-"""Comparisons: the variants of a config fitted and set side by side, or finished runs."""
+"""Comparisons: the variants of a config fitted and set side by side, or finished fits."""
 
 from __future__ import annotations
 
+import html
 import json
 import logging
 import os
@@ -14,7 +15,7 @@ from typing import TYPE_CHECKING, Any, Literal
 
 import numpy as np
 
-from fitter.api import _Job, _settings, load_run
+from fitter.api import Fit, _Job, _settings, load_run
 from fitter.checking import likelihood_of, samples_of
 from fitter.config.expand import Variant, expand
 from fitter.config.load import raise_all
@@ -31,6 +32,7 @@ from fitter.sample.sample import Sample
 from fitter.study.entry import Entry
 
 if TYPE_CHECKING:
+    from fitter.inference.posterior import Posterior
     from fitter.likelihood.posterior import LogPosterior
     from fitter.report.run_folder import Run
 
@@ -41,7 +43,7 @@ _STUDY = 6  # child of the seed
 Report = Callable[[str], None]
 
 
-@dataclass(frozen=True)
+@dataclass(frozen=True, repr=False)
 class Comparison:
     """Fits set side by side.
 
@@ -81,9 +83,15 @@ class Comparison:
     def __str__(self) -> str:
         return self.table()
 
+    def __repr__(self) -> str:
+        return f"Comparison({', '.join(entry.name for entry in self.entries)})"
+
+    def _repr_html_(self) -> str:
+        return f'<pre style="overflow-x:auto">{html.escape(str(self))}</pre>'
+
 
 def compare(
-    what: Config | str | Path | Sequence[str | Path],
+    what: Config | str | Path | Sequence[str | Path | Fit],
     *,
     names: Sequence[str] | None = None,
     reference: str | None = None,
@@ -95,14 +103,14 @@ def compare(
     allow_code: bool = False,
     tell: Report | None = None,
 ) -> Comparison:
-    """Compare models, priors or data: the variants of a config, or finished runs.
+    """Compare models, priors or data: the variants of a config, or finished fits.
 
     Parameters
     ----------
-    what : config, its path, or a sequence of run folders
+    what : config, its path, or a sequence of run folders or Fits
         A config has ``variants``; they are fitted first, in parallel.
     names : sequence of str, optional
-        What runs are called, in their order; their titles by default.
+        What fits are called, in their order; their titles by default.
     reference : str, optional
         The fit that differences are taken from; the first by default.
     scale : {"kass_raftery", "jeffreys"}, optional
@@ -110,7 +118,7 @@ def compare(
     average : bool, optional
         Add constraints averaged over the models.
     run_folder : path-like or False, optional
-        Where everything goes. False writes nothing, and is for finished runs only.
+        Where everything goes. False writes nothing, and is for finished fits only; it is the default where one of them is a Fit.
     replace : bool
         Whether an earlier comparison there may be replaced.
     resume : bool
@@ -138,10 +146,11 @@ def compare(
         return _compare_variants(what, options, place, allow_code, tell or (lambda _: None))
     if resume:
         raise InputError("finished runs are compared in a moment, there is nothing to continue", cure="Leave --resume out")
-    entries = [_entry_of_run(path, allow_code) for path in what]
-    entries = _with_different_names(entries, [Path(p) for p in what]) if names is None else _renamed(entries, list(names))
+    what = [what] if isinstance(what, Fit) else list(what)
+    entries = [_entry_of_fit(one) if isinstance(one, Fit) else _entry_of_run(one, allow_code) for one in what]
+    entries = _with_different_names(entries, what) if names is None else _renamed(entries, list(names))
     report = _report(entries, options, DEFAULT_SEED)
-    if run_folder is False:
+    if run_folder is False or (run_folder is None and any(isinstance(one, Fit) for one in what)):
         return Comparison(report, tuple(entries))
     folder = _Place(run_folder or Path("runs") / "comparison", replace).open_for(None)
     folder.open()
@@ -212,7 +221,8 @@ def _compare_variants(what: Config | str | Path, options: dict, place: _Place, a
     try:
         runs = _fit_all(work, place.resume, tell)
         entries = [
-            _entry(v.name, run, partial(likelihood_of, v.config, sample)) for v, run, sample in zip(variants, runs, samples, strict=True)
+            _entry(v.name, run.summary, run.posterior, partial(likelihood_of, v.config, sample))
+            for v, run, sample in zip(variants, runs, samples, strict=True)
         ]
         report = _report(entries, given | options, config.sampling.seed)
         _write(report, entries, folder.path)
@@ -317,14 +327,19 @@ def _write(report: dict, entries: list[Entry], folder: Path) -> None:
 def _entry_of_run(path: str | Path, allow_code: bool) -> Entry:
     run = read_run(path)
     name = run.summary["title"] or run.summary["model"]
-    return _entry(name, run, lambda: _rebuilt(run, path, allow_code))
+    return _entry(name, run.summary, run.posterior, lambda: _rebuilt(run, path, allow_code))
 
 
-def _entry(name: str, run: Run, likelihood: Callable[[], LogPosterior | None]) -> Entry:
+def _entry_of_fit(fit: Fit) -> Entry:
+    summary = fit.summary()
+    return _entry(summary["title"] or summary["model"], summary, fit.chains, lambda: fit.log_posterior)
+
+
+def _entry(name: str, summary: dict, posterior: Posterior, likelihood: Callable[[], LogPosterior | None]) -> Entry:
     """A fit to compare; of a blinded one the sampled parameters, shifted alike in all, and nothing that knows their place."""
-    if run.summary.get("blinded"):
-        return Entry(name, *comparable(run.summary, run.posterior))
-    return Entry(name, run.summary, run.posterior, likelihood())
+    if summary.get("blinded"):
+        return Entry(name, *comparable(summary, posterior))
+    return Entry(name, summary, posterior, likelihood())
 
 
 def _rebuilt(run: Run, path: str | Path, allow_code: bool) -> LogPosterior | None:
@@ -346,11 +361,15 @@ def _renamed(entries: list[Entry], names: list[str]) -> list[Entry]:
     return [replace(e, name=n) for e, n in zip(entries, names, strict=True)]
 
 
-def _with_different_names(entries: list[Entry], paths: list[Path]) -> list[Entry]:
+def _with_different_names(entries: list[Entry], fits: Sequence[str | Path | Fit]) -> list[Entry]:
     """What all titles begin with is dropped; two runs of one title are told apart by their folders."""
     names = [e.name for e in entries]
     start = os.path.commonprefix(names).rfind(": ") + 2
     names = [n[start:] for n in names] if start > 1 else names
+    paths = [Path(one) for one in fits if not isinstance(one, Fit)]
+    if len(set(names)) < len(names) and len(paths) < len(names):
+        twice = sorted({n for n in names if names.count(n) > 1})
+        raise InputError("fits have the same name", value=", ".join(twice), cure="Give each a title, or `names` to the comparison")
     if len(set(names)) < len(names):
         shared = os.path.commonpath([p.resolve().parent for p in paths])
         names = [os.path.relpath(p.resolve(), shared) for p in paths]

@@ -4,6 +4,7 @@ import csv
 import html
 import json
 import logging
+import re
 import sys
 
 import numpy as np
@@ -51,6 +52,7 @@ def test_a_fit_is_an_object(result, sample):
     assert table["omega_m"].mean() == pytest.approx(result.summary()["parameters"]["omega_m"]["mean"], rel=1e-12)
     assert result.best_fit["omega_m"] == pytest.approx(result.optimum.theta[0])
     assert "sixty" in str(result)
+    assert re.fullmatch(r"Fit\(flat_lcdm, 60 supernovae: Ωm 0\.\d+ .*; H0 \d+.*\)", repr(result))
     shown = result._repr_html_()
     assert "sixty" in shown and "Sound." in shown and "Ω<sub>m</sub>" in shown and shown.count("<div>") == shown.count("</div>")
     assert all(html.escape(text) in shown for text in result.warnings)

@@ -10,7 +10,7 @@ import pytest
 import yaml
 from typer.testing import CliRunner
 
-from fitter import cli, compare, fit
+from fitter import Sample, cli, compare, fit
 from fitter.comparing import Comparison
 from fitter.errors import InputError
 from fitter.report.run_folder import read_run
@@ -129,6 +129,25 @@ def test_runs_are_compared_like_variants(comparison, folder):
     assert found.report["nested"] == comparison.report["nested"]
     with pytest.raises(InputError, match="given twice"):
         compare([runs[0], runs[0]], run_folder=False)
+
+
+def test_fits_are_compared_as_they_are(folder, tmp_path, monkeypatch):
+    """Fits in memory need no folder, and get none."""
+    monkeypatch.chdir(tmp_path)
+    rng = np.random.default_rng(4)
+    z = np.sort(rng.uniform(0.02, 1.0, 60))
+    sample = Sample.from_arrays(z, 43.15 + 5 * np.log10(z * (1 + 0.77 * z - 0.2 * z**2)) + rng.normal(0, 0.12, 60), sigma=0.12)
+    settings = {"sample": sample, "sampling": {"target_ess": 500, "replicas": 2}}
+    flat, curved = fit(model="flat_lcdm", **settings), fit(model="curved_lcdm", title="curved", **settings)
+    found = compare([flat, curved])
+    assert found.run_folder is None and not list(tmp_path.iterdir())
+    assert repr(found) == "Comparison(flat_lcdm, curved)" and "curved" in found._repr_html_()
+    chi2 = [one.summary()["best_fit"]["chi2"] for one in (flat, curved)]
+    assert found.report["variants"][1]["delta"]["chi2"] == pytest.approx(chi2[1] - chi2[0])
+    assert found.report["nested"]  # the likelihood is at hand
+    with pytest.raises(InputError, match="the same name"):
+        compare([flat, flat])
+    assert [v["name"] for v in compare([flat, flat], names=["a", "b"]).report["variants"]] == ["a", "b"]
 
 
 def test_two_data_sets(comparison, folder, tmp_path):

@@ -24,7 +24,7 @@ if TYPE_CHECKING:
     from fitter.inference.mixture import StudentMixture
     from fitter.likelihood.posterior import LogPosterior
 
-__all__ = ["Replica", "Replicas", "available_cores"]
+__all__ = ["Replica", "Replicas", "available_cores", "end_with_parent"]
 
 Result = TypeVar("Result")
 
@@ -259,11 +259,18 @@ def _start_worker(log_posterior: LogPosterior, board: _Board, parent: int) -> No
 
     signal.signal(signal.SIGINT, signal.SIG_IGN)
     _worker.update(log_posterior=log_posterior, board=board, limit=threadpool_limits(1))
-    threading.Thread(target=_end_with, args=(parent,), daemon=True).start()
+    end_with_parent(parent)
+
+
+def end_with_parent(parent: int | None = None) -> None:
+    """Make this worker process end with the one that started it, by default its parent as it is now.
+
+    A killed parent cannot tell its workers: they would finish what nobody wants, keep its locks, and wait for work for ever.
+    """
+    threading.Thread(target=_end_with, args=(os.getppid() if parent is None else parent,), daemon=True).start()
 
 
 def _end_with(parent: int) -> None:
-    """A killed parent cannot tell its workers; they would wait for work for ever."""
     while os.getppid() == parent:
         time.sleep(0.5)
     os._exit(1)

@@ -226,8 +226,11 @@ def give_up(lost: dict[str, int]) -> None:
 
 
 def _receive(function: Callable[..., Any], shared: Any) -> None:
+    from fitter.inference.replicas import end_with_parent
+
     global _shared
     _shared = (function, shared)
+    end_with_parent()
 
 
 def _call_shared(argument: Any, seed: np.random.SeedSequence) -> Any:

@@ -67,14 +67,47 @@ def test_killed_again_and_again(tmp_path):
         assert output.read_text() == reference.read_text()
 
 
-@pytest.mark.skipif(not Path("/proc").is_dir(), reason="looks for processes in /proc")
-def test_workers_end_with_a_killed_parent(tmp_path):
-    process = start(tmp_path / "run", 2, tmp_path / "chain")
-    wait_until_sampling(tmp_path / "run", process)
-    time.sleep(0.3)
+def killed_leaves_nothing(process):
     os.kill(process.pid, signal.SIGKILL)
     process.wait()
     deadline = time.monotonic() + 10
     while alive_in_session(process.pid) and time.monotonic() < deadline:
         time.sleep(0.05)
-    assert alive_in_session(process.pid) == []
+    return alive_in_session(process.pid) == []
+
+
+IN_PROC = pytest.mark.skipif(not Path("/proc").is_dir(), reason="looks for processes in /proc")
+
+
+@IN_PROC
+def test_workers_end_with_a_killed_parent(tmp_path):
+    process = start(tmp_path / "run", 2, tmp_path / "chain")
+    wait_until_sampling(tmp_path / "run", process)
+    time.sleep(0.3)
+    assert killed_leaves_nothing(process)
+
+
+NAPS = """
+import pathlib, sys, time
+import numpy as np
+
+def nap(*_):
+    (pathlib.Path(sys.argv[1]) / f"started_{time.monotonic_ns()}").touch()
+    time.sleep(120)
+
+"""
+STUDY = """
+from fitter.study.tasks import Tasks, run_tasks
+run_tasks(Tasks(nap, None, {"a": 1, "b": 2}, np.random.SeedSequence(1)), processes=2)
+"""
+
+
+@IN_PROC
+@pytest.mark.parametrize("code", [STUDY], ids=["study"])
+def test_workers_of_many_fits_end_with_a_killed_parent(code, tmp_path):
+    process = subprocess.Popen([sys.executable, "-c", NAPS + code, str(tmp_path)], start_new_session=True)
+    deadline = time.monotonic() + 60
+    while len(list(tmp_path.iterdir())) < 2 and process.poll() is None and time.monotonic() < deadline:
+        time.sleep(0.02)
+    assert len(alive_in_session(process.pid)) >= 3
+    assert killed_leaves_nothing(process)

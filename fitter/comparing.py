@@ -22,7 +22,7 @@ from fitter.config.load import raise_all
 from fitter.config.settings import Config
 from fitter.config.write import input_problems
 from fitter.errors import InputError
-from fitter.inference.replicas import available_cores
+from fitter.inference.replicas import available_cores, end_with_parent
 from fitter.inference.seeds import child_seed
 from fitter.inference.settings import DEFAULT_SEED
 from fitter.report.blinding import comparable, hidden_labels, require_same_blinding
@@ -234,10 +234,15 @@ def _compare_variants(what: Config | str | Path, options: dict, place: _Place, a
 _work: tuple = ()
 
 
-def _start_worker(*work: Any) -> None:
+def _take(*work: Any) -> None:
     """Keep the samples in the worker: with forked processes they are shared, not copied."""
     global _work
     _work = work
+
+
+def _start_worker(*work: Any) -> None:
+    _take(*work)
+    end_with_parent()
 
 
 def _job(i: int, variants: list[Variant], samples: list[Sample], folder: Path, final: Path) -> tuple[_Job, RunFolder]:
@@ -289,7 +294,7 @@ def _fit_all(work: tuple, resume: bool, tell: Report) -> list:
     work = (*work, resume, max(1, cores // workers))
     said = lambda i, new, done: tell(f"{variants[i].name} {'is' if new else 'was'} done, {done} of {len(variants)}")  # noqa: E731
     if workers == 1:
-        _start_worker(*work)
+        _take(*work)
         for i in range(len(variants)):
             said(i, _fit_one(i), i + 1)
     else:

@@ -102,8 +102,15 @@ run_tasks(Tasks(nap, None, {"a": 1, "b": 2}, np.random.SeedSequence(1)), process
 """
 
 
+COMPARISON = """
+from fitter import comparing
+comparing._fit_one, comparing._sampled, comparing.available_cores = nap, lambda variant: (), lambda: 2
+comparing._fit_all((["a", "b"], None, None, None), False, print)
+"""
+
+
 @IN_PROC
-@pytest.mark.parametrize("code", [STUDY], ids=["study"])
+@pytest.mark.parametrize("code", [STUDY, COMPARISON], ids=["study", "comparison"])
 def test_workers_of_many_fits_end_with_a_killed_parent(code, tmp_path):
     process = subprocess.Popen([sys.executable, "-c", NAPS + code, str(tmp_path)], start_new_session=True)
     deadline = time.monotonic() + 60

@@ -150,8 +150,9 @@ def profile_text(facts: dict, delta: str) -> str:
         return figures_for(facts["maximum"], ends["low"], ends["high"]).plain()
     if not any(inside.values()):
         return "not limited within the prior"
-    sign, side = ("<", "high") if inside["high"] else (">", "low")
-    return f"{sign} {figures_for(ends[side], width=abs(ends[side] - facts['maximum']) or None).plain()}, to the prior's edge"
+    sign, side, other = ("<", "high", "low") if inside["high"] else (">", "low", "high")
+    end = "to the prior's edge" if ends[f"{other}_at_edge"] else f"without a {'lower' if other == 'low' else 'upper'} limit"
+    return f"{sign} {figures_for(ends[side], width=abs(ends[side] - facts['maximum']) or None).plain()}, {end}"
 
 
 def _convergence_line(summary: dict) -> str:

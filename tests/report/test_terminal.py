@@ -4,7 +4,7 @@ import io
 
 import pytest
 
-from fitter.report.terminal import terminal_summary, wants_colour
+from fitter.report.terminal import profile_text, terminal_summary, wants_colour
 
 
 class Terminal(io.StringIO):
@@ -79,3 +79,13 @@ def test_cautions_stand_apart_from_warnings(summary):
     assert lines[cautioned + 1].startswith("  - ") and not any(line.startswith("  !") for line in lines[cautioned:])
     old = {key: value for key, value in summary.items() if key != "cautions"}  # a run of an earlier version
     assert "Caution" not in terminal_summary(old) and "  ! " in terminal_summary(old)
+
+
+def test_profiles_without_an_end_say_what_is_there_instead():
+    edges = {"low_at_edge": False, "high_at_edge": False}
+    open_below = {"maximum": -1.2, "delta1": {"low": None, "high": -0.9, **edges}}
+    at_prior = {"maximum": 0.1, "delta1": {"low": 0.0, "high": 0.3, **edges, "low_at_edge": True}}
+    free = {"maximum": 0.1, "delta1": {"low": None, "high": None, **edges}}
+    assert profile_text(open_below, "delta1") == "< −0.90, without a lower limit"
+    assert profile_text(at_prior, "delta1") == "< 0.30, to the prior's edge"
+    assert profile_text(free, "delta1") == "not limited within the prior"

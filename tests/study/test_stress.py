@@ -62,7 +62,9 @@ def test_the_sound_survey_is_left_in_peace_and_everything_is_written(tmp_path):
     folder = tmp_path / "out"
     study = stress(survey(tmp_path), Place(folder), processes=1)
     assert study.result["tests"]["flagged"] == 0
-    assert "survives" in study.text
+    assert "survives" in study.text and "shift/expected: over" in study.text
+    page = (folder / "stress.md").read_text()
+    assert all(f"\n## {heading}" in page for heading in ("Ωm", "Error budget", "Single supernovae", "Residuals"))
     assert {p.name for p in folder.iterdir()} >= {"stress.json", "stress.md", "stress.csv", "config.yaml", "figures"}
     written = json.loads((folder / "stress.json").read_text())
     assert written["variants"] == study.result["variants"]
@@ -249,7 +251,7 @@ def test_the_forest_plot_shows_the_table():
     assert sum(line.get_marker() in "<>" for line in axes.lines) == arrows
     header = next(text for text in axes.texts if text.get_text() == "shift / expected").get_window_extent()
     assert header.y1 < axes.figure.bbox.y1 and header.x1 < axes.figure.bbox.x1
-    assert "68.3 %" in stress_caption(found, "omega_m")
+    assert "equal-tailed 68.3 %" in stress_caption(found, "omega_m")
 
 
 def test_what_the_prior_decides_is_not_judged():

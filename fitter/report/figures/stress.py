@@ -53,8 +53,9 @@ def stress_caption(result: dict, name: str) -> str:
     """Return what a reader of the plot must know."""
     blinded = " Values are differences from this fit: the parameter is blinded." if name in result["blinded"] else ""
     return (
-        f"{parameter(name).meaning[:1].upper()}{parameter(name).meaning[1:]} under every change of the fit: medians with 68.3 % intervals. "
-        f"Line and band: the fit itself. Right: shift of the median over the scatter expected of it, √|σ² − σ²(all)| (Gratton & Challinor "
+        f"{parameter(name).meaning[:1].upper()}{parameter(name).meaning[1:]} under every change of the fit: medians with "
+        "equal-tailed 68.3 % intervals. Line and band: the fit itself. Right: shift of the median over the scatter expected of it, "
+        f"√|σ² − σ²(all)| (Gratton & Challinor "
         f"2020), where less information went in; orange beyond {FLAG}; in brackets the shift over the fit's own error, where no scatter "
         f"is expected. Open and filled: a mode shifted by −1σ and +1σ. Arrows: it goes on beyond the frame.{blinded}"
     )

@@ -54,6 +54,11 @@ class WeightedPosterior:
     _weights: FloatArray  # (M,), sum 1
     method = "importance sampling from a fitted mixture"
 
+    def points(self, size: int) -> FloatArray:
+        """About equally likely points, (size, d): the draws, resampled systematically by their weights."""
+        at = (np.arange(size) + 0.5) / size
+        return self._draws[np.minimum(np.searchsorted(np.cumsum(self._weights), at), len(self._weights) - 1)]
+
     @property
     def cdf_error(self) -> float:
         """Error of `cdf` that chance exceeds once in 10,000 times."""

@@ -22,6 +22,8 @@ __all__ = ["Proof", "cross_check", "prove"]
 # Quadrature whose own error is larger than this proves nothing: importance sampling takes its place.
 _USABLE_ERROR = 0.02
 _SIGMAS = 4.0
+# Points of the chain, and as many of the importance sample, that the cells of the quadrature must know of.
+_KNOWN = 3000
 # A distribution function is compared in the tails too, where the Kolmogorov bound is blind, at these probabilities
 # and to this many of its own standard errors √(F (1 − F) / ESS).
 _TAILS = (0.002, 0.01, 0.05, 0.95, 0.99, 0.998)
@@ -63,8 +65,10 @@ def prove(
         Effective sample size of each sampled parameter.
     seed : SeedSequence
     """
-    grid = integrate(log_posterior, optimum)
     weighted = importance(log_posterior, posterior, seed=seed)
+    chain = posterior.chain.reshape(-1, posterior.chain.shape[-1])
+    known = np.concatenate([chain[:: len(chain) // _KNOWN + 1], weighted.points(_KNOWN)])
+    grid = integrate(log_posterior, optimum, known=known)
     if grid is not None and grid.log_evidence_error > _USABLE_ERROR:
         grid = None
     best = weighted if grid is None else grid

@@ -1,7 +1,8 @@
 """The posterior by quadrature: adaptive cells over the prior, with an error of its own.
 
-Independent of any chain. The prior box is cut around the optimum; each cell holds a tensor Gauss–Legendre rule, and the
-decay of its Legendre coefficients says where, and along which axis, to cut again.
+The prior box is cut around the optimum; each cell holds a tensor Gauss–Legendre rule, and the decay of its Legendre coefficients says
+where, and along which axis, to cut again. Points beside the cells, and others of which the caller knows, tell where a cell has overlooked
+something (`fitter.inference.probes`); they only add cells, so that a wrong chain that names them cannot pass its error on.
 
 References
 ----------
@@ -12,17 +13,14 @@ from __future__ import annotations
 
 from collections.abc import Callable
 from dataclasses import dataclass
-from typing import TYPE_CHECKING
 
 import numpy as np
 from numpy.polynomial import legendre
 from numpy.typing import ArrayLike
 
 from fitter.array_types import FloatArray, IntArray
+from fitter.inference.probes import Probes, across_the_faces
 from fitter.inference.target import Place, Target
-
-if TYPE_CHECKING:
-    pass
 
 __all__ = ["MAX_DIMENSIONS", "GridPosterior", "integrate"]
 
@@ -43,6 +41,11 @@ class _Cells:
     value: FloatArray  # (C, n, …, n), density over its maximum
     mass: FloatArray  # (C,)
     tail: FloatArray  # (C, d), mass that the trailing coefficients along each axis stand for
+
+    @property
+    def volume(self) -> FloatArray:
+        """(C,)."""
+        return np.prod(self.high - self.low, axis=1)
 
     @property
     def error(self) -> FloatArray:
@@ -196,7 +199,12 @@ class GridPosterior:
 
 
 def integrate(
-    log_posterior: Target, optimum: Place, *, tolerance: float = 3e-3, max_evaluations: int | None = None
+    log_posterior: Target,
+    optimum: Place,
+    *,
+    tolerance: float = 3e-3,
+    max_evaluations: int | None = None,
+    known: FloatArray | None = None,
 ) -> GridPosterior | None:
     """Integrate the posterior over its prior.
 
@@ -209,6 +217,8 @@ def integrate(
         Relative error of the evidence, by the rule's own estimate.
     max_evaluations : int, optional
         Stop there, converged or not; a few seconds by default.
+    known : (M, d) array, optional
+        Points that matter, e.g. draws: a cell that knows nothing of those in it is cut.
 
     Returns
     -------
@@ -225,9 +235,13 @@ def integrate(
         return np.concatenate([np.exp(log_posterior(points[i : i + _BATCH]) - peak) for i in range(0, len(points), _BATCH)])
 
     cells = rule.evaluate(density, *_first_cells(log_posterior, optimum))
+    probes = Probes(density, rule.transform)
+    probes.add(_outside(cells, rule, known), cells.low, cells.high, cells.value)
+    scale = np.sqrt(np.diag(optimum.covariance))
     evaluations = len(cells.mass) * rule.n**d
     while True:
-        total, worst = cells.mass.sum(), cells.error
+        total, missed = cells.mass.sum(), probes.missed(cells.volume)
+        worst = cells.error + missed
         converged = worst.sum() <= tolerance * total
         # Cells that hold an even share of the allowed error are good enough.
         chosen = np.flatnonzero(worst > 0.5 * tolerance * total / len(worst))
@@ -235,12 +249,21 @@ def integrate(
         if converged or not len(chosen) or not room:
             break
         chosen = chosen[np.argsort(worst[chosen])[::-1][:room]]
-        low, high = _halves(cells, chosen)
-        new = rule.evaluate(density, low, high)
+        axis = np.where(missed > cells.error, ((cells.high - cells.low) / scale).argmax(axis=1), cells.tail.argmax(axis=1))
+        new = rule.evaluate(density, *_halves(cells, chosen, axis[chosen]))
         evaluations += len(new.mass) * rule.n**d
-        cells = cells.join(new, np.setdiff1d(np.arange(len(worst)), chosen))
+        kept = np.setdiff1d(np.arange(len(worst)), chosen)
+        cells = cells.join(new, kept)
+        probes.follow(chosen, kept, cells.low, cells.high, cells.value)
+        probes.add(_outside(new, rule), cells.low, cells.high, cells.value)
     error = float(worst.sum() / total)
     return GridPosterior(log_posterior.names, float(np.log(total) + peak), error, evaluations, bool(converged), cells, rule)
+
+
+def _outside(cells: _Cells, rule: _Rule, known: FloatArray | None = None) -> FloatArray:
+    """Points to hold against the cells: beside them, and those known."""
+    beside = across_the_faces(cells.low, cells.high, cells.value, rule.node)
+    return beside if known is None else np.concatenate([known, beside])
 
 
 def _first_cells(log_posterior: Target, optimum: Place) -> tuple[FloatArray, FloatArray]:
@@ -260,10 +283,9 @@ def _first_cells(log_posterior: Target, optimum: Place) -> tuple[FloatArray, Flo
     return bottom, top
 
 
-def _halves(cells: _Cells, chosen: IntArray) -> tuple[FloatArray, FloatArray]:
-    """Cut the chosen cells in two along the axis with the worst coefficients."""
+def _halves(cells: _Cells, chosen: IntArray, axis: IntArray) -> tuple[FloatArray, FloatArray]:
+    """Cut the chosen cells in two, each along its axis: first the lower halves, then the upper ones."""
     low, high = cells.low[chosen], cells.high[chosen]
-    axis = cells.tail[chosen].argmax(axis=1)
     row = np.arange(len(chosen))
     middle = 0.5 * (low[row, axis] + high[row, axis])
     upper_low, lower_high = low.copy(), high.copy()

@@ -167,3 +167,37 @@ def test_independent_draws_raise_no_false_alarm(seed):
     grid = integrate(toy, optimum(toy, target.mean, covariance))
     draws = target.rvs(12000, random_state=np.random.default_rng(seed))
     assert cross_check(grid, chain_of(draws, toy.names), {n: 12000.0 for n in toy.names})["agrees"] is True
+
+
+def test_a_ridge_that_leaves_the_first_cells_between_their_nodes_is_followed():
+    """A narrow peak, and from it a thin curved ridge with a tenth of the mass that leads far away, both of known mass."""
+
+    def along(x):
+        peak = stats.norm.pdf(x, 0.3, 0.01)
+        return 0.9 * peak + 0.1 * np.where((x > 0.3) & (x < 0.9), 1 / 0.6, 0.0)
+
+    def log_likelihood(t):
+        x, y, z = t.T
+        with np.errstate(divide="ignore"):
+            return (
+                np.log(along(x))
+                + stats.norm.logpdf(y, 0.2 + 0.9 * (x - 0.3) ** 2, 0.005)
+                + stats.norm.logpdf(z, 0.8 - 0.7 * (x - 0.3), 0.005)
+            )
+
+    toy = Toy((Uniform(0, 1),) * 3, log_likelihood)
+    grid = integrate(toy, optimum(toy, [0.3, 0.2, 0.8], np.diag([0.01, 0.005, 0.005]) ** 2))
+    assert grid.log_evidence == pytest.approx(0.0, abs=3 * grid.log_evidence_error)
+    assert grid.log_evidence_error < 0.02
+    # Half of the ridge lies beyond 0.6.
+    assert 1 - grid.cdf("p0", 0.6)[0] == pytest.approx(0.05, abs=0.003)
+
+
+def test_points_that_matter_are_looked_at():
+    """A second peak far from the first, which no face leads to, is found once something there is named."""
+    narrow = [stats.multivariate_normal(np.full(3, c), 0.004**2 * np.eye(3)) for c in (0.2, 0.83)]
+    toy = Toy((Uniform(0, 1),) * 3, lambda t: np.log(0.5 * sum(peak.pdf(t) for peak in narrow)))
+    start = optimum(toy, np.full(3, 0.2), 0.004**2 * np.eye(3))
+    assert integrate(toy, start).log_evidence == pytest.approx(np.log(0.5), abs=0.01)  # as nobody told it
+    found = integrate(toy, start, known=np.full((1, 3), 0.832))
+    assert found.log_evidence == pytest.approx(0.0, abs=max(found.log_evidence_error, 1e-4))

@@ -4,12 +4,18 @@ from __future__ import annotations
 
 import csv
 import io
+import textwrap
 
 from fitter.report.digits import figures_for, plain_number
 from fitter.report.facts import parameter
 
 __all__ = ["rehearsal_csv", "rehearsal_markdown", "rehearsal_text"]
 
+_LEGEND = (
+    "expected ±1σ: median error of a fit, and the range of 68 % of them. bias: mean of the fits minus the truth; bias/σ: the same with "
+    "each fit in units of its own error, scatter/σ their scatter, 1 for right errors. 68 %, 95 %: how often the interval holds the truth. "
+    "ranks p: chance of the truths' ranks, which are uniform for right errors."
+)
 _HEAD = ("", "expected ±1σ", "bias", "bias/σ", "scatter/σ", "68 %", "95 %", "ranks p")
 
 
@@ -19,7 +25,8 @@ def rehearsal_text(result: dict) -> str:
     widths = [max(len(row[i]) for row in rows) for i in range(len(_HEAD))]
     lines = [_title(result), _truth(result), "", *(f"  {text}" for text in result["verdict"]), ""]
     lines += ["  ".join(cell.ljust(width) for cell, width in zip(row, widths, strict=True)).rstrip() for row in rows]
-    return "\n".join([*lines, "", _chi2(result["chi2"])]) + "\n"
+    legend = textwrap.wrap(_LEGEND, 98, initial_indent="  ", subsequent_indent="  ")
+    return "\n".join([*lines, "", *legend, "", _chi2(result["chi2"])]) + "\n"
 
 
 def rehearsal_markdown(result: dict) -> str:
@@ -27,7 +34,7 @@ def rehearsal_markdown(result: dict) -> str:
     lines = [f"# {_title(result)}", "", _truth(result), "", *(f"- {text}" for text in result["verdict"]), ""]
     lines += ["| " + " | ".join(("parameter", *_HEAD[1:])) + " |", "|" + " --- |" * len(_HEAD)]
     lines += ["| " + " | ".join(_row(name, facts)) + " |" for name, facts in result["parameters"].items()]
-    return "\n".join([*lines, "", _chi2(result["chi2"])]) + "\n"
+    return "\n".join([*lines, "", _LEGEND, "", _chi2(result["chi2"])]) + "\n"
 
 
 def rehearsal_csv(result: dict) -> str:
@@ -52,14 +59,14 @@ def _truth(result: dict) -> str:
     drawn += "" if result["same_covariance"] else " with the covariance of another config"
     if result["truth"] == "prior":
         return f"Drawn{drawn} at truths from the prior."
-    values = ", ".join(f"{parameter(k).plain} = {plain_number(v)}" for k, v in result["truth"].items())
+    values = ", ".join(f"{parameter(k).plain} = {plain_number(v)}" for k, v in result["truth"].items()).replace("-", "−")
     return f"Drawn{drawn} at {values}."
 
 
 def _row(name: str, facts: dict) -> tuple[str, ...]:
     precision = facts["precision"]
     unit = f" {parameter(name).unit}" if parameter(name).unit else ""
-    middle, low, high = (plain_number(precision[key], 2) for key in ("sigma", "sigma_low", "sigma_high"))
+    middle, low, high = (figures_for(precision[key], width=precision["sigma"]).plain() for key in ("sigma", "sigma_low", "sigma_high"))
     sigma = f"{middle} ({low}–{high}){unit}"
     if facts["coverage"] is None:
         return (parameter(name).plain, sigma, "", "", "", "", "", "")

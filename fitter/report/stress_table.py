@@ -4,6 +4,8 @@ from __future__ import annotations
 
 import csv
 import io
+import textwrap
+from collections.abc import Iterable
 
 from fitter.report.digits import figures_for, plain_number
 from fitter.report.facts import parameter
@@ -14,12 +16,16 @@ __all__ = ["stress_csv", "stress_markdown", "stress_text"]
 
 _COLUMNS = ("median", "low68", "high68", "low95", "high95", "sigma", "shift", "shift_in_sigma", "expected", "significance", "flagged")
 _LISTED = 3
+_LEGEND = (
+    "shift/σ: of the median, over the error of this fit. shift/expected: over the scatter that less information explains, "
+    f"√|σ² − σ²(this fit)|; judged by this, ← beyond {FLAG:g}. Empty: nothing to expect, the data being the same or the error the prior's."
+)
 _LEAST_SHARE = 0.001  # of the variance: below it a term of the error budget is not printed
 
 
 def stress_text(result: dict) -> str:
     """Return the study for a terminal: verdict first, then one table a parameter."""
-    lines = [f"Stress: {result['model']}, {result['n']} supernovae", "", *(f"  {text}" for text in result["verdict"])]
+    lines = [f"Stress: {result['model']}, {result['n']} supernovae", "", *_paragraphs(result["verdict"]), "", *_paragraphs([_LEGEND])]
     for name in result["baseline"]["parameters"]:
         rows = [_cells(row, name) for row in result["variants"]]
         head = ("", "n", _value_head(result, name), "shift/σ", "shift/expected", "")
@@ -32,7 +38,7 @@ def stress_text(result: dict) -> str:
 
 def stress_markdown(result: dict) -> str:
     """Return the study as a Markdown page."""
-    lines = [f"# Stress: {result.get('title') or result['model']}", "", *(f"- {text}" for text in result["verdict"])]
+    lines = [f"# Stress: {result.get('title') or result['model']}", "", *(f"- {text}" for text in result["verdict"]), "", _LEGEND]
     for name in result["baseline"]["parameters"]:
         head = ("change", "n", _value_head(result, name), "shift/σ", "shift/expected", "flag")
         lines += ["", f"## {parameter(name).plain}", "", "| " + " | ".join(head) + " |", "|" + " --- |" * len(head)]
@@ -41,9 +47,9 @@ def stress_markdown(result: dict) -> str:
             rows = [row for row in result["variants"] if row["kind"] == kind]
             lines += [f"| **{heading}** | | | | | |"] if rows else []
             lines += ["| " + " | ".join(cell.strip() for cell in _cells(row, name)) + " |" for row in rows]
-    lines += ["", "## Error budget and residuals", "", *(f"- {line.strip()}" for line in _budget_lines(result) if line.strip())]
-    more = [*_influence_lines(result), *_goodness_lines(result["goodness"])]
-    return "\n".join([*lines, *(f"- {line.strip()}" for line in more if line.strip())]) + "\n"
+    for _, heading, *found in filter(None, (_budget_lines(result), _influence_lines(result), _goodness_lines(result["goodness"]))):
+        lines += ["", f"## {heading}", "", *(f"- {line.strip()}" for line in found)]
+    return "\n".join(lines) + "\n"
 
 
 def stress_csv(result: dict) -> str:
@@ -56,6 +62,10 @@ def stress_csv(result: dict) -> str:
             known = [row["key"], row["kind"], row["label"], row["n"], row["chi2"], name, *(facts.get(c) for c in _COLUMNS), row["problem"]]
             writer.writerow(["" if cell is None else cell for cell in known])
     return out.getvalue()
+
+
+def _paragraphs(texts: Iterable[str]) -> list[str]:
+    return [line for text in texts for line in textwrap.wrap(text, 98, initial_indent="  ", subsequent_indent="  ")]
 
 
 def _padded(cell: str, width: int, column: int) -> str:

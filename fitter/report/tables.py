@@ -55,7 +55,9 @@ def _names(summaries: list[dict], names: Sequence[str] | None) -> list[str]:
         from fitter.errors import InputError
 
         raise InputError("no such parameter in these fits", value=unknown[0], cure=f"Known: {', '.join(known)}.")
-    return list(names) if names is not None else known
+    # What one fit derives may be fitted in another: all that is fitted anywhere comes first.
+    fitted = {name for s in summaries for name, facts in s["parameters"].items() if facts["kind"] != "derived"}
+    return list(names) if names is not None else sorted(known, key=lambda name: name not in fitted)
 
 
 def caption(summary: dict) -> str:

@@ -174,6 +174,18 @@ def test_runs_of_unequal_length_over_each_other(real, build, run):
     assert [t.get_text() for t in legend.get_texts()] == ["long", "short"]
 
 
+def test_a_plane_is_drawn_for_the_runs_that_have_it(build):
+    """Flat space is a line in the plane of the densities, a model without Ω_Λ is not in it; each keeps its colour."""
+    fits = {model: build.real(model, shape=(2, 40, 8)) for model in ("flat_wcdm", "flat_lcdm", "curved_lcdm")}
+    runs = {model: Drawable(fit.posterior, collect(fit.log_posterior, fit.optimum, fit.posterior)) for model, fit in fits.items()}
+    (plane,) = overlays(runs, ["planes"])
+    assert plane.name == "plane_densities" and "Runs: flat_lcdm, curved_lcdm." in plane.caption
+    drawn, corner = plane.make("single").legends[0], overlays(runs, ["corner"])[0].make("double").legends[0]
+    pairs = [dict(zip(one.get_texts(), one.get_lines(), strict=True)) for one in (drawn, corner)]
+    colours = [{text.get_text(): line.get_color() for text, line in one.items()} for one in pairs]
+    assert colours[0] == {label: colours[1][label] for label in ("flat_lcdm", "curved_lcdm")}
+
+
 def test_figures_of_one_run_are_not_laid_over_each_other(run):
     with pytest.raises(InputError, match="`hubble` is a figure of one run"):
         overlays({"a": run, "b": run}, ["hubble"])

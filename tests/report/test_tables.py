@@ -31,6 +31,11 @@ def test_side_by_side_with_a_parameter_only_one_has(fit, build):
     assert rows[5].endswith(r"& -- \\")
 
 
+def test_what_any_fit_has_sampled_comes_first(build):
+    rows = parameter_table([build.real(model).summary() for model in ("flat_lcdm", "flat_wcdm", "curved_lcdm")], "markdown").splitlines()
+    assert [row.split(" | ")[0].strip("| ") for row in rows[2:7]] == ["Ωm", "ΩΛ", "w", "q0", "z_acc"]
+
+
 def test_limits_as_limits(build):
     def fold(chain):
         chain[..., 0] = np.abs(chain[..., 0] - 0.3)

@@ -129,7 +129,7 @@ def test_a_survey_that_does_not_exist_yet(tmp_path):
     slope = (high - low) / 0.002
     fisher = ((slope - slope.mean()) ** 2).sum() / 0.1**2
     assert study.result["parameters"]["omega_m"]["precision"]["sigma"] == pytest.approx(fisher**-0.5, rel=0.1)
-    assert "survey to come" in study.text
+    assert "survey to come" in study.text and "scatter/σ their scatter" in study.text
     names = {p.name for p in (tmp_path / "out").rglob("*")}
     assert {"rehearsal.json", "rehearsal.md", "rehearsal.csv", "rehearsal.png", "rehearsal.pdf"} <= names
     assert json.loads((tmp_path / "out" / "rehearsal.json").read_text())["planned"] is True

@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+import itertools
 from collections.abc import Callable, Mapping, Sequence
 from dataclasses import dataclass
 from functools import cached_property
@@ -21,7 +22,7 @@ from fitter.report.figures.hubble import draw_hubble, hubble_caption
 from fitter.report.figures.planes import PLANES, plane_caption, plane_figure, planes_of
 from fitter.report.figures.residuals import draw_residuals, residuals_caption
 from fitter.report.figures.settings import FIGURES, FigureSettings
-from fitter.report.figures.style import save_figure, styled
+from fitter.report.figures.style import COLOURS, save_figure, styled
 from fitter.report.page import Picture, picture_of
 
 if TYPE_CHECKING:
@@ -97,8 +98,7 @@ def overlays(runs: Mapping[str, Drawable], only: Sequence[str] | None = None, ho
         if name == "corner":
             found.append(_corner(posteriors, how, how.parameters or overlay_names(posteriors)))
         elif name == "planes":
-            shared = [p for p in PLANES if all(p in planes_of(posterior) for posterior in posteriors.values())]
-            found += [_plane(posteriors, plane, how) for plane in shared]
+            found += _shared_planes(posteriors, how)
         else:
             histories = {label: run.data.history for label, run in runs.items() if run.data.history is not None}
             # Without being asked for, a figure that these runs cannot share is left out.
@@ -125,13 +125,28 @@ def _corner(posteriors: Posterior | Mapping[str, Posterior], how: FigureSettings
     )
 
 
-def _plane(posteriors: Posterior | Mapping[str, Posterior], plane: str, how: FigureSettings) -> Drawing:
+def _plane(
+    posteriors: Posterior | Mapping[str, Posterior], plane: str, how: FigureSettings, colours: Mapping[str, str] | None = None
+) -> Drawing:
     chosen = PLANES[plane]
     mark = how.mark if {chosen.x, chosen.y} <= set(how.mark) else None
     labels = list(posteriors) if isinstance(posteriors, Mapping) else []
     return Drawing(
-        f"plane_{plane}", lambda w: plane_figure(posteriors, plane, width=w or "single", reference=mark), plane_caption(plane, labels)
+        f"plane_{plane}",
+        lambda w: plane_figure(posteriors, plane, width=w or "single", reference=mark, colours=colours),
+        plane_caption(plane, labels),
     )
+
+
+def _shared_planes(posteriors: Mapping[str, Posterior], how: FigureSettings) -> list[Drawing]:
+    """The planes that two runs or more have: one whose ordinate follows from the abscissa is a line, beside one that is not."""
+    colours = dict(zip(posteriors, itertools.cycle(COLOURS), strict=False))
+    found = []
+    for plane, axes in PLANES.items():
+        having = {label: p for label, p in posteriors.items() if {axes.x, axes.y} <= set(p.kinds)}
+        if any(plane in planes_of(p) for p in having.values()) and (len(having) > 1 or len(posteriors) == 1):
+            found.append(_plane(having, plane, how, {label: colours[label] for label in having}))
+    return found
 
 
 def _corners(run: Drawable, how: FigureSettings) -> list[Drawing]:

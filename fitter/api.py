@@ -335,19 +335,26 @@ class _Job:
             said = "; ".join(different[:6]) + ("; …" if len(different) > 6 else "")
             cure = "Restore these settings to continue it, or start again with --replace"
             raise InputError(f"the earlier run is of other settings or data: {said}", file=earlier, cure=cure)
+        if earlier == self._place.target:
+            self._require_same_end(read_run(earlier).summary)
+
+    def _require_same_end(self, summary: dict[str, Any]) -> None:
+        """Refuse to go on with a run that has converged and is not what is asked for."""
+        sampling = summary["sampling"]
+        if not sampling["converged"]:
+            return
+        if self.config.sampling.target_ess > sampling.get("target_ess", np.inf):
+            problem = f"the run there has ended with a target_ess of {sampling['target_ess']}, it cannot be continued"
+            raise InputError(problem, file=self._place.target, cure="Make a longer one with --replace")
+        if self.config.intervals != (made := summary.get("intervals", "equal_tailed")):
+            problem = f"the run there has ended with {made.replace('_', '-')} intervals, it cannot be continued with others"
+            raise InputError(problem, file=self._place.target, cure="Make it again with --replace")
 
     def finished_run(self) -> Fit | None:
         """Return the run that is already in its place and converged, or None if it can be continued."""
         run = read_run(self._place.target)
-        sampling = run.summary["sampling"]
-        if not sampling["converged"]:
+        if not run.summary["sampling"]["converged"]:
             return None
-        if self.config.sampling.target_ess > sampling.get("target_ess", np.inf):
-            problem = f"the run there has ended with a target_ess of {sampling['target_ess']}, it cannot be continued"
-            raise InputError(problem, file=self._place.target, cure="Make a longer one with --replace")
-        if self.config.intervals != (made := run.summary.get("intervals", "equal_tailed")):
-            problem = f"the run there has ended with {made.replace('_', '-')} intervals, it cannot be continued with others"
-            raise InputError(problem, file=self._place.target, cure="Make it again with --replace")
         optimum = self._optimum()
         if self.hidden and run.summary.get("blinded"):
             optimum = blind_optimum(optimum, self.log_posterior.names, self.hidden)

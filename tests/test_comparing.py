@@ -275,6 +275,11 @@ def test_a_comparison_of_other_settings_is_not_continued(folder, tmp_path, monke
     config.write_text(yaml.safe_dump(base | {"parameters": {"omega_m": {"uniform": [0.1, 1]}}}, allow_unicode=True))
     with pytest.raises(InputError, match="the earlier run is of other settings or data"):
         compare(config, run_folder=tmp_path / "out", resume=True)
+    # What is finished stays as it is: nothing else may be fitted before that is told.
+    config.write_text(yaml.safe_dump(base | {"intervals": "highest_density"}, allow_unicode=True))
+    monkeypatch.setattr(comparing, "_fit_one", None)
+    with pytest.raises(InputError, match="ended with equal-tailed intervals"):
+        compare(config, run_folder=tmp_path / "out", resume=True)
     others = [base["variants"][0], {"name": "bent", "model": "curved_lcdm"}]
     config.write_text(yaml.safe_dump(base | {"variants": others}, allow_unicode=True))
     with pytest.raises(InputError, match="variants that the config does not have: 2_curved"):

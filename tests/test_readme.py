@@ -75,9 +75,13 @@ def test_every_command(place, monkeypatch):
             fit("mine.yaml", model="flat_lcdm", parameters={}, title="flat ΛCDM", run_folder="runs/flat_lcdm")
             for name, run in (("a", "mine"), ("b", "flat_lcdm"), ("flat_wcdm", "mine")):
                 shutil.copytree(place / "runs" / run, place / "runs" / name)
-    assert {"start", "check", "fit", "compare", "figures", "tables", "export", "paper", "capsule", "rehearse", "unblind"} <= set(done)
-    assert len(CONFIGS) == 3
-    for i, n in ((1, 24), (2, None)):
+    assert {"start", "check", "fit", "compare", "figures", "tables", "export", "paper", "capsule", "rehearse", "stress", "unblind"} <= set(
+        done
+    )
+    assert len(CONFIGS) == 4
+    (place / "variants.yaml").write_text(CONFIGS[0] + CONFIGS[2], encoding="utf-8")
+    assert check("variants.yaml").problems == ()
+    for i, n in ((1, 24), (3, None)):
         (place / "again.yaml").write_text(CONFIGS[i], encoding="utf-8")
         assert check("again.yaml").problems == ()
         again = fit("again.yaml", run_folder=False, sampling=QUICK)

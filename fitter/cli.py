@@ -123,7 +123,7 @@ def _options(
     pass
 
 
-@app.command("fit")
+@app.command("fit", short_help="Fit a model to a sample: posterior, summary, figures.")
 @_reported
 def _fit(
     config: ConfigFile,
@@ -148,7 +148,7 @@ def _fit(
     result = fit(settings, run_folder=target, replace=replace, resume=resume, progress=not quiet)
     _print_result(result, json_, quiet)
     if not quiet:
-        _say(f"Written to {result.run_folder}")
+        _say(f"Written to {result.run_folder}; report.html there shows it all")
     if result.converged:
         return 0
     _say(f"mufitter: not converged. {result.summary()['sampling'].get('advice') or ''}".rstrip())
@@ -185,7 +185,7 @@ def _print_result(result: Fit, as_json: bool, quiet: bool) -> None:
     sys.stdout.flush()
 
 
-@app.command("compare")
+@app.command("compare", short_help="Set models, priors or data side by side.")
 @_reported
 def _compare(
     what: Annotated[
@@ -253,7 +253,7 @@ Processes = Annotated[int | None, typer.Option(min=1, help="Local processes.", s
 Scheduler = Annotated[str | None, typer.Option(metavar="ADDRESS", help="Run on the workers of this Dask scheduler.", show_default=False)]
 
 
-@app.command("stress")
+@app.command("stress", short_help="Does the answer survive changes of data, errors and priors?")
 @_reported
 def _stress(
     config: ConfigFile,
@@ -274,7 +274,7 @@ def _stress(
     _print_study(study, json_, quiet)
 
 
-@app.command("rehearse")
+@app.command("rehearse", short_help="Fit mock samples: bias, coverage, precision to expect.")
 @_reported
 def _rehearse(
     config: ConfigFile,
@@ -332,7 +332,7 @@ def _print_study(study: Study, as_json: bool, quiet: bool) -> None:
         _say(f"Written to {study.run_folder}")
 
 
-@app.command("check")
+@app.command("check", short_help="Say what will be fitted, and all that is wrong with it.")
 @_reported
 def _check(config: ConfigFile, allow_code: AllowCode = False) -> None:
     """Read everything, say what will be fitted and all that is wrong; fit nothing."""

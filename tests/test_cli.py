@@ -51,6 +51,7 @@ def test_help_and_version():
     assert shown.exit_code == 0
     for word in ("fit", "check", "schema", "explain", "0 fine, 1 not converged, 2 something in your input, 3 a fault of"):
         assert word in " ".join(shown.output.split())
+    assert "..." not in shown.output.split("Commands:")[1]  # no command's line is cut short
     assert run("--version", cwd=".").stdout == "mufitter 0.1.0\n"
 
 
@@ -59,7 +60,7 @@ def test_a_fit_ends_with_0_its_summary_on_stdout_and_messages_on_stderr(fitted, 
     assert "a small survey" in fitted.stdout
     assert "χ²/dof" in fitted.stdout
     assert "\x1b" not in fitted.stdout + fitted.stderr
-    assert fitted.stderr.strip() == f"Written to {project / 'runs' / 'config'}"
+    assert fitted.stderr.strip() == f"Written to {project / 'runs' / 'config'}; report.html there shows it all"
     assert (project / "runs" / "config" / "figures" / "corner.pdf").is_file()
 
 

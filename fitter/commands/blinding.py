@@ -18,7 +18,7 @@ _WORD = "unblind"
 
 def register(app: typer.Typer, reported: Callable) -> None:
     """Add the command to the app; `reported` turns exceptions into messages and exit codes."""
-    app.command("unblind")(reported(unblind))
+    app.command("unblind", short_help="Show the hidden values of a blinded fit.")(reported(unblind))
 
 
 def unblind(

@@ -34,8 +34,14 @@ def register(app: typer.Typer, reported: Callable) -> None:
     reported : callable
         Decorator that turns exceptions into messages and exit codes.
     """
-    for name, command in (("figures", figures), ("tables", tables), ("export", export), ("paper", paper)):
-        app.command(name)(reported(command))
+    commands = {
+        figures: "Draw again from run folders; several are overlaid.",
+        tables: "Write tables of one fit or several for a paper.",
+        export: "Write draws and marginal densities for others.",
+        paper: "Write figures, tables, methods and a LaTeX manuscript.",
+    }
+    for command, said in commands.items():
+        app.command(command.__name__, short_help=said)(reported(command))
 
 
 def figures(

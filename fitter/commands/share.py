@@ -18,7 +18,7 @@ Run = Annotated[Path, typer.Argument(metavar="RUN", help="A run folder that `muf
 
 def register(app: typer.Typer, reported: Callable) -> None:
     """Add the commands to the app; ``reported`` turns exceptions into messages and exit codes."""
-    app.command("capsule")(reported(capsule))
+    app.command("capsule", short_help="Write the likelihood itself as one small file.")(reported(capsule))
     app.command("page")(reported(page))
 
 

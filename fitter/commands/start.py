@@ -17,7 +17,7 @@ __all__ = ["register"]
 
 def register(app: typer.Typer, reported: Callable) -> None:
     """Add the command to the app; ``reported`` turns exceptions into messages and exit codes."""
-    app.command("start")(reported(start))
+    app.command("start", short_help="Look at a table and write a first config for it.")(reported(start))
 
 
 def start(

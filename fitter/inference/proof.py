@@ -11,6 +11,7 @@ import numpy as np
 from fitter.array_types import FloatArray
 from fitter.inference.importance import KOLMOGOROV, WeightedPosterior, importance
 from fitter.inference.quadrature import GridPosterior, integrate
+from fitter.inference.without_h0 import GridWithH0, WithoutH0, integrate_without_h0
 
 if TYPE_CHECKING:
     from fitter.inference.optimum import Optimum
@@ -41,13 +42,13 @@ class Proof:
     evidence : dict
         ``log_evidence``, ``log_evidence_error``, ``method``; ``quadrature`` and ``importance``: each [ln Z, error] or None;
         ``methods_agree``: None where only one ran.
-    grid : GridPosterior or None
+    grid : GridPosterior, GridWithH0 or None
     weighted : WeightedPosterior
     """
 
     cross_check: dict[str, Any]
     evidence: dict[str, Any]
-    grid: GridPosterior | None
+    grid: GridPosterior | GridWithH0 | None
     weighted: WeightedPosterior
 
 
@@ -68,7 +69,10 @@ def prove(
     weighted = importance(log_posterior, posterior, seed=seed)
     chain = posterior.chain.reshape(-1, posterior.chain.shape[-1])
     known = np.concatenate([chain[:: len(chain) // _KNOWN + 1], weighted.points(_KNOWN)])
-    grid = integrate(log_posterior, optimum, known=known)
+    if WithoutH0.applies(log_posterior):
+        grid: GridPosterior | GridWithH0 | None = integrate_without_h0(log_posterior, optimum, known)
+    else:
+        grid = integrate(log_posterior, optimum, known=known)
     if grid is not None and grid.log_evidence_error > _USABLE_ERROR:
         grid = None
     best = weighted if grid is None else grid
@@ -87,12 +91,12 @@ def prove(
     return Proof(cross_check(best, posterior, ess), evidence, grid, weighted)
 
 
-def cross_check(other: GridPosterior | WeightedPosterior, posterior: Posterior, ess: dict[str, float]) -> dict[str, Any]:
+def cross_check(other: GridPosterior | GridWithH0 | WeightedPosterior, posterior: Posterior, ess: dict[str, float]) -> dict[str, Any]:
     """Compare every marginal of a chain with another account of the posterior.
 
     Parameters
     ----------
-    other : GridPosterior or WeightedPosterior
+    other : GridPosterior, GridWithH0 or WeightedPosterior
         Anything with ``names``, ``cdf``, ``cdf_error`` and ``method``.
     posterior : Posterior
     ess : dict
@@ -118,7 +122,9 @@ def cross_check(other: GridPosterior | WeightedPosterior, posterior: Posterior, 
     }
 
 
-def _differences(other: GridPosterior | WeightedPosterior, draws: FloatArray, name: str, ess: float) -> Iterator[tuple[float, float]]:
+def _differences(
+    other: GridPosterior | GridWithH0 | WeightedPosterior, draws: FloatArray, name: str, ess: float
+) -> Iterator[tuple[float, float]]:
     """Yield pairs (difference of the two distribution functions, what chance allows): over the whole range, then in each tail."""
     flat = np.sort(draws, axis=None)
     at = flat[np.linspace(0, len(flat) - 1, 513).astype(int)[1:-1]]

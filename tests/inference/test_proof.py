@@ -196,7 +196,7 @@ def test_a_ridge_that_leaves_the_first_cells_between_their_nodes_is_followed():
 def test_points_that_matter_are_looked_at():
     """A second peak far from the first, which no face leads to, is found once something there is named."""
     narrow = [stats.multivariate_normal(np.full(3, c), 0.004**2 * np.eye(3)) for c in (0.2, 0.83)]
-    toy = Toy((Uniform(0, 1),) * 3, lambda t: np.log(0.5 * sum(peak.pdf(t) for peak in narrow)))
+    toy = Toy((Uniform(0, 1),) * 3, lambda t: np.log(0.5 * sum(peak.pdf(t) for peak in narrow) + 1e-300))
     start = optimum(toy, np.full(3, 0.2), 0.004**2 * np.eye(3))
     assert integrate(toy, start).log_evidence == pytest.approx(np.log(0.5), abs=0.01)  # as nobody told it
     found = integrate(toy, start, known=np.full((1, 3), 0.832))

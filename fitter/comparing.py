@@ -87,7 +87,7 @@ class Comparison:
         return f"Comparison({', '.join(entry.name for entry in self.entries)})"
 
     def _repr_html_(self) -> str:
-        return f'<pre style="overflow-x:auto">{html.escape(str(self))}</pre>'
+        return f'<pre style="overflow-x:auto;font-family:monospace">{html.escape(str(self))}</pre>'
 
 
 def compare(

@@ -400,13 +400,13 @@ class _Job:
         return replace(result, run_folder=self._place.finish())
 
     def _opened(self, chains: Posterior) -> Posterior:
-        from fitter.inference.sampling import derive_and_draw
+        from fitter.inference.sampling import derive_and_draw, kinds_of
 
         chain = true_chain(chains, self.hidden)
         run = lambda function, arguments: [function(self.log_posterior, *a) for a in arguments]  # noqa: E731
         extra = derive_and_draw(self.log_posterior, chain, self._seed(_SAMPLING), run)
         sampling = {k: v for k, v in chains.sampling.items() if k != "blinded"}
-        return replace(chains, chain=chain, extra=extra, sampling=sampling)
+        return replace(chains, chain=chain, extra=extra, kinds=kinds_of(self.log_posterior, extra), sampling=sampling)
 
     def _seed(self, purpose: int) -> np.random.SeedSequence:
         return child_seed(np.random.SeedSequence(self.config.sampling.seed), purpose)

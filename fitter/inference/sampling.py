@@ -3,7 +3,7 @@
 from __future__ import annotations
 
 import time
-from collections.abc import Callable
+from collections.abc import Callable, Iterable
 from math import isfinite, nan
 from pathlib import Path
 from typing import TYPE_CHECKING, Any
@@ -25,7 +25,7 @@ if TYPE_CHECKING:
     from fitter.inference.optimum import Optimum
     from fitter.likelihood.posterior import LogPosterior
 
-__all__ = ["derive_and_draw", "sample_posterior"]
+__all__ = ["derive_and_draw", "kinds_of", "sample_posterior"]
 
 # Below this number of steps there is nothing to summarise.
 _FEWEST = 20
@@ -99,9 +99,13 @@ def sample_posterior(
             chain, values = chain[:, status.burn_in :], values[:, status.burn_in :]
             extra = derive_and_draw(log_posterior, chain, seed, ensembles.map)
     facts = _facts(ensembles, status, settings, time.monotonic() - began)
+    return Posterior(tuple(log_posterior.names), chain, values, extra, kinds_of(log_posterior, extra), facts)
+
+
+def kinds_of(log_posterior: LogPosterior, extra: Iterable[str]) -> dict[str, str]:
+    """What every parameter is, in reporting order; `extra` names the marginalised and derived ones."""
     kinds = {n: "sampled" for n in log_posterior.names} | {n: "marginalised" for n in log_posterior.marginalised}
-    kinds |= {n: kinds.get(n, "derived") for n in extra}
-    return Posterior(tuple(log_posterior.names), chain, values, extra, kinds, facts)
+    return kinds | {n: kinds.get(n, "derived") for n in extra}
 
 
 def _about(log_posterior: LogPosterior, settings: SamplingSettings, seed: np.random.SeedSequence, fingerprint: str) -> dict[str, Any]:

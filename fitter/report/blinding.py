@@ -2,7 +2,7 @@
 
 Each sampled parameter is shifted by an offset from a keyed hash of the data [1]_, the same for every fit of one table, whatever its
 cuts, errors and model, so that fits can be compared. Marginalised and derived parameters are shown as differences from their own
-median. Widths, χ² and diagnostics stay.
+median, but for epochs, whose lowest possible value, today, would tell where it is: they are left out. Widths, χ² and diagnostics stay.
 
 References
 ----------
@@ -37,6 +37,7 @@ NOT_HIDDEN = ("intrinsic_scatter", "covariance_scale")
 """Sampled parameters that `blind: true` leaves open: they describe the noise."""
 
 _SMALLEST = 0.2  # of the half width of the default prior: an offset that could be overlooked hides nothing
+_LEFT_OUT = ("z_acceleration", "z_equality")
 _LOCATIONS = ("mean", "median", "low68", "high68", "low95", "high95", "best")
 
 
@@ -119,8 +120,10 @@ def blind_posterior(posterior: Posterior, hidden: Mapping[str, float]) -> Poster
     if not hidden:
         return posterior
     chain = posterior.chain + _row(posterior.names, hidden)
-    extra = {name: values - np.nanmedian(values) if np.isfinite(values).any() else values for name, values in posterior.extra.items()}
-    return replace(posterior, chain=chain, extra=extra, sampling={**posterior.sampling, "blinded": sorted(hidden)})
+    shown = {name: values for name, values in posterior.extra.items() if name not in _LEFT_OUT}
+    extra = {name: values - np.nanmedian(values) if np.isfinite(values).any() else values for name, values in shown.items()}
+    kinds = {name: kind for name, kind in posterior.kinds.items() if name not in _LEFT_OUT}
+    return replace(posterior, chain=chain, extra=extra, kinds=kinds, sampling={**posterior.sampling, "blinded": sorted(hidden)})
 
 
 def true_chain(posterior: Posterior, hidden: Mapping[str, float]) -> np.ndarray:
@@ -143,14 +146,14 @@ def blind_summary(summary: dict, hidden: Mapping[str, float], log_posterior: Log
     from fitter.report.warnings import practitioner_warnings
 
     # What the data say of an edge stays, the value of a limit does not.
-    silent = {n: {k: v for k, v in facts.items() if k != "limit"} for n, facts in summary["parameters"].items()}
+    silent = {n: {k: v for k, v in facts.items() if k != "limit"} for n, facts in summary["parameters"].items() if n not in _LEFT_OUT}
     warnings = practitioner_warnings({**summary, "parameters": silent}, log_posterior)
     parameters = {n: _moved(facts, hidden.get(n), n in log_posterior.names) for n, facts in silent.items()}
     profile = {n: facts for n, facts in (summary.get("profile") or {}).items() if n not in hidden}
     best = {n: facts["best"] for n, facts in parameters.items() if facts.get("best") is not None}
     said = (
         f"Blinded: {', '.join(hidden)} {'are' if len(hidden) > 1 else 'is'} shown with hidden offsets, derived and marginalised "
-        "parameters as differences from their own median. `mufitter unblind` shows the values."
+        "parameters as differences from their own median, epochs not at all. `mufitter unblind` shows the values."
     )
     return {
         **summary,

@@ -123,6 +123,13 @@ def test_widths_chi2_and_diagnostics_stay(blind, shown):
         blind.hubble_diagram()
 
 
+def test_no_epoch_is_shown_whose_edge_today_would_tell_its_median(blind, shown):
+    assert "z_acceleration" in shown.summary()["parameters"]
+    assert not {"z_acceleration", "z_equality"} & (
+        blind.summary()["parameters"].keys() | blind.chains.kinds.keys() | blind.chains.extra.keys()
+    )
+
+
 def test_the_terminal_shows_no_value(folder, blind, shown):
     command = [sys.executable, "-m", "fitter.cli", "fit", str(folder / "blind.yaml"), "--run-folder", str(folder / "again")]
     done = subprocess.run(command, capture_output=True, text=True, check=True)

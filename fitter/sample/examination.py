@@ -74,7 +74,8 @@ def condition_number(sample: Sample) -> float:
 
         whole = noise.precision if noise.precision is not None and not noise.mode_names else noise.covariance()
         values = eigvalsh(whole)
-        return float(values[-1] / values[0]) if values[0] > 0 else np.inf
+        with np.errstate(over="ignore"):
+            return float(values[-1] / values[0]) if values[0] > 0 else np.inf
     if noise.is_diagonal:
         largest = _largest_eigenvalue(lambda v: noise.variance * v + noise.modes @ (noise.modes.T @ v), noise.n)
         return max(largest, float(noise.variance.max())) / float(noise.variance.min())

@@ -172,9 +172,9 @@ class Fit:
         return f"Fit({said['model']}, {said['sample']['n']} supernovae: {values}{'' if self.converged else '; not converged'})"
 
     def to_arviz(self) -> Any:
-        """Return the draws for ArviZ: each walker is a chain, its steps are the draws.
+        """Return the draws for ArviZ: each replica is a chain, its walkers one after the other.
 
-        The walkers of an ensemble move together; convergence is judged by ensemble in `summary`.
+        Only replicas are independent: the walkers of one move by each other's positions. What decided on convergence stands in `summary`.
 
         Raises
         ------
@@ -186,10 +186,10 @@ class Fit:
         except ModuleNotFoundError:
             raise InputError("ArviZ is not installed", cure="pip install 'mufitter[arviz]'") from None
         chains = self.chains
-        by_walker = lambda a: np.asarray(a).transpose(0, 2, 1).reshape(-1, a.shape[1])  # noqa: E731 - (R, S, W) to (R W, S)
+        by_replica = lambda a: np.asarray(a).transpose(0, 2, 1).reshape(len(a), -1)  # noqa: E731 - (R, S, W) to (R, W S)
         groups = {
-            "posterior": {name: by_walker(chains.draws(name)) for name in chains.kinds},
-            "sample_stats": {"lp": by_walker(chains.log_posterior)},
+            "posterior": {name: by_replica(chains.draws(name)) for name in chains.kinds},
+            "sample_stats": {"lp": by_replica(chains.log_posterior)},
         }
         from_dict: Any = arviz.from_dict  # its first argument is of another type since version 1
         return from_dict(**groups) if int(arviz.__version__.split(".")[0]) < 1 else from_dict(groups)

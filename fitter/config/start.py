@@ -22,6 +22,8 @@ __all__ = ["Start", "start"]
 _RESERVED = re.compile(r"(?i)(y|n|yes|no|on|off|true|false|null|~|none)$")
 _PLACEHOLDER = 0.15  # mag, where a table has no errors
 _NEAREST = 0.01
+_MOST_NAMED = 20
+_REDSHIFT_ERROR = re.compile(r"(?i)(z\w*err\w*|(d|e_?|sig(ma)?_?|err_?)z\w*|redshift_?err\w*)")
 
 
 @dataclass
@@ -80,7 +82,24 @@ def start(table: str | Path, folder: str | Path, matrices: Sequence[str | Path] 
         "",
     ]
     guesses = [f"{role}: {ref}, {found.reasons[role]}" for role, ref in found.roles.items() if role in draft.used]
-    return Start("\n".join(lines), guesses + draft.guesses, found.doubts)
+    return Start("\n".join(lines), guesses + draft.guesses, [*found.doubts, *_left(found, draft)])
+
+
+def _left(found: Recognised, draft: _Draft) -> list[str]:
+    """Say which columns the config does not use, and what the errors of redshifts among them would mean."""
+    names = found.table.columns.names
+    if names is None:
+        return []
+    used = {found.roles[role] for role in draft.used}
+    left = [name for name in names if name and name not in used]
+    said = [f"Columns not used: {', '.join(left[:_MOST_NAMED])}{', …' if len(left) > _MOST_NAMED else ''}"] if left else []
+    errors = [name for name in left if _REDSHIFT_ERROR.fullmatch(name)]
+    if errors:
+        said.append(
+            f"{errors[0]} looks like errors of redshifts, which mean 2.17 σ_z / z mag at low redshift: where sigma does not hold them yet, "
+            "add a column of that as another {sigma: …}"
+        )
+    return said
 
 
 def _require(found: Recognised, table: str) -> None:

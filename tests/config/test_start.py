@@ -157,3 +157,11 @@ def test_command_overwrites_nothing(tmp_path, monkeypatch):
     assert run(table, "-o", tmp_path / "other.yaml").exit_code == 0
     assert sorted(p.name for p in tmp_path.iterdir()) == ["other.yaml", "t.csv", "t.yaml"]
     assert run(table, "-o", tmp_path / "none" / "x.yaml").exit_code == 2
+
+
+def test_columns_left_aside_are_named_and_errors_of_redshifts_explained(tmp_path):
+    rows = "".join(f"sn{i},{0.02 + 0.01 * i:.2f},0.001,{35 + 0.1 * i:.1f},0.1,{i}\n" for i in range(20))
+    (tmp_path / "t.csv").write_text("name,z,z_err,mu,mu_err,seen\n" + rows)
+    doubts = start(tmp_path / "t.csv", tmp_path).doubts
+    assert "Columns not used: z_err, seen" in doubts
+    assert any(text.startswith("z_err looks like errors of redshifts") and "2.17" in text for text in doubts)

@@ -70,7 +70,6 @@ def forest_figure(report: dict, names: Sequence[str] | None = None, *, width: st
         ax.tick_params(axis="y", length=0)
         ax.set_ylim(len(variants) - 0.45, -0.55)
         ax.set_xlabel(axis_label(name))
-        ax.xaxis.set_label_coords(0.5, -0.29 / rows)
     return figure
 
 

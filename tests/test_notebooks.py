@@ -38,7 +38,7 @@ def test_notebook_runs(path, tmp_path, monkeypatch):
     client.execute()
     results = [o for cell in notebook.cells if cell.cell_type == "code" for o in cell.outputs if o.output_type == "execute_result"]
     shown = " ".join(str(o.data) for o in results)
-    assert "Sound." in shown, "no fit was shown"
+    assert "Sound." in shown or "Computed soundly, but" in shown, "no fit was shown"
     assert any("image/png" in o.data for o in results), "no figure was shown"
 
 

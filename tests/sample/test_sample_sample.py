@@ -305,6 +305,14 @@ def test_row_without_any_error(load):
     assert (error.file, error.row) == ("t.csv", 8) and "without any error" in str(error)
 
 
+def test_errors_that_no_distance_has(load, tmp_path):
+    error = refusal(load, rows=table(e={6: 1e-9}))
+    assert (error.file, error.row) == ("t.csv", 8) and "an error of 1e-09 mag" in str(error)
+    np.save(tmp_path / "c.npy", np.diag([5e-324, *SIGMA[1:] ** 2]))
+    error = refusal(load, uncertainty=[{"covariance": "c.npy"}])
+    assert error.file == "c.npy" and error.row == 1 and "none is known so well" in str(error)
+
+
 def test_inverse_given_as_a_covariance(load, tmp_path):
     np.save(tmp_path / "p.npy", np.diag(1 / SIGMA**2))
     for terms in ([{"covariance": "p.npy"}], [{"sigma": "e"}, {"covariance": "p.npy"}]):

@@ -15,8 +15,8 @@ sample:
   columns: {redshift: z, distance_modulus: mu}
   uncertainty: [{intrinsic: 0.12}]
   distance_scale: absolute
-model: curved_lcdm
-sampling: {target_ess: 10000, walkers: 128, seed: 3}
+model: flat_lcdm
+sampling: {target_ess: 2000, walkers: 64, seed: 3}
 figures: {only: [corner], formats: [png]}
 """
 
@@ -31,10 +31,10 @@ def _mount(*arguments):
 
 @pytest.fixture
 def disk(tmp_path):
-    """A disk of 3 MB: room for the beginning of a chain only."""
+    """A disk of 1 MB: room for the beginning of a chain only."""
     folder = tmp_path / "disk"
     folder.mkdir()
-    _mount("-t", "tmpfs", "-o", "size=3m", "tmpfs", folder)
+    _mount("-t", "tmpfs", "-o", "size=1m", "tmpfs", folder)
     yield folder
     subprocess.run(["umount", folder], check=True)
 

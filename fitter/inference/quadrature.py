@@ -29,7 +29,7 @@ _POINTS = {1: 16, 2: 10, 3: 7, 4: 5}  # Gauss–Legendre points along each axis 
 _BATCH = 65_536
 _TAIL_PROBABILITY = 1e-12  # where a prior without an end is cut off
 _CUTS = (2.0, 7.0)  # first cuts, in Hessian errors from the optimum
-_BUDGET = {1: 1_000_000, 2: 1_000_000, 3: 3_000_000, 4: 1_000_000}
+_BUDGET = {1: 1_000_000, 2: 1_000_000, 3: 3_000_000, 4: 500_000}
 
 
 @dataclass(frozen=True)

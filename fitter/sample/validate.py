@@ -184,7 +184,8 @@ def check_inverse(terms: list[Term]) -> list[InputError]:
 
 def check_smallest(noise: Noise, place: Place) -> list[InputError]:
     """Errors that no distance has: they would outweigh every other row."""
-    sigma = np.sqrt(np.abs(noise.total_variance)) if noise.precision is None else np.abs(np.diagonal(noise.precision)) ** -0.5
+    with np.errstate(divide="ignore"):
+        sigma = np.sqrt(np.abs(noise.total_variance)) if noise.precision is None else np.abs(np.diagonal(noise.precision)) ** -0.5
     bad = (sigma > 0) & (sigma < _SMALLEST_ERROR)
     if not bad.any():
         return []

@@ -48,7 +48,7 @@ class SkipsMoves(MixtureMove):
 
 
 FAULTS = {
-    "no Hastings factor": lambda pilot: [(NoHastings(), 1.0)],
+    "no Hastings factor": lambda pilot: [(PilotMove(pilot), 0.5), (NoHastings(), 0.5)],
     "half a Hastings factor": lambda pilot: [(HalfHastings(pilot), 1.0)],
     "skips moves": lambda pilot: [(SkipsMoves(), 1.0)],
 }

@@ -52,7 +52,7 @@ def test_posterior(name, model, release, release_config, reference, direct_sum):
 
 
 def test_four_nonlinear_parameters_prove_themselves(release_config):
-    result = fit(release_config("pantheon2018_binned"), model="curved_w0wa", run_folder=False)
+    result = fit(release_config("pantheon2018_binned"), model="curved_w0wa", sampling={"target_ess": 3000}, run_folder=False)
     summary = result.summary()
     assert len(result.chains.names) == 4 and result.converged
     assert summary["cross_check"]["agrees"], summary["cross_check"]

@@ -187,6 +187,7 @@ numbers = st.floats(width=64)
     dtype=st.sampled_from(["<f8", ">f8", "<f4", ">i2"]),
 )
 @example(cells=[(3, "mu", 0.0)], elements=[(0, 0, 5e-324), (3, 0, 5e-324)], kind="covariance", dtype=">f8")
+@example(cells=[(2, "mu", 0.0)], elements=[(2, 2, 2.225073858507e-311)], kind="precision", dtype="<f8")
 @example(cells=[(2, "mu", 0.0)], elements=[(5, 5, 0.0)], kind="precision", dtype=">i2")
 @example(cells=[(2, "mu", 0.0)], elements=[(4, 4, 1.1125369292536007e-308)], kind="precision", dtype="<f8")
 @example(cells=[(3, "e", 2.2250738585e-313)], elements=[], kind="covariance", dtype="<f8")

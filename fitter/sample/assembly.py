@@ -25,7 +25,7 @@ from fitter.sample.tables import Table, bordered_table, read_table
 from fitter.sample.uncertainty.base import Rows
 from fitter.sample.uncertainty.term import Term, combine, unique_labels
 from fitter.sample.unused_errors import unused_errors
-from fitter.sample.validate import Place, check_data, check_duplicates, check_inverse, check_redshift, check_smallest
+from fitter.sample.validate import Place, check_data, check_duplicates, check_inverse, check_redshift, check_sizes
 
 __all__ = ["Problems", "assemble", "finish"]
 
@@ -314,7 +314,7 @@ def finish(
     labelled = unique_labels(terms)
     with problems.collect():
         noise = combine(labelled, place.file)
-        problems.found += check_smallest(noise, place)
+        problems.found += check_sizes(noise, place)
         problems.stop_if_any()
         _ = noise.log_det  # a covariance that is not positive definite is told now, and the factor kept
     problems.stop_if_any()

@@ -13,7 +13,7 @@ from fitter.errors import InputError
 from fitter.sample.noise import Noise
 from fitter.sample.uncertainty.term import Term
 
-__all__ = ["Place", "check_data", "check_duplicates", "check_finite", "check_inverse", "check_redshift", "check_smallest", "looks_inverse"]
+__all__ = ["Place", "check_data", "check_duplicates", "check_finite", "check_inverse", "check_redshift", "check_sizes", "looks_inverse"]
 
 _LARGEST_REDSHIFT = 1100.0  # nothing is seen from beyond the last scattering
 _LARGEST_DATUM = 1000.0  # mag
@@ -22,7 +22,7 @@ _LARGEST_VARIANCE = 4.0  # mag²: nobody's median distance error is above 2 mag
 _MOST_NAMES = 100_000  # compared in a tenth of a second
 _BLANKS = re.compile(r"(?<!\d)[\s_-]+|[\s_-]+(?!\d)")  # those between two digits tell numbers apart
 _SN = re.compile(r"^sn(?=\d)")
-_SMALLEST_ERROR = 1e-6  # mag
+_SMALLEST_ERROR, _LARGEST_ERROR = 1e-6, 1e9  # mag
 _SAID = 3  # how many examples a message gives
 
 
@@ -182,20 +182,21 @@ def check_inverse(terms: list[Term]) -> list[InputError]:
     return problems
 
 
-def check_smallest(noise: Noise, place: Place) -> list[InputError]:
-    """Errors that no distance has: they would outweigh every other row."""
+def check_sizes(noise: Noise, place: Place) -> list[InputError]:
+    """Errors that no distance has: so small that they would outweigh every other row, or too large to compute with."""
     with np.errstate(divide="ignore"):
         sigma = np.sqrt(np.abs(noise.total_variance)) if noise.precision is None else np.abs(np.diagonal(noise.precision)) ** -0.5
-    bad = (sigma > 0) & (sigma < _SMALLEST_ERROR)
-    if not bad.any():
-        return []
-    index = int(np.argmin(np.where(bad, sigma, np.inf)))
+    # Not those of no error at all, or of a precision of zero: they are told as what they are.
+    cases = (
+        ((sigma > 0) & (sigma < _SMALLEST_ERROR), "and none is known so well", "Check the unit of the errors"),
+        (np.isfinite(sigma) & (sigma > _LARGEST_ERROR), "so it tells nothing", "Cut this row with `keep:`"),
+    )
     return [
         InputError(
-            f"the uncertainty terms leave this datum an error of {sigma[index]:.3g} mag, and none is known so well{_more(bad)}",
-            file=noise.source or place.file, row=int(noise.source_rows[index]),
-            cure=f"Check the unit of the errors; below {_SMALLEST_ERROR:g} mag they are refused",
+            f"the uncertainty terms leave this datum an error of {sigma[i]:.3g} mag, {what}{_more(bad)}", file=noise.source or place.file,
+            row=int(noise.source_rows[i]), cure=f"{cure}; outside {_SMALLEST_ERROR:g} to {_LARGEST_ERROR:g} mag errors are refused",
         )
+        for bad, what, cure in cases if bad.any() for i in [int(np.argmax(bad))]
     ]  # fmt: skip
 
 

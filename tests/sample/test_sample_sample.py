@@ -313,6 +313,12 @@ def test_errors_that_no_distance_has(load, tmp_path):
     assert error.file == "c.npy" and error.row == 1 and "none is known so well" in str(error)
 
 
+def test_errors_too_large_to_compute_with(load, tmp_path):
+    np.save(tmp_path / "p.npy", np.diag([*SIGMA[:-1] ** -2, 1e-310]))
+    error = refusal(load, uncertainty=[{"precision": "p.npy"}])
+    assert error.file == "p.npy" and error.row == len(SIGMA) and "tells nothing" in str(error) and "keep" in error.cure
+
+
 def test_inverse_given_as_a_covariance(load, tmp_path):
     np.save(tmp_path / "p.npy", np.diag(1 / SIGMA**2))
     for terms in ([{"covariance": "p.npy"}], [{"sigma": "e"}, {"covariance": "p.npy"}]):

@@ -18,6 +18,7 @@ from numpy.typing import ArrayLike
 
 from fitter.array_types import FloatArray
 from fitter.inference.mixture import fit_mixture
+from fitter.inference.resampling import systematic
 from fitter.inference.target import Target
 
 if TYPE_CHECKING:
@@ -56,8 +57,7 @@ class WeightedPosterior:
 
     def points(self, size: int) -> FloatArray:
         """About equally likely points, (size, d): the draws, resampled systematically by their weights."""
-        at = (np.arange(size) + 0.5) / size
-        return self._draws[np.minimum(np.searchsorted(np.cumsum(self._weights), at), len(self._weights) - 1)]
+        return self._draws[systematic(self._weights, size)]
 
     @property
     def cdf_error(self) -> float:

@@ -10,6 +10,7 @@ import numpy as np
 from fitter.array_types import FloatArray
 from fitter.inference.mixture import StudentMixture, blend, fit_mixture
 from fitter.inference.optimum import prior_draws
+from fitter.inference.resampling import systematic
 
 if TYPE_CHECKING:
     from fitter.inference.optimum import Optimum
@@ -65,7 +66,8 @@ def pilot_mixture(log_posterior: LogPosterior, optimum: Optimum, seed: np.random
             break
         if turn >= _FEWEST_ROUNDS and _efficiency(values - log_q) > _GOOD:
             break
-        body, tails = (fitted(_resample(points, _weights(values, log_q, power), len(points) // 2, rng), components) for power in _FLATTENED)
+        chosen = (systematic(_weights(values, log_q, power), len(points) // 2, rng.random()) for power in _FLATTENED)
+        body, tails = (fitted(points[rows], components) for rows in chosen)
         mixture = blend(body, tails, _TAIL_SHARE)
         points = mixture.draw(rng, draws // 4 if turn < _SMALL_ROUNDS else draws)
         log_q = mixture.log_density(points)
@@ -101,9 +103,3 @@ def _weights(values: FloatArray, log_q: FloatArray, power: float) -> FloatArray:
         if 1 / (w**2).sum() >= _FEWEST or power < 1e-3:
             return w
         power *= 0.7
-
-
-def _resample(points: FloatArray, weights: FloatArray, size: int, rng: np.random.Generator) -> FloatArray:
-    """Systematic resampling to `size` points of equal weight."""
-    ladder = (np.arange(size) + rng.random()) / size
-    return points[np.minimum(np.searchsorted(np.cumsum(weights), ladder), len(points) - 1)]

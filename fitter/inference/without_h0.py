@@ -15,6 +15,7 @@ from numpy.typing import ArrayLike
 
 from fitter.array_types import FloatArray
 from fitter.inference.quadrature import GridPosterior, integrate
+from fitter.inference.resampling import systematic
 from fitter.inference.target import Peak, Place
 from fitter.likelihood.priors import Normal, TruncatedNormal
 
@@ -175,8 +176,7 @@ def _h0_below(without: WithoutH0, grid: GridPosterior) -> tuple[FloatArray, Floa
     theta, share = grid.points()
     if len(share) > _POINTS:
         # Systematic resampling: of so many nodes in order, its error is far below that of any chain.
-        at = (np.arange(_POINTS) + 0.5) / _POINTS
-        theta = theta[np.minimum(np.searchsorted(np.cumsum(share), at), len(share) - 1)]
+        theta = theta[systematic(share, _POINTS)]
         share = np.full(_POINTS, 1 / _POINTS)
     top, centre, width = without.parabola(theta)
     kept = (top > -np.inf) & (share > 0)

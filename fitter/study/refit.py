@@ -20,6 +20,7 @@ from fitter.array_types import FloatArray
 from fitter.inference.mixture import StudentMixture, fit_mixture
 from fitter.inference.optimum import Optimum, find_optimum
 from fitter.inference.quadrature import GridPosterior, integrate
+from fitter.inference.resampling import systematic
 from fitter.inference.seeds import child_seed
 
 if TYPE_CHECKING:
@@ -140,8 +141,7 @@ def refit(log_posterior: LogPosterior, seed: np.random.SeedSequence) -> Refit:
 def resample(marginals: GridPosterior | WeightedDraws, size: int, seed: np.random.SeedSequence) -> FloatArray:
     """Return about equally likely points of a posterior, (size, d), by systematic resampling of its nodes or draws."""
     theta, weight = marginals.points()
-    at = (np.arange(size) + np.random.default_rng(seed).random()) / size
-    return theta[np.minimum(np.searchsorted(np.cumsum(weight), at), len(weight) - 1)]
+    return theta[systematic(weight, size, np.random.default_rng(seed).random())]
 
 
 def _adaptive(log_posterior: LogPosterior, optimum: Optimum, rng: np.random.Generator) -> WeightedDraws:
@@ -154,9 +154,8 @@ def _adaptive(log_posterior: LogPosterior, optimum: Optimum, rng: np.random.Gene
         return WeightedDraws(log_posterior.names, theta, _weights(log_posterior, theta, mixture))
 
     def refitted(draws: WeightedDraws, components: int) -> StudentMixture:
-        at = (np.arange(_DRAWS) + rng.random()) / _DRAWS
-        chosen = np.minimum(np.searchsorted(np.cumsum(draws.weight), at), len(draws.theta) - 1)
-        return fit_mixture(draws.theta[chosen], components, iterations=10)
+        chosen = draws.theta[systematic(draws.weight, _DRAWS, rng.random())]
+        return fit_mixture(chosen, components, iterations=10)
 
     for turn in range(_ROUNDS):
         mixture = refitted(draw(_DRAWS), 1 if turn == 0 else _COMPONENTS)
